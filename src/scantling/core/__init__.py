@@ -1,0 +1,1 @@
+"""Records, randomness and argument checks; knows no method."""
