@@ -94,11 +94,3 @@ class Design:
     target: TargetSpec
     penalty: PenaltySpec
     simulation: SimulationSpec
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class StatedLaw:
-    """Placeholder-free record of a stated law: family and its parameters."""
-
-    family: str
-    parameters: tuple[tuple[str, float], ...] = ()

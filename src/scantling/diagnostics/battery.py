@@ -1,0 +1,264 @@
+"""All diagnostics of one design, from residuals and columns to one record."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from scantling.core.record import FloatArray, read_only
+from scantling.diagnostics.clustering import NEAR_INTEGRATION, Clustering, find_clustering
+from scantling.diagnostics.column_tails import ColumnTails, column_tails, holm_rejections
+from scantling.diagnostics.dependence import (
+    TestResult,
+    arch_lm,
+    ljung_box,
+    mcleod_li,
+    robust_ljung_box,
+)
+from scantling.diagnostics.moments import (
+    MINIMUM_ROWS,
+    ORDERS,
+    MomentAnswer,
+    interval_answers,
+    moment_answer,
+)
+from scantling.diagnostics.residuals import Residuals
+from scantling.diagnostics.structure import Structure, column_structure
+from scantling.diagnostics.tail_index import TailIndex, block_length, tail_index
+from scantling.diagnostics.variance import (
+    co_movement,
+    co_movement_test,
+    glejser_permutation,
+    koenker,
+    rank_co_movement,
+    scale_suspects,
+    white,
+)
+from scantling.diagnostics.volatility import Volatility
+from scantling.errors import InputError
+
+ANSWERS = {1: "exists", -1: "missing", 0: "unclear"}
+SIDED_ROWS = 500
+"""Rows from which left and right tails are told apart."""
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Finding:
+    """A test, and whether the moment it needs is granted."""
+
+    result: TestResult
+    valid: bool
+    """True for permutation tests, else whether the needed moment was found to exist."""
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class SeriesGroup:
+    """Tails and moments of many series: the columns, or their scores."""
+
+    tails: ColumnTails
+    moments: dict[int, np.ndarray]
+    """Per order, the answer for each series: 1 exists, -1 missing, 0 unclear; shape (P,)."""
+
+    def answer(self, order: int, series: int) -> str:
+        """Answer for one series: exists | missing | unclear."""
+        return ANSWERS[int(self.moments[order][series])]
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Diagnosis:
+    """What the data say about tails, moments, variance, dependence and geometry."""
+
+    errors: TailIndex | None
+    """Tail of the residuals, both sides; None if it could not be assessed."""
+    errors_note: str
+    """Why it could not be, or what was done to the series."""
+    sides: tuple[TailIndex, ...]
+    """Left and right tail of the residuals; empty below 500 rows."""
+    error_moments: tuple[MomentAnswer, ...]
+    """Orders 1, 2, 3, 4."""
+    columns: SeriesGroup
+    scores: SeriesGroup
+    weight: tuple[str, ...]
+    """heavy | sparse | light, for each column."""
+    variance: tuple[Finding, ...]
+    dependence: tuple[Finding, ...]
+    clustering: Clustering | None
+    """None where rows have no order."""
+    co_movement: FloatArray
+    """Per column, sd of the score over what independence of sizes would give, shape (P,)."""
+    rank_co_movement: FloatArray
+    """Per column, Spearman correlation of |x| and |e|, shape (P,)."""
+    structure: Structure
+    warnings: tuple[str, ...]
+    """Sentences: where the sample looks like a law that defeats the estimators."""
+
+    @property
+    def volatility(self) -> Volatility | None:
+        """Fitted volatility, if any."""
+        return None if self.clustering is None else self.clustering.volatility
+
+    def moment(self, order: int) -> str:
+        """Answer for the errors at one order."""
+        return next(m.answer for m in self.error_moments if m.order == order)
+
+    @property
+    def scores_without_variance(self) -> tuple[int, ...]:
+        """Columns whose own score lacks a variance."""
+        return tuple(int(j) for j in np.flatnonzero(self.scores.moments[2] == -1))
+
+
+def series_group(series: FloatArray, *, dependent: bool) -> SeriesGroup:
+    """Tails and moment answers of every column of `series` (n, P)."""
+    tails = column_tails(series, dependent=dependent)
+    width = series.shape[1]
+    moments = {order: np.zeros(width, dtype=int) for order in ORDERS}
+    known = tails.assessed
+    if series.shape[0] >= MINIMUM_ROWS and known.any():
+        for order in ORDERS:
+            moments[order][known] = interval_answers(
+                order,
+                *(
+                    values[known]
+                    for values in (
+                        tails.gamma, tails.error, tails.hill_gamma, tails.hill_error,
+                        tails.p_value,
+                    )
+                ),
+            )  # fmt: skip
+    # A series that takes few values is bounded: all its moments exist.
+    for j, reason in tails.refused:
+        if "discrete" in reason or "equal" in reason:
+            for order in ORDERS:
+                moments[order][j] = 1
+    return SeriesGroup(tails=tails, moments=moments)
+
+
+def column_weights(columns: ColumnTails) -> tuple[str, ...]:
+    """heavy, sparse or light: Holm over the thin-tail tests; sparse counts as heavy later."""
+    rejected = holm_rejections(np.asarray(columns.p_value))
+    sparse = columns.sparse
+    return tuple(
+        "sparse" if s else "heavy" if r else "light" for s, r in zip(sparse, rejected, strict=True)
+    )
+
+
+def diagnose(
+    X: FloatArray, residuals: Residuals, *, time_ordered: bool, seed: int
+) -> Diagnosis:
+    """Run every diagnostic.
+
+    Parameters
+    ----------
+    X : array, shape (n, P)
+        Standardised columns.
+    residuals : Residuals
+        Of the pilot on the same rows.
+    time_ordered : bool
+        Whether rows follow one another in time.
+    seed : int
+        Of permutations and bootstraps.
+    """
+    e = np.asarray(residuals.values)
+    errors, sides, errors_note = _error_tails(e, seed)
+    clustering = find_clustering(e, seed=seed) if time_ordered else None
+    volatility = None if clustering is None else clustering.volatility
+    implied = None if volatility is None else volatility.tail_index
+    moments = _error_moments(e, errors, errors_note, implied, seed)
+    granted = {int(m.order) for m in moments if m.answer == "exists"}
+    columns = series_group(X, dependent=time_ordered)
+    scores = series_group(X * e[:, None], dependent=time_ordered)
+    block = block_length(e.size) if clustering and clustering.test.p_value <= 0.05 else None
+    variance = _variance_tests(X, residuals, block, seed)
+    dependence = _dependence_tests(e, clustering) if time_ordered else ()
+    return Diagnosis(
+        errors=errors,
+        errors_note=errors_note,
+        sides=sides,
+        error_moments=moments,
+        columns=columns,
+        scores=scores,
+        weight=column_weights(columns.tails),
+        variance=_judged(variance, granted),
+        dependence=_judged(dependence, granted),
+        clustering=clustering,
+        co_movement=read_only(co_movement(X, e)),
+        rank_co_movement=read_only(rank_co_movement(X, e)),
+        structure=column_structure(X),
+        warnings=_warnings(e, errors, volatility),
+    )
+
+
+def _error_tails(
+    e: FloatArray, seed: int
+) -> tuple[TailIndex | None, tuple[TailIndex, ...], str]:
+    try:
+        errors = tail_index(e, seed=seed)
+    except InputError as reason:
+        return None, (), str(reason).removeprefix("values: ")
+    if e.size < SIDED_ROWS:
+        return errors, (), errors.note
+    sides = tuple(tail_index(e, side=side, seed=seed) for side in ("left", "right"))
+    return errors, sides, errors.note
+
+
+def _error_moments(
+    e: FloatArray, errors: TailIndex | None, note: str, implied: float | None, seed: int
+) -> tuple[MomentAnswer, ...]:
+    if errors is None:
+        return tuple(MomentAnswer(order=q, answer="unclear", reason=note) for q in ORDERS)
+    return tuple(
+        moment_answer(e, errors, order, seed=seed, volatility_index=implied) for order in ORDERS
+    )
+
+
+def _variance_tests(
+    X: FloatArray, residuals: Residuals, block: int | None, seed: int
+) -> tuple[TestResult, ...]:
+    e = np.asarray(residuals.values)
+    suspects = scale_suspects(X, residuals.fitted, residuals.selected)
+    return (
+        glejser_permutation(e, suspects, seed=seed, block=block),
+        co_movement_test(X, e, seed, block=block),
+        koenker(e, suspects),
+        white(e, suspects),
+    )
+
+
+def _dependence_tests(e: FloatArray, clustering: Clustering | None) -> tuple[TestResult, ...]:
+    first = () if clustering is None else (clustering.test,)
+    return (*first, robust_ljung_box(e), ljung_box(e), arch_lm(e), mcleod_li(e))
+
+
+def _judged(results: tuple[TestResult, ...], granted: set[int]) -> tuple[Finding, ...]:
+    return tuple(
+        Finding(result=r, valid=r.method == "permutation" or r.needs_moment in granted)
+        for r in results
+    )
+
+
+def _warnings(
+    e: FloatArray, errors: TailIndex | None, volatility: Volatility | None
+) -> tuple[str, ...]:
+    out = []
+    if errors is not None:
+        # Hill further out, at k = sqrt(n): stable laws look lighter in range than they are.
+        k = max(2, int(e.size**0.5))
+        from scantling.diagnostics.tail_estimators import hill
+        from scantling.diagnostics.tail_index import interval_from_gamma, one_side
+
+        outer = float(hill(one_side(e, "both"), k))
+        lower = outer * (1 - 1.645 / k**0.5)
+        weighted_low, _ = interval_from_gamma(errors.gamma, errors.gamma_error, errors.level)
+        if lower > 1 / weighted_low:
+            out.append(
+                f"the errors look heavier further out (index {1 / outer:.1f} on the largest"
+                f" {k} values): infinite variance is not excluded"
+            )
+    if volatility is not None and volatility.persistence > NEAR_INTEGRATION:
+        out.append(
+            f"volatility is nearly integrated (alpha + beta = {volatility.persistence:.3f}):"
+            f" tail intervals from the data are too short; the fitted volatility implies index"
+            f" {volatility.tail_index:.1f}"
+        )
+    return tuple(out)

@@ -1,0 +1,44 @@
+"""Does volatility cluster, and if so, which path does it follow?"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+from scantling.core.record import FloatArray
+from scantling.diagnostics.dependence import TestResult, absolute_ljung_box_permutation
+from scantling.diagnostics.volatility import Volatility, fit_garch
+
+LEVEL = 0.05
+NEAR_INTEGRATION = 0.97
+"""Persistence above which tail intervals from the data are too short (simulated)."""
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Clustering:
+    """The test for clustering, and the volatility fitted where it rejects."""
+
+    test: TestResult
+    """Autocorrelation of absolute values, by permutation."""
+    volatility: Volatility | None
+    """GARCH(1,1), or None: constant."""
+    reason: str
+    """Why no volatility was fitted; empty if it was."""
+
+
+def find_clustering(values: FloatArray, *, seed: int) -> Clustering:
+    """Test absolute values for autocorrelation at 5 % and fit GARCH(1,1) if it is found.
+
+    Parameters
+    ----------
+    values : array, shape (n,)
+        Errors in time order.
+    seed : int
+        Of the permutations.
+    """
+    test = absolute_ljung_box_permutation(values, seed=seed)
+    if test.p_value > LEVEL:
+        return Clustering(test=test, volatility=None, reason="no clustering found")
+    fitted = fit_garch(values)
+    if isinstance(fitted, Volatility):
+        return Clustering(test=test, volatility=fitted, reason="")
+    return Clustering(test=test, volatility=None, reason=fitted)

@@ -1,0 +1,114 @@
+"""The budget: all limits together, what they allow, and which of them binds."""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+
+from scantling.core.estimate import Estimate
+from scantling.planning.breakthrough import BreakThrough, CurvePoint
+from scantling.planning.ceiling import Ceiling
+from scantling.planning.limit import AT_LEAST, Limit, band, missing_limit
+from scantling.planning.signal import Signal
+
+ASSURED_NOTE = "the finite-sample inequality is not computed in this version"
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Allowed:
+    """Columns allowed: the smallest of the noise, signal and stability limits."""
+
+    columns: int | None
+    """None if one of the limits could not be computed."""
+    low: int | None
+    high: int | None
+    """None if beyond the largest number examined."""
+    note: str = ""
+    """'at least' if no limit was reached; the reason if it could not be computed."""
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Budget:
+    """How many columns the rows can carry."""
+
+    asked: int
+    """Columns the design asks for."""
+    rows: int
+    noise: Limit
+    signal: Limit
+    stability: Limit
+    geometry: Limit
+    assured: Limit
+    ceiling: Ceiling
+    allowed: Allowed
+    binding: str | None
+    """noise | signal | stability; None if no limit is reached or one is missing."""
+    risk_at_design: Estimate
+    """Break-through risk at the columns asked for."""
+    curve: tuple[CurvePoint, ...]
+    penalty_ratio: float | None
+    equivalent_rows: int | None
+    rows_needed: int | None
+    rows_note: str
+    detectable: float | None
+    """Smallest detectable effect, median column, sd of the response."""
+    detectable_worst: float | None
+    """The same for the worst tenth of columns."""
+    worst_columns: tuple[int, ...]
+    worst_shares: tuple[float, ...]
+
+
+def combine(limits: dict[str, Limit], most: int) -> tuple[Allowed, str | None]:
+    """Smallest of the limits with its band, and the name of the one that attains it.
+
+    The band is that of the smallest limit under each draw of the law, all limits being taken
+    under the same draw.
+    """
+    for name, limit in limits.items():
+        if limit.columns is None:
+            return Allowed(columns=None, low=None, high=None, note=f"{name}: {limit.note}"), None
+    draws = [min(values) for values in zip(*(x.draws for x in limits.values()), strict=False)]
+    low, high = band(draws)
+    columns = min(limit.columns for limit in limits.values() if limit.columns is not None)
+    reached = {name: limit for name, limit in limits.items() if limit.reached}
+    binding = min(reached, key=lambda name: reached[name].columns or 0) if reached else None
+    allowed = Allowed(
+        columns=columns,
+        low=most if math.isinf(low) else int(low),
+        high=None if math.isinf(high) else int(high),
+        note="" if binding else AT_LEAST,
+    )
+    return allowed, binding
+
+
+def assemble(
+    *, rows: int, asked: int, noise: BreakThrough, signal: Signal, stability: Limit,
+    geometry: Limit, ceiling: Ceiling,
+) -> Budget:  # fmt: skip
+    """Put the limits together."""
+    allowed, binding = combine(
+        {"noise": noise.noise, "signal": signal.limit, "stability": stability}, asked
+    )
+    last = noise.curve[-1]
+    return Budget(
+        asked=asked,
+        rows=rows,
+        noise=noise.noise,
+        signal=signal.limit,
+        stability=stability,
+        geometry=geometry,
+        assured=missing_limit(ASSURED_NOTE),
+        ceiling=ceiling,
+        allowed=allowed,
+        binding=binding,
+        risk_at_design=Estimate(value=last.risk, low=last.low, high=last.high),
+        curve=noise.curve,
+        penalty_ratio=noise.penalty_ratio,
+        equivalent_rows=noise.equivalent_rows,
+        rows_needed=signal.rows_needed,
+        rows_note=signal.rows_note,
+        detectable=signal.detectable,
+        detectable_worst=signal.detectable_worst,
+        worst_columns=noise.worst_columns,
+        worst_shares=noise.worst_shares,
+    )

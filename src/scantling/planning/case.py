@@ -1,0 +1,63 @@
+"""What a budget is computed for: columns, error law and target, ready for simulation."""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+
+import numpy as np
+
+from scantling.core.record import FloatArray
+from scantling.core.streams import stream
+from scantling.design.spec import TargetSpec
+from scantling.law.families import ErrorLaw, normal_law
+
+LAW_DRAWS = 50
+"""Draws of the law's parameters behind every band."""
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Case:
+    """One design as the simulations see it; a remedy is another case."""
+
+    X: FloatArray
+    """Columns, mean 0 and mean square 1, shape (n, P)."""
+    law: ErrorLaw
+    """Fitted error law."""
+    law_draws: tuple[ErrorLaw, ...]
+    """Laws the sample cannot tell from it; the bands come from them."""
+    response_sd: float
+    """sd of the response."""
+    residual_sd: float
+    """sd of the residuals; simulated errors are scaled to it."""
+    target: TargetSpec
+    rule: str
+    """plug-in | self-normalised."""
+    replicates: int
+    seed: int
+
+    @property
+    def rows(self) -> int:
+        """n."""
+        return int(self.X.shape[0])
+
+    @property
+    def columns(self) -> int:
+        """P, the columns at hand and asked for."""
+        return int(self.X.shape[1])
+
+    @property
+    def twin(self) -> ErrorLaw:
+        """Independent normal errors of the same variance."""
+        return normal_law(self.law.sd if math.isfinite(self.law.sd) else self.residual_sd)
+
+
+def draw_laws(law: ErrorLaw, seed: int) -> tuple[ErrorLaw, ...]:
+    """The law draws behind the bands, from their own stream."""
+    return law.parameter_draws(LAW_DRAWS, stream(seed, "law draws"))
+
+
+def column_grid(most: int, *, fewest: int = 1, points: int = 32) -> np.ndarray:
+    """Increasing whole numbers from `fewest` to `most`, evenly spaced in logs."""
+    raw = np.geomspace(fewest, most, points) if most > fewest else np.array([most])
+    return np.unique(np.round(raw).astype(int))

@@ -1,0 +1,112 @@
+"""Signal limit: how many columns leave the smallest effect detectable, and rows needed."""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+
+import numpy as np
+from scipy.stats import norm
+
+from scantling.core.record import FloatArray
+from scantling.law.families import ErrorLaw
+from scantling.planning.breakthrough import ScoreSample, needed_penalty
+from scantling.planning.case import Case, column_grid
+from scantling.planning.limit import Limit, last_below, make_limit, missing_limit
+from scantling.simulation.scores import penalty_level
+
+MOST_TIMES_ROWS = 64
+"""Rows needed are searched up to so many times the present rows."""
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Signal:
+    """Which effects the design can detect."""
+
+    limit: Limit
+    detectable: float | None
+    """Smallest detectable effect at the present p, median column, in sd of the response."""
+    detectable_worst: float | None
+    """The same for the worst tenth of columns."""
+    rows_needed: int | None
+    """Rows at which the smallest effect is detectable at the present p."""
+    rows_note: str
+    """Why rows_needed is None; empty otherwise."""
+
+
+def score_deviation(X: FloatArray, law: ErrorLaw) -> FloatArray:
+    """sd of S_j under the law: sqrt(mean_i x_ij^2 sigma_i^2), shape (P,)."""
+    if law.volatility is None:
+        return np.full(X.shape[1], law.sd)
+    path = law.volatility.path
+    return np.asarray(
+        np.sqrt(law.innovation_variance * np.einsum("ij,ij,i->j", X, X, path**2) / path.size)
+    )
+
+
+def detectable_effects(
+    case: Case, sample: ScoreSample, deviation: FloatArray, p: int
+) -> FloatArray:
+    """b_j(p) = (lambda*(p) v_j + Phi^-1(power) tau_j) / (sqrt(n) sd(y)), shape (P,)."""
+    needed = needed_penalty(sample.found, p, case.target.risk)
+    power = float(norm.ppf(case.target.power))
+    return np.asarray(
+        (needed * sample.loadings + power * deviation) / (math.sqrt(case.rows) * case.response_sd)
+    )
+
+
+def signal_limit_of(case: Case, law: ErrorLaw, sample: ScoreSample) -> float:
+    """Largest p whose median detectable effect is small enough; inf if all are, 0 if none."""
+    deviation = score_deviation(case.X, law)
+    if not np.isfinite(deviation).all():
+        return 0.0
+
+    def detects(p: int) -> bool:
+        effects = detectable_effects(case, sample, deviation, p)
+        return float(np.median(effects)) <= case.target.smallest_effect
+
+    if detects(case.columns):
+        return math.inf
+    if not detects(1):
+        return 0.0
+    # The needed penalty grows with p, so the grid narrows the search before bisection.
+    grid = column_grid(case.columns, points=9)
+    good = max(int(p) for p in grid if detects(int(p)))
+    bad = min(int(p) for p in grid if p > good)
+    return float(last_below(detects, good, bad))
+
+
+def signal(case: Case, fitted: ScoreSample, drawn: tuple[ScoreSample, ...]) -> Signal:
+    """Signal limit with its band, detectable effects at the present p, and rows needed.
+
+    Rows needed keep the penalty level and loadings of the present sample; only the signal
+    limit is covered.
+    """
+    deviation = score_deviation(case.X, case.law)
+    if not np.isfinite(deviation).all():
+        reason = "the fitted error law has no variance"
+        return Signal(
+            limit=missing_limit(reason), detectable=None, detectable_worst=None,
+            rows_needed=None, rows_note=reason,
+        )  # fmt: skip
+    point = signal_limit_of(case, case.law, fitted)
+    draws = [
+        signal_limit_of(case, law, sample)
+        for law, sample in zip(case.law_draws, drawn, strict=False)
+    ] or [point]
+    effects = detectable_effects(case, fitted, deviation, case.columns)
+    median = float(np.median(effects))
+    level = float(penalty_level(case.columns, case.target.risk))
+    rows = math.ceil(
+        max(case.rows * (median / case.target.smallest_effect) ** 2, 4 * level**2)
+    )
+    note = ""
+    if rows > MOST_TIMES_ROWS * case.rows:
+        note = f"more than {MOST_TIMES_ROWS} times the present rows"
+    return Signal(
+        limit=make_limit(point, draws, case.columns, mode="conditional"),
+        detectable=median,
+        detectable_worst=float(np.quantile(effects, 0.9)),
+        rows_needed=None if note else rows,
+        rows_note=note,
+    )

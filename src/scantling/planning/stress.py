@@ -1,0 +1,277 @@
+"""Selection under fresh errors: stability and geometry limits by simulated refits."""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+
+import numpy as np
+
+from scantling.core.estimate import Estimate
+from scantling.core.record import FloatArray
+from scantling.core.streams import Mapper, stream
+from scantling.law.families import ErrorLaw
+from scantling.planning.case import Case, column_grid
+from scantling.planning.limit import Limit, make_limit
+from scantling.simulation.lasso import solve_batch
+from scantling.simulation.scores import centre, penalty_level
+from scantling.simulation.selection import (
+    SelectionSummary,
+    pool_summaries,
+    summarise_selection,
+)
+
+SUPPORTS = 5
+"""Sets of relevant columns the replicates are shared among."""
+GRID_POINTS = 6
+TOLERANCE = 1e-5
+"""Duality gap of the refits, relative; selections no longer change below it."""
+REFITS_PER_LAW = 20
+"""Refits under each drawn law, from which the laws' effect on the criteria is estimated."""
+CRITERIA = ("stability", "power", "false_share")
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class StressRun:
+    """Selection statistics at one number of columns under one law."""
+
+    rows: int
+    columns: int
+    law: str
+    """fitted | twin | normal-volatility."""
+    mode: str
+    replicates: int
+    stability: Estimate
+    """Stability index, 90 % interval; 0 if nothing or everything is always selected."""
+    power: Estimate
+    """Mean share of relevant columns selected."""
+    false_share: Estimate
+    """Mean share of false columns among the selected."""
+    exact: float
+    """Share of refits that select exactly the relevant columns."""
+    mean_size: float
+    """Columns selected on average."""
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Stress:
+    """All runs, and the limits read off them."""
+
+    runs: tuple[StressRun, ...]
+    stability: Limit
+    geometry: Limit
+    failing: tuple[str, ...]
+    """Criteria not met at the columns asked for, under the fitted law."""
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class SupportSet:
+    """One set of relevant columns, nested in the columns taken at every p."""
+
+    order: np.ndarray
+    """All P columns in the order they are taken; the relevant ones come first."""
+    signs: FloatArray
+    """Signs of the relevant coefficients."""
+
+
+def support_set(case: Case, number: int) -> SupportSet:
+    """Random order of the columns and random signs, from their own stream."""
+    rng = stream(case.seed, "support", number)
+    relevant = min(case.target.relevant, case.columns)
+    return SupportSet(
+        order=rng.permutation(case.columns), signs=rng.choice([-1.0, 1.0], size=relevant)
+    )
+
+
+def refit(
+    case: Case, chosen: SupportSet, p: int, law: ErrorLaw, size: int, rng: np.random.Generator
+) -> SelectionSummary:
+    """Refit the lasso to `size` fresh responses on the first p columns of a support set.
+
+    Errors are scaled to the residual sd; the penalty is the rule's, with loadings from the
+    draw itself.
+    """
+    relevant = min(chosen.signs.size, p)
+    X = case.X[:, chosen.order[:p]]
+    effect = case.target.smallest_effect * case.response_sd
+    mean = X[:, :relevant] @ (effect * chosen.signs[:relevant])
+    errors = centre(law.draw_given_path(case.rows, size, rng)) * (case.residual_sd / law.sd)
+    level = float(penalty_level(p, case.target.risk)) / math.sqrt(case.rows)
+    if case.rule == "self-normalised":
+        weights = level * np.sqrt((X**2).T @ errors**2 / case.rows)
+    else:
+        weights = level * np.sqrt((errors**2).mean(axis=0))
+    coefficients, _ = solve_batch(X, mean[:, None] + errors, weights, tol=TOLERANCE)
+    truth = np.zeros(p, dtype=bool)
+    truth[:relevant] = True
+    return summarise_selection((coefficients != 0).T, truth)
+
+
+def grid_of(case: Case, points: int = GRID_POINTS) -> list[int]:
+    """Numbers of columns the refits are run at: from twice the relevant ones to all."""
+    fewest = min(case.columns, max(2 * case.target.relevant, case.target.relevant + 1))
+    return [int(p) for p in column_grid(case.columns, fewest=fewest, points=points)]
+
+
+def run_law(
+    case: Case, law: ErrorLaw, name: str, grid: list[int], mapper: Mapper
+) -> tuple[StressRun, ...]:
+    """Refits on the grid under one law, the replicates shared among the support sets."""
+    size = max(2, case.replicates // SUPPORTS)
+    units = [(p, number) for p in grid for number in range(SUPPORTS)]
+
+    def one(unit: tuple[int, int]) -> SelectionSummary:
+        p, number = unit
+        # The same errors at every p: differences along the grid are then the columns' doing.
+        rng = stream(case.seed, f"refits, {name}", number)
+        return refit(case, support_set(case, number), p, law, size, rng)
+
+    done = mapper(one, units)
+    return tuple(
+        _run(case, p, name, pool_summaries(done[k * SUPPORTS : (k + 1) * SUPPORTS]))
+        for k, p in enumerate(grid)
+    )
+
+
+def _run(case: Case, p: int, name: str, summary: SelectionSummary) -> StressRun:
+    return StressRun(
+        rows=case.rows,
+        columns=p,
+        law=name,
+        mode="conditional",
+        replicates=summary.replicates,
+        stability=summary.stability or Estimate(value=0.0, low=0.0, high=0.0),
+        power=summary.power,
+        false_share=summary.false_share,
+        exact=summary.exact,
+        mean_size=summary.mean_size,
+    )
+
+
+def margins(case: Case, run: StressRun) -> FloatArray:
+    """How far each criterion is met (positive) or missed, shape (3,)."""
+    target = case.target
+    return np.array(
+        [
+            run.stability.value - target.stability,
+            run.power.value - target.power,
+            target.false_share - run.false_share.value,
+        ]
+    )
+
+
+def limit_on_grid(grid: list[int], margin: FloatArray) -> float:
+    """Largest p whose smallest margin is not negative; inf if that is all columns.
+
+    Between a number of columns that passes and the next on the grid that fails the margin is
+    interpolated in log p. 0 if none passes. `margin` is (grid, 3).
+    """
+    worst = margin.min(axis=1)
+    passing = np.flatnonzero(worst >= 0)
+    if not passing.size:
+        return 0.0
+    last = int(passing[-1])
+    if last == len(grid) - 1:
+        return math.inf
+    share = worst[last] / (worst[last] - worst[last + 1])
+    logs = np.log(grid)
+    return math.floor(math.exp(logs[last] + share * (logs[last + 1] - logs[last])) + 1e-9)
+
+
+def law_effects(case: Case, p: int, mapper: Mapper) -> FloatArray:
+    """Effect of each drawn law on the three criteria at p columns, shape (laws, 3).
+
+    Each drawn law has a few refits; their means vary by law and by chance. The part due to
+    chance is taken out by shrinking towards the mean, by the ratio of variance components
+    (the usual random-effects predictor).
+    """
+
+    def one(k: int) -> FloatArray:
+        rng = stream(case.seed, "refits, drawn laws", k)
+        # A drawn law without variance cannot be scaled to the residual sd; it is judged below.
+        law = case.law_draws[k] if math.isfinite(case.law_draws[k].sd) else case.law
+        summary = refit(case, support_set(case, k % SUPPORTS), p, law, REFITS_PER_LAW, rng)
+        stability = 0.0 if summary.stability is None else summary.stability.value
+        return np.array([stability, summary.power.value, summary.false_share.value])
+
+    values = np.array(mapper(one, range(len(case.law_draws))))
+    groups = np.arange(len(values)) % SUPPORTS
+    for group in range(SUPPORTS):
+        values[groups == group] -= values[groups == group].mean(axis=0)
+    values[:, 2] *= -1  # as margins: a larger false share is worse
+    total = values.var(axis=0, ddof=SUPPORTS)
+    effects = values * _law_share(case, p, total)
+    # No column is selected reliably under errors without a variance.
+    effects[[not math.isfinite(law.sd) for law in case.law_draws]] = -1.0
+    return np.asarray(effects)
+
+
+def _law_share(case: Case, p: int, total: FloatArray) -> FloatArray:
+    """Share of the criteria's variance that the laws explain, each in [0, 1]."""
+    chance = []
+    for k in range(2 * SUPPORTS):
+        rng = stream(case.seed, "refits, fitted law again", k)
+        summary = refit(
+            case, support_set(case, k % SUPPORTS), p, case.law, REFITS_PER_LAW, rng
+        )
+        stability = 0.0 if summary.stability is None else summary.stability.value
+        chance.append([stability, summary.power.value, summary.false_share.value])
+    pairs = np.array(chance).reshape(2, SUPPORTS, 3)
+    within = ((pairs[0] - pairs[1]) ** 2 / 2).mean(axis=0)
+    return np.asarray(np.clip(1 - within / np.maximum(total, 1e-12), 0, 1))
+
+
+def stress(case: Case, mapper: Mapper, *, twins: bool = True, points: int = GRID_POINTS) -> Stress:
+    """Stability limit under the fitted law, geometry limit under its Gaussian twin.
+
+    Parameters
+    ----------
+    case : Case
+        Its law has a variance.
+    mapper : callable
+    twins : bool
+        Whether the twin (and, under volatility, normal innovations on the fitted path) are run;
+        without them the geometry limit is the stability limit's own.
+    points : int
+        Numbers of columns examined.
+    """
+    grid = grid_of(case, points)
+    fitted = run_law(case, case.law, "fitted", grid, mapper)
+    stability = _limit(case, grid, fitted, mapper, drawn=True)
+    runs, geometry = fitted, stability
+    if twins:
+        twin = run_law(case, case.twin, "twin", grid, mapper)
+        geometry = _limit(case, grid, twin, mapper, drawn=False)
+        runs += twin
+        if case.law.volatility is not None:
+            runs += run_law(
+                case, case.law.normal_innovations(), "normal-volatility", grid[-1:], mapper
+            )
+    missed = margins(case, fitted[-1]) < 0
+    return Stress(
+        runs=runs,
+        stability=stability,
+        geometry=geometry,
+        failing=tuple(name for name, miss in zip(CRITERIA, missed, strict=True) if miss),
+    )
+
+
+def _limit(
+    case: Case, grid: list[int], runs: tuple[StressRun, ...], mapper: Mapper, *, drawn: bool
+) -> Limit:
+    """Limit with its band: the criteria's Monte Carlo error, and the drawn laws' effect."""
+    margin = np.array([margins(case, run) for run in runs])
+    point = limit_on_grid(grid, margin)
+    half = np.array(
+        [
+            [(e.high - e.low) / 2 / 1.645 for e in (run.stability, run.power, run.false_share)]
+            for run in runs
+        ]
+    )
+    effects = np.zeros((len(case.law_draws), 3))
+    if drawn and case.law.spread is not None:
+        near = grid[-1] if math.isinf(point) else min(grid, key=lambda p: abs(p - point))
+        effects = law_effects(case, near, mapper)
+    noise = stream(case.seed, "criteria error").standard_normal((len(case.law_draws), 3))
+    draws = [limit_on_grid(grid, margin + u + z * half) for u, z in zip(effects, noise, strict=True)]
+    return make_limit(point, draws, grid[-1], mode="conditional")

@@ -1,0 +1,290 @@
+"""Working sets of a batch of lasso problems: check, grow, solve.
+
+A working set is the few columns one response may use at present. All are held
+as one sorted list of keys, response * p + column, with a coefficient each.
+The set of one response never depends on the others in its batch, so answers do
+not depend on how responses are split in batches, up to rounding.
+"""
+
+from __future__ import annotations
+
+import numpy as np
+from numpy.typing import NDArray
+
+from scantling.core.record import FloatArray
+from scantling.core.streams import blocks
+from scantling.simulation.active_set import BoolArray, solve_together, sweep_together
+
+IndexArray = NDArray[np.int64]
+
+GRAM_CELLS = 8_000_000
+"""Largest number of cells of the kept products X'X_W (64 MB)."""
+
+UNION_COLUMNS = 1500
+"""Most columns for which one Gram matrix is shared by several responses."""
+
+BATCH_CELLS = 500_000
+"""Cells of the stacked small Gram matrices solved together (4 MB, to stay in cache)."""
+
+CROWDED = 48
+SWEEPS = 20
+
+PASS_CELLS = 200_000
+"""Cells of one piece of a pass over all columns and responses."""
+
+
+class Problem:
+    """One block of responses on the shared columns, with what is computed once.
+
+    Attributes
+    ----------
+    X, Y : array, shapes (n, p) and (n, R)
+    weights : array, shape (1, R) or (p, R)
+    scale : array, shape (p,)
+        Root mean square of the columns.
+    power : array, shape (R,)
+        Mean square of the responses.
+    scores : array, shape (p, R)
+        X'Y/n.
+    """
+
+    def __init__(self, X: FloatArray, Y: FloatArray, weights: FloatArray) -> None:
+        self.X, self.Y, self.weights = X, Y, weights
+        self.n, self.p = X.shape
+        self.scale: FloatArray = np.sqrt(np.einsum("ij,ij->j", X, X) / self.n)
+        self.power: FloatArray = np.einsum("ij,ij->j", Y, Y) / self.n
+        self.scores: FloatArray = X.T @ Y
+        self.scores /= self.n
+
+    def weight_of(self, columns: IndexArray, rows: IndexArray) -> FloatArray:
+        """Return the weights of (column, response) pairs."""
+        flat: FloatArray = self.weights[columns if len(self.weights) > 1 else 0, rows]
+        return flat
+
+
+class WorkingSets:
+    """The working sets of one block of responses."""
+
+    def __init__(self, problem: Problem, start: FloatArray | None) -> None:
+        self.problem = problem
+        self.keys: IndexArray = np.zeros(0, dtype=np.int64)
+        self.values: FloatArray = np.zeros(0)
+        if start is not None:
+            rows, columns = np.nonzero((start.T != 0) & (problem.scale > 0))
+            self.keys = rows * problem.p + columns
+            self.values = start[columns, rows]
+        self.kept: IndexArray = np.zeros(0, dtype=np.int64)
+        self.products: FloatArray = np.zeros((problem.p, 0))
+
+    def check(
+        self, rows: IndexArray, slack: FloatArray, *, size: int
+    ) -> tuple[FloatArray, FloatArray, BoolArray]:
+        """Return the objectives and duality gaps of `rows`, after adding the worst violating columns.
+
+        At most max(size, present size of the set) columns enter a set; those that
+        violate by less than the slack, times the root mean squares of column and
+        response, do not. The last item says which sets grew.
+        """
+        problem, p = self.problem, self.problem.p
+        owner, column = np.divmod(self.keys, p)
+        union = np.unique(column)
+        place = np.full(len(problem.power), -1)
+        place[rows] = np.arange(len(rows))
+        b = np.zeros((len(union), len(rows)))
+        b[np.searchsorted(union, column), place[owner]] = self.values
+        at, who, size_of, inside = self._pass(rows, union, b)
+        weight = problem.weight_of(at, rows[who])
+        worst = np.ones(len(rows))
+        np.maximum.at(worst, who, size_of / weight)
+        shrink = 1.0 / worst
+        on_union = problem.weights[union if len(problem.weights) > 1 else [0]][:, rows]
+        fitted = (b * (problem.scores[np.ix_(union, rows)] + inside)).sum(axis=0)
+        rest = np.maximum(problem.power[rows] - fitted, 0.0)
+        size_b = (on_union * np.abs(b)).sum(axis=0)
+        linear = (on_union * np.abs(b) - shrink * b * inside).sum(axis=0)
+        gap = ((1.0 - shrink) ** 2 * rest / 2 + linear) / (problem.power[rows] / 2)
+        allowed = slack[rows[who]] * np.sqrt(problem.power[rows[who]]) * problem.scale[at]
+        enters = size_of - weight > allowed
+        keys = rows[who[enters]] * p + at[enters]
+        strength = size_of[enters] / weight[enters]
+        fresh = ~np.isin(keys, self.keys)
+        grew = self._add(keys[fresh], strength[fresh], size)
+        return rest / 2 + size_b, np.abs(gap), grew[rows]
+
+    def _pass(
+        self, rows: IndexArray, union: IndexArray, b: FloatArray
+    ) -> tuple[IndexArray, IndexArray, FloatArray, FloatArray]:
+        """Go over all columns: where |gradient| exceeds the weight, and the gradient on `union`.
+
+        Returns column, position in `rows`, |gradient| of the excesses, and the
+        gradient, shape (len(union), len(rows)).
+        """
+        problem = self.problem
+        everything = len(rows) == len(problem.power)
+        pick: slice | IndexArray = slice(None) if everything else rows
+        weights = problem.weights[:, pick]
+        residual: FloatArray | None = None
+        products: FloatArray | None = None
+        if len(union):
+            if self._keep(union, len(rows)):
+                products = self.products[:, np.searchsorted(self.kept, union)]
+                inside = problem.scores[np.ix_(union, rows)] - products[union] @ b
+            else:
+                residual = problem.Y[:, pick] - problem.X[:, union] @ b
+                inside = problem.X[:, union].T @ residual / problem.n
+        else:
+            inside = np.zeros((0, len(rows)))
+        found: list[tuple[IndexArray, IndexArray, FloatArray]] = []
+        for first, last in blocks(problem.p, max(PASS_CELLS // len(rows), 1)):
+            if residual is not None:
+                gradient = problem.X[:, first:last].T @ residual
+                gradient /= problem.n
+            elif products is not None:
+                gradient = problem.scores[first:last, pick] - products[first:last] @ b
+            else:
+                gradient = problem.scores[first:last, pick]
+            size = np.abs(gradient)
+            above = size > (weights if len(weights) == 1 else weights[first:last])
+            flat = np.flatnonzero(above)
+            at, who = np.divmod(flat, len(rows))
+            found.append((at + first, who, size.ravel()[flat]))
+        at, who, size = (np.concatenate(part) for part in zip(*found, strict=True))
+        return at, who, size, inside
+
+    def _keep(self, union: IndexArray, replicates: int) -> bool:
+        """Make X'X_W/n available for the union if that is cheaper than residuals and fits."""
+        problem = self.problem
+        fresh = np.setdiff1d(union, self.kept, assume_unique=True)
+        total = len(self.kept) + len(fresh)
+        cost = len(fresh) * problem.n + len(union) * replicates
+        if cost > problem.n * replicates or total * problem.p > GRAM_CELLS:
+            return False
+        if len(fresh):
+            new = problem.X.T @ problem.X[:, fresh]
+            new /= problem.n
+            order = np.argsort(np.concatenate([self.kept, fresh]), kind="stable")
+            self.kept = np.concatenate([self.kept, fresh])[order]
+            self.products = np.concatenate([self.products, new], axis=1)[:, order]
+        return True
+
+    def _add(self, keys: IndexArray, strength: FloatArray, size: int) -> BoolArray:
+        """Put the strongest keys of each response in its set; say which responses grew."""
+        replicates = len(self.problem.power)
+        owner = keys // self.problem.p
+        room = np.maximum(np.bincount(self.keys // self.problem.p, minlength=replicates) // 8, size)
+        counts = np.bincount(owner, minlength=replicates)
+        if (counts > room).any():
+            order = np.lexsort((keys, -strength, owner))
+            begin = np.cumsum(counts) - counts
+            rank = np.arange(len(keys)) - begin[owner[order]]
+            keys = keys[order[rank < room[owner[order]]]]
+        together = np.concatenate([self.keys, keys])
+        order = np.argsort(together, kind="stable")
+        self.keys = together[order]
+        self.values = np.concatenate([self.values, np.zeros(len(keys))])[order]
+        return counts > 0
+
+    def release(self, rows: IndexArray, coefficients: FloatArray) -> None:
+        """Write the coefficients of finished responses and forget their sets."""
+        finished = np.zeros(len(self.problem.power), dtype=np.bool_)
+        finished[rows] = True
+        owner, column = np.divmod(self.keys, self.problem.p)
+        out = finished[owner]
+        coefficients[column[out], owner[out]] = self.values[out]
+        self.keys, self.values = self.keys[~out], self.values[~out]
+
+    def solve(self, rows: IndexArray, slack: FloatArray, *, rescue: BoolArray) -> None:
+        """Solve every response of `rows` on its set; columns that end at zero leave it.
+
+        `rescue` marks responses that get coordinate descent first.
+        """
+        owner, column = np.divmod(self.keys, self.problem.p)
+        first = np.searchsorted(owner, rows)
+        count = np.searchsorted(owner, rows, side="right") - first
+        busy = count > 0
+        self._solve_part(rows[busy], first[busy], count[busy], column, slack, rescue)
+        stays = self.values != 0
+        self.keys, self.values = self.keys[stays], self.values[stays]
+
+    def _solve_part(
+        self,
+        rows: IndexArray,
+        first: IndexArray,
+        count: IndexArray,
+        column: IndexArray,
+        slack: FloatArray,
+        rescue: BoolArray,
+    ) -> None:
+        """Solve `rows`, in halves if together they use too many columns for one Gram matrix."""
+        if not rows.size:
+            return
+        slots = _ranges(first, count)
+        union = np.unique(column[slots])
+        if len(union) > UNION_COLUMNS and len(rows) > 1:
+            for half in (slice(None, len(rows) // 2), slice(len(rows) // 2, None)):
+                self._solve_part(rows[half], first[half], count[half], column, slack, rescue)
+            return
+        gram = self._gram(union, len(rows))
+        width = -(-count // 4) * 4
+        width[count > 32] = -(-count[count > 32] // 16) * 16
+        for k in np.unique(width):
+            group = np.flatnonzero(width == k)
+            for begin, end in blocks(len(group), max(BATCH_CELLS // int(k) ** 2, 1)):
+                some = group[begin:end]
+                self._solve_stack(
+                    gram, union, column, rows[some], first[some], count[some], int(k), slack, rescue
+                )
+
+    def _gram(self, union: IndexArray, replicates: int) -> FloatArray:
+        """Return the Gram matrix of the columns in `union`, scaled to unit diagonal."""
+        problem = self.problem
+        if self._keep(union, replicates):
+            gram = self.products[np.ix_(union, np.searchsorted(self.kept, union))]
+        else:
+            chosen = problem.X[:, union]
+            gram = chosen.T @ chosen / problem.n
+        scale = problem.scale[union]
+        gram /= scale[:, None]
+        gram /= scale
+        return gram
+
+    def _solve_stack(
+        self,
+        gram: FloatArray,
+        union: IndexArray,
+        column: IndexArray,
+        rows: IndexArray,
+        first: IndexArray,
+        count: IndexArray,
+        k: int,
+        slack: FloatArray,
+        rescue: BoolArray,
+    ) -> None:
+        """Solve responses whose sets have at most k columns, padded to k."""
+        problem = self.problem
+        offset = np.arange(k)
+        real = offset < count[:, None]
+        slot = np.where(real, first[:, None] + offset, first[:, None])
+        columns = column[slot]
+        local = np.searchsorted(union, columns)
+        stack = gram[local[:, :, None], local[:, None, :]]
+        stack *= real[:, :, None] & real[:, None, :]
+        stack[:, offset, offset] = 1.0
+        scale = problem.scale[columns]
+        inner = np.where(real, problem.scores[columns, rows[:, None]] / scale, 0.0)
+        weights = np.where(real, problem.weight_of(columns, rows[:, None]) / scale, 1.0)
+        start = np.where(real, self.values[slot] * scale, 0.0)
+        ease = 0.5 * slack[rows] * np.sqrt(problem.power[rows])
+        late = rescue[rows]
+        if k >= CROWDED:
+            start = sweep_together(stack, inner, weights, start, SWEEPS)
+        elif late.any():
+            start[late] = sweep_together(stack[late], inner[late], weights[late], start[late], 50)
+        solved, _ = solve_together(stack, inner, weights, start, ease)
+        self.values[slot[real]] = (solved / scale)[real]
+
+
+def _ranges(first: IndexArray, count: IndexArray) -> IndexArray:
+    """Return first_i, ..., first_i + count_i - 1 for every i, one after another."""
+    ends = np.cumsum(count)
+    return np.arange(ends[-1]) + np.repeat(first - (ends - count), count)
