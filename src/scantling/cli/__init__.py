@@ -1,0 +1,1 @@
+"""Thin: parse, one call, render, exit status."""

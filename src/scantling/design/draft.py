@@ -261,7 +261,9 @@ def _kept_rows(raw: RawColumns, usable: list[int]) -> tuple[NDArray[np.intp], li
     kept = np.flatnonzero(fine.all(axis=1))
     if len(kept) == len(fine):
         return kept, []
-    worst = [raw.names[usable[j]] for j in np.argsort(fine.sum(axis=0), kind="stable")[:3]]
+    filled = fine.sum(axis=0)
+    order = np.argsort(filled, kind="stable")[:3]
+    worst = [raw.names[usable[j]] for j in order if filled[j] < len(fine)]
     return kept, [
         f"To mend: {int((~fine).sum())} missing or infinite values; dropping their rows leaves"
         f" {len(kept)} of {len(fine)} (most in {listed(worst)})."

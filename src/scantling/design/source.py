@@ -152,11 +152,12 @@ def _ending(path: Path) -> str:
 
 
 def _separator(path: Path) -> str:
-    ending = _ending(Path(path.stem)) if _ending(path) == ".gz" else _ending(path)
+    packed = _ending(path) == ".gz"
+    ending = _ending(Path(path.stem)) if packed else _ending(path)
     if ending not in _SEPARATORS:
+        found = ending + _ending(path) if packed else ending
         raise InputError(
-            f"{file_label(path)}: the ending {shown(path.suffix)} is not known;"
-            f" {_ACCEPTED} is needed"
+            f"{file_label(path)}: the ending {shown(found)} is not known; {_ACCEPTED} is needed"
         )
     return _SEPARATORS[ending]
 

@@ -1,0 +1,1 @@
+"""What the data say: residuals, tails, moments, variance, dependence, geometry."""

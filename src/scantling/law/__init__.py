@@ -1,0 +1,1 @@
+"""What errors are drawn from."""

@@ -1,0 +1,1 @@
+"""The limits, the budget they make, remedies and the verdict."""

@@ -140,12 +140,25 @@ def _run(case: Case, p: int, name: str, summary: SelectionSummary) -> StressRun:
         law=name,
         mode="conditional",
         replicates=summary.replicates,
-        stability=summary.stability or Estimate(value=0.0, low=0.0, high=0.0),
-        power=summary.power,
-        false_share=summary.false_share,
+        stability=_estimate(summary, "stability"),
+        power=_estimate(summary, "power"),
+        false_share=_estimate(summary, "false_share"),
         exact=summary.exact,
         mean_size=summary.mean_size,
     )
+
+
+def _estimate(summary: SelectionSummary, name: str) -> Estimate:
+    """A criterion with its interval; an undefined stability index counts as 0."""
+    value, low, high = (getattr(summary, name + end) for end in ("", "_low", "_high"))
+    if value is None:
+        return Estimate(value=0.0, low=0.0, high=0.0)
+    return Estimate(value=value, low=low, high=high)
+
+
+def _criteria(summary: SelectionSummary) -> list[float]:
+    """Stability, power and false share."""
+    return [_estimate(summary, name).value for name in CRITERIA]
 
 
 def margins(case: Case, run: StressRun) -> FloatArray:
@@ -191,8 +204,7 @@ def law_effects(case: Case, p: int, mapper: Mapper) -> FloatArray:
         # A drawn law without variance cannot be scaled to the residual sd; it is judged below.
         law = case.law_draws[k] if math.isfinite(case.law_draws[k].sd) else case.law
         summary = refit(case, support_set(case, k % SUPPORTS), p, law, REFITS_PER_LAW, rng)
-        stability = 0.0 if summary.stability is None else summary.stability.value
-        return np.array([stability, summary.power.value, summary.false_share.value])
+        return np.array(_criteria(summary))
 
     values = np.array(mapper(one, range(len(case.law_draws))))
     groups = np.arange(len(values)) % SUPPORTS
@@ -214,8 +226,7 @@ def _law_share(case: Case, p: int, total: FloatArray) -> FloatArray:
         summary = refit(
             case, support_set(case, k % SUPPORTS), p, case.law, REFITS_PER_LAW, rng
         )
-        stability = 0.0 if summary.stability is None else summary.stability.value
-        chance.append([stability, summary.power.value, summary.false_share.value])
+        chance.append(_criteria(summary))
     pairs = np.array(chance).reshape(2, SUPPORTS, 3)
     within = ((pairs[0] - pairs[1]) ** 2 / 2).mean(axis=0)
     return np.asarray(np.clip(1 - within / np.maximum(total, 1e-12), 0, 1))

@@ -1,0 +1,1 @@
+"""From records to text and JSON; nothing is computed here."""

@@ -1,0 +1,1 @@
+"""Kernels: arrays and a generator in, arrays out; no design, no table."""

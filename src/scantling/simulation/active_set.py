@@ -1,6 +1,8 @@
 """Many small lasso problems at once, each on its own few columns.
 
-Every problem is min_b b'Gb/2 - c'b + sum_j w_j |b_j| with G of unit diagonal.
+Every problem is min_b b'Gb/2 - c'b + sum_j w_j |b_j| with G of unit diagonal,
+given by the gradient g = c - G a at the point a it starts from: a gradient taken
+from residuals is then refined, not recomputed, where columns nearly depend.
 The method is the feature-sign search: on a guessed set of signs the problem is
 a linear system; a step that would change signs is cut by an exact line search,
 so the objective falls at every step and the search ends after finitely many.
@@ -34,7 +36,11 @@ CAUTIOUS_AFTER = 60
 
 
 def solve_together(
-    gram: FloatArray, inner: FloatArray, weights: FloatArray, start: FloatArray, slack: FloatArray
+    gram: FloatArray,
+    slopes: FloatArray,
+    weights: FloatArray,
+    start: FloatArray,
+    slack: FloatArray,
 ) -> tuple[FloatArray, BoolArray]:
     """Solve R lasso problems of K columns each.
 
@@ -42,9 +48,9 @@ def solve_together(
     ----------
     gram : array, shape (R, K, K)
         Symmetric, non-negative definite, unit diagonal. A padded column has an
-        identity row, zero inner product and weight one.
-    inner, weights, start : array, shape (R, K)
-        c, w > 0 and the point to start from.
+        identity row, zero slope and weight one.
+    slopes, weights, start : array, shape (R, K)
+        c - G start, w > 0 and the point to start from.
     slack : array, shape (R,)
         Violation of the optimality conditions that is left alone, in units of c.
 
@@ -58,11 +64,12 @@ def solve_together(
     settled = np.zeros(len(gram), dtype=np.bool_)
     rows = np.arange(len(gram))
     b = start.copy()
-    gradient = inner - _apply(gram, b)
+    gradient = slopes.copy()
     signs = np.sign(b)
     _admit(signs, gradient, weights, slack, np.full(len(gram), True), single=False)
     for step in range(100 + 4 * gram.shape[1]):
-        b, signs, gradient, full = _step(gram, inner, weights, b, signs, gradient)
+        b, signs, full = _step(gram, weights, b, signs, gradient)
+        gradient = slopes - _apply(gram, b - start)
         still = np.abs(gradient - weights * signs) <= slack[:, None]
         stationary = full & (still | (signs == 0)).all(axis=1)
         grew = _admit(signs, gradient, weights, slack, stationary, single=step >= CAUTIOUS_AFTER)
@@ -72,7 +79,8 @@ def solve_together(
             settled[rows[done]] = True
             go = ~done
             rows, b, signs, gradient = rows[go], b[go], signs[go], gradient[go]
-            gram, inner, weights, slack = gram[go], inner[go], weights[go], slack[go]
+            gram, slopes, weights = gram[go], slopes[go], weights[go]
+            start, slack = start[go], slack[go]
         if not rows.size:
             break
     coefficients[rows] = b
@@ -80,17 +88,17 @@ def solve_together(
 
 
 def sweep_together(
-    gram: FloatArray, inner: FloatArray, weights: FloatArray, start: FloatArray, sweeps: int
-) -> FloatArray:
-    """Return the point after cyclic coordinate descent, all R problems side by side.
+    gram: FloatArray, slopes: FloatArray, weights: FloatArray, start: FloatArray, sweeps: int
+) -> tuple[FloatArray, FloatArray]:
+    """Return the point, and the gradient there, after cyclic coordinate descent.
 
-    For the few problems whose sign search has not settled: slower, but each
+    All R problems go side by side. For the few problems whose sign search has not settled: slower, but each
     update lowers the objective whatever the rounding. Shapes as in
     `solve_together`. Friedman et al. (2007), Pathwise coordinate optimization,
     Annals of Applied Statistics 1, 302-332.
     """
     b = start.copy()
-    gradient = inner - _apply(gram, b)
+    gradient = slopes.copy()
     for _ in range(sweeps):
         for k in range(gram.shape[1]):
             pull = gradient[:, k] + b[:, k]
@@ -99,7 +107,7 @@ def sweep_together(
             if change.any():
                 gradient -= change[:, None] * gram[:, k]
                 b[:, k] = fresh
-    return b
+    return b, slopes - _apply(gram, b - start)
 
 
 def _apply(gram: FloatArray, b: FloatArray) -> FloatArray:
@@ -109,12 +117,11 @@ def _apply(gram: FloatArray, b: FloatArray) -> FloatArray:
 
 def _step(
     gram: FloatArray,
-    inner: FloatArray,
     weights: FloatArray,
     b: FloatArray,
     signs: FloatArray,
     gradient: FloatArray,
-) -> tuple[FloatArray, FloatArray, FloatArray, BoolArray]:
+) -> tuple[FloatArray, FloatArray, BoolArray]:
     """Move every problem once; the last item says where the whole step was taken."""
     active = signs != 0
     wanted = np.where(active, gradient - weights * signs, 0.0)
@@ -131,7 +138,7 @@ def _step(
     if cut.any():
         b[cut] = _line_search(b[cut], move[cut], wanted[cut], weights[cut], wrong[cut])
     signs = np.where(hasty[:, None], np.where(early, 0.0, signs), np.sign(b))
-    return b, signs, inner - _apply(gram, b), full
+    return b, signs, full
 
 
 def _solve_active(gram: FloatArray, active: BoolArray, wanted: FloatArray) -> FloatArray:
@@ -148,15 +155,15 @@ def _solve_active(gram: FloatArray, active: BoolArray, wanted: FloatArray) -> Fl
     system = gram * (active[:, :, None] & active[:, None, :])
     diagonal = np.arange(gram.shape[1])
     system[:, diagonal, diagonal] = 1.0 + RIDGE
-    move = np.linalg.solve(system, wanted[:, :, None])[:, :, 0]
-    move[~active] = 0.0
-    return move
+    solved = np.linalg.solve(system, wanted[:, :, None])[:, :, 0]
+    return np.where(active, solved, 0.0)
 
 
 def _solve_one(system: FloatArray, wanted: FloatArray) -> FloatArray:
     """Solve one positive definite system; rounding may have made it slightly indefinite."""
-    _, solution, fault = dposv(system, wanted, overwrite_a=False)
-    return solution if fault == 0 else np.linalg.solve(system, wanted)
+    _, solution, fault = dposv(system, wanted)
+    answer: FloatArray = solution if fault == 0 else np.linalg.solve(system, wanted)
+    return answer
 
 
 def _line_search(
@@ -193,9 +200,9 @@ def _admit(
 ) -> BoolArray:
     """Give a sign, in place, to violating columns at zero; say which problems grew."""
     excess = np.where(signs == 0, np.abs(gradient) - weights - slack[:, None], 0.0)
-    enters = (excess > 0) & where[:, None]
+    enters: BoolArray = (excess > 0) & where[:, None]
     if single:
-        enters &= excess == excess.max(axis=1, keepdims=True)
+        enters = enters & (excess == excess.max(axis=1, keepdims=True))
     signs[enters] = np.sign(gradient[enters])
     grew: BoolArray = enters.any(axis=1)
     return grew

@@ -162,11 +162,14 @@ def _solve_block(
     """Fill the coefficients and gaps of one block of responses."""
     sets = WorkingSets(problem, start)
     open_rows = np.flatnonzero(problem.power > 0)
+    if not open_rows.size:
+        return
     slack = np.full(len(problem.power), max(min(1e-9, 0.01 * tol), 1e-15))
     stalled = np.zeros(len(problem.power), dtype=np.int64)
     best = np.full(len(problem.power), np.inf)
     for _ in range(ROUNDS):
-        objective, gap, grew = sets.check(open_rows, slack, size=16)
+        exact = bool((stalled[open_rows] > 0).any())
+        objective, gap, grew = sets.check(open_rows, slack, size=16, exact=exact)
         # Rounding can hold a response up; it is given up after a few such rounds.
         stalled[open_rows] += ~grew | (objective >= best[open_rows])
         slack[open_rows[~grew]] *= 0.01
@@ -178,7 +181,7 @@ def _solve_block(
         if not open_rows.size:
             return
         sets.solve(open_rows, slack, rescue=stalled > 1)
-    _, gap, _ = sets.check(open_rows, slack, size=0)
+    _, gap, _ = sets.check(open_rows, slack, size=0, exact=True)
     gaps[open_rows] = gap
     sets.release(open_rows, coefficients)
 

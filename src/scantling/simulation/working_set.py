@@ -26,9 +26,6 @@ UNION_COLUMNS = 1500
 BATCH_CELLS = 500_000
 """Cells of the stacked small Gram matrices solved together (4 MB, to stay in cache)."""
 
-CROWDED = 48
-SWEEPS = 20
-
 PASS_CELLS = 200_000
 """Cells of one piece of a pass over all columns and responses."""
 
@@ -69,55 +66,77 @@ class WorkingSets:
         self.problem = problem
         self.keys: IndexArray = np.zeros(0, dtype=np.int64)
         self.values: FloatArray = np.zeros(0)
+        self.slopes: FloatArray = np.zeros(0)
         if start is not None:
-            rows, columns = np.nonzero((start.T != 0) & (problem.scale > 0))
+            usable = (start.T != 0) & (problem.scale > 0) & (problem.power > 0)[:, None]
+            rows, columns = np.nonzero(usable)
             self.keys = rows * problem.p + columns
             self.values = start[columns, rows]
+            self.slopes = np.zeros(len(rows))
         self.kept: IndexArray = np.zeros(0, dtype=np.int64)
         self.products: FloatArray = np.zeros((problem.p, 0))
 
     def check(
-        self, rows: IndexArray, slack: FloatArray, *, size: int
+        self, rows: IndexArray, slack: FloatArray, *, size: int, exact: bool
     ) -> tuple[FloatArray, FloatArray, BoolArray]:
-        """Return the objectives and duality gaps of `rows`, after adding the worst violating columns.
+        """Return objectives and duality gaps of `rows`; let the worst violating columns in.
 
-        At most max(size, present size of the set) columns enter a set; those that
+        At most `size` columns, or a quarter of those present, enter a set; those that
         violate by less than the slack, times the root mean squares of column and
-        response, do not. The last item says which sets grew.
+        response, do not. With `exact` gradients come from residuals, not from kept
+        products. The last item says which sets grew.
         """
-        problem, p = self.problem, self.problem.p
-        owner, column = np.divmod(self.keys, p)
+        problem = self.problem
+        owner, column = np.divmod(self.keys, problem.p)
         union = np.unique(column)
-        place = np.full(len(problem.power), -1)
+        place = np.zeros(len(problem.power), dtype=np.int64)
         place[rows] = np.arange(len(rows))
+        cell = np.searchsorted(union, column), place[owner]
         b = np.zeros((len(union), len(rows)))
-        b[np.searchsorted(union, column), place[owner]] = self.values
-        at, who, size_of, inside = self._pass(rows, union, b)
+        b[cell] = self.values
+        at, who, slope, inside = self._pass(rows, union, b, exact)
+        self.slopes = inside[cell]
         weight = problem.weight_of(at, rows[who])
+        strength = np.abs(slope) / weight
         worst = np.ones(len(rows))
-        np.maximum.at(worst, who, size_of / weight)
-        shrink = 1.0 / worst
-        on_union = problem.weights[union if len(problem.weights) > 1 else [0]][:, rows]
-        fitted = (b * (problem.scores[np.ix_(union, rows)] + inside)).sum(axis=0)
-        rest = np.maximum(problem.power[rows] - fitted, 0.0)
-        size_b = (on_union * np.abs(b)).sum(axis=0)
-        linear = (on_union * np.abs(b) - shrink * b * inside).sum(axis=0)
-        gap = ((1.0 - shrink) ** 2 * rest / 2 + linear) / (problem.power[rows] / 2)
+        np.maximum.at(worst, who, strength)
+        objective, gap = self._gap(rows, union, b, inside, 1.0 / worst)
         allowed = slack[rows[who]] * np.sqrt(problem.power[rows[who]]) * problem.scale[at]
-        enters = size_of - weight > allowed
-        keys = rows[who[enters]] * p + at[enters]
-        strength = size_of[enters] / weight[enters]
-        fresh = ~np.isin(keys, self.keys)
-        grew = self._add(keys[fresh], strength[fresh], size)
-        return rest / 2 + size_b, np.abs(gap), grew[rows]
+        keys = rows[who] * problem.p + at
+        enters = np.abs(slope) - weight > allowed
+        enters[enters] = ~np.isin(keys[enters], self.keys)
+        grew = self._add(keys[enters], slope[enters], strength[enters], size)
+        return objective, gap, grew[rows]
+
+    def _gap(
+        self,
+        rows: IndexArray,
+        union: IndexArray,
+        b: FloatArray,
+        inside: FloatArray,
+        shrink: FloatArray,
+    ) -> tuple[FloatArray, FloatArray]:
+        """Return objectives and gaps of `rows`, the gaps over mean(y^2)/2.
+
+        `inside` is the gradient on the union, `shrink` the factor s that makes the
+        residual dual feasible. With g the gradient, ||y - Xb||^2/n = ||y||^2/n - b'(c + g).
+        """
+        problem = self.problem
+        power = problem.power[rows]
+        weights = problem.weights[union if len(problem.weights) > 1 else [0]][:, rows]
+        cost = weights * np.abs(b)
+        fitted = (b * (problem.scores[np.ix_(union, rows)] + inside)).sum(axis=0)
+        rest = np.maximum(power - fitted, 0.0) / 2
+        gap = (1.0 - shrink) ** 2 * rest + (cost - shrink * b * inside).sum(axis=0)
+        return rest + cost.sum(axis=0), np.abs(gap) / (power / 2)
 
     def _pass(
-        self, rows: IndexArray, union: IndexArray, b: FloatArray
+        self, rows: IndexArray, union: IndexArray, b: FloatArray, exact: bool
     ) -> tuple[IndexArray, IndexArray, FloatArray, FloatArray]:
         """Go over all columns: where |gradient| exceeds the weight, and the gradient on `union`.
 
-        Returns column, position in `rows`, |gradient| of the excesses, and the
-        gradient, shape (len(union), len(rows)).
+        Returns column, position in `rows` and gradient of the excesses, and the
+        gradient on the union, shape (len(union), len(rows)).
         """
         problem = self.problem
         everything = len(rows) == len(problem.power)
@@ -126,7 +145,7 @@ class WorkingSets:
         residual: FloatArray | None = None
         products: FloatArray | None = None
         if len(union):
-            if self._keep(union, len(rows)):
+            if not exact and self._keep(union, len(rows)):
                 products = self.products[:, np.searchsorted(self.kept, union)]
                 inside = problem.scores[np.ix_(union, rows)] - products[union] @ b
             else:
@@ -143,13 +162,12 @@ class WorkingSets:
                 gradient = problem.scores[first:last, pick] - products[first:last] @ b
             else:
                 gradient = problem.scores[first:last, pick]
-            size = np.abs(gradient)
-            above = size > (weights if len(weights) == 1 else weights[first:last])
+            above = np.abs(gradient) > (weights if len(weights) == 1 else weights[first:last])
             flat = np.flatnonzero(above)
             at, who = np.divmod(flat, len(rows))
-            found.append((at + first, who, size.ravel()[flat]))
-        at, who, size = (np.concatenate(part) for part in zip(*found, strict=True))
-        return at, who, size, inside
+            found.append((at + first, who, gradient[at, who]))
+        at, who, slope = (np.concatenate(part) for part in zip(*found, strict=True))
+        return at, who, slope, inside
 
     def _keep(self, union: IndexArray, replicates: int) -> bool:
         """Make X'X_W/n available for the union if that is cheaper than residuals and fits."""
@@ -167,21 +185,26 @@ class WorkingSets:
             self.products = np.concatenate([self.products, new], axis=1)[:, order]
         return True
 
-    def _add(self, keys: IndexArray, strength: FloatArray, size: int) -> BoolArray:
+    def _add(
+        self, keys: IndexArray, slopes: FloatArray, strength: FloatArray, size: int
+    ) -> BoolArray:
         """Put the strongest keys of each response in its set; say which responses grew."""
         replicates = len(self.problem.power)
         owner = keys // self.problem.p
-        room = np.maximum(np.bincount(self.keys // self.problem.p, minlength=replicates) // 8, size)
+        present = np.bincount(self.keys // self.problem.p, minlength=replicates)
+        room = np.maximum(present // 4, size)
         counts = np.bincount(owner, minlength=replicates)
         if (counts > room).any():
             order = np.lexsort((keys, -strength, owner))
             begin = np.cumsum(counts) - counts
             rank = np.arange(len(keys)) - begin[owner[order]]
-            keys = keys[order[rank < room[owner[order]]]]
+            order = order[rank < room[owner[order]]]
+            keys, slopes = keys[order], slopes[order]
         together = np.concatenate([self.keys, keys])
         order = np.argsort(together, kind="stable")
         self.keys = together[order]
         self.values = np.concatenate([self.values, np.zeros(len(keys))])[order]
+        self.slopes = np.concatenate([self.slopes, slopes])[order]
         return counts > 0
 
     def release(self, rows: IndexArray, coefficients: FloatArray) -> None:
@@ -191,7 +214,7 @@ class WorkingSets:
         owner, column = np.divmod(self.keys, self.problem.p)
         out = finished[owner]
         coefficients[column[out], owner[out]] = self.values[out]
-        self.keys, self.values = self.keys[~out], self.values[~out]
+        self._retain(~out)
 
     def solve(self, rows: IndexArray, slack: FloatArray, *, rescue: BoolArray) -> None:
         """Solve every response of `rows` on its set; columns that end at zero leave it.
@@ -203,8 +226,11 @@ class WorkingSets:
         count = np.searchsorted(owner, rows, side="right") - first
         busy = count > 0
         self._solve_part(rows[busy], first[busy], count[busy], column, slack, rescue)
-        stays = self.values != 0
+        self._retain(self.values != 0)
+
+    def _retain(self, stays: BoolArray) -> None:
         self.keys, self.values = self.keys[stays], self.values[stays]
+        self.slopes = self.slopes[stays]
 
     def _solve_part(
         self,
@@ -271,16 +297,16 @@ class WorkingSets:
         stack *= real[:, :, None] & real[:, None, :]
         stack[:, offset, offset] = 1.0
         scale = problem.scale[columns]
-        inner = np.where(real, problem.scores[columns, rows[:, None]] / scale, 0.0)
+        slopes = np.where(real, self.slopes[slot] / scale, 0.0)
         weights = np.where(real, problem.weight_of(columns, rows[:, None]) / scale, 1.0)
         start = np.where(real, self.values[slot] * scale, 0.0)
         ease = 0.5 * slack[rows] * np.sqrt(problem.power[rows])
         late = rescue[rows]
-        if k >= CROWDED:
-            start = sweep_together(stack, inner, weights, start, SWEEPS)
-        elif late.any():
-            start[late] = sweep_together(stack[late], inner[late], weights[late], start[late], 50)
-        solved, _ = solve_together(stack, inner, weights, start, ease)
+        if late.any():
+            start[late], slopes[late] = sweep_together(
+                stack[late], slopes[late], weights[late], start[late], 50
+            )
+        solved, _ = solve_together(stack, slopes, weights, start, ease)
         self.values[slot[real]] = (solved / scale)[real]
 
 

@@ -1,0 +1,88 @@
+"""Where results go: files written whole or not at all, and the terminal."""
+
+from __future__ import annotations
+
+import os
+import tempfile
+from pathlib import Path
+
+import click
+
+from scantling.errors import InputError
+
+EMPHASISED = ("Verdict", "Because", "Columns", "Limits", "Rows", "Remedies")
+
+
+def make_folder(folder: Path) -> None:
+    """Create the folder reports go to, before the run, so that nothing is lost after it.
+
+    Raises
+    ------
+    InputError
+        If it cannot be created or written to.
+    """
+    try:
+        folder.mkdir(parents=True, exist_ok=True)
+    except OSError as fault:
+        raise InputError(f"--out {folder}: cannot be made a folder ({fault.strerror})") from fault
+    if not os.access(folder, os.W_OK):
+        raise InputError(f"--out {folder}: cannot be written to")
+
+
+def write_files(folder: Path, stem: str, contents: dict[str, str]) -> None:
+    """Write each content to folder/stem+suffix, over what was there, whole or not at all."""
+    for suffix, text in contents.items():
+        _replace(folder / (stem + suffix), text)
+
+
+def write_new(path: Path, text: str) -> None:
+    """Write a file that must not exist yet.
+
+    Raises
+    ------
+    InputError
+        If it exists or cannot be written.
+    """
+    if path.exists():
+        raise InputError(f"{path}: exists; --out names another file")
+    _replace(path, text)
+
+
+def _replace(path: Path, text: str) -> None:
+    """Write beside the target and rename: a reader sees the old file or the new one."""
+    try:
+        handle, name = tempfile.mkstemp(dir=path.parent, prefix=f".{path.name}.")
+    except OSError as fault:
+        raise InputError(f"{path}: cannot be written ({fault.strerror})") from fault
+    try:
+        with os.fdopen(handle, "w", encoding="utf-8") as stream:
+            stream.write(text)
+            stream.flush()
+            os.fsync(stream.fileno())
+        mask = os.umask(0)
+        os.umask(mask)
+        Path(name).chmod(0o666 & ~mask)
+        Path(name).replace(path)
+    except OSError as fault:
+        Path(name).unlink(missing_ok=True)
+        raise InputError(f"{path}: cannot be written ({fault.strerror})") from fault
+    except BaseException:
+        Path(name).unlink(missing_ok=True)
+        raise
+
+
+def print_report(text: str, *, plain: bool) -> None:
+    """Print to stdout; on a terminal that takes styles the first screen's labels are bold."""
+    if plain or not _styled():
+        click.echo(text, nl=False)
+        return
+    lines = text.split("\n")
+    for place, line in enumerate(lines[:12]):
+        label = line.split(" ", 1)[0]
+        if label in EMPHASISED:
+            lines[place] = click.style(label, bold=True) + line[len(label) :]
+    click.echo("\n".join(lines), nl=False)
+
+
+def _styled() -> bool:
+    return click.get_text_stream("stdout").isatty() and not os.environ.get("NO_COLOR")

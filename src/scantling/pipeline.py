@@ -1,0 +1,186 @@
+"""The stages in order: from a design file to a report."""
+
+from __future__ import annotations
+
+import math
+import platform
+import time
+from collections.abc import Callable
+from dataclasses import replace
+from datetime import UTC, datetime
+from importlib.metadata import version
+
+from scantling.core.streams import Mapper, worker_pool
+from scantling.design.expand import Columns, expand
+from scantling.design.parse import read_design
+from scantling.design.spec import Design
+from scantling.design.table import Table, read_table
+from scantling.diagnostics.battery import Diagnosis, diagnose
+from scantling.diagnostics.residuals import Residuals, fit_pilot
+from scantling.law.families import ErrorLaw
+from scantling.law.fit import error_law
+from scantling.planning.breakthrough import break_through
+from scantling.planning.budget import assemble
+from scantling.planning.case import Case, draw_laws
+from scantling.planning.ceiling import ceiling
+from scantling.planning.limit import Limit, missing_limit
+from scantling.planning.remedies import Remedy, remedies
+from scantling.planning.signal import signal
+from scantling.planning.stress import Stress, stress
+from scantling.planning.verdict import variance_missing, verdict
+from scantling.report.record import DesignAsRead, Receipt, Report
+
+LIBRARIES = ("numpy", "scipy", "pandas", "statsmodels", "scikit-learn", "arch")
+STAGES = ("read", "residuals", "diagnose", "law", "limits", "stress", "remedies")
+Progress = Callable[[str], None]
+"""Called with the name of each stage as it begins."""
+
+
+def vet(
+    design: Design, *, workers: int = 1, progress: Progress | None = None,
+    command: str | None = None,
+) -> Report:  # fmt: skip
+    """Vet a design: read, diagnose, fit the error law, find the limits, judge.
+
+    Parameters
+    ----------
+    design : Design
+        From `read_design`.
+    workers : int
+        Threads; the result does not depend on it.
+    progress : callable, optional
+        Called with each stage's name.
+    command : str, optional
+        The command line to put in the receipt.
+
+    Raises
+    ------
+    InputError
+        If the data are not usable.
+    """
+    started = time.monotonic()
+    tell: Progress = progress or (lambda stage: None)
+    seed = design.simulation.seed
+    tell("read")
+    table = read_table(design)
+    columns = expand(design, table)
+    with worker_pool(workers) as mapper:
+        tell("residuals")
+        residuals = fit_pilot(
+            columns.values, columns.response, time_ordered=columns.time_ordered, seed=seed
+        )
+        tell("diagnose")
+        diagnosis = diagnose(
+            columns.values, residuals, time_ordered=columns.time_ordered, seed=seed
+        )
+        tell("law")
+        law = error_law(
+            residuals.values, volatility=diagnosis.volatility, seed=seed, tail=diagnosis.errors
+        )
+        case = make_case(design, columns, residuals, law)
+        tell("limits")
+        noise = break_through(case, mapper)
+        tell("stress")
+        selection, limits = _selection(case, diagnosis, mapper)
+        budget = assemble(
+            rows=case.rows,
+            asked=case.columns,
+            noise=noise,
+            signal=signal(case, noise.fitted, noise.drawn),
+            stability=limits[0],
+            geometry=limits[1],
+            ceiling=ceiling(diagnosis, case.rows, case.rule),
+        )
+        tell("remedies")
+        found: tuple[Remedy, ...] = ()
+        if diagnosis.moment(2) != "missing":
+            found = remedies(design, table, residuals, diagnosis, case, noise, mapper)
+    return Report(
+        design=design,
+        read=_as_read(table, columns, residuals),
+        diagnosis=diagnosis,
+        law=law,
+        budget=budget,
+        stress=selection,
+        remedies=found,
+        verdict=verdict(case, diagnosis, budget, selection),
+        receipt=_receipt(design, table, command, started),
+    )
+
+
+def make_case(design: Design, columns: Columns, residuals: Residuals, law: ErrorLaw) -> Case:
+    """The design as the simulations see it."""
+    return Case(
+        X=columns.values,
+        law=law,
+        law_draws=draw_laws(law, design.simulation.seed),
+        response_sd=residuals.response_sd,
+        residual_sd=residuals.sd,
+        target=design.target,
+        rule=design.penalty.rule,
+        replicates=design.simulation.replicates,
+        seed=design.simulation.seed,
+    )
+
+
+def _selection(
+    case: Case, diagnosis: Diagnosis, mapper: Mapper
+) -> tuple[Stress | None, tuple[Limit, Limit]]:
+    """Stress runs with stability and geometry limits, or the reason there are none."""
+    lack = variance_missing(diagnosis)
+    if not lack and not math.isfinite(case.law.sd):
+        lack = "the fitted error law has no variance"
+    if lack:
+        return None, (missing_limit(lack), missing_limit(lack))
+    done = stress(case, mapper)
+    return done, (done.stability, done.geometry)
+
+
+def _as_read(table: Table, columns: Columns, residuals: Residuals) -> DesignAsRead:
+    return DesignAsRead(
+        names=columns.names,
+        rows=columns.response.size,
+        raw_columns=len(table.names),
+        rows_dropped=table.rows_dropped,
+        rows_lost=columns.rows_lost,
+        skipped=table.skipped,
+        dropped=columns.dropped,
+        time_ordered=columns.time_ordered,
+        span=None if columns.time is None else (columns.time[0], columns.time[-1]),
+        explained=residuals.explained,
+        pilot_columns=tuple(columns.names[j] for j in residuals.selected),
+        folds=residuals.folds,
+        response_sd=residuals.response_sd,
+        residual_sd=residuals.sd,
+    )
+
+
+def _receipt(design: Design, table: Table, command: str | None, started: float) -> Receipt:
+    return Receipt(
+        version=version("scantling"),
+        seed=design.simulation.seed,
+        replicates=design.simulation.replicates,
+        inputs=((design.path.name, design.sha256), (table.file_name, table.sha256)),
+        libraries=(
+            ("python", platform.python_version()),
+            *((name, version(name)) for name in LIBRARIES),
+        ),
+        command=command or f"scantling vet {design.path.name}",
+        seconds=round(time.monotonic() - started, 2),
+        finished=datetime.now(UTC).isoformat(timespec="seconds"),
+    )
+
+
+def with_simulation(
+    design: Design, *, seed: int | None = None, replicates: int | None = None
+) -> Design:
+    """The design with other Monte Carlo settings; None keeps the file's."""
+    settings = design.simulation
+    if seed is not None:
+        settings = replace(settings, seed=seed)
+    if replicates is not None:
+        settings = replace(settings, replicates=replicates)
+    return replace(design, simulation=settings)
+
+
+__all__ = ["STAGES", "Progress", "read_design", "vet", "with_simulation"]

@@ -1,0 +1,101 @@
+"""The first screen: what a person who reads only twelve lines has to know."""
+
+from __future__ import annotations
+
+import textwrap
+
+from scantling.planning.remedies import Remedy
+from scantling.planning.verdict import NONE
+from scantling.report.record import Report
+from scantling.report.wording import (
+    LABEL,
+    band,
+    columns,
+    count,
+    labelled,
+    rate,
+    shortened,
+)
+
+REASON_LINES = 3
+SHOWN_REMEDIES = 3
+
+
+def first_screen(report: Report, width: int) -> list[str]:
+    """At most twelve lines: verdict, reason, columns, limits, rows, remedies."""
+    title = shortened(report.design.title, width - 10)
+    lines = [f"scantling: {title}"]
+    lines += labelled(
+        "Verdict", f"{report.verdict.answer.upper()} (cover: {report.verdict.cover})", width
+    )
+    lines += _reason(report, width)
+    lines += labelled("Columns", _columns(report), width)
+    lines += labelled("Limits", _limits(report), width)[:2]
+    lines += labelled("Rows", _rows(report), width)[:2]
+    return lines + _remedies(report, width, 12 - len(lines))
+
+
+def _reason(report: Report, width: int) -> list[str]:
+    text = report.verdict.reasons[0]
+    lines = labelled("Because", text, width)
+    if len(lines) <= REASON_LINES:
+        return lines
+    body = textwrap.shorten(text, REASON_LINES * (width - LABEL - 4), placeholder=" ...")
+    return labelled("Because", body, width)[:REASON_LINES]
+
+
+def _columns(report: Report) -> str:
+    budget = report.budget
+    asked = f"{budget.asked:,} asked for; "
+    if report.verdict.answer == NONE:
+        return asked + "none can be allowed"
+    allowed = budget.allowed
+    if allowed.columns is None:
+        return asked + "allowed: unknown"
+    if allowed.note and allowed.low is not None and allowed.low >= budget.asked:
+        return asked + "all of them allowed"
+    return asked + f"{columns(allowed)} allowed (90 % band {band(allowed, budget.asked)})"
+
+
+def _limits(report: Report) -> str:
+    budget = report.budget
+    named = {"noise": budget.noise, "signal": budget.signal, "stability": budget.stability}
+    order = sorted(named, key=lambda name: name != budget.binding)
+    parts = [f"{name} {columns(named[name])}" for name in order]
+    if budget.binding:
+        parts[0] += " (binds)"
+    return ", ".join(parts) + f"; theory's rate {rate(budget.ceiling)}"
+
+
+def _rows(report: Report) -> str:
+    budget = report.budget
+    parts = [f"{budget.rows:,} used"]
+    if budget.equivalent_rows is not None and budget.equivalent_rows < 0.97 * budget.rows:
+        parts.append(f"worth {budget.equivalent_rows:,} rows of normal errors")
+    if budget.rows_needed is not None:
+        parts.append(f"the effects asked for need {count(budget.rows_needed)}")
+    elif budget.rows_note:
+        parts.append(f"rows needed unknown: {budget.rows_note}")
+    return "; ".join(parts)
+
+
+def _remedies(report: Report, width: int, room: int) -> list[str]:
+    found = report.remedies[: min(SHOWN_REMEDIES, max(room, 1))]
+    if not found:
+        return labelled("Remedies", "none computed applies", width)[:1]
+    lines = []
+    for place, remedy in enumerate(found):
+        label = "Remedies" if place == 0 else ""
+        text = shortened(f"{place + 1}. {remedy.name}: {outcome(remedy)}", width - LABEL)
+        lines.append(f"{label:<{LABEL}}{text}")
+    return lines
+
+
+def outcome(remedy: Remedy) -> str:
+    """What a remedy allows, in a few words."""
+    allowed = remedy.allowed
+    if allowed.columns is None:
+        return "unknown"
+    if allowed.note and allowed.low is not None and allowed.low >= remedy.columns:
+        return f"all {remedy.columns:,} allowed"
+    return f"{allowed.columns:,} of {remedy.columns:,} allowed"

@@ -1,0 +1,135 @@
+"""Limits, selection and remedies, in tables."""
+
+from __future__ import annotations
+
+from scantling.report.chart import risk_chart
+from scantling.report.document import cautions as all_cautions
+from scantling.report.first_screen import outcome
+from scantling.report.record import Report
+from scantling.report.sections import heading
+from scantling.report.wording import (
+    band,
+    columns,
+    count,
+    large,
+    paragraph,
+    probability,
+    rate,
+    table,
+)
+
+LAW_WORDS = {
+    "fitted": "fitted law",
+    "twin": "Gaussian twin",
+    "normal-volatility": "normal, fitted volatility",
+}
+
+
+def limits(report: Report, width: int) -> list[str]:
+    """All limits with their bands, the risk curve, and what the tails cost."""
+    budget = report.budget
+    lines = heading("Limits")
+    rows = [["Limit", "columns", "90 % band", "from"]]
+    for name in ("noise", "signal", "stability", "geometry"):
+        limit = getattr(budget, name)
+        rows.append([name, columns(limit), band(limit, budget.asked), f"{limit.mode} simulation"])
+    ends = budget.ceiling
+    spread = "no band"
+    if ends.low is not None:
+        spread = f"{large(ends.low)} {'upwards' if ends.high is None else 'to ' + large(ends.high)}"
+    rows.append(["ceiling", rate(ends), spread, "theory, a rate"])
+    lines += table(rows)
+    lines += paragraph(f"Ceiling: {ends.regime}.", width)
+    lines += paragraph(f"Assured columns: none given, because {budget.assured.note}.", width)
+    for name in ("noise", "signal", "stability"):
+        limit = getattr(budget, name)
+        if limit.columns is None:
+            lines += paragraph(f"The {name} limit is unknown: {limit.note}.", width)
+    risk = budget.risk_at_design
+    lines += paragraph(
+        f"Break-through risk at {budget.asked:,} columns: {probability(risk.value)} (90 % band"
+        f" {probability(risk.low)} to {probability(risk.high)}).",
+        width,
+    )
+    lines += ["", *risk_chart(budget.curve, report.design.target.risk, width), ""]
+    if budget.penalty_ratio is not None:
+        lines += paragraph(
+            f"Penalty ratio {budget.penalty_ratio:.2f}: {budget.rows:,} rows do the work of"
+            f" {count(budget.equivalent_rows)} under normal errors.",
+            width,
+        )
+    if budget.detectable is not None and budget.detectable_worst is not None:
+        lines += paragraph(
+            f"Smallest detectable effect at {budget.asked:,} columns: {budget.detectable:.3f} sd of"
+            f" the response for the median column, {budget.detectable_worst:.3f} for the worst"
+            f" tenth.",
+            width,
+        )
+    needed = count(budget.rows_needed) if budget.rows_needed else f"unknown, {budget.rows_note}"
+    return lines + paragraph(
+        f"Rows needed for the smallest effect at {budget.asked:,} columns: {needed}. This covers"
+        " the signal limit only, at the present penalty.",
+        width,
+    )
+
+
+def selection(report: Report, width: int) -> list[str]:
+    """Refits under fresh errors."""
+    lines = heading("Selection under fresh errors")
+    if report.stress is None:
+        return lines + paragraph(f"Not simulated: {report.budget.stability.note}.", width)
+    rows = [["Columns and law", "stability", "90 %", "power", "false share", "picked"]]
+    for run in report.stress.runs:
+        rows.append(
+            [
+                f"{run.columns:,} {LAW_WORDS[run.law]}",
+                f"{run.stability.value:.2f}",
+                f"{run.stability.low:.2f} to {run.stability.high:.2f}",
+                f"{run.power.value:.2f}",
+                f"{run.false_share.value:.2f}",
+                f"{run.mean_size:.1f}",
+            ]
+        )
+    lines += table(rows)
+    target = report.design.target
+    missed = ", ".join(name.replace("_", " ") for name in report.stress.failing)
+    return lines + paragraph(
+        f"Asked for: stability {target.stability:g}, power {target.power:g}, false share at most"
+        f" {target.false_share:g}. At {report.budget.asked:,} columns"
+        f" {'all are met' if not missed else missed + ' fails'}; {report.stress.runs[0].replicates}"
+        f" refits a row over 5 supports of {target.relevant} relevant columns.",
+        width,
+    )
+
+
+def remedies(report: Report, width: int) -> list[str]:
+    """Every remedy with its price."""
+    lines = heading("Remedies, each recomputed")
+    if not report.remedies:
+        return lines + paragraph("None computed applies.", width)
+    for place, remedy in enumerate(report.remedies):
+        risk = remedy.risk_at_design.value
+        lines += paragraph(
+            f"{place + 1}. {remedy.name}: {outcome(remedy)} (band"
+            f" {band(remedy.allowed, remedy.columns)}), break-through risk {probability(risk)}."
+            f" {'' if remedy.refitted else 'Noise and signal only. '}Price: {remedy.price}.",
+            width,
+        )
+    return lines
+
+
+def reasons(report: Report, width: int) -> list[str]:
+    """All reasons, the binding one first."""
+    lines = heading("Reasons")
+    for reason in report.verdict.reasons:
+        lines += paragraph(reason, width)
+    return lines
+
+
+def cautions(report: Report, width: int) -> list[str]:
+    """What the report does not say."""
+    lines = heading("Cautions")
+    for caution in all_cautions(report):
+        text = caution[0].upper() + caution[1:]
+        lines += paragraph(text if text.endswith(".") else text + ".", width)
+    return lines

@@ -1,0 +1,265 @@
+"""The report below the first screen, one function a section; nothing is computed here."""
+
+from __future__ import annotations
+
+import numpy as np
+
+from scantling.diagnostics.battery import Finding, SeriesGroup
+from scantling.diagnostics.moments import ORDERS
+from scantling.diagnostics.tail_index import TailIndex, index_from_gamma
+from scantling.report.record import Report
+from scantling.report.wording import (
+    count,
+    index,
+    index_interval,
+    p_value,
+    paragraph,
+    share,
+    shortened,
+    table,
+)
+
+WORST = 5
+LISTED = 6
+
+
+def heading(text: str) -> list[str]:
+    """A blank line and an underlined heading."""
+    return ["", text, "-" * len(text)]
+
+
+def listing(names: tuple[str, ...], most: int = LISTED) -> str:
+    """A few names, and how many more."""
+    shown = ", ".join(names[:most])
+    return shown if len(names) <= most else f"{shown} and {len(names) - most:,} more"
+
+
+def design(report: Report, width: int) -> list[str]:
+    """What was read, expanded, lost and dropped."""
+    read, spec = report.read, report.design
+    lines = heading("Design as read")
+    span = f", {read.span[0]} to {read.span[1]}" if read.span else ""
+    lost = []
+    if read.rows_dropped:
+        lost.append(f"{read.rows_dropped:,} dropped for missing values")
+    if read.rows_lost:
+        lost.append(f"{read.rows_lost:,} lost to lags")
+    lines += paragraph(
+        f"{read.rows:,} rows{span}{' (' + ', '.join(lost) + ')' if lost else ''};"
+        f" {len(read.names):,} candidate columns made of {read.raw_columns:,} raw ones;"
+        f" response {spec.data.response}.",
+        width,
+    )
+    target = spec.target
+    lines += paragraph(
+        f"Asked of it: {target.relevant} relevant columns, smallest effect"
+        f" {target.smallest_effect:g} sd of the response per sd of a column, risk"
+        f" {target.risk:g}, power {target.power:g}, stability {target.stability:g}, false share"
+        f" {target.false_share:g}; {spec.penalty.loss} loss, {spec.penalty.rule} penalty.",
+        width,
+    )
+    if read.dropped:
+        names = tuple(f"{name} ({reason})" for name, reason in read.dropped)
+        lines += paragraph(f"Left out of the expansion: {listing(names, 4)}.", width)
+    if read.skipped:
+        lines += paragraph(f"Without any number, skipped: {listing(read.skipped)}.", width)
+    pilot = (
+        f"A cross-fitted pilot ({read.folds} folds) explains {share(read.explained)} of the"
+        f" response's variance out of fold"
+    )
+    if read.pilot_columns:
+        pilot += f"; on all rows it takes {listing(read.pilot_columns)}"
+    return lines + paragraph(pilot + ".", width)
+
+
+def _tail_words(tail: TailIndex) -> str:
+    found = "a finite index is found" if tail.finite else "no finite index is found"
+    words = f"index {index(tail.index)} (90 % {index_interval(tail.low, tail.high)}); {found}"
+    if not tail.finite:
+        words += f", indices below {index(tail.low)} are excluded"
+    return f"{words} ({p_value(tail.p_value)})"
+
+
+def tails(report: Report, width: int) -> list[str]:
+    """Tail index of errors, columns and scores."""
+    found = report.diagnosis
+    lines = heading("Tails")
+    if found.errors is None:
+        lines += paragraph(f"Errors: not assessed, {found.errors_note}.", width)
+    else:
+        lines += paragraph(f"Errors: {_tail_words(found.errors)}.", width)
+        if found.errors.note:
+            lines += paragraph(f"Before that: {found.errors.note}.", width)
+    for side in found.sides:
+        lines += paragraph(f"{side.side.capitalize()} tail: {_tail_words(side)}.", width)
+    weights = {w: found.weight.count(w) for w in ("heavy", "sparse", "light")}
+    lines += _group_words("Columns", found.columns, report.read.names, width)
+    lines += paragraph(
+        f"By the thin-tail test (Holm over columns) {weights['heavy']:,} columns are heavy,"
+        f" {weights['sparse']:,} sparse and {weights['light']:,} light.",
+        width,
+    )
+    lines += _group_words("Scores", found.scores, report.read.names, width)
+    lines += _worst_scores(report)
+    refused = found.columns.tails.refused
+    if refused:
+        names = tuple(f"{report.read.names[j]} ({why})" for j, why in refused)
+        lines += paragraph(f"No index for {len(refused):,} columns: {listing(names, 3)}.", width)
+    return lines
+
+
+def _group_words(
+    label: str, group: SeriesGroup, names: tuple[str, ...], width: int
+) -> list[str]:
+    middle = group.tails.median_column()
+    if middle is None:
+        return paragraph(f"{label}: none has a tail index.", width)
+    low, high = group.tails.intervals()
+    known = group.tails.gamma[group.tails.assessed]
+    ends = [index(index_from_gamma(float(np.quantile(known, q)))) for q in (0.9, 0.1)]
+    words = index_interval(
+        1 / float(high[middle]) if high[middle] > 0 else float("inf"),
+        1 / float(low[middle]) if low[middle] > 0 else float("inf"),
+    )
+    return paragraph(
+        f"{label}: the median one, {shortened(names[middle], 30)}, has index"
+        f" {index(index_from_gamma(float(group.tails.gamma[middle])))} (90 % {words}); four in five"
+        f" lie between {ends[0]} and {ends[1]}.",
+        width,
+    )
+
+
+def _worst_scores(report: Report) -> list[str]:
+    group = report.diagnosis.scores
+    known = np.flatnonzero(group.tails.assessed)
+    worst = known[np.argsort(-group.tails.gamma[known], kind="stable")][:WORST]
+    shares = dict(zip(report.budget.worst_columns, report.budget.worst_shares, strict=True))
+    rows = [["Heaviest scores", "index", "variance", "share of break-throughs"]]
+    for j in worst:
+        rows.append(
+            [
+                shortened(report.read.names[j], 34),
+                index(index_from_gamma(float(group.tails.gamma[j]))),
+                group.answer(2, int(j)),
+                share(shares.get(int(j), 0.0)),
+            ]
+        )
+    return table(rows)
+
+
+def moments(report: Report, width: int) -> list[str]:
+    """Which moments exist."""
+    found = report.diagnosis
+    lines = heading("Moments")
+    rows = [["Order", *(str(order) for order in ORDERS)]]
+    rows.append(["errors", *(found.moment(order) for order in ORDERS)])
+    for label, group in (("median column", found.columns), ("median score", found.scores)):
+        middle = group.tails.median_column()
+        if middle is not None:
+            rows.append([label, *(group.answer(order, middle) for order in ORDERS)])
+    lines += table(rows)
+    second = next(m for m in found.error_moments if m.order == 2)
+    lines += paragraph(f"Errors, order 2: {second.answer}, because {second.reason}.", width)
+    without = found.scores_without_variance
+    if without:
+        names = tuple(report.read.names[j] for j in without)
+        lines += paragraph(
+            f"Scores without a variance: {len(without):,} columns, {listing(names)}.", width
+        )
+    return lines
+
+
+def _findings(findings: tuple[Finding, ...]) -> list[str]:
+    rows = [["Test", "statistic", "p", "valid here"]]
+    for finding in findings:
+        result = finding.result
+        valid = "yes" if finding.valid else f"no, needs moment {result.needs_moment}"
+        shown = f"{result.p_value:.3f}" if result.p_value >= 0.001 else "< 0.001"
+        rows.append([result.test, f"{result.statistic:.3g}", shown, valid])
+    return table(rows)
+
+
+def variance(report: Report, width: int) -> list[str]:
+    """Variance and dependence tests, volatility, co-movement."""
+    found = report.diagnosis
+    lines = heading("Variance and dependence")
+    lines += _findings((*found.variance, *found.dependence))
+    path = found.volatility
+    if found.clustering is None:
+        lines += paragraph("Rows have no order, so dependence is not tested.", width)
+    elif path is None:
+        lines += paragraph(f"Volatility is taken as constant: {found.clustering.reason}.", width)
+    else:
+        implied = "no finite index" if path.tail_index > 50 else f"index {path.tail_index:.1f}"
+        lines += paragraph(
+            f"Volatility clusters: GARCH(1,1) with alpha {path.alpha:.3f}, beta {path.beta:.3f}"
+            f" (sum {path.persistence:.3f}), which by itself implies {implied} for the errors.",
+            width,
+        )
+    together = found.co_movement
+    worst = int(together.argmax())
+    lines += paragraph(
+        f"Where a column and the errors are large together the penalty must rise: by"
+        f" {float(np.median(together)):.2f} for the median column, by {together[worst]:.2f} for"
+        f" {shortened(report.read.names[worst], 30)}.",
+        width,
+    )
+    return lines
+
+
+def structure(report: Report, width: int) -> list[str]:
+    """Geometry of the columns."""
+    shape = report.diagnosis.structure
+    lines = heading("Columns among themselves")
+    factors = "no common factor" if shape.factors == 0 else f"{shape.factors} common factors"
+    pair = ""
+    if shape.largest_pair is not None:
+        names = [shortened(report.read.names[j], 24) for j in shape.largest_pair]
+        pair = f", between {names[0]} and {names[1]}"
+    lines += paragraph(
+        f"{factors.capitalize()} ({share(shape.leading_share)} of the trace); effective rank"
+        f" {shape.effective_rank:.0f} of {len(report.read.names):,}; largest correlation"
+        f" {shape.largest_correlation:.2f}{pair}.",
+        width,
+    )
+    return lines
+
+
+def law(report: Report, width: int) -> list[str]:
+    """The fitted law and how well it fits."""
+    fitted = report.law
+    lines = heading("Error law")
+    named = ", ".join(f"{name} {value:.4g}" for name, value in fitted.parameters.items())
+    lines += paragraph(f"{fitted.family}: {named}.", width)
+    if fitted.fit.note:
+        lines += paragraph(f"Chosen because {fitted.fit.note}.", width)
+    if fitted.fit.p_value is not None:
+        lines += paragraph(
+            f"Anderson-Darling distance {fitted.fit.distance:.2f},"
+            f" {p_value(fitted.fit.p_value)} by parametric bootstrap: the law is"
+            f" {'rejected' if fitted.fit.p_value <= 0.05 else 'not rejected'}.",
+            width,
+        )
+    tried = "; ".join(f"{family} {value:.1f}" for family, value in fitted.fit.candidates)
+    if tried:
+        lines += paragraph(f"Bayes information criterion, smaller is better: {tried}.", width)
+    if fitted.volatility is not None:
+        lines += paragraph("The law is of the innovations, on the fitted volatility path.", width)
+    return lines
+
+
+def receipt(report: Report, width: int) -> list[str]:
+    """What is needed to run it again."""
+    record = report.receipt
+    lines = heading("Receipt")
+    lines += paragraph(
+        f"scantling {record.version}, seed {record.seed}, {count(record.replicates)} replicates,"
+        f" {record.seconds:.1f} s, {record.finished}.",
+        width,
+    )
+    lines += paragraph(
+        "Libraries: " + ", ".join(f"{name} {v}" for name, v in record.libraries) + ".", width
+    )
+    for name, digest in record.inputs:
+        lines += [f"  sha-256 of {shortened(name, width - 20)}", f"    {digest}"]
+    return [*lines, *paragraph(f"Command: {record.command}", width)]

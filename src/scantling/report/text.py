@@ -1,0 +1,38 @@
+"""The text report: a record in, plain text out, byte for byte the same each time."""
+
+from __future__ import annotations
+
+from scantling.report import limits_section, sections
+from scantling.report.first_screen import first_screen
+from scantling.report.record import Report
+
+NARROWEST = 60
+
+
+def render(report: Report, width: int = 80) -> str:
+    """Return the report as plain text.
+
+    Parameters
+    ----------
+    report : Report
+    width : int
+        Columns of the page; at least 60.
+    """
+    width = max(width, NARROWEST)
+    lines = first_screen(report, width)
+    for section in (
+        limits_section.reasons,
+        sections.design,
+        sections.tails,
+        sections.moments,
+        sections.variance,
+        sections.structure,
+        sections.law,
+        limits_section.limits,
+        limits_section.selection,
+        limits_section.remedies,
+        limits_section.cautions,
+        sections.receipt,
+    ):
+        lines += section(report, width)
+    return "\n".join(line.rstrip() for line in lines) + "\n"
