@@ -36,18 +36,40 @@ def commands() -> None:
 
 @commands.command()
 @click.argument("design", type=click.Path(path_type=Path))
-@click.option("--out", type=click.Path(path_type=Path), default=Path("reports"), metavar="DIR",
-              show_default=True, help="Where the text report and its JSON twin are written.")
+@click.option(
+    "--out",
+    type=click.Path(path_type=Path),
+    default=Path("reports"),
+    metavar="DIR",
+    show_default=True,
+    help="Where the text report and its JSON twin are written.",
+)
 @click.option("--seed", type=click.IntRange(0, 2**63 - 1), help="Instead of the design's.")
 @click.option("--replicates", type=click.IntRange(50, 100_000), help="Instead of the design's.")
-@click.option("--pace", type=click.Choice(list(PACE)),
-              help="Replicates 100, 400 or 2000; --replicates wins over it.")
-@click.option("--workers", type=click.IntRange(1, 64), default=1, show_default=True,
-              help="Threads; results do not depend on it.")
+@click.option(
+    "--pace",
+    type=click.Choice(list(PACE)),
+    help="Replicates 100, 400 or 2000; --replicates wins over it.",
+)
+@click.option(
+    "--workers",
+    type=click.IntRange(1, 64),
+    default=1,
+    show_default=True,
+    help="Threads; results do not depend on it.",
+)
 @click.option("--quiet", is_flag=True, help="Print nothing; only write the files.")
 @click.option("--json", "as_json", is_flag=True, help="Print the JSON twin, not the text.")
-def vet(design: Path, out: Path, seed: int | None, replicates: int | None, pace: str | None,
-        workers: int, quiet: bool, as_json: bool) -> int:
+def vet(
+    design: Path,
+    out: Path,
+    seed: int | None,
+    replicates: int | None,
+    pace: str | None,
+    workers: int,
+    quiet: bool,
+    as_json: bool,
+) -> int:
     """Vet DESIGN.toml: how many columns its rows can carry, and what binds.
 
     Prints the report and writes it to DIR as text and JSON. The exit status is the verdict:
@@ -79,8 +101,12 @@ def vet(design: Path, out: Path, seed: int | None, replicates: int | None, pace:
 
 @commands.command()
 @click.argument("data", type=click.Path(path_type=Path))
-@click.option("--out", type=click.Path(path_type=Path), metavar="FILE",
-              help="Where to write; default: the table's name with .toml, here. '-' prints it.")
+@click.option(
+    "--out",
+    type=click.Path(path_type=Path),
+    metavar="FILE",
+    help="Where to write; default: the table's name with .toml, here. '-' prints it.",
+)
 def draft(data: Path, out: Path | None) -> int:
     """Write a starter design file for the table DATA.csv."""
     from scantling.cli.output import write_new

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import os
+import sys
 import tempfile
 from pathlib import Path
 
@@ -85,4 +86,4 @@ def print_report(text: str, *, plain: bool) -> None:
 
 
 def _styled() -> bool:
-    return click.get_text_stream("stdout").isatty() and not os.environ.get("NO_COLOR")
+    return sys.stdout.isatty() and not os.environ.get("NO_COLOR")

@@ -57,7 +57,9 @@ def finite_matrix(values: Any, name: str) -> FloatArray:
     except (TypeError, ValueError) as fault:
         raise InputError(f"{name}: numbers are needed; found {type(values).__name__}") from fault
     if array.ndim != 2 or not array.size:
-        raise InputError(f"{name}: a table of rows and columns is needed; found shape {array.shape}")
+        raise InputError(
+            f"{name}: a table of rows and columns is needed; found shape {array.shape}"
+        )
     if not np.isfinite(array).all():
         row, column = np.argwhere(~np.isfinite(array))[0]
         raise InputError(
@@ -81,5 +83,7 @@ def between(value: Any, name: str, low: float, high: float, *, closed: bool = Fa
         raise InputError(f"{name}: a number is needed; found {value!r}") from fault
     inside = low <= number <= high if closed else low < number < high
     if not inside:
-        raise InputError(f"{name}: a number between {low:g} and {high:g} is needed; found {value!r}")
+        raise InputError(
+            f"{name}: a number between {low:g} and {high:g} is needed; found {value!r}"
+        )
     return number

@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
+from typing import Any
 
 import numpy as np
 
@@ -25,7 +26,14 @@ from scantling.diagnostics.moments import (
 )
 from scantling.diagnostics.residuals import Residuals
 from scantling.diagnostics.structure import Structure, column_structure
-from scantling.diagnostics.tail_index import TailIndex, block_length, tail_index
+from scantling.diagnostics.tail_estimators import hill
+from scantling.diagnostics.tail_index import (
+    TailIndex,
+    block_length,
+    interval_from_gamma,
+    one_side,
+    tail_index,
+)
 from scantling.diagnostics.variance import (
     co_movement,
     co_movement_test,
@@ -134,6 +142,45 @@ def series_group(series: FloatArray, *, dependent: bool) -> SeriesGroup:
     return SeriesGroup(tails=tails, moments=moments)
 
 
+def _scores(
+    X: FloatArray,
+    e: FloatArray,
+    columns: ColumnTails,
+    errors: TailIndex | None,
+    error_moments: tuple[MomentAnswer, ...],
+    *,
+    dependent: bool,
+) -> SeriesGroup:
+    """Tails and moments of x_ij e_i.
+
+    A column that takes few values or is active on few rows is bounded there, so its score has
+    the errors' tail, undiluted: it takes the errors' estimates. (Estimated on all rows, the jump
+    between active and idle rows would pass for a heavy tail.)
+    """
+    group = series_group(X * e[:, None], dependent=dependent)
+    bounded = columns.sparse.copy()
+    bounded[[j for j, _ in columns.refused]] = True
+    if errors is None or not bounded.any():
+        return group
+    tails = group.tails
+    own = {
+        "gamma": errors.gamma,
+        "error": errors.gamma_error,
+        "hill_gamma": errors.hill_gamma,
+        "hill_error": errors.hill_error,
+        "p_value": errors.p_value,
+    }
+    changed: dict[str, Any] = {}
+    for name, value in own.items():
+        changed[name] = read_only(np.where(bounded, value, getattr(tails, name)))
+    codes = {answer: code for code, answer in ANSWERS.items()}
+    moments = {order: answers.copy() for order, answers in group.moments.items()}
+    for answer in error_moments:
+        moments[int(answer.order)][bounded] = codes[answer.answer]
+    refused = tuple((j, reason) for j, reason in tails.refused if not bounded[j])
+    return SeriesGroup(tails=replace(tails, refused=refused, **changed), moments=moments)
+
+
 def column_weights(columns: ColumnTails) -> tuple[str, ...]:
     """heavy, sparse or light: Holm over the thin-tail tests; sparse counts as heavy later."""
     rejected = holm_rejections(np.asarray(columns.p_value))
@@ -143,9 +190,7 @@ def column_weights(columns: ColumnTails) -> tuple[str, ...]:
     )
 
 
-def diagnose(
-    X: FloatArray, residuals: Residuals, *, time_ordered: bool, seed: int
-) -> Diagnosis:
+def diagnose(X: FloatArray, residuals: Residuals, *, time_ordered: bool, seed: int) -> Diagnosis:
     """Run every diagnostic.
 
     Parameters
@@ -167,7 +212,7 @@ def diagnose(
     moments = _error_moments(e, errors, errors_note, implied, seed)
     granted = {int(m.order) for m in moments if m.answer == "exists"}
     columns = series_group(X, dependent=time_ordered)
-    scores = series_group(X * e[:, None], dependent=time_ordered)
+    scores = _scores(X, e, columns.tails, errors, moments, dependent=time_ordered)
     block = block_length(e.size) if clustering and clustering.test.p_value <= 0.05 else None
     variance = _variance_tests(X, residuals, block, seed)
     dependence = _dependence_tests(e, clustering) if time_ordered else ()
@@ -189,9 +234,7 @@ def diagnose(
     )
 
 
-def _error_tails(
-    e: FloatArray, seed: int
-) -> tuple[TailIndex | None, tuple[TailIndex, ...], str]:
+def _error_tails(e: FloatArray, seed: int) -> tuple[TailIndex | None, tuple[TailIndex, ...], str]:
     try:
         errors = tail_index(e, seed=seed)
     except InputError as reason:
@@ -244,9 +287,6 @@ def _warnings(
     if errors is not None:
         # Hill further out, at k = sqrt(n): stable laws look lighter in range than they are.
         k = max(2, int(e.size**0.5))
-        from scantling.diagnostics.tail_estimators import hill
-        from scantling.diagnostics.tail_index import interval_from_gamma, one_side
-
         outer = float(hill(one_side(e, "both"), k))
         lower = outer * (1 - 1.645 / k**0.5)
         weighted_low, _ = interval_from_gamma(errors.gamma, errors.gamma_error, errors.level)

@@ -42,9 +42,7 @@ def upper_points(count: int) -> FloatArray:
     counts = sorted(UPPER_POINTS)
     logs = np.log(counts)
     table = np.array([UPPER_POINTS[k] for k in counts])
-    return np.array(
-        [np.interp(np.log(count), logs, table[:, j]) for j in range(table.shape[1])]
-    )
+    return np.array([np.interp(np.log(count), logs, table[:, j]) for j in range(table.shape[1])])
 
 
 def greenwood_p_value(statistic: FloatArray, count: int) -> FloatArray:

@@ -65,9 +65,7 @@ def interval_answers(
 
 def normal_moment(order: float) -> float:
     """E|N|^order of a standard normal."""
-    return math.exp(
-        order / 2 * math.log(2) + gammaln((order + 1) / 2) - 0.5 * math.log(math.pi)
-    )
+    return math.exp(order / 2 * math.log(2) + gammaln((order + 1) / 2) - 0.5 * math.log(math.pi))
 
 
 def scaled_moment(values: FloatArray, order: float) -> float:

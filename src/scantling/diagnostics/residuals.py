@@ -122,7 +122,7 @@ def student_regression(X: FloatArray, y: FloatArray) -> tuple[FloatArray, FloatA
         root = np.sqrt(weights)
         coefficients = np.linalg.lstsq(design * root[:, None], y * root, rcond=None)[0]
         residual = y - design @ coefficients
-    return coefficients, weights
+    return np.asarray(coefficients, dtype=np.float64), weights
 
 
 def fold_labels(n: int, *, time_ordered: bool, seed: int) -> np.ndarray:

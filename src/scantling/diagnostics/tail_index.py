@@ -139,9 +139,7 @@ def prepare(values: FloatArray, *, name: str = "values", seed: int = 0) -> Magni
         values = values[~zeros]
         notes.append(f"{zeros.mean():.0%} exact zeros dropped")
     if values.size < MINIMUM:
-        raise InputError(
-            f"{name}: {values.size} values other than 0; an index needs {MINIMUM}"
-        )
+        raise InputError(f"{name}: {values.size} values other than 0; an index needs {MINIMUM}")
     spread = float(values.std())
     distinct = np.unique(values)
     if distinct.size < 2 or spread == 0:
@@ -180,9 +178,7 @@ def _counts(n: int, side: str) -> tuple[int, int, int]:
     return tail_rows // 2, hill_count(tail_rows), thin_count(tail_rows)
 
 
-def tail_index(
-    values: Any, *, side: str = "both", level: float = 0.90, seed: int = 0
-) -> TailIndex:
+def tail_index(values: Any, *, side: str = "both", level: float = 0.90, seed: int = 0) -> TailIndex:
     """Estimate the tail index of a series, which may be serially dependent.
 
     Parameters

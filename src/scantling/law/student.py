@@ -23,9 +23,7 @@ SCAN = (
 
 def log_constant(df: float) -> float:
     """Log of the density's constant at scale 1."""
-    return float(
-        gammaln((df + 1) / 2) - gammaln(df / 2) - 0.5 * math.log(math.pi * df)
-    )
+    return float(gammaln((df + 1) / 2) - gammaln(df / 2) - 0.5 * math.log(math.pi * df))
 
 
 def profile(

@@ -10,6 +10,8 @@ import numpy as np
 from scantling.diagnostics.battery import Diagnosis
 from scantling.diagnostics.tail_index import index_from_gamma
 
+Ends = tuple[float, float, float]
+"""A tail index: point, low, high."""
 MOST = 10**12
 """Rates above it are reported as this number, 'at least'."""
 
@@ -43,49 +45,72 @@ def light_rate(rows: int, index: float) -> float:
 
 
 def ceiling(diagnosis: Diagnosis, rows: int, rule: str) -> Ceiling:
-    """Rate by the regime that applies; the sources stand beside each formula.
+    """The rate for a diagnosed design: q of the scores is the median heavy column's."""
+    heavy = np.array([w != "light" for w in diagnosis.weight])
+    errors = diagnosis.errors
+    tails = diagnosis.scores.tails
+    known = np.flatnonzero(heavy & tails.assessed)
+    scores: Ends | None = None
+    if known.size:
+        gamma_low, gamma_high = tails.intervals()
+        pick = known[np.argsort(tails.gamma[known], kind="stable")]
+        j = int(pick[(pick.size - 1) // 2])
+        scores = (
+            index_from_gamma(float(tails.gamma[j])),
+            1 / float(gamma_high[j]) if gamma_high[j] > 0 else math.inf,
+            1 / float(gamma_low[j]) if gamma_low[j] > 0 else math.inf,
+        )
+    return rate_by_regime(
+        rows=rows,
+        rule=rule,
+        heavy_share=float(heavy.mean()),
+        errors=None if errors is None else (errors.index, errors.low, errors.high),
+        scores=scores,
+    )
+
+
+def rate_by_regime(
+    *, rows: int, rule: str, heavy_share: float, errors: Ends | None, scores: Ends | None
+) -> Ceiling:
+    """Rate by the regime that applies.
 
     Self-normalised loadings: exp(n^(1/3)), Belloni et al. (2012), Econometrica 80. Equal
-    loadings: a share h of heavy columns may number n^(q/2-1) (Fuk et al. (1971), Theory of
-    Probability and its Applications 16), q the score tail index of the median heavy column,
-    so p is at most that over h; the light ones exp(n^(1-2/q)), q of the errors.
+    loadings: a share h of heavy columns may number n^(q/2-1), q of the scores (Fuk et al.
+    (1971), Theory of Probability and its Applications 16), so p is at most that over h; light
+    columns exp(n^(1-2/q)), q of the errors (truncation and Bennett (1962), Journal of the
+    American Statistical Association 57).
+
+    Parameters
+    ----------
+    rows : int
+    rule : {'plug-in', 'self-normalised'}
+    heavy_share : float
+        Share of columns that are not light.
+    errors, scores : (index, low, high) or None
+        Tail index with its interval; None if unknown.
     """
     if rule == "self-normalised":
         columns = _whole(rows ** (1 / 3))
         return Ceiling(
-            columns=columns, low=columns, high=columns, capped=columns >= MOST,
+            columns=columns,
+            low=columns,
+            high=columns,
+            capped=columns >= MOST,
             regime="squared loss, self-normalised loadings: exp(n^(1/3))",
-        )  # fmt: skip
-    heavy = np.array([w != "light" for w in diagnosis.weight])
-    errors = diagnosis.errors
-    ends: list[float] = []
+        )
+    rates: list[list[float]] = []
     names = []
-    if not heavy.all():
+    if heavy_share > 0:
+        if scores is None:
+            return _unknown("heavy columns, whose scores' tail index is unknown")
+        rates.append([heavy_rate(rows, q) - math.log(heavy_share) for q in scores])
+        names.append(f"heavy columns ({heavy_share:.0%}) n^(q/2-1), q of the scores")
+    if heavy_share < 1:
         if errors is None:
-            return Ceiling(columns=None, low=None, high=None, capped=False,
-                           regime="light columns; the errors' tail index is unknown")  # fmt: skip
-        ends_light = [light_rate(rows, q) for q in (errors.index, errors.low, errors.high)]
+            return _unknown("light columns; the errors' tail index is unknown")
+        rates.append([light_rate(rows, q) for q in errors])
         names.append("light columns exp(n^(1-2/q)), q of the errors")
-        ends = ends_light
-    if heavy.any():
-        tails = diagnosis.scores.tails
-        gamma_low, gamma_high = tails.intervals()
-        known = heavy & tails.assessed
-        if not known.any():
-            return Ceiling(columns=None, low=None, high=None, capped=False,
-                           regime="heavy columns; their scores' tail index is unknown")  # fmt: skip
-        pick = np.flatnonzero(known)[np.argsort(tails.gamma[known], kind="stable")]
-        j = int(pick[(pick.size - 1) // 2])
-        indices = [
-            index_from_gamma(float(tails.gamma[j])),
-            1 / float(gamma_high[j]) if gamma_high[j] > 0 else math.inf,
-            1 / float(gamma_low[j]) if gamma_low[j] > 0 else math.inf,
-        ]
-        share = float(heavy.mean())
-        ends_heavy = [heavy_rate(rows, q) - math.log(share) for q in indices]
-        names.insert(0, f"heavy columns ({share:.0%}) n^(q/2-1), q of the scores")
-        ends = [min(a, b) for a, b in zip(ends, ends_heavy, strict=True)] if ends else ends_heavy
-    point, low, high = (_whole(rate) for rate in ends)
+    point, low, high = (_whole(min(ends)) for ends in zip(*rates, strict=True))
     return Ceiling(
         columns=point,
         low=low,
@@ -93,3 +118,7 @@ def ceiling(diagnosis: Diagnosis, rows: int, rule: str) -> Ceiling:
         regime="squared loss, equal loadings: " + "; ".join(names),
         capped=point >= MOST,
     )
+
+
+def _unknown(reason: str) -> Ceiling:
+    return Ceiling(columns=None, low=None, high=None, capped=False, regime=reason)

@@ -191,8 +191,10 @@ def remedies(
 
     Noise and signal are recomputed for all; selection for the best three.
     """
-    computed = [(change, *_limits(change.case, mapper))
-                for change in changes(design, table, residuals, diagnosis, case, noise)]  # fmt: skip
+    computed = [
+        (change, *_limits(change.case, mapper))
+        for change in changes(design, table, residuals, diagnosis, case, noise)
+    ]
 
     def rank(item: tuple[Change, dict, BreakThrough]) -> tuple[float, float]:
         allowed, _ = combine(item[1], item[0].case.columns)
@@ -203,7 +205,9 @@ def remedies(
         refitted = place < REFITTED and math.isfinite(change.case.law.sd)
         if refitted:
             limits = limits | {
-                "stability": stress(change.case, mapper, twins=False, points=STRESS_POINTS).stability
+                "stability": stress(
+                    change.case, mapper, twins=False, points=STRESS_POINTS
+                ).stability
             }
         allowed, binding = combine(limits, change.case.columns)
         last = again.curve[-1]

@@ -97,9 +97,7 @@ def signal(case: Case, fitted: ScoreSample, drawn: tuple[ScoreSample, ...]) -> S
     effects = detectable_effects(case, fitted, deviation, case.columns)
     median = float(np.median(effects))
     level = float(penalty_level(case.columns, case.target.risk))
-    rows = math.ceil(
-        max(case.rows * (median / case.target.smallest_effect) ** 2, 4 * level**2)
-    )
+    rows = math.ceil(max(case.rows * (median / case.target.smallest_effect) ** 2, 4 * level**2))
     note = ""
     if rows > MOST_TIMES_ROWS * case.rows:
         note = f"more than {MOST_TIMES_ROWS} times the present rows"

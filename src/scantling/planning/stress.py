@@ -223,9 +223,7 @@ def _law_share(case: Case, p: int, total: FloatArray) -> FloatArray:
     chance = []
     for k in range(2 * SUPPORTS):
         rng = stream(case.seed, "refits, fitted law again", k)
-        summary = refit(
-            case, support_set(case, k % SUPPORTS), p, case.law, REFITS_PER_LAW, rng
-        )
+        summary = refit(case, support_set(case, k % SUPPORTS), p, case.law, REFITS_PER_LAW, rng)
         chance.append(_criteria(summary))
     pairs = np.array(chance).reshape(2, SUPPORTS, 3)
     within = ((pairs[0] - pairs[1]) ** 2 / 2).mean(axis=0)
@@ -284,5 +282,7 @@ def _limit(
         near = grid[-1] if math.isinf(point) else min(grid, key=lambda p: abs(p - point))
         effects = law_effects(case, near, mapper)
     noise = stream(case.seed, "criteria error").standard_normal((len(case.law_draws), 3))
-    draws = [limit_on_grid(grid, margin + u + z * half) for u, z in zip(effects, noise, strict=True)]
+    draws = [
+        limit_on_grid(grid, margin + u + z * half) for u, z in zip(effects, noise, strict=True)
+    ]
     return make_limit(point, draws, grid[-1], mode="conditional")

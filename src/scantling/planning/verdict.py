@@ -66,7 +66,7 @@ def verdict(case: Case, diagnosis: Diagnosis, budget: Budget, stress: Stress | N
     return Verdict(
         answer=answer,
         cover="theory and simulation" if covered else "simulation only",
-        reasons=tuple(_sentence(text) for text in _reasons(case, diagnosis, budget, stress)),
+        reasons=tuple(_sentence(text) for text in _reasons(case, budget, stress)),
     )
 
 
@@ -74,11 +74,9 @@ def _sentence(text: str) -> str:
     return text[0].upper() + text[1:] + "."
 
 
-def _reasons(
-    case: Case, diagnosis: Diagnosis, budget: Budget, stress: Stress | None
-) -> list[str]:
+def _reasons(case: Case, budget: Budget, stress: Stress | None) -> list[str]:
     limits = {
-        "noise": (budget.noise, lambda: _noise_reason(case, diagnosis, budget)),
+        "noise": (budget.noise, lambda: _noise_reason(case, budget)),
         "signal": (budget.signal, lambda: _signal_reason(case, budget)),
         "stability": (budget.stability, lambda: _stability_reason(case, budget, stress)),
     }
@@ -102,19 +100,16 @@ def _nothing_binds(budget: Budget) -> str:
     )
 
 
-def _noise_reason(case: Case, diagnosis: Diagnosis, budget: Budget) -> str:
+def _noise_reason(case: Case, budget: Budget) -> str:
     risk = budget.risk_at_design
-    heavy = sum(weight != "light" for weight in diagnosis.weight)
     ratio = budget.penalty_ratio
     if ratio is not None and ratio > TAIL_COST:
-        cause = f"tails ask for {ratio:.2f} times the penalty that normal errors would need"
-        if heavy:
-            cause += f", with {heavy:,} of {case.columns:,} columns heavy-tailed or sparse"
+        cause = f"tails ask for {ratio:.2f} times the penalty of normal errors"
     else:
         cause = "normal errors would need about the same penalty"
     return (
-        f"noise binds: at {budget.asked:,} columns some noise column passes the penalty with"
-        f" probability {risk.value:.2f} against {case.target.risk:g} accepted; {cause}"
+        f"noise binds: at {budget.asked:,} columns a noise column passes the penalty with"
+        f" probability {risk.value:.2f} ({case.target.risk:g} accepted); {cause}"
     )
 
 
@@ -150,8 +145,7 @@ def _blame(stability: Limit, geometry: Limit) -> str:
     if stability.columns is None or geometry.columns is None:
         return "the normal twin could not be run"
     if geometry.reached and (
-        geometry.columns <= 1.25 * stability.columns
-        or (geometry.low or 0) <= (stability.high or 0)
+        geometry.columns <= 1.25 * stability.columns or (geometry.low or 0) <= (stability.high or 0)
     ):
         return "normal errors do no better, so geometry or effect size is to blame, not tails"
     return (

@@ -188,7 +188,9 @@ def _group(group: SeriesGroup, names: tuple[str, ...], weight: tuple[str, ...] |
     note = "no column has a tail index"
     return {
         "tail": _unknown_tail(note) if middle is None else tail(middle),
-        "moments": dict.fromkeys(map(str, ORDERS), "unclear") if middle is None else moments(middle),
+        "moments": dict.fromkeys(map(str, ORDERS), "unclear")
+        if middle is None
+        else moments(middle),
         "median_column": None if middle is None else names[middle],
         **({"median_column_note": note} if middle is None else {}),
         "by_column": [

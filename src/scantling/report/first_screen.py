@@ -60,23 +60,23 @@ def _columns(report: Report) -> str:
 def _limits(report: Report) -> str:
     budget = report.budget
     named = {"noise": budget.noise, "signal": budget.signal, "stability": budget.stability}
-    order = sorted(named, key=lambda name: name != budget.binding)
-    parts = [f"{name} {columns(named[name])}" for name in order]
-    if budget.binding:
-        parts[0] += " (binds)"
-    return ", ".join(parts) + f"; theory's rate {rate(budget.ceiling)}"
+    binding = [f"{budget.binding} {columns(named[budget.binding])} binds"] if budget.binding else []
+    together: dict[str, list[str]] = {}
+    for name, limit in named.items():
+        if name != budget.binding:
+            together.setdefault(columns(limit), []).append(name)
+    others = [f"{' and '.join(names)} {value}" for value, names in together.items()]
+    return "; ".join([*binding, *others, f"ceiling {rate(budget.ceiling)}"])
 
 
 def _rows(report: Report) -> str:
     budget = report.budget
-    parts = [f"{budget.rows:,} used"]
+    used = f"{budget.rows:,} used"
     if budget.equivalent_rows is not None and budget.equivalent_rows < 0.97 * budget.rows:
-        parts.append(f"worth {budget.equivalent_rows:,} rows of normal errors")
+        used += f", worth {budget.equivalent_rows:,} under normal errors"
     if budget.rows_needed is not None:
-        parts.append(f"the effects asked for need {count(budget.rows_needed)}")
-    elif budget.rows_note:
-        parts.append(f"rows needed unknown: {budget.rows_note}")
-    return "; ".join(parts)
+        return f"{used}; the effects need {count(budget.rows_needed)}"
+    return f"{used}; rows needed unknown" + (f": {budget.rows_note}" if budget.rows_note else "")
 
 
 def _remedies(report: Report, width: int, room: int) -> list[str]:

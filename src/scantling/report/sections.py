@@ -108,9 +108,7 @@ def tails(report: Report, width: int) -> list[str]:
     return lines
 
 
-def _group_words(
-    label: str, group: SeriesGroup, names: tuple[str, ...], width: int
-) -> list[str]:
+def _group_words(label: str, group: SeriesGroup, names: tuple[str, ...], width: int) -> list[str]:
     middle = group.tails.median_column()
     if middle is None:
         return paragraph(f"{label}: none has a tail index.", width)
@@ -170,12 +168,12 @@ def moments(report: Report, width: int) -> list[str]:
 
 
 def _findings(findings: tuple[Finding, ...]) -> list[str]:
-    rows = [["Test", "statistic", "p", "valid here"]]
+    rows = [["Test", "statistic", "p", "valid"]]
     for finding in findings:
         result = finding.result
-        valid = "yes" if finding.valid else f"no, needs moment {result.needs_moment}"
+        valid = "yes" if finding.valid else f"needs moment {result.needs_moment}"
         shown = f"{result.p_value:.3f}" if result.p_value >= 0.001 else "< 0.001"
-        rows.append([result.test, f"{result.statistic:.3g}", shown, valid])
+        rows.append([shortened(result.test, 44), f"{result.statistic:.3g}", shown, valid])
     return table(rows)
 
 

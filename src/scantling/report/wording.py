@@ -26,7 +26,10 @@ def count(value: int | None) -> str:
 
 def large(value: int) -> str:
     """A whole number, in powers of ten from a million on."""
-    return f"{value:,}" if value < 1_000_000 else f"{value:.1e}".replace("e+0", "e").replace("e+", "e")
+    if value < 1_000_000:
+        return f"{value:,}"
+    mantissa, exponent = f"{value:.1e}".split("e")
+    return f"{mantissa}e{int(exponent)}"
 
 
 def index(value: float) -> str:
@@ -86,9 +89,9 @@ def rate(ceiling: Ceiling) -> str:
 
 def labelled(label: str, text: str, width: int) -> list[str]:
     """A label, and its text wrapped beside it."""
-    body = textwrap.wrap(
-        text, width - LABEL, break_long_words=False, break_on_hyphens=False
-    ) or [""]
+    body = textwrap.wrap(text, width - LABEL, break_long_words=False, break_on_hyphens=False) or [
+        ""
+    ]
     first = f"{label:<{LABEL}}{body[0]}".rstrip()
     return [first, *(" " * LABEL + line for line in body[1:])]
 

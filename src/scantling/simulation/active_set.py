@@ -92,10 +92,10 @@ def sweep_together(
 ) -> tuple[FloatArray, FloatArray]:
     """Return the point, and the gradient there, after cyclic coordinate descent.
 
-    All R problems go side by side. For the few problems whose sign search has not settled: slower, but each
-    update lowers the objective whatever the rounding. Shapes as in
-    `solve_together`. Friedman et al. (2007), Pathwise coordinate optimization,
-    Annals of Applied Statistics 1, 302-332.
+    All R problems go side by side. For the few problems whose sign search has not
+    settled: slower, but each update lowers the objective whatever the rounding.
+    Shapes as in `solve_together`. Friedman et al. (2007), Pathwise coordinate
+    optimization, Annals of Applied Statistics 1, 302-332.
     """
     b = start.copy()
     gradient = slopes.copy()
@@ -162,8 +162,7 @@ def _solve_active(gram: FloatArray, active: BoolArray, wanted: FloatArray) -> Fl
 def _solve_one(system: FloatArray, wanted: FloatArray) -> FloatArray:
     """Solve one positive definite system; rounding may have made it slightly indefinite."""
     _, solution, fault = dposv(system, wanted)
-    answer: FloatArray = solution if fault == 0 else np.linalg.solve(system, wanted)
-    return answer
+    return np.asarray(solution if fault == 0 else np.linalg.solve(system, wanted), dtype=np.float64)
 
 
 def _line_search(
@@ -200,9 +199,9 @@ def _admit(
 ) -> BoolArray:
     """Give a sign, in place, to violating columns at zero; say which problems grew."""
     excess = np.where(signs == 0, np.abs(gradient) - weights - slack[:, None], 0.0)
-    enters: BoolArray = (excess > 0) & where[:, None]
-    if single:
-        enters = enters & (excess == excess.max(axis=1, keepdims=True))
+    least = excess.max(axis=1, keepdims=True) if single else 0.0
+    excess[~where] = 0.0
+    enters: BoolArray = np.logical_and(excess > 0, excess >= least)
     signs[enters] = np.sign(gradient[enters])
     grew: BoolArray = enters.any(axis=1)
     return grew

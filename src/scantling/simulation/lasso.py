@@ -27,6 +27,9 @@ from scantling.simulation.working_set import Problem, WorkingSets
 BLOCK_CELLS = 4_000_000
 """Largest p times responses handled at once: about 32 MB for each array of that shape."""
 
+ENTER_AT_ONCE = 16
+"""Columns that may enter a small working set in one round."""
+
 ROUNDS = 120
 """Most rounds of solving and checking; common problems need two."""
 
@@ -169,7 +172,7 @@ def _solve_block(
     best = np.full(len(problem.power), np.inf)
     for _ in range(ROUNDS):
         exact = bool((stalled[open_rows] > 0).any())
-        objective, gap, grew = sets.check(open_rows, slack, size=16, exact=exact)
+        objective, gap, grew = sets.check(open_rows, slack, size=ENTER_AT_ONCE, exact=exact)
         # Rounding can hold a response up; it is given up after a few such rounds.
         stalled[open_rows] += ~grew | (objective >= best[open_rows])
         slack[open_rows[~grew]] *= 0.01
