@@ -10,6 +10,20 @@ from scantling.core.record import FloatArray
 from scantling.errors import InputError
 
 
+def _numbers(values: Any, name: str) -> FloatArray:
+    """`values` as float64; text, dates and complex numbers are not taken for numbers."""
+    try:
+        found = np.asarray(values)
+        if found.dtype.kind in "SUMmc" or (
+            found.dtype.kind == "O"
+            and any(isinstance(v, str | bytes | complex) for v in found.flat)
+        ):
+            raise TypeError(f"{found.dtype} values")
+        return np.asarray(values, dtype=np.float64)
+    except (TypeError, ValueError) as fault:
+        raise InputError(f"{name}: numbers are needed; found {type(values).__name__}") from fault
+
+
 def finite_vector(values: Any, name: str, *, minimum: int = 1) -> FloatArray:
     """Return `values` as a finite 1-D float64 array.
 
@@ -27,10 +41,7 @@ def finite_vector(values: Any, name: str, *, minimum: int = 1) -> FloatArray:
     InputError
         If it is not numeric, not 1-D, shorter than `minimum`, or not finite.
     """
-    try:
-        array: FloatArray = np.asarray(values, dtype=np.float64)
-    except (TypeError, ValueError) as fault:
-        raise InputError(f"{name}: numbers are needed; found {type(values).__name__}") from fault
+    array = _numbers(values, name)
     if array.ndim != 1:
         raise InputError(f"{name}: one dimension is needed; found {array.ndim}")
     if array.size < minimum:
@@ -52,10 +63,7 @@ def finite_matrix(values: Any, name: str) -> FloatArray:
     InputError
         If it is not numeric, not 2-D, empty, or not finite.
     """
-    try:
-        array: FloatArray = np.asarray(values, dtype=np.float64)
-    except (TypeError, ValueError) as fault:
-        raise InputError(f"{name}: numbers are needed; found {type(values).__name__}") from fault
+    array = _numbers(values, name)
     if array.ndim != 2 or not array.size:
         raise InputError(
             f"{name}: a table of rows and columns is needed; found shape {array.shape}"

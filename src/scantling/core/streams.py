@@ -8,6 +8,7 @@ many workers there are, on the order of work or on interruption.
 
 from __future__ import annotations
 
+import operator
 import zlib
 from collections.abc import Callable, Iterable, Iterator
 from concurrent.futures import ThreadPoolExecutor
@@ -15,6 +16,8 @@ from contextlib import contextmanager
 from typing import Any, TypeVar
 
 import numpy as np
+
+from scantling.errors import InputError
 
 MEMORY_BOUND = 2 * 1024**3
 """Bytes a run may hold; what would exceed it is refused or streamed."""
@@ -30,8 +33,19 @@ def stream(seed: int, purpose: str, *units: int) -> np.random.Generator:
 
     The key is (seed, crc32 of the purpose, unit numbers); crc32 is used because,
     unlike Python's hash, it is the same in every process.
+
+    Raises
+    ------
+    InputError
+        If the seed is not a whole number, 0 or more.
     """
-    key = [int(seed), zlib.crc32(purpose.encode()), *[int(unit) for unit in units]]
+    try:
+        start = operator.index(seed)
+    except TypeError as fault:
+        raise InputError(f"seed: a whole number is needed; found {seed!r}") from fault
+    if start < 0:
+        raise InputError(f"seed: 0 or more is needed; found {seed}")
+    key = [start, zlib.crc32(purpose.encode()), *[int(unit) for unit in units]]
     return np.random.default_rng(np.random.SeedSequence(key))
 
 

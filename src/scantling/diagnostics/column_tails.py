@@ -16,6 +16,7 @@ from scantling.diagnostics.greenwood import greenwood_p_value, greenwood_statist
 from scantling.diagnostics.tail_estimators import (
     block_standard_error,
     hill,
+    hill_influence,
     influence,
     weighted_hill,
     weighted_hill_coefficients,
@@ -27,8 +28,10 @@ from scantling.diagnostics.tail_index import (
     bias_aware_factor,
     block_length,
     hill_count,
+    moderate,
     prepare,
     thin_count,
+    tied_share,
 )
 from scantling.errors import InputError
 
@@ -114,7 +117,7 @@ def column_tails(series: FloatArray, *, dependent: bool) -> ColumnTails:
     odd: list[int] = []
     for first in range(0, width, COLUMNS_PER_PASS):
         here = slice(first, min(first + COLUMNS_PER_PASS, width))
-        part = series[:, here]
+        part = moderate(series[:, here])
         mode_share, tied = _repeats(part)
         out["active_share"][here] = 1 - mode_share
         plain = (mode_share <= ZERO_SHARE) & (tied <= TIE_SHARE)
@@ -126,8 +129,9 @@ def column_tails(series: FloatArray, *, dependent: bool) -> ColumnTails:
                 target[columns] = values
     refused = []
     for j in odd:
-        value, share = mode_of(series[:, j])
-        column = series[:, j] - (value if share > ZERO_SHARE else 0.0)
+        column = moderate(series[:, j])
+        value, share = mode_of(column)
+        column = column - (value if share > ZERO_SHARE else 0.0)
         try:
             ready = prepare(column, name="series").values
         except InputError as reason:
@@ -151,18 +155,14 @@ def column_tails(series: FloatArray, *, dependent: bool) -> ColumnTails:
 def _repeats(part: FloatArray) -> tuple[FloatArray, FloatArray]:
     """Per column: share of the mode, and share of ties among the largest tenth."""
     n = part.shape[0]
+    tied, near = tied_share(part)
     ordered = np.sort(part, axis=0)
     edges = np.ones((n + 1, part.shape[1]), dtype=bool)
-    edges[1:-1] = ordered[1:] != ordered[:-1]
+    edges[1:-1] = ordered[1:] - ordered[:-1] > near
     mode_share = np.empty(part.shape[1])
     for j in range(part.shape[1]):
         mode_share[j] = np.diff(np.flatnonzero(edges[:, j])).max() / n
-    magnitude = -np.sort(-np.abs(part - np.median(part, axis=0)), axis=0)[: max(10, n // 10)]
-    same = magnitude[:-1] == magnitude[1:]
-    tied = np.zeros(magnitude.shape, dtype=bool)
-    tied[:-1] |= same
-    tied[1:] |= same
-    return mode_share, np.asarray(tied.mean(axis=0))
+    return mode_share, tied
 
 
 def _estimates(part: FloatArray, dependent: bool) -> dict[str, FloatArray]:
@@ -174,13 +174,13 @@ def _estimates(part: FloatArray, dependent: bool) -> dict[str, FloatArray]:
     ordered = np.take_along_axis(magnitude, order, axis=0)
     logs = np.log(np.maximum(ordered, np.finfo(float).tiny))
     block = block_length(n) if dependent else 1
-    hill_coefficients = np.zeros(k_hill + 1)
-    hill_coefficients[:k_hill] = 1 / k_hill
-    hill_coefficients[k_hill] = -1
     errors = []
-    for coefficients in (weighted_hill_coefficients(kappa), hill_coefficients):
+    for by_rank in (
+        influence(logs, weighted_hill_coefficients(kappa)),
+        hill_influence(logs, k_hill),
+    ):
         in_time = np.empty_like(logs)
-        np.put_along_axis(in_time, order, influence(logs, coefficients), axis=0)
+        np.put_along_axis(in_time, order, by_rank, axis=0)
         errors.append(block_standard_error(in_time, block))
     second = hill(ordered, k_hill)
     return {

@@ -16,7 +16,7 @@ from scipy.special import gammaln, ndtr
 from scantling.core.checks import between, finite_vector
 from scantling.core.record import FloatArray
 from scantling.core.streams import stream
-from scantling.diagnostics.tail_index import TailIndex, tail_index
+from scantling.diagnostics.tail_index import TailIndex, moderate, tail_index
 
 Z90 = 1.6448536269514722
 ORDERS = (1, 2, 3, 4)
@@ -71,6 +71,7 @@ def normal_moment(order: float) -> float:
 def scaled_moment(values: FloatArray, order: float) -> float:
     """Scale-free absolute moment of the given order: 1 for normal data, diverging if infinite."""
     low = 1.0 if order <= 2 else 2.0
+    values = moderate(values)
     magnitude = np.abs(values - values.mean())
     magnitude = magnitude / magnitude.max()
     raw = float((magnitude**order).mean() / (magnitude**low).mean() ** (order / low))

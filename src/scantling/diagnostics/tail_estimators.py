@@ -95,7 +95,8 @@ def influence(log_ordered: FloatArray, coefficients: FloatArray) -> FloatArray:
 
     For T = integral of A(share above y) d ln y with A' = n a, an observation of rank r moves
     T by (1/n) IF_r with IF_r = n sum_{j >= r} a_j D_j - sum_j j a_j D_j, D_j the log spacings
-    (von Mises expansion; ranks beyond the coefficients share the last value).
+    (von Mises expansion; ranks beyond the coefficients share the last value). A is taken to be
+    smooth, up to where it stops.
 
     Parameters
     ----------
@@ -117,6 +118,19 @@ def influence(log_ordered: FloatArray, coefficients: FloatArray) -> FloatArray:
     out[:kappa] = n * np.cumsum(weighted[::-1], axis=0)[::-1]
     out -= (np.arange(1, kappa + 1)[:, None] * weighted).sum(axis=0)
     return out - out.mean(axis=0)
+
+
+def hill_influence(log_ordered: FloatArray, count: int) -> FloatArray:
+    """Influence of each observation on Hill at `count`, by rank, shape (n, columns).
+
+    (n/k)[(ln X/X_(k+1))_+ - H 1(X > X_(k+1))]: the second term is the threshold's own movement,
+    which `influence` has no need of because the weighted Hill's coefficients do not jump.
+    Hsing (1991), Annals of Statistics 19.
+    """
+    excess = log_ordered[:count] - log_ordered[count]
+    out = np.zeros_like(log_ordered)
+    out[:count] = (excess - excess.mean(axis=0)) * (log_ordered.shape[0] / count)
+    return out
 
 
 def block_standard_error(influences: FloatArray, block: int) -> FloatArray:

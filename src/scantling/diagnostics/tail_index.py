@@ -31,6 +31,11 @@ ZERO_SHARE = 0.02
 TIE_SHARE = 0.5
 GAMMA_FLOOR = 0.02
 """Below it 1/gamma says nothing: the index is given as infinite, read 'above 50'."""
+NEAR = 1e-8
+"""Values closer than this share of the median magnitude are ties: differences of rounded values
+differ in their last bits."""
+LARGEST, SMALLEST = 1e100, 1e-100
+"""Beyond these a series is rescaled, so that squares neither overflow nor vanish."""
 SIDES = ("both", "left", "right")
 
 
@@ -121,6 +126,33 @@ def interval_from_gamma(gamma: float, error: float, level: float) -> tuple[float
     return (1 / top if top > 0 else math.inf), (1 / bottom if bottom > 0 else math.inf)
 
 
+def moderate(values: FloatArray) -> FloatArray:
+    """Series along the first axis, each of extreme size scaled by a power of two.
+
+    An index has no unit; series of ordinary size are returned as they are.
+    """
+    top = np.abs(values).max(axis=0)
+    extreme = (top > LARGEST) | ((top < SMALLEST) & (top > 0))
+    if not extreme.any():
+        return values
+    return np.asarray(np.ldexp(values, np.where(extreme, -np.frexp(top)[1], 0)))
+
+
+def tied_share(values: FloatArray) -> tuple[FloatArray, FloatArray]:
+    """Share of ties among the largest tenth of magnitudes, and the distance that is a tie.
+
+    `values` is (n,) or (n, columns); both results are scalars or (columns,).
+    """
+    magnitude = np.sort(np.abs(values - np.median(values, axis=0)), axis=0)[::-1]
+    near = NEAR * magnitude[magnitude.shape[0] // 2]
+    top = magnitude[: max(10, values.shape[0] // 10)]
+    same = top[:-1] - top[1:] <= near
+    tied = np.zeros(top.shape, dtype=bool)
+    tied[:-1] |= same
+    tied[1:] |= same
+    return np.asarray(tied.mean(axis=0)), np.asarray(near)
+
+
 def prepare(values: FloatArray, *, name: str = "values", seed: int = 0) -> Magnitudes:
     """Drop exact zeros and break ties, by the rules below, saying so.
 
@@ -134,6 +166,7 @@ def prepare(values: FloatArray, *, name: str = "values", seed: int = 0) -> Magni
         If the series is constant, discrete, or too short for an index.
     """
     notes = []
+    values = moderate(values)
     zeros = values == 0
     if zeros.mean() > ZERO_SHARE:
         values = values[~zeros]
@@ -141,20 +174,16 @@ def prepare(values: FloatArray, *, name: str = "values", seed: int = 0) -> Magni
     if values.size < MINIMUM:
         raise InputError(f"{name}: {values.size} values other than 0; an index needs {MINIMUM}")
     spread = float(values.std())
-    distinct = np.unique(values)
-    if distinct.size < 2 or spread == 0:
+    if np.ptp(values) == 0 or spread == 0:
         raise InputError(f"{name}: constant, so it has no tail")
-    magnitude = np.sort(np.abs(values - np.median(values)))[::-1]
-    top = magnitude[: max(10, values.size // 10)]
-    tied = np.zeros(top.size, dtype=bool)
-    same = top[:-1] == top[1:]
-    tied[:-1] |= same
-    tied[1:] |= same
-    if tied.mean() > TIE_SHARE:
-        step = float(np.diff(distinct).min())
-        if step > spread / 2 or distinct.size < 10:
+    tied, near = tied_share(values)
+    if tied > TIE_SHARE:
+        gaps = np.diff(np.sort(values))
+        gaps = gaps[gaps > near]
+        step = float(gaps.min(initial=np.inf))
+        if step > spread / 2 or gaps.size < 9:
             raise InputError(
-                f"{name}: discrete ({distinct.size} distinct values), so it has no tail index"
+                f"{name}: discrete ({gaps.size + 1} distinct values), so it has no tail index"
             )
         noise = stream(seed, "ties").uniform(-step / 2, step / 2, values.size)
         values = values + noise

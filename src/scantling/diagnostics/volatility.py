@@ -12,6 +12,7 @@ import numpy as np
 
 from scantling.core.checks import between, finite_vector
 from scantling.core.record import FloatArray, read_only
+from scantling.core.streams import stream
 from scantling.errors import InputError
 
 FEWEST = 100
@@ -30,6 +31,9 @@ LARGEST_INDEX = 1000.0
 STEP = 0.01
 """Step of the trapezoid rule in ln z; the integrands are analytic, so that its
 error falls like exp(-constant / STEP) and is below rounding here."""
+
+PATH_DRAWS = 50
+"""Paths drawn, one for each drawn law behind a band."""
 
 Innovation = Literal["normal", "student-t"]
 LogMoment = Callable[[float], float]
@@ -57,6 +61,8 @@ class Volatility:
     path: FloatArray
     """Fitted sigma_t, shape (n,), read-only, in units of the series, at least
     5 % of its median."""
+    path_draws: FloatArray
+    """Paths under parameters drawn given the sample, shape (50, n), same units and floor."""
     log_likelihood: float
     """Maximised log-likelihood of the series in its own units."""
 
@@ -110,11 +116,12 @@ def fit_garch(
     fitted = _maximise(centred / spread, laws[innovation], mean)
     if isinstance(fitted, str):
         return fitted
-    parameters, path, log_likelihood, residuals = fitted
+    parameters = fitted.parameters
     alpha, beta = parameters["alpha[1]"], parameters["beta[1]"]
     if alpha <= NO_CLUSTERING:
         return "no clustering fitted: alpha is 0"
-    path = np.maximum(path, PATH_FLOOR * np.median(path))
+    floor = PATH_FLOOR * np.median(fitted.path)
+    path = np.maximum(fitted.path, floor)
     scale = spread * top
     return Volatility(
         omega=parameters["omega"] * scale**2,
@@ -123,9 +130,10 @@ def fit_garch(
         innovation=innovation,
         nu=parameters.get("nu"),
         persistence=alpha + beta,
-        tail_index=kesten_index(alpha, beta, moment_of=residuals / path),
+        tail_index=kesten_index(alpha, beta, moment_of=fitted.residuals / path),
         path=read_only(path * scale),
-        log_likelihood=log_likelihood - series.size * math.log(scale),
+        path_draws=read_only(np.maximum(fitted.path_draws, floor) * scale),
+        log_likelihood=fitted.log_likelihood - series.size * math.log(scale),
     )
 
 
@@ -267,10 +275,24 @@ def _log_moment_of_sample(alpha: float, gamma: float, beta: float, sample: Any) 
     return log_moment
 
 
-def _maximise(
-    series: FloatArray, law: str, mean: str
-) -> tuple[dict[str, float], FloatArray, float, FloatArray] | str:
-    """Return parameters, path, log-likelihood and residuals of arch's fit, or why there is none."""
+@dataclass(frozen=True, slots=True, kw_only=True)
+class _Maximised:
+    """What arch's fit gives."""
+
+    parameters: dict[str, float]
+    """By arch's names."""
+    path: FloatArray
+    """sigma_t, shape (n,)."""
+    log_likelihood: float
+    """Maximised."""
+    residuals: FloatArray
+    """Series less its mean, shape (n,)."""
+    path_draws: FloatArray
+    """Paths under drawn parameters, shape (PATH_DRAWS, n)."""
+
+
+def _maximise(series: FloatArray, law: str, mean: str) -> _Maximised | str:
+    """Return arch's fit, or why there is none."""
     from arch import arch_model
 
     model = arch_model(
@@ -286,12 +308,49 @@ def _maximise(
                 )
         except (ValueError, FloatingPointError, np.linalg.LinAlgError) as fault:
             return f"the GARCH likelihood could not be maximised: {fault}".splitlines()[0]
-    if result.convergence_flag != 0:
-        return "the GARCH likelihood did not converge"
-    parameters = {name: float(value) for name, value in result.params.items()}
-    path: FloatArray = np.asarray(result.conditional_volatility, dtype=np.float64)
-    log_likelihood = float(result.loglikelihood)
-    numbers = [*parameters.values(), log_likelihood, float(path.sum())]
-    if not np.isfinite(numbers).all() or path.min() <= 0:
-        return "the GARCH fit has values that are not finite"
-    return parameters, path, log_likelihood, np.asarray(result.resid, dtype=np.float64)
+        if result.convergence_flag != 0:
+            return "the GARCH likelihood did not converge"
+        parameters = {name: float(value) for name, value in result.params.items()}
+        path: FloatArray = np.asarray(result.conditional_volatility, dtype=np.float64)
+        log_likelihood = float(result.loglikelihood)
+        numbers = [*parameters.values(), log_likelihood, float(path.sum())]
+        if not np.isfinite(numbers).all() or path.min() <= 0:
+            return "the GARCH fit has values that are not finite"
+        return _Maximised(
+            parameters=parameters,
+            path=path,
+            log_likelihood=log_likelihood,
+            residuals=np.asarray(result.resid, dtype=np.float64),
+            path_draws=_path_draws(model, result, path),
+        )
+
+
+def _path_draws(model: Any, result: Any, path: FloatArray) -> FloatArray:
+    """Volatility paths under parameters the sample cannot tell from the fitted ones.
+
+    Parameters are drawn from the normal law about the estimate with arch's robust covariance,
+    those outside the admissible region being drawn again; each path is arch's own recursion. A
+    covariance that is not one leaves the fitted path in every draw.
+    """
+    names = list(result.params.index)
+    spots = [names.index(name) for name in ("omega", "alpha[1]", "beta[1]")]
+    centre = result.params.to_numpy(dtype=np.float64)
+    try:
+        covariance = np.asarray(result.param_cov, dtype=np.float64)[np.ix_(spots, spots)]
+        root = np.linalg.cholesky(covariance)
+    except (ValueError, np.linalg.LinAlgError):
+        return np.tile(path, (PATH_DRAWS, 1))
+    rng = stream(0, "volatility draws")
+    out: list[FloatArray] = []
+    for _ in range(20 * PATH_DRAWS):
+        omega, alpha, beta = centre[spots] + root @ rng.standard_normal(3)
+        if omega <= 0 or alpha < 0 or beta < 0 or alpha + beta > 1:
+            continue
+        drawn = centre.copy()
+        drawn[spots] = omega, alpha, beta
+        moved = np.asarray(model.fix(drawn).conditional_volatility, dtype=np.float64)
+        if np.isfinite(moved).all() and moved.min() > 0:
+            out.append(moved)
+        if len(out) == PATH_DRAWS:
+            break
+    return np.array(out + [path] * (PATH_DRAWS - len(out)))

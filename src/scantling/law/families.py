@@ -180,7 +180,8 @@ class ErrorLaw:
         """Draw laws the sample cannot tell from this one.
 
         The shape is drawn from its weights given the sample, the scale about its most likely
-        value there. A law stated exactly is returned `count` times.
+        value there, the volatility path from those its parameters leave open. A law
+        stated exactly is returned `count` times.
         """
         if self.spread is None:
             return (self,) * count
@@ -188,17 +189,23 @@ class ErrorLaw:
         picks = rng.choice(spread.gammas.size, size=count, p=spread.weights)
         shifts = np.exp(spread.log_scale_error * rng.standard_normal(count))
         laws = []
-        for pick, shift in zip(picks, shifts, strict=True):
+        for number, (pick, shift) in enumerate(zip(picks, shifts, strict=True)):
             gamma, scale = float(spread.gammas[pick]), float(spread.scales[pick]) * float(shift)
+            path = self.volatility
+            if path is not None:
+                moved = path.path_draws[number % len(path.path_draws)]
+                path = replace(path, path=read_only(moved))
             if self.splice is not None:
                 tails = replace(
-                    self.splice, gamma=gamma,
+                    self.splice,
+                    gamma=gamma,
                     left_scale=self.splice.left_scale * scale,
                     right_scale=self.splice.right_scale * scale,
-                )  # fmt: skip
-                laws.append(replace(self, splice=tails))
+                )
+                laws.append(replace(self, splice=tails, volatility=path))
             else:
-                laws.append(replace(self, family="student-t", df=1 / gamma, scale=scale))
+                student = replace(self, family="student-t", df=1 / gamma, scale=scale)
+                laws.append(replace(student, volatility=path))
         return tuple(laws)
 
 

@@ -11,7 +11,13 @@ import numpy as np
 from scantling.core.checks import finite_vector
 from scantling.core.record import FloatArray, read_only
 from scantling.diagnostics.clustering import find_clustering
-from scantling.diagnostics.tail_index import MINIMUM, TailIndex, tail_index
+from scantling.diagnostics.tail_index import (
+    LARGEST,
+    MINIMUM,
+    SMALLEST,
+    TailIndex,
+    tail_index,
+)
 from scantling.diagnostics.volatility import Volatility
 from scantling.errors import InputError
 from scantling.law.families import FAMILIES, ErrorLaw, Fit, ShapeSpread
@@ -148,12 +154,18 @@ def fit_law(
     Raises
     ------
     InputError
-        If `values` are not finite numbers or too few, are constant, the family is unknown, or
+        If `values` are not finite numbers or too few, are constant or of a size whose squares
+        overflow, the family is unknown, or
         each tail would hold fewer than 25 values under 'spliced'.
     """
     array = finite_vector(values, "values", minimum=MINIMUM)
-    if array.std() == 0:
+    if np.ptp(array / 2) == 0:
         raise InputError("values: constant, so there is no law to fit")
+    top = float(np.abs(array).max())
+    if not SMALLEST <= top <= LARGEST:
+        raise InputError(
+            f"values: a largest size between {SMALLEST:g} and {LARGEST:g} is needed; found {top:g}"
+        )
     if family is not None and family not in FAMILIES:
         raise InputError(f"family: one of {', '.join(FAMILIES)} is needed; found {family!r}")
     if family == "spliced" and not enough_for_splice(array.size):

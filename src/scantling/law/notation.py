@@ -35,6 +35,8 @@ def parse_law(text: str, name: str = "law") -> ErrorLaw:
         key, equals, value = part.partition("=")
         if not equals:
             raise InputError(f"{name}: key=value is needed after the family; found {part!r}")
+        if key.strip() in parameters:
+            raise InputError(f"{name}: {key.strip()} is given twice; found {text!r}")
         parameters[key.strip()] = value
     known = {"normal": set(), "student-t": {"df"}}
     if family not in known:

@@ -11,7 +11,7 @@ from scantling.core.record import FloatArray, read_only
 from scantling.core.streams import Mapper, blocks, stream
 from scantling.law.families import ErrorLaw
 from scantling.planning.case import Case, column_grid
-from scantling.planning.limit import Limit, last_below, make_limit
+from scantling.planning.limit import Limit, band, last_below, make_limit
 from scantling.simulation.scores import (
     Passers,
     centre,
@@ -63,7 +63,7 @@ class BreakThrough:
     equivalent_rows: int | None
     """n / penalty ratio squared, never above n."""
     worst_columns: tuple[int, ...]
-    """Columns by their share of the break-throughs at the present p, largest first."""
+    """Columns by their share of the break-throughs at the present p, over all drawn laws."""
     worst_shares: tuple[float, ...]
     """Those shares."""
     fitted: ScoreSample
@@ -153,11 +153,11 @@ def break_through(case: Case, mapper: Mapper, *, bands: bool = True) -> BreakThr
         )  # fmt: skip
     point, curve = noise_limit_of(fitted.found, grid, risk)
     many = [noise_limit_of(sample.found, grid, risk) for sample in drawn] or [(point, curve)]
-    spread = np.sort(np.array([c for _, c in many]), axis=0)
-    ends = [spread[int(np.floor(q * (len(many) - 1) + (q > 0.5)) if len(many) > 1 else 0)]
-            for q in (0.05, 0.95)]  # fmt: skip
+    curves = np.array([c for _, c in many])
+    ends = np.array([band(curves[:, k].tolist()) for k in range(grid.size)]).T
     ratio = _penalty_ratio(case, fitted, twin)
-    shares = column_shares(fitted.found, float(penalty_level(case.columns, risk)))
+    seen = join([sample.found for sample in drawn]) if drawn else fitted.found
+    shares = column_shares(seen, float(penalty_level(case.columns, risk)))
     order = np.argsort(-shares, kind="stable")[:50]
     return BreakThrough(
         noise=make_limit(point, [d for d, _ in many], case.columns, mode="conditional"),

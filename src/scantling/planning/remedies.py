@@ -22,12 +22,17 @@ from scantling.planning.budget import Allowed, combine
 from scantling.planning.case import Case, draw_laws
 from scantling.planning.signal import signal
 from scantling.planning.stress import stress
-from scantling.simulation.scores import exceeding_counts, penalty_level
+from scantling.simulation.scores import (
+    column_shares,
+    exceeding_counts,
+    join,
+    penalty_level,
+)
 
 REFITTED = 3
 """Remedies for which selection is simulated too: the best by noise and signal."""
 STRESS_POINTS = 4
-DROP_SHARES = (0.01, 0.02, 0.05, 0.1, 0.2, 0.35, 0.5)
+DROP_SHARES = (0.01, 0.02, 0.05, 0.1, 0.15, 0.2, 0.25, 0.3, 0.35, 0.4, 0.5)
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -112,9 +117,11 @@ def _fewer_columns(diagnosis: Diagnosis, case: Case, noise: BreakThrough) -> Ite
         if dropped.size:
             kept = np.setdiff1d(np.arange(case.columns), dropped)
             yield Change(
-                name=f"drop the {_columns(dropped.size)} that break through most",
+                name=f"drop the {dropped.size:,} worst columns"
+                if dropped.size > 1
+                else "drop the worst column",
                 case=_with_columns(case, kept),
-                price="these columns are not searched; they were picked by simulation",
+                price="the columns that break through most are not searched",
             )
 
 
@@ -131,13 +138,13 @@ def _with_columns(case: Case, kept: np.ndarray) -> Case:
 def worst_to_drop(case: Case, noise: BreakThrough) -> np.ndarray:
     """Fewest of the worst columns whose removal brings the risk down to the accepted one.
 
-    Up to half of the columns, at a few shares; the largest share examined if none suffices.
+    Ranked by their break-throughs over all drawn laws; up to half of the columns, at a few
+    shares; the largest share examined if none suffices.
     """
-    found, risk = noise.fitted.found, case.target.risk
+    found = join([sample.found for sample in noise.drawn]) if noise.drawn else noise.fitted.found
+    risk = case.target.risk
     level = float(penalty_level(case.columns, risk))
-    order = np.argsort(
-        -np.bincount(found.column[found.ratio > level], minlength=case.columns), kind="stable"
-    )
+    order = np.argsort(-column_shares(found, level), kind="stable")
     count = 0
     for share in DROP_SHARES:
         count = max(1, math.ceil(share * case.columns))

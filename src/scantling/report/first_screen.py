@@ -14,6 +14,7 @@ from scantling.report.wording import (
     count,
     labelled,
     rate,
+    series,
     shortened,
 )
 
@@ -65,7 +66,7 @@ def _limits(report: Report) -> str:
     for name, limit in named.items():
         if name != budget.binding:
             together.setdefault(columns(limit), []).append(name)
-    others = [f"{' and '.join(names)} {value}" for value, names in together.items()]
+    others = [f"{series(names)} {value}" for value, names in together.items()]
     return "; ".join([*binding, *others, f"ceiling {rate(budget.ceiling)}"])
 
 
@@ -98,4 +99,7 @@ def outcome(remedy: Remedy) -> str:
         return "unknown"
     if allowed.note and allowed.low is not None and allowed.low >= remedy.columns:
         return f"all {remedy.columns:,} allowed"
-    return f"{allowed.columns:,} of {remedy.columns:,} allowed"
+    words = f"{allowed.columns:,} of {remedy.columns:,}"
+    if allowed.low is not None and allowed.low < allowed.columns:
+        words += f" (low end {allowed.low:,})"
+    return words

@@ -87,6 +87,11 @@ def rate(ceiling: Ceiling) -> str:
     return ("at least " if ceiling.capped else "") + large(ceiling.columns)
 
 
+def series(names: Sequence[str]) -> str:
+    """Names as a list in words: 'a', 'a and b', 'a, b and c'."""
+    return " and ".join(filter(None, [", ".join(names[:-1]), names[-1]]))
+
+
 def labelled(label: str, text: str, width: int) -> list[str]:
     """A label, and its text wrapped beside it."""
     body = textwrap.wrap(text, width - LABEL, break_long_words=False, break_on_hyphens=False) or [

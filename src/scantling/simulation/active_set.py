@@ -201,7 +201,6 @@ def _admit(
     excess = np.where(signs == 0, np.abs(gradient) - weights - slack[:, None], 0.0)
     least = excess.max(axis=1, keepdims=True) if single else 0.0
     excess[~where] = 0.0
-    enters: BoolArray = np.logical_and(excess > 0, excess >= least)
+    enters = (excess > 0) & (excess >= least)
     signs[enters] = np.sign(gradient[enters])
-    grew: BoolArray = enters.any(axis=1)
-    return grew
+    return np.asarray(enters.any(axis=1), dtype=np.bool_)

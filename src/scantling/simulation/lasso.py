@@ -133,7 +133,8 @@ def solve_batch(
     tol : float
         Duality gap over ||y_r||^2 / (2n) at which a response is left alone.
     start : array, shape (p, R), optional
-        Coefficients to start from, such as those at a nearby penalty.
+        Coefficients to start from, such as those at a nearby penalty; mostly zero,
+        as every column that is not is solved for.
 
     Returns
     -------

@@ -26,8 +26,8 @@ UNION_COLUMNS = 1500
 BATCH_CELLS = 500_000
 """Cells of the stacked small Gram matrices solved together (4 MB, to stay in cache)."""
 
-PASS_CELLS = 200_000
-"""Cells of one piece of a pass over all columns and responses."""
+PASS_CELLS = 60_000
+"""Cells of one piece of a pass over all columns and responses (0.5 MB, to stay in cache)."""
 
 
 class Problem:
@@ -50,8 +50,7 @@ class Problem:
         self.n, self.p = X.shape
         self.scale: FloatArray = np.sqrt(np.einsum("ij,ij->j", X, X) / self.n)
         self.power: FloatArray = np.einsum("ij,ij->j", Y, Y) / self.n
-        self.scores: FloatArray = X.T @ Y
-        self.scores /= self.n
+        self.scores: FloatArray = X.T @ (Y / self.n)
 
     def weight_of(self, columns: IndexArray, rows: IndexArray) -> FloatArray:
         """Return the weights of (column, response) pairs."""
@@ -178,8 +177,7 @@ class WorkingSets:
         if cost > problem.n * replicates or total * problem.p > GRAM_CELLS:
             return False
         if len(fresh):
-            new = problem.X.T @ problem.X[:, fresh]
-            new /= problem.n
+            new = problem.X.T @ (problem.X[:, fresh] / problem.n)
             order = np.argsort(np.concatenate([self.kept, fresh]), kind="stable")
             self.kept = np.concatenate([self.kept, fresh])[order]
             self.products = np.concatenate([self.products, new], axis=1)[:, order]
