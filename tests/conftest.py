@@ -4,8 +4,10 @@ from __future__ import annotations
 
 import json
 import math
+import os
+import subprocess
+import sys
 from collections.abc import Callable
-from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
@@ -57,24 +59,14 @@ def csv_text(values: np.ndarray, names: list[str]) -> str:
     return "\n".join(lines) + "\n"
 
 
-@dataclass(frozen=True, slots=True, kw_only=True)
-class Harbour:
-    """A small design on disk."""
-
-    design: Path
-    """The design file."""
-    table: Path
-    """Its data."""
-
-
 @pytest.fixture(scope="session")
-def harbour(tmp_path_factory: pytest.TempPathFactory) -> Harbour:
-    """A design of 305 rows and 12 raw columns, volatile and heavy-tailed."""
+def harbour(tmp_path_factory: pytest.TempPathFactory) -> Path:
+    """A design file: 305 rows and 12 raw columns, volatile and heavy-tailed; table beside it."""
     folder = tmp_path_factory.mktemp("harbour")
     names = ["dues", *(f"berth_{j}" for j in range(1, COLUMNS + 1))]
     (folder / "harbour.csv").write_text(csv_text(garch_table(), names))
     (folder / "harbour.toml").write_text(DESIGN)
-    return Harbour(design=folder / "harbour.toml", table=folder / "harbour.csv")
+    return folder / "harbour.toml"
 
 
 def _numbers_only(value: Any, where: str) -> None:
@@ -113,3 +105,43 @@ def valid_document() -> Callable[[str], dict[str, Any]]:
         return document
 
     return parse
+
+
+@pytest.fixture(scope="session")
+def command() -> list[str]:
+    """How the installed command is started."""
+    script = Path(sys.executable).parent / "scantling"
+    return [str(script)] if script.exists() else [sys.executable, "-m", "scantling"]
+
+
+@pytest.fixture(scope="session")
+def scantling(command: list[str]) -> Callable[..., subprocess.CompletedProcess[str]]:
+    """A function that runs the installed command in a process of its own, output piped."""
+
+    def start(
+        *arguments: str | Path, env: dict[str, str] | None = None
+    ) -> subprocess.CompletedProcess[str]:
+        return subprocess.run(
+            [*command, *map(str, arguments)],
+            capture_output=True,
+            text=True,
+            encoding="utf-8",
+            timeout=120,
+            env={**os.environ, **(env or {})},
+            check=False,
+        )
+
+    return start
+
+
+@pytest.fixture(scope="session")
+def small(tmp_path_factory: pytest.TempPathFactory) -> Path:
+    """The quickest design there is: 60 rows, 3 thin columns, no time."""
+    folder = tmp_path_factory.mktemp("small")
+    values = np.random.default_rng(5).standard_normal((60, 4))
+    (folder / "small.csv").write_text(csv_text(values, ["y", "a", "b", "c"]))
+    (folder / "small.toml").write_text(
+        '[data]\nfile = "small.csv"\nresponse = "y"\ncolumns = ["a", "b", "c"]\n'
+        "[target]\nrelevant = 1\nsmallest_effect = 0.5\n[simulation]\nreplicates = 50\n"
+    )
+    return folder / "small.toml"

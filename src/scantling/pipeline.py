@@ -17,6 +17,7 @@ from scantling.design.spec import Design
 from scantling.design.table import Table, read_table
 from scantling.diagnostics.battery import Diagnosis, diagnose
 from scantling.diagnostics.residuals import Residuals, fit_pilot
+from scantling.errors import InputError
 from scantling.law.families import ErrorLaw
 from scantling.law.fit import error_law
 from scantling.planning.breakthrough import break_through
@@ -32,6 +33,8 @@ from scantling.report.record import DesignAsRead, Receipt, Report
 
 LIBRARIES = ("numpy", "scipy", "pandas", "statsmodels", "scikit-learn", "arch")
 STAGES = ("read", "residuals", "diagnose", "law", "limits", "stress", "remedies")
+EXACT = 1e-7
+"""Residual sd over response sd below which a fit counts as exact."""
 Progress = Callable[[str], None]
 """Called with the name of each stage as it begins."""
 
@@ -69,6 +72,11 @@ def vet(
         residuals = fit_pilot(
             columns.values, columns.response, time_ordered=columns.time_ordered, seed=seed
         )
+        if residuals.sd <= EXACT * residuals.response_sd:
+            raise InputError(
+                f"{table.file_name}: the columns explain {table.response_name!r} exactly, so"
+                " there are no errors to diagnose; another response or fewer columns are needed"
+            )
         tell("diagnose")
         diagnosis = diagnose(
             columns.values, residuals, time_ordered=columns.time_ordered, seed=seed

@@ -3,6 +3,8 @@
 from __future__ import annotations
 
 from pathlib import Path
+from shlex import quote
+from typing import Any
 
 import click
 
@@ -17,10 +19,18 @@ class OneLine(click.Group):
     def resolve_command(
         self, ctx: click.Context, args: list[str]
     ) -> tuple[str | None, click.Command | None, list[str]]:
+        """Find the command; an unknown one is a usage error that names the known."""
         if args and self.get_command(ctx, args[0]) is None and not args[0].startswith("-"):
             known = ", ".join(self.list_commands(ctx))
             raise click.UsageError(f"no command {args[0]!r}; there are {known}", ctx)
         return super().resolve_command(ctx, args)
+
+    def invoke(self, ctx: click.Context) -> Any:
+        """Run the command; an interrupt is passed on without the empty line click prints."""
+        try:
+            return super().invoke(ctx)
+        except KeyboardInterrupt as stop:
+            raise click.Abort from stop
 
 
 @click.group(
@@ -90,7 +100,7 @@ def vet(
     with stages(quiet) as progress:
         report = run(
             changed, workers=workers, progress=progress,
-            command=" ".join(["scantling vet", design.name, *options]),
+            command=" ".join(["scantling vet", quote(design.name), *options]),
         )  # fmt: skip
     text, document = render(report), report.to_json()
     write_files(out, design.stem, {".txt": text, ".json": document})

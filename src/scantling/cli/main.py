@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import io
 import os
 import sys
 
@@ -59,4 +60,8 @@ def _refuse(message: str) -> int:
 
 def main() -> None:
     """Run the command line of this process."""
+    for stream in (sys.stdout, sys.stderr):
+        if isinstance(stream, io.TextIOWrapper):
+            # A name the terminal cannot show is written with escapes, not refused.
+            stream.reconfigure(errors="backslashreplace")
     sys.exit(run())

@@ -75,14 +75,22 @@ def _replace(path: Path, text: str) -> None:
 def print_report(text: str, *, plain: bool) -> None:
     """Print to stdout; on a terminal that takes styles the first screen's labels are bold."""
     if plain or not _styled():
-        click.echo(text, nl=False)
+        _echo(text)
         return
     lines = text.split("\n")
     for place, line in enumerate(lines[:12]):
         label = line.split(" ", 1)[0]
         if label in EMPHASISED:
             lines[place] = click.style(label, bold=True) + line[len(label) :]
-    click.echo("\n".join(lines), nl=False)
+    _echo("\n".join(lines))
+
+
+def _echo(text: str) -> None:
+    """Print; a reader that leaves early changes nothing about the verdict."""
+    try:
+        click.echo(text, nl=False)
+    except BrokenPipeError:
+        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
 
 
 def _styled() -> bool:

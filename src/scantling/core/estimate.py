@@ -10,5 +10,8 @@ class Estimate:
     """A point estimate and its interval; the interval's level is named where it is used."""
 
     value: float
+    """Point estimate."""
     low: float
+    """Lower end of the interval."""
     high: float
+    """Upper end of the interval."""

@@ -32,7 +32,8 @@ def stream(seed: int, purpose: str, *units: int) -> np.random.Generator:
     """Return the generator of one unit of work.
 
     The key is (seed, crc32 of the purpose, unit numbers); crc32 is used because,
-    unlike Python's hash, it is the same in every process.
+    unlike Python's hash, it is the same in every process. A purpose is used with one number of
+    units throughout, because a last unit 0 is the same as none.
 
     Raises
     ------

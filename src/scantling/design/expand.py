@@ -59,11 +59,15 @@ class _Candidate:
     """One candidate before it is computed."""
 
     name: str
+    """As in the report: x, x^2, x*z, x.lag1."""
     base: int
+    """Position of the raw column in the table; -1 for the response."""
     power: int = 1
+    """Power of the raw column."""
     partner: int = -1
     """Position of the second raw column of a product; -1: no product."""
     lag: int = 0
+    """Rows by which it is lagged."""
 
 
 def expand(design: Design, table: Table) -> Columns:

@@ -75,7 +75,9 @@ class SimulationSpec:
     """[simulation]: Monte Carlo settings, stored with the result."""
 
     replicates: int = 400
+    """Draws of errors and refits in each simulation."""
     seed: int = 1
+    """Of every random stream."""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -83,14 +85,20 @@ class Design:
     """One design file, checked."""
 
     title: str
+    """Shown first in the report; the file's stem if none is given."""
     path: Path
     """The design file."""
     sha256: str
     """Of the design file's bytes."""
     data: DataSpec
+    """Where the rows come from."""
     expand: ExpandSpec
+    """How columns multiply."""
     kind: str
     """regression | treatment | instruments | binary | system | chain."""
     target: TargetSpec
+    """What has to be achieved."""
     penalty: PenaltySpec
+    """What is about to be fitted."""
     simulation: SimulationSpec
+    """Monte Carlo settings."""

@@ -20,6 +20,7 @@ from scantling.diagnostics.dependence import (
 from scantling.diagnostics.moments import (
     MINIMUM_ROWS,
     ORDERS,
+    Z90,
     MomentAnswer,
     interval_answers,
     moment_answer,
@@ -30,7 +31,6 @@ from scantling.diagnostics.tail_estimators import hill
 from scantling.diagnostics.tail_index import (
     TailIndex,
     block_length,
-    interval_from_gamma,
     one_side,
     tail_index,
 )
@@ -47,6 +47,8 @@ from scantling.diagnostics.volatility import Volatility
 from scantling.errors import InputError
 
 ANSWERS = {1: "exists", -1: "missing", 0: "unclear"}
+FEW_VALUES = 10
+"""A series of fewer distinct values is bounded."""
 SIDED_ROWS = 500
 """Rows from which left and right tails are told apart."""
 
@@ -56,6 +58,7 @@ class Finding:
     """A test, and whether the moment it needs is granted."""
 
     result: TestResult
+    """The test's name, statistic and p-value."""
     valid: bool
     """True for permutation tests, else whether the needed moment was found to exist."""
 
@@ -65,6 +68,7 @@ class SeriesGroup:
     """Tails and moments of many series: the columns, or their scores."""
 
     tails: ColumnTails
+    """Tail estimates of the P series."""
     moments: dict[int, np.ndarray]
     """Per order, the answer for each series: 1 exists, -1 missing, 0 unclear; shape (P,)."""
 
@@ -86,11 +90,15 @@ class Diagnosis:
     error_moments: tuple[MomentAnswer, ...]
     """Orders 1, 2, 3, 4."""
     columns: SeriesGroup
+    """Tails and moments of the columns."""
     scores: SeriesGroup
+    """Tails and moments of the scores x_ij e_i."""
     weight: tuple[str, ...]
     """heavy | sparse | light, for each column."""
     variance: tuple[Finding, ...]
+    """Tests of constant variance."""
     dependence: tuple[Finding, ...]
+    """Tests of serial dependence; empty where rows have no order."""
     clustering: Clustering | None
     """None where rows have no order."""
     co_movement: FloatArray
@@ -98,6 +106,7 @@ class Diagnosis:
     rank_co_movement: FloatArray
     """Per column, Spearman correlation of |x| and |e|, shape (P,)."""
     structure: Structure
+    """Factors, condition and correlations of the columns."""
     warnings: tuple[str, ...]
     """Sentences: where the sample looks like a law that defeats the estimators."""
 
@@ -136,7 +145,7 @@ def series_group(series: FloatArray, *, dependent: bool) -> SeriesGroup:
             )  # fmt: skip
     # A series that takes few values is bounded: all its moments exist.
     for j, reason in tails.refused:
-        if "discrete" in reason or "equal" in reason:
+        if "discrete" in reason or np.unique(series[:, j]).size < FEW_VALUES:
             for order in ORDERS:
                 moments[order][j] = 1
     return SeriesGroup(tails=tails, moments=moments)
@@ -288,9 +297,8 @@ def _warnings(
         # Hill further out, at k = sqrt(n): stable laws look lighter in range than they are.
         k = max(2, int(e.size**0.5))
         outer = float(hill(one_side(e, "both"), k))
-        lower = outer * (1 - 1.645 / k**0.5)
-        weighted_low, _ = interval_from_gamma(errors.gamma, errors.gamma_error, errors.level)
-        if lower > 1 / weighted_low:
+        # Neither interval is widened for bias: widened, the warning missed half of them.
+        if outer * (1 - Z90 / k**0.5) > errors.gamma + Z90 * errors.gamma_error:
             out.append(
                 f"the errors look heavier further out (index {1 / outer:.1f} on the largest"
                 f" {k} values): infinite variance is not excluded"

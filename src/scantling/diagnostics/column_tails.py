@@ -24,12 +24,12 @@ from scantling.diagnostics.tail_estimators import (
 from scantling.diagnostics.tail_index import (
     BIAS_BOUND,
     TIE_SHARE,
-    ZERO_SHARE,
     bias_aware_factor,
     block_length,
     hill_count,
     moderate,
     prepare,
+    repeat_share,
     thin_count,
     tied_share,
 )
@@ -120,7 +120,7 @@ def column_tails(series: FloatArray, *, dependent: bool) -> ColumnTails:
         part = moderate(series[:, here])
         mode_share, tied = _repeats(part)
         out["active_share"][here] = 1 - mode_share
-        plain = (mode_share <= ZERO_SHARE) & (tied <= TIE_SHARE)
+        plain = (mode_share <= repeat_share(n)) & (tied <= TIE_SHARE)
         odd += [first + int(j) for j in np.flatnonzero(~plain)]
         if plain.any():
             columns = first + np.flatnonzero(plain)
@@ -131,7 +131,7 @@ def column_tails(series: FloatArray, *, dependent: bool) -> ColumnTails:
     for j in odd:
         column = moderate(series[:, j])
         value, share = mode_of(column)
-        column = column - (value if share > ZERO_SHARE else 0.0)
+        column = column - (value if share > repeat_share(n) else 0.0)
         try:
             ready = prepare(column, name="series").values
         except InputError as reason:

@@ -19,10 +19,10 @@ def greenwood_statistic(ordered: FloatArray, count: int) -> FloatArray:
     `ordered` is (m,) or (m, columns), decreasing, m > count. Equal excesses give 1.
     """
     excess = ordered[:count] - ordered[count]
-    total = excess.sum(axis=0)
-    squares = (excess**2).sum(axis=0)
-    with np.errstate(invalid="ignore", divide="ignore"):
-        ratio = count * squares / total**2
+    largest = excess.max(axis=0)
+    share = excess / np.where(largest > 0, largest, 1.0)  # squares of tiny excesses would vanish
+    total = share.sum(axis=0)
+    ratio = count * (share**2).sum(axis=0) / np.where(total > 0, total, 1.0) ** 2
     return np.asarray(np.where(total > 0, ratio, 1.0))
 
 

@@ -30,6 +30,7 @@ class MomentAnswer:
     """Whether the absolute moment of one order exists."""
 
     order: float
+    """Order of the absolute moment."""
     answer: str
     """exists | missing | unclear."""
     reason: str

@@ -14,6 +14,8 @@ import numpy as np
 
 from scantling.core.record import FloatArray, read_only
 from scantling.core.streams import stream
+from scantling.diagnostics.tail_index import LARGEST, SMALLEST
+from scantling.errors import InputError
 
 FOLDS = 10
 REWEIGHTINGS = 2
@@ -32,7 +34,8 @@ class Residuals:
     fitted: FloatArray
     """Out-of-fold predictions, shape (n,)."""
     explained: float
-    """Share of the response's variance explained out of fold; 0 if the pilot does not help."""
+    """Share of the response's variance explained out of fold; 0 if the pilot does not help,
+    in which case the residuals are the centred response."""
     selected: tuple[int, ...]
     """Columns of the pilot on all rows."""
     folds: str
@@ -131,6 +134,16 @@ def fold_labels(n: int, *, time_ordered: bool, seed: int) -> np.ndarray:
     return labels if time_ordered else stream(seed, "folds").permutation(labels)
 
 
+def helps(y: FloatArray, residual: FloatArray) -> bool:
+    """Whether absolute deviations fall by more than one standard error of their mean difference.
+
+    Absolute, because one outlier can turn a comparison of variances; one standard error is
+    common practice, no source.
+    """
+    gain = np.abs(y - np.median(y)) - np.abs(residual - np.median(residual))
+    return float(gain.mean()) > float(gain.std()) / y.size**0.5
+
+
 def fit_pilot(X: FloatArray, y: FloatArray, *, time_ordered: bool, seed: int) -> Residuals:
     """Cross-fit the pilot and return its residuals.
 
@@ -144,7 +157,20 @@ def fit_pilot(X: FloatArray, y: FloatArray, *, time_ordered: bool, seed: int) ->
         Folds are then contiguous.
     seed : int
         Of the random folds.
+
+    Raises
+    ------
+    InputError
+        If the response is constant, or of a size whose squares overflow or vanish.
     """
+    top = float(np.abs(y).max())
+    if np.ptp(y / (top or 1.0)) == 0:
+        raise InputError("response: constant, so there is nothing to explain")
+    if not SMALLEST <= top <= LARGEST:
+        raise InputError(
+            f"response: a largest size between {SMALLEST:g} and {LARGEST:g} is needed;"
+            f" found {top:g}"
+        )
     labels = fold_labels(y.size, time_ordered=time_ordered, seed=seed)
     fitted = np.empty_like(y)
     for fold in range(FOLDS):
@@ -153,8 +179,8 @@ def fit_pilot(X: FloatArray, y: FloatArray, *, time_ordered: bool, seed: int) ->
         fitted[out] = coefficients[0] + X[np.ix_(out, chosen)] @ coefficients[1:]
     residual = y - fitted
     total = float(y.var())
-    explained = 1 - float(residual.var()) / total
-    if explained <= 0:
+    explained = max(0.0, 1 - float(residual.var()) / total)
+    if not helps(y, residual):
         fitted, residual, explained = np.full_like(y, y.mean()), y - y.mean(), 0.0
     selected, _ = pilot_columns(X, y)
     return Residuals(

@@ -82,6 +82,7 @@ class Magnitudes:
     values: FloatArray
     """Signed, zeros dropped, ties broken; in the order of the series."""
     note: str
+    """What was done to zeros and ties; empty if nothing."""
 
 
 def block_length(n: int) -> int:
@@ -97,6 +98,11 @@ def thin_count(n: int) -> int:
 def hill_count(n: int) -> int:
     """Largest values the second opinion uses: 5 % of n."""
     return max(2, int(0.05 * n))
+
+
+def repeat_share(n: int) -> float:
+    """Share above which a repeated value is set aside: 2 %, and more than one row."""
+    return max(ZERO_SHARE, 1 / n)
 
 
 def bias_aware_factor(ratio: float, level: float) -> float:
@@ -139,18 +145,22 @@ def moderate(values: FloatArray) -> FloatArray:
 
 
 def tied_share(values: FloatArray) -> tuple[FloatArray, FloatArray]:
-    """Share of ties among the largest tenth of magnitudes, and the distance that is a tie.
+    """Share of ties among the tenth farthest from the median, and the distance that is a tie.
 
-    `values` is (n,) or (n, columns); both results are scalars or (columns,).
+    `values` is (n,) or (n, columns); both results are scalars or (columns,). Values of opposite
+    sign do not tie, so that a symmetric sample is not taken for a rounded one.
     """
-    magnitude = np.sort(np.abs(values - np.median(values, axis=0)), axis=0)[::-1]
-    near = NEAR * magnitude[magnitude.shape[0] // 2]
-    top = magnitude[: max(10, values.shape[0] // 10)]
-    same = top[:-1] - top[1:] <= near
-    tied = np.zeros(top.shape, dtype=bool)
+    n = values.shape[0]
+    ordered = np.sort(values, axis=0)
+    magnitude = np.abs(ordered - np.median(values, axis=0))
+    ranked = np.sort(magnitude, axis=0)
+    near = NEAR * ranked[(n - 1) // 2]
+    far = magnitude >= ranked[n - max(10, n // 10)] - near
+    same = (np.diff(ordered, axis=0) <= near) & far[1:] & far[:-1]
+    tied = np.zeros(far.shape, dtype=bool)
     tied[:-1] |= same
     tied[1:] |= same
-    return np.asarray(tied.mean(axis=0)), np.asarray(near)
+    return np.asarray(tied.sum(axis=0) / far.sum(axis=0)), np.asarray(near)
 
 
 def prepare(values: FloatArray, *, name: str = "values", seed: int = 0) -> Magnitudes:
@@ -168,7 +178,7 @@ def prepare(values: FloatArray, *, name: str = "values", seed: int = 0) -> Magni
     notes = []
     values = moderate(values)
     zeros = values == 0
-    if zeros.mean() > ZERO_SHARE:
+    if zeros.mean() > repeat_share(values.size):
         values = values[~zeros]
         notes.append(f"{zeros.mean():.0%} exact zeros dropped")
     if values.size < MINIMUM:

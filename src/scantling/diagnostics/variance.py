@@ -7,6 +7,7 @@ need four moments, stand beside it.
 
 from __future__ import annotations
 
+import warnings
 from collections.abc import Sequence
 from typing import Any
 
@@ -100,7 +101,11 @@ def white(u: Any, Z: Any) -> TestResult:
         raise InputError(f"Z: White's test of {m} columns needs {terms + 2} rows; found {n}")
     if steady(error**2):
         return unmoved("White", 4, "asymptotic")
-    statistic, p_value = het_white(error, _with_constant(suspects))[:2]
+    with warnings.catch_warnings():
+        # A dummy is its own square up to scale: statsmodels warns of the lost rank, but counts
+        # its degrees of freedom by the rank all the same.
+        warnings.simplefilter("ignore")
+        statistic, p_value = het_white(error, _with_constant(suspects))[:2]
     return TestResult(
         test="White",
         statistic=float(statistic),
@@ -142,7 +147,7 @@ def glejser_permutation(
     centring at the median. Needs a second moment for its power to be usual.
     """
     error, suspects = _pair(u, Z)
-    name = "Glejser, absolute residuals on the suspects"
+    name = "Glejser, |e| on the pilot and its columns"
     size = np.abs(error - np.median(error))
     if steady(size):
         return unmoved(name, 2, "permutation")
@@ -312,7 +317,7 @@ def co_movement_test(
     for rows in permuted(target, draws, generator, block):
         exceeding += int(np.count_nonzero(rows @ profile >= observed - slack))
     return TestResult(
-        test="co-movement of column and error size, mean rank correlation",
+        test="co-movement of |x| and |e|, rank correlation",
         statistic=observed,
         p_value=(1 + exceeding) / (draws + 1),
         needs_moment=0,

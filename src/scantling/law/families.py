@@ -26,6 +26,7 @@ class Fit:
     candidates: tuple[tuple[str, float], ...] = ()
     """Families tried with their Bayes information criterion, best first."""
     note: str = ""
+    """How the family came to be chosen, where it is not plainly the best."""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -60,6 +61,7 @@ class ErrorLaw:
     volatility: Volatility | None = None
     """Fitted volatility; None: constant."""
     fit: Fit = Fit(distance=None, p_value=None)
+    """How well it fits; empty for a stated law."""
     spread: ShapeSpread | None = None
     """Uncertainty of the shape, from which `parameter_draws` draws; None: stated exactly."""
 
@@ -152,9 +154,13 @@ class ErrorLaw:
         return np.asarray(square / square.mean())
 
     def normal_innovations(self) -> ErrorLaw:
-        """The same volatility path under normal innovations."""
+        """The same volatility path under normal innovations of the same variance.
+
+        Of variance 1, to which fitted innovations are scaled, where the law's is infinite.
+        """
         variance = self.innovation_variance
-        return replace(normal_law(math.sqrt(variance)), volatility=self.volatility)
+        sd = math.sqrt(variance) if math.isfinite(variance) else 1.0
+        return replace(normal_law(sd), volatility=self.volatility)
 
     def without_volatility(self) -> ErrorLaw:
         """The law left after each row is divided by its volatility over the mean level."""

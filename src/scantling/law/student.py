@@ -7,8 +7,6 @@ of iteratively reweighted least squares.
 
 from __future__ import annotations
 
-import math
-
 import numpy as np
 from scipy.special import gammaln
 
@@ -19,11 +17,30 @@ SCAN = (
     0.6, 0.72, 0.86, 1.0,
 )  # fmt: skip
 """Values of 1/df scanned; between them the likelihood is interpolated by a parabola."""
+VERTEX_STEPS = 12
+"""Reweighting steps for the scale at the interpolated maximum."""
 
 
-def log_constant(df: float) -> float:
+def log_constant(df: FloatArray) -> FloatArray:
     """Log of the density's constant at scale 1."""
-    return float(gammaln((df + 1) / 2) - gammaln(df / 2) - 0.5 * math.log(math.pi * df))
+    return np.asarray(gammaln((df + 1) / 2) - gammaln(df / 2) - 0.5 * np.log(np.pi * df))
+
+
+def reweighted(
+    squares: FloatArray, df: FloatArray, square_scale: FloatArray, steps: int
+) -> tuple[FloatArray, FloatArray]:
+    """Log-likelihood and squared scale, each (B,), after reweighting steps at given df.
+
+    `squares` is (B, n), `df` and `square_scale` (B,); with no steps the likelihood is that at
+    the given scale.
+    """
+    each = df[:, None]
+    for _ in range(steps):
+        weighted = (each + 1) * squares / (each + squares / square_scale[:, None])
+        square_scale = weighted.mean(axis=1)
+    logs = np.log1p(squares / (each * square_scale[:, None])).sum(axis=1)
+    constant = squares.shape[1] * (log_constant(df) - 0.5 * np.log(square_scale))
+    return constant - (df + 1) / 2 * logs, square_scale
 
 
 def profile(
@@ -43,18 +60,14 @@ def profile(
     log-likelihood, scale : arrays, shape (G, B)
     """
     squares = samples**2
-    n = samples.shape[1]
     square_scale = squares.mean(axis=1)
     likelihoods, scales = [], []
     for position, gamma in enumerate(gammas):
-        df = 1 / float(gamma)
-        for _ in range(steps if position else 3 * steps):
-            weighted = (df + 1) * squares / (df + squares / square_scale[:, None])
-            square_scale = weighted.mean(axis=1)
-        logs = np.log1p(squares / (df * square_scale[:, None])).sum(axis=1)
-        likelihoods.append(
-            n * (log_constant(df) - 0.5 * np.log(square_scale)) - (df + 1) / 2 * logs
+        df = np.full(square_scale.shape, 1 / float(gamma))
+        likelihood, square_scale = reweighted(
+            squares, df, square_scale, steps if position else 3 * steps
         )
+        likelihoods.append(likelihood)
         scales.append(np.sqrt(square_scale))
     return np.array(likelihoods), np.array(scales)
 
@@ -70,16 +83,16 @@ def fit_student(samples: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray
     rows = np.arange(samples.shape[0])
     best = likelihood.argmax(axis=0)
     inner = np.clip(best, 1, grid.size - 2)
-    x0, x1, x2 = grid[inner - 1], grid[inner], grid[inner + 1]
-    f0, f1, f2 = (likelihood[inner + shift, rows] for shift in (-1, 0, 1))
-    # Vertex of the parabola through the three points around the maximum.
+    around = (inner - 1, inner, inner + 1)
+    # In the root of gamma the likelihood is closest to the parabola through the three points
+    # around the maximum; its vertex is the estimate.
+    x0, x1, x2 = (np.sqrt(grid[at]) for at in around)
+    f0, f1, f2 = (likelihood[at, rows] for at in around)
     above = (x1 - x0) ** 2 * (f1 - f2) - (x1 - x2) ** 2 * (f1 - f0)
     below = (x1 - x0) * (f1 - f2) - (x1 - x2) * (f1 - f0)
     safe = np.where(np.abs(below) > 1e-12, below, 1.0)
     vertex = np.where(np.abs(below) > 1e-12, x1 - 0.5 * above / safe, x1)
-    gamma = np.clip(vertex, x0, x2)
+    gamma = np.clip(vertex, x0, x2) ** 2
     gamma = np.where(best == 0, grid[0], np.where(best == grid.size - 1, grid[-1], gamma))
-    out_scale = np.array(
-        [np.interp(g, grid, scale[:, b]) for b, g in zip(rows, gamma, strict=True)]
-    )
-    return gamma, out_scale, likelihood.max(axis=0)
+    top, square_scale = reweighted(samples**2, 1 / gamma, scale[best, rows] ** 2, VERTEX_STEPS)
+    return gamma, np.sqrt(square_scale), top

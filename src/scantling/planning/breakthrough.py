@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import math
 from dataclasses import dataclass
 
 import numpy as np
@@ -11,23 +10,29 @@ from scantling.core.record import FloatArray, read_only
 from scantling.core.streams import Mapper, blocks, stream
 from scantling.law.families import ErrorLaw
 from scantling.planning.case import Case, column_grid
-from scantling.planning.limit import Limit, band, last_below, make_limit
+from scantling.planning.limit import Limit, band, make_limit
 from scantling.simulation.scores import (
     Passers,
     centre,
     column_shares,
+    first_above,
     join,
     largest_quantile,
     passers,
     penalty_level,
     risk_at,
+    risk_curves,
     score_ratios,
 )
 
 BLOCK = 100
 """Draws simulated together; fixed, so that results do not depend on workers."""
 DRAWS_PER_LAW = 200
-"""Most draws of errors under each drawn law."""
+"""Fewest draws of errors under each drawn law, unless the design asks for fewer replicates."""
+CELLS = 60_000_000
+"""Rows times columns times draws under one law up to which more draws are taken than asked:
+they cost little and the risk is a small probability."""
+MOST_TIMES = 10
 QUANTILE_FLOOR = 1.4
 """Ratios kept where quantiles are wanted; single columns' 95 % points lie near 1.96."""
 
@@ -47,9 +52,13 @@ class CurvePoint:
     """Break-through risk at one number of columns."""
 
     p: int
+    """Number of columns."""
     risk: float
+    """Break-through risk under the fitted law."""
     low: float
+    """5 % point over draws of the law."""
     high: float
+    """95 % point over draws of the law."""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -57,7 +66,9 @@ class BreakThrough:
     """The risk curve and what follows from it alone."""
 
     noise: Limit
+    """Largest number of columns whose risk stays accepted."""
     curve: tuple[CurvePoint, ...]
+    """Risk over p, increasing p; the last is all columns."""
     penalty_ratio: float | None
     """Quantile of the largest ratio over the Gaussian twin's, at the present p."""
     equivalent_rows: int | None
@@ -67,6 +78,7 @@ class BreakThrough:
     worst_shares: tuple[float, ...]
     """Those shares."""
     fitted: ScoreSample
+    """Scores under the fitted law."""
     drawn: tuple[ScoreSample, ...]
     """One for each drawn law."""
 
@@ -106,21 +118,21 @@ def sample_scores(
     return tuple(out)
 
 
-def noise_limit_of(found: Passers, grid: np.ndarray, risk: float) -> tuple[float, FloatArray]:
-    """Largest p up to which the risk stays accepted (inf if throughout), and the risk curve."""
-    curve = np.array([risk_at(found, int(p), float(penalty_level(p, risk)))[0] for p in grid])
-    over = np.flatnonzero(curve > risk)
-    if not over.size:
-        return math.inf, curve
-    first = int(over[0])
-    if first == 0:
-        return float(grid[0]) - 1, curve
-    limit = last_below(
-        lambda p: risk_at(found, p, float(penalty_level(p, risk)))[0] <= risk,
-        int(grid[first - 1]),
-        int(grid[first]),
+def score_draws(case: Case) -> tuple[int, int]:
+    """Draws of errors under the fitted law and its twin, and under each drawn law."""
+    affordable = min(CELLS // (case.rows * case.columns), MOST_TIMES * case.replicates)
+    return (
+        max(case.replicates, affordable),
+        max(min(case.replicates, DRAWS_PER_LAW), min(affordable, 2 * case.replicates)),
     )
-    return float(limit), curve
+
+
+def curve_points(curve: FloatArray, many: FloatArray, grid: np.ndarray) -> tuple[CurvePoint, ...]:
+    """The risk curve (P,) on a grid of p, its band from curves under drawn laws (B, P)."""
+    return tuple(
+        CurvePoint(p=int(p), risk=float(curve[p - 1]), low=low, high=high)
+        for p, (low, high) in zip(grid, map(band, many[:, grid - 1].T), strict=True)
+    )
 
 
 def break_through(case: Case, mapper: Mapper, *, bands: bool = True) -> BreakThrough:
@@ -135,11 +147,11 @@ def break_through(case: Case, mapper: Mapper, *, bands: bool = True) -> BreakThr
         Whether the drawn laws are simulated too; without them bands are the point values.
     """
     risk = case.target.risk
-    grid = column_grid(case.columns)
     floor = float(penalty_level(1, risk))
     low_floor = min(floor, QUANTILE_FLOOR)
+    draws, draws_per_law = score_draws(case)
     fitted, twin = (
-        sample_scores(case, (law,), case.replicates, low_floor, purpose, mapper)[0]
+        sample_scores(case, (law,), draws, low_floor, purpose, mapper)[0]
         for law, purpose in (
             (case.law, "scores, fitted law"),
             (case.twin, "scores, twin"),
@@ -148,23 +160,18 @@ def break_through(case: Case, mapper: Mapper, *, bands: bool = True) -> BreakThr
     drawn: tuple[ScoreSample, ...] = ()
     if bands:
         drawn = sample_scores(
-            case, case.law_draws, min(case.replicates, DRAWS_PER_LAW), floor,
-            "scores, drawn laws", mapper,
-        )  # fmt: skip
-    point, curve = noise_limit_of(fitted.found, grid, risk)
-    many = [noise_limit_of(sample.found, grid, risk) for sample in drawn] or [(point, curve)]
-    curves = np.array([c for _, c in many])
-    ends = np.array([band(curves[:, k].tolist()) for k in range(grid.size)]).T
+            case, case.law_draws, draws_per_law, floor, "scores, drawn laws", mapper
+        )
+    curve = risk_curves(fitted.found, risk)[0]
+    many = [risk_curves(sample.found, risk)[0] for sample in drawn] or [curve]
+    limits = [first_above(each, risk) for each in many]
     ratio = _penalty_ratio(case, fitted, twin)
     seen = join([sample.found for sample in drawn]) if drawn else fitted.found
     shares = column_shares(seen, float(penalty_level(case.columns, risk)))
     order = np.argsort(-shares, kind="stable")[:50]
     return BreakThrough(
-        noise=make_limit(point, [d for d, _ in many], case.columns, mode="conditional"),
-        curve=tuple(
-            CurvePoint(p=int(p), risk=float(r), low=float(lo), high=float(hi))
-            for p, r, lo, hi in zip(grid, curve, *ends, strict=True)
-        ),
+        noise=make_limit(first_above(curve, risk), limits, case.columns, mode="conditional"),
+        curve=curve_points(curve, np.array(many), column_grid(case.columns)),
         penalty_ratio=ratio,
         equivalent_rows=None if ratio is None else int(case.rows / max(1.0, ratio) ** 2),
         worst_columns=tuple(int(j) for j in order if shares[j] > 0),

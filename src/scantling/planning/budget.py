@@ -21,6 +21,7 @@ class Allowed:
     columns: int | None
     """None if one of the limits could not be computed."""
     low: int | None
+    """5 % point of the smallest limit over draws of the law."""
     high: int | None
     """None if beyond the largest number examined."""
     note: str = ""
@@ -34,28 +35,43 @@ class Budget:
     asked: int
     """Columns the design asks for."""
     rows: int
+    """n."""
     noise: Limit
+    """Limit by break-through risk."""
     signal: Limit
+    """Limit by the smallest detectable effect."""
     stability: Limit
+    """Limit by refits under fresh errors."""
     geometry: Limit
+    """The stability limit under the Gaussian twin."""
     assured: Limit
+    """Columns proved, or why none are given."""
     ceiling: Ceiling
+    """Rate that theory covers."""
     allowed: Allowed
+    """The smallest of noise, signal and stability limit."""
     binding: str | None
     """noise | signal | stability; None if no limit is reached or one is missing."""
     risk_at_design: Estimate
     """Break-through risk at the columns asked for."""
     curve: tuple[CurvePoint, ...]
+    """Break-through risk over p."""
     penalty_ratio: float | None
+    """Needed penalty over the Gaussian twin's; None if no quantile was found."""
     equivalent_rows: int | None
+    """n / penalty ratio squared, never above n."""
     rows_needed: int | None
+    """Rows at which the smallest effect is detectable at `asked` columns."""
     rows_note: str
+    """Why `rows_needed` is None; empty otherwise."""
     detectable: float | None
     """Smallest detectable effect, median column, sd of the response."""
     detectable_worst: float | None
     """The same for the worst tenth of columns."""
     worst_columns: tuple[int, ...]
+    """Columns by share of the break-throughs, largest first."""
     worst_shares: tuple[float, ...]
+    """Those shares."""
 
 
 def combine(limits: dict[str, Limit], most: int) -> tuple[Allowed, str | None]:
@@ -75,7 +91,7 @@ def combine(limits: dict[str, Limit], most: int) -> tuple[Allowed, str | None]:
     allowed = Allowed(
         columns=columns,
         low=most if math.isinf(low) else int(low),
-        high=None if math.isinf(high) else int(high),
+        high=None if math.isinf(high) or not binding else int(high),
         note="" if binding else AT_LEAST,
     )
     return allowed, binding

@@ -31,10 +31,13 @@ class Case:
     residual_sd: float
     """sd of the residuals; simulated errors are scaled to it."""
     target: TargetSpec
+    """What has to be achieved."""
     rule: str
     """plug-in | self-normalised."""
     replicates: int
+    """Draws of errors in each simulation."""
     seed: int
+    """Of every random stream."""
 
     @property
     def rows(self) -> int:

@@ -21,7 +21,9 @@ class Ceiling:
     """A rate, not a count proved for this sample."""
 
     columns: int | None
+    """Point value; None where an index it needs is unknown."""
     low: int | None
+    """At the lower end of the index's interval."""
     high: int | None
     """None where the rate has no upper end in reach."""
     regime: str
@@ -31,7 +33,11 @@ class Ceiling:
 
 
 def _whole(rate: float) -> int:
-    return MOST if rate >= math.log(MOST) else int(math.exp(rate))
+    """floor(exp(rate)), at most MOST; a whole number reached but for rounding counts as reached."""
+    if rate >= math.log(MOST):
+        return MOST
+    value = math.exp(rate)
+    return round(value) if math.isclose(value, round(value), rel_tol=1e-12) else int(value)
 
 
 def heavy_rate(rows: int, index: float) -> float:

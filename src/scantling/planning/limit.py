@@ -38,13 +38,16 @@ def missing_limit(reason: str, *, mode: str = "conditional") -> Limit:
 
 
 def make_limit(point: float, draws: Sequence[float], most: int, *, mode: str) -> Limit:
-    """Limit from its value under the fitted law and under each draw; inf is 'not reached'."""
+    """Limit from its value under the fitted law and under each draw; inf is 'not reached'.
+
+    A limit not reached has no upper end, whatever the draws say.
+    """
     reached = math.isfinite(point)
     low, high = band(draws)
     return Limit(
         columns=int(point) if reached else most,
         low=most if math.isinf(low) else int(low),
-        high=None if math.isinf(high) else int(high),
+        high=None if math.isinf(high) or not reached else int(high),
         mode=mode,
         reached=reached,
         note="" if reached else AT_LEAST,

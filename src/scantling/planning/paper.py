@@ -15,22 +15,22 @@ from scantling.core.streams import MEMORY_BOUND, Mapper, blocks, stream, worker_
 from scantling.errors import InputError
 from scantling.law.families import ErrorLaw, normal_law
 from scantling.law.notation import parse_law
-from scantling.planning.breakthrough import CurvePoint, needed_penalty
+from scantling.planning.breakthrough import CurvePoint, curve_points, needed_penalty
 from scantling.planning.budget import ASSURED_NOTE, Budget, combine
 from scantling.planning.case import LAW_DRAWS, column_grid
 from scantling.planning.ceiling import rate_by_regime
-from scantling.planning.limit import Limit, band, last_below, make_limit, missing_limit
+from scantling.planning.limit import Limit, last_below, make_limit, missing_limit
 from scantling.planning.signal import MOST_TIMES_ROWS
 from scantling.simulation.scores import (
     RULES,
     Passers,
     centre,
-    exceeding_counts,
+    first_above,
     join,
     largest_quantile,
-    none_taken,
     passers,
     penalty_level,
+    risk_curves,
     score_ratios,
 )
 
@@ -39,6 +39,7 @@ CELLS = 40_000_000
 """Most values drawn for columns: beyond it several errors share a table of columns."""
 FEWEST_TABLES = 8
 FLOOR = 1.4
+"""Ratios kept, or those above L(1) where that is lower."""
 NOT_SIMULATED = "selection is not simulated for a design on paper in this version"
 
 
@@ -92,27 +93,24 @@ def budget(
     """
     rows, columns = _whole(rows, "rows", 30), _whole(columns, "columns", 1)
     replicates = _whole(replicates, "replicates", 50)
-    between(risk, "risk", 0, 0.5)
-    between(power, "power", 0, 1)
-    between(explained, "explained", 0, 1 - 1e-9, closed=True)
-    between(smallest_effect, "smallest_effect", 0, 5)
+    seed, workers = _whole(seed, "seed", 0), _whole(workers, "workers", 1)
+    risk = between(risk, "risk", 0, 0.5)
+    power = between(power, "power", 0, 1)
+    explained = between(explained, "explained", 0, 1 - 1e-9, closed=True)
+    smallest_effect = between(smallest_effect, "smallest_effect", 0, 5)
     if rule not in RULES:
         raise InputError(f"rule: one of {', '.join(RULES)} is needed; found {rule!r}")
-    if rows * columns * 32 > MEMORY_BOUND:
-        raise InputError(
-            f"columns: {columns:,} columns of {rows:,} rows need {rows * columns * 32 / 2**30:.1f}"
-            f" GiB; the bound is {MEMORY_BOUND / 2**30:.0f} GiB"
+    table = _table_bytes(rows, columns, replicates)
+    errors = _law(law, "law")
+    drawn = errors if column_law is None else _law(column_law, "column_law")
+    floor = min(FLOOR, float(penalty_level(1, risk)))
+    twin = normal_law(errors.sd if math.isfinite(errors.sd) else 1.0)
+    # Each worker holds a table: no more of them than the bound allows.
+    with worker_pool(min(workers, MEMORY_BOUND // table)) as mapper:
+        (found, loading), (alike, twin_loading) = simulate(
+            rows, columns, (errors, twin), drawn, rule, replicates, seed, mapper, floor
         )
-    errors = parse_law(law) if isinstance(law, str) else law
-    if column_law is None:
-        drawn = errors
-    else:
-        drawn = parse_law(column_law, "column_law") if isinstance(column_law, str) else column_law
-    with worker_pool(workers) as mapper:
-        found, loading = simulate(rows, columns, errors, drawn, rule, replicates, seed, mapper)
-        twin = normal_law(errors.sd if math.isfinite(errors.sd) else 1.0)
-        alike, twin_loading = simulate(rows, columns, twin, drawn, rule, replicates, seed, mapper)
-    noise, curve = _noise(found, columns, risk, seed)
+    noise, curve = _noise(found, together(rows, columns, replicates), risk, seed)
     ratio = _ratio(found, alike, columns, risk, rule, loading / twin_loading)
     signal, detectable, needed, note = _signal(
         found, rows, columns, errors, loading, risk, smallest_effect, power, explained
@@ -156,61 +154,86 @@ def _whole(value: Any, name: str, least: int) -> int:
     return int(value)
 
 
-def simulate(
-    rows: int, columns: int, errors: ErrorLaw, drawn: ErrorLaw, rule: str, replicates: int,
-    seed: int, mapper: Mapper,
-) -> tuple[Passers, float]:  # fmt: skip
-    """Score ratios over fresh columns and errors, and the typical loading."""
-    affordable = CELLS // (rows * columns)
-    tables = replicates if affordable >= replicates else max(FEWEST_TABLES, affordable)
-    parts = blocks(replicates, math.ceil(replicates / tables))
+def _law(law: Any, name: str) -> ErrorLaw:
+    if isinstance(law, str):
+        return parse_law(law, name)
+    if not isinstance(law, ErrorLaw):
+        raise InputError(
+            f"{name}: a fitted law, or text such as 'student-t:df=3', is needed; found {law!r}"
+        )
+    return law
 
-    def one(unit: int) -> tuple[Passers, FloatArray]:
+
+def _table_bytes(rows: int, columns: int, replicates: int) -> int:
+    """Bytes one worker needs for a table of columns with the ratios kept; refused above the bound.
+
+    Four copies of the table, and of two samples the share of ratios above the floor.
+    """
+    size = 32 * rows * columns + 8 * columns * replicates
+    if size > MEMORY_BOUND:
+        raise InputError(
+            f"columns: {columns:,} columns of {rows:,} rows and {replicates:,} replicates need"
+            f" {size / 2**30:.1f} GiB; the bound is {MEMORY_BOUND / 2**30:.0f} GiB"
+        )
+    return size
+
+
+def together(rows: int, columns: int, replicates: int) -> int:
+    """How many draws of errors share one table of columns: 1 where fresh ones are affordable."""
+    affordable = CELLS // (rows * columns)
+    return math.ceil(replicates / min(replicates, max(FEWEST_TABLES, affordable)))
+
+
+def simulate(
+    rows: int, columns: int, laws: tuple[ErrorLaw, ...], drawn: ErrorLaw, rule: str,
+    replicates: int, seed: int, mapper: Mapper, floor: float,
+) -> list[tuple[Passers, float]]:  # fmt: skip
+    """Score ratios above the floor and the typical loading, for errors of each law.
+
+    Columns are fresh, and the same for all laws.
+    """
+    parts = blocks(replicates, together(rows, columns, replicates))
+
+    def one(unit: int) -> list[tuple[Passers, FloatArray]]:
         start, stop = parts[unit]
         X = drawn.draw((rows, columns), stream(seed, "stated columns", unit))
         X -= X.mean(axis=0)
         X /= np.sqrt((X**2).mean(axis=0))
-        e = errors.draw((rows, stop - start), stream(seed, "stated errors", unit))
-        ratios, loadings = score_ratios(X, centre(e), rule)
-        return passers(ratios, FLOOR), np.median(loadings, axis=0)
+        out = []
+        for law in laws:
+            e = law.draw((rows, stop - start), stream(seed, "stated errors", unit))
+            ratios, loadings = score_ratios(X, centre(e), rule)
+            out.append((passers(ratios, floor), np.median(loadings, axis=0)))
+        return out
 
-    done = mapper(one, range(len(parts)))
-    typical = float(np.median(np.concatenate([loadings for _, loadings in done])))
-    return join([found for found, _ in done]), typical
+    by_law = zip(*mapper(one, range(len(parts))), strict=True)
+    return [
+        (
+            join([found for found, _ in done]),
+            float(np.median(np.concatenate([loadings for _, loadings in done]))),
+        )
+        for done in by_law
+    ]
 
 
 def _noise(
-    found: Passers, columns: int, risk: float, seed: int
+    found: Passers, shared: int, risk: float, seed: int
 ) -> tuple[Limit, tuple[CurvePoint, ...]]:
-    """Noise limit and risk curve; their bands by resampling the draws."""
-    grid = column_grid(columns)
-
-    def broken_at(p: int) -> FloatArray:
-        level = float(penalty_level(p, risk))
-        return 1 - none_taken(exceeding_counts(found, level), found.columns, p)
-
-    broken = np.array([broken_at(int(p)) for p in grid])
+    """Noise limit and risk curve; bands by resampling tables, each with the draws that share it."""
+    table = np.arange(found.draws) // shared
+    tables = int(table[-1]) + 1
     rng = stream(seed, "resampled draws")
-    picks = [rng.integers(found.draws, size=found.draws) for _ in range(LAW_DRAWS)]
-
-    def limit(pick: np.ndarray) -> float:
-        over = np.flatnonzero(broken[:, pick].mean(axis=1) > risk)
-        if not over.size:
-            return math.inf
-        first = int(over[0])
-        if first == 0:
-            return float(grid[0]) - 1
-        good, bad = int(grid[first - 1]), int(grid[first])
-        return float(last_below(lambda p: broken_at(p)[pick].mean() <= risk, good, bad))
-
-    every = np.arange(found.draws)
-    noise = make_limit(limit(every), [limit(pick) for pick in picks], columns, mode=MODE)
-    means = np.array([broken[:, pick].mean(axis=1) for pick in picks])
-    ends = [band(means[:, k].tolist()) for k in range(grid.size)]
-    return noise, tuple(
-        CurvePoint(p=int(p), risk=float(r), low=low, high=high)
-        for p, r, (low, high) in zip(grid, broken.mean(axis=1), ends, strict=True)
+    picks = np.array(
+        [np.bincount(rng.integers(tables, size=tables), minlength=tables) for _ in range(LAW_DRAWS)]
     )
+    weights = picks[:, table].astype(np.float64)
+    weights *= found.draws / weights.sum(axis=1, keepdims=True)
+    curve, many = risk_curves(found, risk)[0], risk_curves(found, risk, weights)
+    noise = make_limit(
+        first_above(curve, risk), [first_above(each, risk) for each in many], found.columns,
+        mode=MODE,
+    )  # fmt: skip
+    return noise, curve_points(curve, many, column_grid(found.columns))
 
 
 def _ratio(

@@ -40,11 +40,13 @@ class Remedy:
     """A change of the design, and the budget it would have."""
 
     name: str
+    """The change, in words."""
     columns: int
     """Columns of the changed design."""
     allowed: Allowed
     """Of the changed design."""
     binding: str | None
+    """Limit that binds the changed design; None if none is reached."""
     risk_at_design: Estimate
     """At all of the changed design's columns."""
     refitted: bool
@@ -58,8 +60,11 @@ class Change:
     """A changed case, not yet computed."""
 
     name: str
+    """The change, in words."""
     case: Case
+    """The changed design, ready for simulation."""
     price: str
+    """What it costs, in words."""
 
 
 def changes(
@@ -165,7 +170,8 @@ def _weighted(case: Case, residuals: Residuals) -> Change:
     assert volatility is not None
     relative = np.asarray(volatility.path) / math.sqrt(float((volatility.path**2).mean()))
     X = standardise(case.X / relative[:, None])
-    response = (residuals.fitted + residuals.values) / relative
+    # About its mean: a constant over sigma_t is not variation to be explained.
+    response = (residuals.fitted - residuals.fitted.mean() + residuals.values) / relative
     law = case.law.without_volatility()
     weighted_errors = residuals.values / relative
     return Change(

@@ -24,6 +24,7 @@ class Signal:
     """Which effects the design can detect."""
 
     limit: Limit
+    """Largest number of columns at which the smallest effect is detectable."""
     detectable: float | None
     """Smallest detectable effect at the present p, median column, in sd of the response."""
     detectable_worst: float | None

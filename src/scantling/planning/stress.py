@@ -36,11 +36,15 @@ class StressRun:
     """Selection statistics at one number of columns under one law."""
 
     rows: int
+    """n."""
     columns: int
+    """Candidate columns of the refits."""
     law: str
     """fitted | twin | normal-volatility."""
     mode: str
+    """conditional | generative."""
     replicates: int
+    """Refits."""
     stability: Estimate
     """Stability index, 90 % interval; 0 if nothing or everything is always selected."""
     power: Estimate
@@ -58,8 +62,11 @@ class Stress:
     """All runs, and the limits read off them."""
 
     runs: tuple[StressRun, ...]
+    """Fitted law first, then its twin, each by increasing columns."""
     stability: Limit
+    """Largest number of columns that meets the criteria."""
     geometry: Limit
+    """The same under the Gaussian twin."""
     failing: tuple[str, ...]
     """Criteria not met at the columns asked for, under the fitted law."""
 

@@ -89,15 +89,39 @@ def _reasons(case: Case, budget: Budget, stress: Stress | None) -> list[str]:
         elif name == budget.binding or limit.columns < budget.asked:
             reasons.append(words())
     if not reasons:
-        reasons.append(_nothing_binds(budget))
+        reasons.append(_nothing_binds(case, budget))
     return reasons
 
 
-def _nothing_binds(budget: Budget) -> str:
+def _nothing_binds(case: Case, budget: Budget) -> str:
+    """No limit is reached under the fitted law; under others it may be."""
+    limits = {"noise": budget.noise, "signal": budget.signal, "stability": budget.stability}
+    open_ones = {
+        name: limit.low
+        for name, limit in limits.items()
+        if limit.low is not None and limit.low < budget.asked
+    }
+    if open_ones:
+        name = min(open_ones, key=lambda key: open_ones[key])
+        return (
+            f"under the fitted law no limit is reached up to {_columns(budget.asked)}, but the"
+            f" sample does not settle it: the {name} limit may be as low as {open_ones[name]:,}"
+        )
     return (
-        f"no limit is reached up to the {budget.asked:,} columns at hand; noise passes the"
-        f" penalty with probability {budget.risk_at_design.value:.3f}"
+        f"no limit is reached up to the {_columns(budget.asked)} at hand; noise passes the"
+        f" penalty with probability {chance(budget.risk_at_design.value, case.replicates)}"
     )
+
+
+def _columns(count: int) -> str:
+    return "1 column" if count == 1 else f"{count:,} columns"
+
+
+def chance(value: float, draws: int) -> str:
+    """A simulated probability, no finer than its draws support."""
+    if value * draws < 1:
+        return f"below {3 / draws:.2g}"
+    return f"{value:.3f}" if value < 0.1 else f"{value:.2f}"
 
 
 def _noise_reason(case: Case, budget: Budget) -> str:
@@ -108,8 +132,9 @@ def _noise_reason(case: Case, budget: Budget) -> str:
     else:
         cause = "normal errors would need about the same penalty"
     return (
-        f"noise binds: at {budget.asked:,} columns a noise column passes the penalty with"
-        f" probability {risk.value:.2f} ({case.target.risk:g} accepted); {cause}"
+        f"noise binds: at {_columns(budget.asked)} a noise column passes the penalty with"
+        f" probability {chance(risk.value, case.replicates)} ({case.target.risk:g} accepted);"
+        f" {cause}"
     )
 
 
@@ -117,7 +142,7 @@ def _signal_reason(case: Case, budget: Budget) -> str:
     detectable = budget.detectable
     shown = "unknown" if detectable is None else f"{detectable:.3f}"
     return (
-        f"effect size binds: at {budget.asked:,} columns the smallest detectable effect is"
+        f"effect size binds: at {_columns(budget.asked)} the smallest detectable effect is"
         f" {shown} sd of the response against {case.target.smallest_effect:g} asked for"
     )
 
@@ -135,7 +160,7 @@ def _stability_reason(case: Case, budget: Budget, stress: Stress | None) -> str:
     }
     missed = ", ".join(words[name] for name in stress.failing) or "a criterion near its bar"
     return (
-        f"selection binds: refits at {budget.asked:,} columns give {missed};"
+        f"selection binds: refits at {_columns(budget.asked)} give {missed};"
         f" {_blame(budget.stability, budget.geometry)}"
     )
 
@@ -144,9 +169,10 @@ def _blame(stability: Limit, geometry: Limit) -> str:
     """Whether tails or geometry and effect size are behind an unstable selection."""
     if stability.columns is None or geometry.columns is None:
         return "the normal twin could not be run"
-    if geometry.reached and (
-        geometry.columns <= 1.25 * stability.columns or (geometry.low or 0) <= (stability.high or 0)
-    ):
+    # A band without an upper end reaches as far as any other.
+    overlap = stability.high is None or (geometry.low or 0) <= stability.high
+    close = geometry.columns <= 1.25 * stability.columns
+    if (geometry.reached and (close or overlap)) or stability.high is None:
         return "normal errors do no better, so geometry or effect size is to blame, not tails"
     return (
         f"normal errors would carry {'at least ' if not geometry.reached else ''}"

@@ -4,17 +4,23 @@ from __future__ import annotations
 
 import json
 import math
-from typing import Any
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
 
 from scantling.core.estimate import Estimate
 from scantling.diagnostics.battery import Finding, SeriesGroup
 from scantling.diagnostics.moments import ORDERS
 from scantling.diagnostics.tail_index import TailIndex, index_from_gamma
+from scantling.planning.budget import Allowed
 from scantling.planning.limit import Limit
 from scantling.planning.remedies import Remedy
 from scantling.planning.stress import StressRun
-from scantling.report.record import SCHEMA, Report
 
+if TYPE_CHECKING:
+    from scantling.report.record import Report
+
+SCHEMA = "scantling-report/1"
 DIGITS = 10
 """Significant digits kept; far below any simulation error, above rounding noise."""
 ABOVE = "above 50"
@@ -28,7 +34,8 @@ def number(value: float | int | None) -> float | int | None:
     value = float(value)
     if not math.isfinite(value):
         return None
-    return float(f"{value:.{DIGITS}g}")
+    rounded = float(f"{value:.{DIGITS}g}")
+    return rounded if math.isfinite(rounded) else value
 
 
 def noted(key: str, value: float | int | None, note: str) -> dict[str, Any]:
@@ -72,7 +79,11 @@ def cautions(report: Report) -> tuple[str, ...]:
     """What always has to be said, and what this sample adds."""
     from scantling.report.wording import ALWAYS
 
-    return (*report.diagnosis.warnings, *ALWAYS)
+    spans = ()
+    if report.read.rows_dropped and report.read.rows_lost:
+        spans = ("Rows were dropped, so lags may span more than one step of time.",)
+    assured = f"No columns are assured: {report.budget.assured.note}."
+    return (*report.diagnosis.warnings, *spans, assured, *ALWAYS)
 
 
 def _design(report: Report) -> dict[str, Any]:
@@ -103,7 +114,7 @@ def _design(report: Report) -> dict[str, Any]:
 def _tail(tail: TailIndex) -> dict[str, Any]:
     return {
         **noted("index", tail.index, ABOVE),
-        "low": number(tail.low),
+        **noted("low", tail.low, ABOVE),
         **noted("high", tail.high, UNBOUNDED),
         "finite": tail.finite,
         "threshold_count": tail.threshold_count,
@@ -145,7 +156,7 @@ def _diagnosis(report: Report) -> dict[str, Any]:
             "largest_correlation": number(structure.largest_correlation),
         },
         "co_movement": {
-            "median": number(float(sorted(found.co_movement)[len(names) // 2])),
+            "median": number(float(np.median(found.co_movement))),
             "largest": number(float(found.co_movement.max())),
             "largest_column": names[int(found.co_movement.argmax())],
         },
@@ -175,7 +186,7 @@ def _group(group: SeriesGroup, names: tuple[str, ...], weight: tuple[str, ...] |
             return _unknown_tail(refused[j])
         return {
             **noted("index", index_from_gamma(float(tails.gamma[j])), ABOVE),
-            "low": number(1 / float(high[j])) if high[j] > 0 else None,
+            **noted("low", 1 / float(high[j]) if high[j] > 0 else None, ABOVE),
             **noted("high", 1 / float(low[j]) if low[j] > 0 else None, UNBOUNDED),
             "finite": bool(tails.p_value[j] <= 0.05),
             "threshold_count": tails.threshold_count,
@@ -237,12 +248,17 @@ def _law(report: Report) -> dict[str, Any]:
     }
 
 
+def _beyond(limit: Limit | Allowed) -> str:
+    """Why there is no upper end: the limit is unknown, or beyond the columns examined."""
+    return limit.note if limit.columns is None else "not reached"
+
+
 def _limit(limit: Limit) -> dict[str, Any]:
     out: dict[str, Any] = {"columns": limit.columns}
     if limit.note:
         out["columns_note"] = limit.note
     out |= noted("low", limit.low, limit.note)
-    out |= noted("high", limit.high, limit.note if limit.columns is None else "not reached")
+    out |= noted("high", limit.high, _beyond(limit))
     return out | {"mode": limit.mode}
 
 
@@ -268,7 +284,7 @@ def _budget(report: Report) -> dict[str, Any]:
             "columns": allowed.columns,
             **({"columns_note": allowed.note} if allowed.note else {}),
             **noted("low", allowed.low, allowed.note),
-            **noted("high", allowed.high, "not reached" if allowed.columns else allowed.note),
+            **noted("high", allowed.high, _beyond(allowed)),
         },
         **(
             {"binding": budget.binding}
@@ -315,7 +331,7 @@ def _remedy(remedy: Remedy) -> dict[str, Any]:
         "allowed_columns": allowed.columns,
         **({"allowed_columns_note": allowed.note} if allowed.note else {}),
         **noted("low", allowed.low, allowed.note),
-        **noted("high", allowed.high, "not reached" if allowed.columns else allowed.note),
+        **noted("high", allowed.high, _beyond(allowed)),
         "risk_at_design": estimate(remedy.risk_at_design),
         "note": "; ".join(notes),
     }

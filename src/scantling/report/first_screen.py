@@ -5,7 +5,7 @@ from __future__ import annotations
 import textwrap
 
 from scantling.planning.remedies import Remedy
-from scantling.planning.verdict import NONE
+from scantling.planning.verdict import NONE, WITHIN
 from scantling.report.record import Report
 from scantling.report.wording import (
     LABEL,
@@ -24,7 +24,7 @@ SHOWN_REMEDIES = 3
 
 def first_screen(report: Report, width: int) -> list[str]:
     """At most twelve lines: verdict, reason, columns, limits, rows, remedies."""
-    title = shortened(report.design.title, width - 10)
+    title = shortened(report.design.title, width - len("scantling: "))
     lines = [f"scantling: {title}"]
     lines += labelled(
         "Verdict", f"{report.verdict.answer.upper()} (cover: {report.verdict.cover})", width
@@ -49,7 +49,7 @@ def _columns(report: Report) -> str:
     budget = report.budget
     asked = f"{budget.asked:,} asked for; "
     if report.verdict.answer == NONE:
-        return asked + "none can be allowed"
+        return asked + "none allowed as it stands"
     allowed = budget.allowed
     if allowed.columns is None:
         return asked + "allowed: unknown"
@@ -61,18 +61,23 @@ def _columns(report: Report) -> str:
 def _limits(report: Report) -> str:
     budget = report.budget
     named = {"noise": budget.noise, "signal": budget.signal, "stability": budget.stability}
-    binding = [f"{budget.binding} {columns(named[budget.binding])} binds"] if budget.binding else []
     together: dict[str, list[str]] = {}
-    for name, limit in named.items():
-        if name != budget.binding:
-            together.setdefault(columns(limit), []).append(name)
-    others = [f"{series(names)} {value}" for value, names in together.items()]
-    return "; ".join([*binding, *others, f"ceiling {rate(budget.ceiling)}"])
+    for name in sorted(named, key=lambda name: name != budget.binding):
+        together.setdefault(columns(named[name]), []).append(name)
+    parts = []
+    for value, names in together.items():
+        bind = ""
+        if budget.binding in names:
+            bind = " binds" if len(names) == 1 else " bind"
+        parts.append(f"{series(names)} {value}{bind}")
+    return "; ".join([*parts, f"ceiling {rate(budget.ceiling)}"])
 
 
 def _rows(report: Report) -> str:
     budget = report.budget
     used = f"{budget.rows:,} used"
+    if report.verdict.answer == NONE:
+        return used
     if budget.equivalent_rows is not None and budget.equivalent_rows < 0.97 * budget.rows:
         used += f", worth {budget.equivalent_rows:,} under normal errors"
     if budget.rows_needed is not None:
@@ -81,15 +86,30 @@ def _rows(report: Report) -> str:
 
 
 def _remedies(report: Report, width: int, room: int) -> list[str]:
-    found = report.remedies[: min(SHOWN_REMEDIES, max(room, 1))]
+    helpful = [remedy for remedy in report.remedies if helps(report, remedy)]
+    found = helpful[: min(SHOWN_REMEDIES, max(room, 1))]
     if not found:
-        return labelled("Remedies", "none computed applies", width)[:1]
+        text = "none needed"
+        if report.verdict.answer != WITHIN:
+            tried = len(report.remedies)
+            text = f"none of the {tried} computed helps" if tried else "none computed applies"
+        return labelled("Remedies", text, width)[:1]
     lines = []
     for place, remedy in enumerate(found):
         label = "Remedies" if place == 0 else ""
         text = shortened(f"{place + 1}. {remedy.name}: {outcome(remedy)}", width - LABEL)
         lines.append(f"{label:<{LABEL}}{text}")
     return lines
+
+
+def helps(report: Report, remedy: Remedy) -> bool:
+    """Whether a remedy allows more columns than the design does, or settles more of them."""
+    if report.verdict.answer == WITHIN:
+        return False
+    now, then = report.budget.allowed, remedy.allowed
+    if report.verdict.answer == NONE:
+        return bool(then.columns)
+    return (then.columns or 0, then.low or 0) > (now.columns or 0, now.low or 0)
 
 
 def outcome(remedy: Remedy) -> str:

@@ -2,9 +2,10 @@
 
 from __future__ import annotations
 
+from scantling.planning.remedies import Remedy
+from scantling.planning.verdict import chance
 from scantling.report.chart import risk_chart
 from scantling.report.document import cautions as all_cautions
-from scantling.report.first_screen import outcome
 from scantling.report.record import Report
 from scantling.report.sections import heading
 from scantling.report.wording import (
@@ -12,8 +13,8 @@ from scantling.report.wording import (
     columns,
     count,
     large,
+    many,
     paragraph,
-    probability,
     rate,
     table,
 )
@@ -21,13 +22,14 @@ from scantling.report.wording import (
 LAW_WORDS = {
     "fitted": "fitted law",
     "twin": "Gaussian twin",
-    "normal-volatility": "normal, fitted volatility",
+    "normal-volatility": "normal, fitted path",
 }
 
 
 def limits(report: Report, width: int) -> list[str]:
     """All limits with their bands, the risk curve, and what the tails cost."""
     budget = report.budget
+    asked = many(budget.asked, "column")
     lines = heading("Limits")
     rows = [["Limit", "columns", "90 % band", "from"]]
     for name in ("noise", "signal", "stability", "geometry"):
@@ -40,34 +42,36 @@ def limits(report: Report, width: int) -> list[str]:
     rows.append(["ceiling", rate(ends), spread, "theory, a rate"])
     lines += table(rows)
     lines += paragraph(f"Ceiling: {ends.regime}.", width)
-    lines += paragraph(f"Assured columns: none given, because {budget.assured.note}.", width)
     for name in ("noise", "signal", "stability"):
         limit = getattr(budget, name)
         if limit.columns is None:
             lines += paragraph(f"The {name} limit is unknown: {limit.note}.", width)
-    risk = budget.risk_at_design
+    risk, draws = budget.risk_at_design, report.receipt.replicates
     lines += paragraph(
-        f"Break-through risk at {budget.asked:,} columns: {probability(risk.value)} (90 % band"
-        f" {probability(risk.low)} to {probability(risk.high)}).",
+        f"Break-through risk at {asked}: {chance(risk.value, draws)} (90 % band"
+        f" {chance(risk.low, draws)} to {chance(risk.high, draws)}; accepted"
+        f" {report.design.target.risk:g}).",
         width,
     )
     lines += ["", *risk_chart(budget.curve, report.design.target.risk, width), ""]
     if budget.penalty_ratio is not None:
+        cost = f"the work of {count(budget.equivalent_rows)} under normal errors"
+        if budget.equivalent_rows == budget.rows:
+            cost = "the same work as under normal errors"
         lines += paragraph(
-            f"Penalty ratio {budget.penalty_ratio:.2f}: {budget.rows:,} rows do the work of"
-            f" {count(budget.equivalent_rows)} under normal errors.",
+            f"Penalty ratio {budget.penalty_ratio:.2f}: {budget.rows:,} rows do {cost}.",
             width,
         )
     if budget.detectable is not None and budget.detectable_worst is not None:
         lines += paragraph(
-            f"Smallest detectable effect at {budget.asked:,} columns: {budget.detectable:.3f} sd of"
+            f"Smallest detectable effect at {asked}: {budget.detectable:.3f} sd of"
             f" the response for the median column, {budget.detectable_worst:.3f} for the worst"
             f" tenth.",
             width,
         )
     needed = count(budget.rows_needed) if budget.rows_needed else f"unknown, {budget.rows_note}"
     return lines + paragraph(
-        f"Rows needed for the smallest effect at {budget.asked:,} columns: {needed}. This covers"
+        f"Rows needed for the smallest effect at {asked}: {needed}. This covers"
         " the signal limit only, at the present penalty.",
         width,
     )
@@ -92,11 +96,12 @@ def selection(report: Report, width: int) -> list[str]:
         )
     lines += table(rows)
     target = report.design.target
-    missed = ", ".join(name.replace("_", " ") for name in report.stress.failing)
+    failing = ", ".join(name.replace("_", " ") for name in report.stress.failing)
+    met = f"{failing} missed" if failing else "all are met"
     return lines + paragraph(
         f"Asked for: stability {target.stability:g}, power {target.power:g}, false share at most"
-        f" {target.false_share:g}. At {report.budget.asked:,} columns"
-        f" {'all are met' if not missed else missed + ' fails'}; {report.stress.runs[0].replicates}"
+        f" {target.false_share:g}. At {many(report.budget.asked, 'column')}"
+        f" {met}; {report.stress.runs[0].replicates}"
         f" refits a row over 5 supports of {target.relevant} relevant columns.",
         width,
     )
@@ -108,14 +113,20 @@ def remedies(report: Report, width: int) -> list[str]:
     if not report.remedies:
         return lines + paragraph("None computed applies.", width)
     for place, remedy in enumerate(report.remedies):
-        risk = remedy.risk_at_design.value
+        risk = chance(remedy.risk_at_design.value, report.receipt.replicates)
+        kept = f"{count(remedy.allowed.columns)} of {many(remedy.columns, 'column')}"
         lines += paragraph(
-            f"{place + 1}. {remedy.name}: {outcome(remedy)} (band"
-            f" {band(remedy.allowed, remedy.columns)}), break-through risk {probability(risk)}."
-            f" {'' if remedy.refitted else 'Noise and signal only. '}Price: {remedy.price}.",
+            f"{place + 1}. {remedy.name}: {kept} ({_band_words(remedy)}), break-through risk"
+            f" {risk}. {'' if remedy.refitted else 'Noise and signal only. '}Price:"
+            f" {remedy.price}.",
             width,
         )
     return lines
+
+
+def _band_words(remedy: Remedy) -> str:
+    ends = band(remedy.allowed, remedy.columns)
+    return ends if remedy.allowed.low is None else f"90 % band {ends}"
 
 
 def reasons(report: Report, width: int) -> list[str]:

@@ -12,8 +12,6 @@ from scantling.planning.remedies import Remedy
 from scantling.planning.stress import Stress
 from scantling.planning.verdict import Verdict
 
-SCHEMA = "scantling-report/1"
-
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class DesignAsRead:
@@ -34,6 +32,7 @@ class DesignAsRead:
     dropped: tuple[tuple[str, str], ...]
     """Candidates the expansion made constant or made twice, with the reason."""
     time_ordered: bool
+    """Whether rows follow one another in time."""
     span: tuple[str, str] | None
     """First and last time label used."""
     explained: float
@@ -41,8 +40,11 @@ class DesignAsRead:
     pilot_columns: tuple[str, ...]
     """Columns of the pilot on all rows."""
     folds: str
+    """contiguous | random."""
     response_sd: float
+    """Standard deviation of the response, in its units."""
     residual_sd: float
+    """Standard deviation of the pilot's residuals, in units of the response."""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -50,13 +52,17 @@ class Receipt:
     """What is needed to run it again and compare."""
 
     version: str
+    """Of this package."""
     seed: int
+    """Of every stream of the run."""
     replicates: int
+    """Monte Carlo replicates."""
     inputs: tuple[tuple[str, str], ...]
     """Base name and sha-256 of each file read."""
     libraries: tuple[tuple[str, str], ...]
     """Name and version."""
     command: str
+    """Command line that repeats the run; without what does not change the result."""
     seconds: float
     """Wall-clock time of the run; volatile."""
     finished: str
@@ -68,15 +74,23 @@ class Report:
     """One design, vetted."""
 
     design: Design
+    """As asked for."""
     read: DesignAsRead
+    """As found in the data."""
     diagnosis: Diagnosis
+    """Tails, moments, variance, dependence, geometry."""
     law: ErrorLaw
+    """Fitted to the residuals."""
     budget: Budget
+    """All limits, and what they allow."""
     stress: Stress | None
     """None where selection could not be simulated; the reason is the stability limit's note."""
     remedies: tuple[Remedy, ...]
+    """Best first; empty where none applies."""
     verdict: Verdict
+    """What the report says first."""
     receipt: Receipt
+    """What repeats the run."""
 
     def to_json(self) -> str:
         """The JSON twin of the text report: schema scantling-report/1, keys stable."""

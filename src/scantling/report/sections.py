@@ -12,6 +12,7 @@ from scantling.report.wording import (
     count,
     index,
     index_interval,
+    many,
     p_value,
     paragraph,
     share,
@@ -20,6 +21,8 @@ from scantling.report.wording import (
 )
 
 WORST = 5
+FEWEST_SPREAD = 5
+"""Series from which on the spread of their indices is told."""
 LISTED = 6
 
 
@@ -39,6 +42,9 @@ def design(report: Report, width: int) -> list[str]:
     read, spec = report.read, report.design
     lines = heading("Design as read")
     span = f", {read.span[0]} to {read.span[1]}" if read.span else ""
+    made_of = many(read.raw_columns, "raw one")
+    if spec.expand.own_lags:
+        made_of += " and the response's own lags"
     lost = []
     if read.rows_dropped:
         lost.append(f"{read.rows_dropped:,} dropped for missing values")
@@ -46,7 +52,7 @@ def design(report: Report, width: int) -> list[str]:
         lost.append(f"{read.rows_lost:,} lost to lags")
     lines += paragraph(
         f"{read.rows:,} rows{span}{' (' + ', '.join(lost) + ')' if lost else ''};"
-        f" {len(read.names):,} candidate columns made of {read.raw_columns:,} raw ones;"
+        f" {many(len(read.names), 'candidate column')} made of {made_of};"
         f" response {spec.data.response}.",
         width,
     )
@@ -95,16 +101,18 @@ def tails(report: Report, width: int) -> list[str]:
     weights = {w: found.weight.count(w) for w in ("heavy", "sparse", "light")}
     lines += _group_words("Columns", found.columns, report.read.names, width)
     lines += paragraph(
-        f"By the thin-tail test (Holm over columns) {weights['heavy']:,} columns are heavy,"
-        f" {weights['sparse']:,} sparse and {weights['light']:,} light.",
+        f"By the thin-tail test (Holm over columns), of {many(len(found.weight), 'column')}"
+        f" {weights['heavy']:,} heavy, {weights['sparse']:,} sparse, {weights['light']:,} light.",
         width,
     )
     lines += _group_words("Scores", found.scores, report.read.names, width)
-    lines += _worst_scores(report)
+    lines += _worst_columns(report)
     refused = found.columns.tails.refused
     if refused:
         names = tuple(f"{report.read.names[j]} ({why})" for j, why in refused)
-        lines += paragraph(f"No index for {len(refused):,} columns: {listing(names, 3)}.", width)
+        lines += paragraph(
+            f"No index for {many(len(refused), 'column')}: {listing(names, 3)}.", width
+        )
     return lines
 
 
@@ -114,32 +122,35 @@ def _group_words(label: str, group: SeriesGroup, names: tuple[str, ...], width: 
         return paragraph(f"{label}: none has a tail index.", width)
     low, high = group.tails.intervals()
     known = group.tails.gamma[group.tails.assessed]
-    ends = [index(index_from_gamma(float(np.quantile(known, q)))) for q in (0.9, 0.1)]
+    spread = ""
+    if known.size >= FEWEST_SPREAD:
+        ends = [index(index_from_gamma(float(np.quantile(known, q)))) for q in (0.9, 0.1)]
+        spread = f"; four in five lie between {ends[0]} and {ends[1]}"
     words = index_interval(
         1 / float(high[middle]) if high[middle] > 0 else float("inf"),
         1 / float(low[middle]) if low[middle] > 0 else float("inf"),
     )
     return paragraph(
         f"{label}: the median one, {shortened(names[middle], 30)}, has index"
-        f" {index(index_from_gamma(float(group.tails.gamma[middle])))} (90 % {words}); four in five"
-        f" lie between {ends[0]} and {ends[1]}.",
+        f" {index(index_from_gamma(float(group.tails.gamma[middle])))} (90 % {words}){spread}.",
         width,
     )
 
 
-def _worst_scores(report: Report) -> list[str]:
-    group = report.diagnosis.scores
-    known = np.flatnonzero(group.tails.assessed)
-    worst = known[np.argsort(-group.tails.gamma[known], kind="stable")][:WORST]
-    shares = dict(zip(report.budget.worst_columns, report.budget.worst_shares, strict=True))
-    rows = [["Heaviest scores", "index", "variance", "share of break-throughs"]]
-    for j in worst:
+def _worst_columns(report: Report) -> list[str]:
+    """The columns that break through most, and how heavy their scores are."""
+    group, budget = report.diagnosis.scores, report.budget
+    if not budget.worst_columns:
+        return []
+    rows = [["Break through most", "score index", "variance", "share of all"]]
+    for j, part in list(zip(budget.worst_columns, budget.worst_shares, strict=True))[:WORST]:
+        gamma = float(group.tails.gamma[j])
         rows.append(
             [
-                shortened(report.read.names[j], 34),
-                index(index_from_gamma(float(group.tails.gamma[j]))),
-                group.answer(2, int(j)),
-                share(shares.get(int(j), 0.0)),
+                shortened(report.read.names[j], 36),
+                index(index_from_gamma(gamma)) if group.tails.assessed[j] else "unknown",
+                group.answer(2, j),
+                share(part),
             ]
         )
     return table(rows)
@@ -162,7 +173,7 @@ def moments(report: Report, width: int) -> list[str]:
     if without:
         names = tuple(report.read.names[j] for j in without)
         lines += paragraph(
-            f"Scores without a variance: {len(without):,} columns, {listing(names)}.", width
+            f"Scores without a variance: {many(len(without), 'column')}, {listing(names)}.", width
         )
     return lines
 
@@ -171,7 +182,7 @@ def _findings(findings: tuple[Finding, ...]) -> list[str]:
     rows = [["Test", "statistic", "p", "valid"]]
     for finding in findings:
         result = finding.result
-        valid = "yes" if finding.valid else f"needs moment {result.needs_moment}"
+        valid = "yes" if finding.valid else f"no: moment {result.needs_moment}"
         shown = f"{result.p_value:.3f}" if result.p_value >= 0.001 else "< 0.001"
         rows.append([shortened(result.test, 44), f"{result.statistic:.3g}", shown, valid])
     return table(rows)
@@ -197,9 +208,9 @@ def variance(report: Report, width: int) -> list[str]:
     together = found.co_movement
     worst = int(together.argmax())
     lines += paragraph(
-        f"Where a column and the errors are large together the penalty must rise: by"
+        f"Column and error being large together multiplies the penalty needed by"
         f" {float(np.median(together)):.2f} for the median column, by {together[worst]:.2f} for"
-        f" {shortened(report.read.names[worst], 30)}.",
+        f" {shortened(report.read.names[worst], 30)} (1: no connection).",
         width,
     )
     return lines
@@ -209,7 +220,11 @@ def structure(report: Report, width: int) -> list[str]:
     """Geometry of the columns."""
     shape = report.diagnosis.structure
     lines = heading("Columns among themselves")
-    factors = "no common factor" if shape.factors == 0 else f"{shape.factors} common factors"
+    factors = (
+        "no common factor"
+        if shape.factors == 0
+        else f"{shape.factors} common factor{'s' if shape.factors > 1 else ''}"
+    )
     pair = ""
     if shape.largest_pair is not None:
         names = [shortened(report.read.names[j], 24) for j in shape.largest_pair]
@@ -230,7 +245,8 @@ def law(report: Report, width: int) -> list[str]:
     named = ", ".join(f"{name} {value:.4g}" for name, value in fitted.parameters.items())
     lines += paragraph(f"{fitted.family}: {named}.", width)
     if fitted.fit.note:
-        lines += paragraph(f"Chosen because {fitted.fit.note}.", width)
+        note = fitted.fit.note
+        lines += paragraph(f"{note[0].upper()}{note[1:]}.", width)
     if fitted.fit.p_value is not None:
         lines += paragraph(
             f"Anderson-Darling distance {fitted.fit.distance:.2f},"

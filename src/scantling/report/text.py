@@ -6,7 +6,7 @@ from scantling.report import limits_section, sections
 from scantling.report.first_screen import first_screen
 from scantling.report.record import Report
 
-NARROWEST = 60
+NARROWEST = 80
 
 
 def render(report: Report, width: int = 80) -> str:
@@ -16,7 +16,7 @@ def render(report: Report, width: int = 80) -> str:
     ----------
     report : Report
     width : int
-        Columns of the page; at least 60.
+        Columns of the page; at least 80, which the tables need.
     """
     width = max(width, NARROWEST)
     lines = first_screen(report, width)

@@ -24,6 +24,11 @@ def count(value: int | None) -> str:
     return "unknown" if value is None else f"{value:,}"
 
 
+def many(value: int, noun: str) -> str:
+    """A count with its noun: '1 column', '390 columns'."""
+    return f"{value:,} {noun}{'' if value == 1 else 's'}"
+
+
 def large(value: int) -> str:
     """A whole number, in powers of ten from a million on."""
     if value < 1_000_000:
@@ -94,9 +99,7 @@ def series(names: Sequence[str]) -> str:
 
 def labelled(label: str, text: str, width: int) -> list[str]:
     """A label, and its text wrapped beside it."""
-    body = textwrap.wrap(text, width - LABEL, break_long_words=False, break_on_hyphens=False) or [
-        ""
-    ]
+    body = textwrap.wrap(text, width - LABEL, break_on_hyphens=False) or [""]
     first = f"{label:<{LABEL}}{body[0]}".rstrip()
     return [first, *(" " * LABEL + line for line in body[1:])]
 
@@ -105,7 +108,7 @@ def paragraph(text: str, width: int, indent: str = "  ") -> list[str]:
     """A sentence wrapped under a heading, continuation lines indented further."""
     return textwrap.wrap(
         text, width, initial_indent=indent, subsequent_indent=indent + "  ",
-        break_long_words=False, break_on_hyphens=False,
+        break_on_hyphens=False,
     )  # fmt: skip
 
 

@@ -6,6 +6,8 @@ column; S_jr = n^(-1/2) sum_i x_ij e_ir; v the loading; ratio = |S|/v.
 
 from __future__ import annotations
 
+import itertools
+import math
 from dataclasses import dataclass
 
 import numpy as np
@@ -15,6 +17,8 @@ from scipy.stats import norm
 from scantling.core.record import FloatArray
 
 RULES = ("plug-in", "self-normalised")
+ROUNDING = 1e-12
+"""Probabilities that differ by less are the same."""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -64,14 +68,14 @@ def score_ratios(
     loadings : array, shape (1, R) for equal loadings, else (P, R)
     """
     n = X.shape[0]
-    scores = np.abs(X.T @ errors)
+    scores = X.T @ errors
+    np.abs(scores, out=scores)
     if rule == "plug-in":
         loadings = np.sqrt((errors**2).mean(axis=0))[None]
     else:
         loadings = np.sqrt(((X**2 if squares is None else squares).T @ errors**2) / n)
     # A draw whose errors all vanish where the column is active scores 0: its ratio is 0.
-    scores /= np.maximum(loadings, np.finfo(float).tiny)
-    scores /= np.sqrt(n)
+    scores /= np.maximum(loadings, np.finfo(float).tiny) * np.sqrt(n)
     return scores, loadings
 
 
@@ -96,15 +100,18 @@ def join(parts: list[Passers]) -> Passers:
     )
 
 
-def none_taken(exceeding: FloatArray, columns: int, p: int) -> FloatArray:
-    """C(P-K, p)/C(P, p): probability that none of K exceeding columns is among p taken of P."""
+def none_taken(exceeding: FloatArray | int, columns: int, p: np.ndarray | int) -> FloatArray:
+    """C(P-K, p)/C(P, p): probability that none of K exceeding columns is among p taken of P.
+
+    K and p broadcast against each other.
+    """
     k = np.asarray(exceeding, dtype=np.float64)
     free = columns - k
     inside = free >= p
     safe = np.where(inside, free, p)
-    logs = (
-        gammaln(safe + 1) - gammaln(safe - p + 1) - gammaln(columns + 1) + gammaln(columns - p + 1)
-    )
+    # In pairs that cancel exactly where K is 0.
+    logs = gammaln(safe + 1) - gammaln(columns + 1)
+    logs -= gammaln(safe - p + 1) - gammaln(columns - p + 1)
     return np.asarray(np.where(inside, np.exp(np.minimum(logs, 0.0)), 0.0))
 
 
@@ -119,22 +126,69 @@ def risk_at(found: Passers, p: int, level: float) -> tuple[float, float]:
     return float(broken.mean()), float(broken.std() / np.sqrt(found.draws))
 
 
+def ranks_in_draw(draw: np.ndarray, ratio: FloatArray) -> np.ndarray:
+    """How many ratios of the same draw are larger (ties in the order given), shape (m,)."""
+    order = np.lexsort((-ratio, draw))
+    grouped = draw[order]
+    ranks = np.empty(order.size, dtype=np.int64)
+    ranks[order] = np.arange(order.size) - np.searchsorted(grouped, grouped)
+    return ranks
+
+
+def risk_curves(found: Passers, risk: float, weights: FloatArray | None = None) -> FloatArray:
+    """Break-through risk at the plug-in level for every p from 1 to P.
+
+    The ratio of rank k in its draw raises that draw's K from k to k + 1 at each p whose level
+    it exceeds; it adds what that takes from the probability that none is taken.
+
+    Parameters
+    ----------
+    found : Passers
+        Its floor is at most L(1).
+    risk : float
+    weights : array, shape (B, R), optional
+        Weights of the draws, summing to R in each of B resamples; default: one row of ones.
+
+    Returns
+    -------
+    array, shape (B, P)
+    """
+    weight = np.ones((1, found.draws)) if weights is None else weights
+    levels = penalty_level(np.arange(1.0, found.columns + 1), risk)
+    above = found.ratio > levels[0]
+    draw, ratio = found.draw[above], found.ratio[above]
+    alive = np.searchsorted(levels, ratio)  # it exceeds the levels of 1..alive columns
+    ranks = ranks_in_draw(draw, ratio)
+    order = np.lexsort((-alive, ranks))
+    ends = np.searchsorted(ranks[order], np.arange(ranks.max(initial=-1) + 2))
+    curves = np.zeros((len(weight), found.columns))
+    for k, (start, stop) in enumerate(itertools.pairwise(ends)):
+        mine = order[start:stop]
+        p = np.arange(1, alive[mine[0]] + 1)
+        counted = np.searchsorted(-alive[mine], -p, side="right") - 1
+        exceeding = np.cumsum(weight[:, draw[mine]], axis=1)[:, counted]
+        added = none_taken(k, found.columns, p) - none_taken(k + 1, found.columns, p)
+        curves[:, : p.size] += exceeding * added
+    return np.asarray(curves / found.draws)
+
+
+def first_above(curve: FloatArray, risk: float) -> float:
+    """Largest p with curve(p') <= risk for every p' <= p; inf if that is all of them."""
+    over = np.flatnonzero(curve > risk + ROUNDING)
+    return float(over[0]) if over.size else math.inf
+
+
 def largest_quantile(found: Passers, p: int, probability: float) -> float | None:
     """Quantile of the largest ratio over p of the P columns, averaged over which are taken.
 
     None if it lies at or below the floor of the passers.
     """
-    order = np.argsort(-found.ratio, kind="stable")
-    ratio, draw = found.ratio[order], found.draw[order]
     # Walking down the ratios, each raises one draw's K; find where P(max > t) passes 1 - prob.
-    rank = np.empty(ratio.size, dtype=np.int64)
-    by_draw = np.argsort(draw, kind="stable")
-    starts = np.searchsorted(draw[by_draw], np.arange(found.draws))
-    rank[by_draw] = np.arange(ratio.size) - starts[draw[by_draw]]
-    ranks = np.arange(rank.max() + 2 if rank.size else 1)
-    kept = none_taken(ranks, found.columns, p)
+    order = np.argsort(-found.ratio, kind="stable")
+    ratio, rank = found.ratio[order], ranks_in_draw(found.draw, found.ratio)[order]
+    kept = none_taken(np.arange(rank.max(initial=-1) + 2), found.columns, p)
     exceed = np.cumsum(kept[rank] - kept[rank + 1]) / found.draws
-    place = int(np.searchsorted(exceed, 1 - probability, side="right"))
+    place = int(np.searchsorted(exceed, 1 - probability + ROUNDING, side="right"))
     return float(ratio[place]) if place < ratio.size else None
 
 

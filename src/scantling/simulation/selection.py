@@ -61,22 +61,39 @@ class SelectionSummary:
     """
 
     replicates: int
+    """Refits summarised."""
     level: float
+    """Nominal coverage of the intervals."""
     stability: float | None
+    """Stability index; None where it is undefined."""
     stability_low: float | None
+    """Lower end of its interval."""
     stability_high: float | None
+    """Upper end of its interval."""
     stability_error: float | None
+    """Its standard error."""
     stability_note: str
+    """Why it is undefined; empty otherwise."""
     power: float
+    """Mean share of relevant columns selected."""
     power_low: float
+    """Lower end of its interval."""
     power_high: float
+    """Upper end of its interval."""
     power_error: float
+    """Its standard error."""
     false_share: float
+    """Mean share of false columns among the selected."""
     false_share_low: float
+    """Lower end of its interval."""
     false_share_high: float
+    """Upper end of its interval."""
     false_share_error: float
+    """Its standard error."""
     exact: float
+    """Share of refits that select exactly the relevant columns."""
     mean_size: float
+    """Columns selected on average."""
 
 
 def stability_index(Z: Any, level: float = 0.90) -> tuple[float, float, float] | None:

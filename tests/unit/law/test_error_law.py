@@ -1,0 +1,248 @@
+"""The error law: draws, moments, volatility, scaling, what the sample leaves open."""
+
+from __future__ import annotations
+
+import math
+from dataclasses import replace
+
+import numpy as np
+import pytest
+from scipy import stats
+
+from scantling.core.record import read_only
+from scantling.diagnostics.tail_estimators import hill
+from scantling.diagnostics.volatility import Volatility
+from scantling.law.families import FAMILIES, ErrorLaw, normal_law, student_law
+from scantling.law.fit import fit_innovations, spliced_spread, student_spread
+from scantling.law.splice import fit_splice
+
+ROWS = 400
+
+
+def volatility(level: float = 4.0) -> Volatility:
+    """alpha .10, beta .80, a path that moves by a factor of three about its mean square."""
+    path = 1 + 0.5 * np.sin(np.arange(ROWS) / 25)
+    path *= math.sqrt(level / np.mean(path**2))
+    return Volatility(
+        omega=0.10 * level, alpha=0.10, beta=0.80, innovation="normal", nu=None, persistence=0.90,
+        tail_index=12.5, path=read_only(path), path_draws=read_only(np.stack([path, 2 * path])),
+        log_likelihood=0.0,
+    )  # fmt: skip
+
+
+def law(family: str) -> ErrorLaw:
+    if family == "normal":
+        return normal_law(1.5)
+    if family == "student-t":
+        return student_law(6, sd=1.5)
+    sample = 1.2 * np.random.default_rng(1).standard_t(6, 600) + 0.3
+    return ErrorLaw(family="spliced", scale=1.0, splice=fit_splice(sample, 0.2))
+
+
+@pytest.mark.parametrize("family", FAMILIES)
+@pytest.mark.parametrize("size", [7, (7,), (5, 3), (4, 2, 3)])
+@pytest.mark.parametrize("clustered", [False, True])
+def test_draws_have_the_shape_asked_for(family: str, size: object, clustered: bool) -> None:
+    found = replace(law(family), volatility=volatility() if clustered else None)
+    drawn = found.draw(size, np.random.default_rng(1))  # type: ignore[arg-type]
+    assert drawn.shape == (size if isinstance(size, tuple) else (size,))
+    assert np.isfinite(drawn).all()
+    again = found.draw(size, np.random.default_rng(1))  # type: ignore[arg-type]
+    assert np.array_equal(drawn, again)
+
+
+@pytest.mark.parametrize("family", FAMILIES)
+def test_draws_have_mean_zero_and_the_stated_sd(family: str) -> None:
+    found = law(family)
+    drawn = found.draw(200_000, np.random.default_rng(2))
+    assert drawn.std() == pytest.approx(found.sd, rel=0.02)
+    assert drawn.mean() == pytest.approx(0, abs=4 * found.sd / math.sqrt(200_000))
+    assert found.innovation_variance == pytest.approx(found.sd**2)
+
+
+@pytest.mark.parametrize("family", FAMILIES)
+def test_draws_on_the_path_follow_it(family: str) -> None:
+    path = volatility()
+    found = replace(law(family), volatility=path)
+    drawn = found.draw_given_path(ROWS, 2000, np.random.default_rng(3))
+    assert drawn.shape == (ROWS, 2000)
+    assert drawn.std() == pytest.approx(found.sd, rel=0.02)
+    by_row = drawn.std(axis=1)
+    assert by_row == pytest.approx(path.path * law(family).sd, rel=0.25)
+    assert np.corrcoef(by_row, path.path)[0, 1] > 0.98
+    still = law(family).draw_given_path(ROWS, 3, np.random.default_rng(3))
+    assert np.array_equal(still, law(family).innovations((ROWS, 3), np.random.default_rng(3)))
+
+
+def test_full_draws_cluster_and_keep_their_level() -> None:
+    """GARCH(.10, .80): squares correlate at lag 1 by a(1 - ab - b^2)/(1 - 2ab - b^2)."""
+    path = volatility()
+    drawn = replace(normal_law(1.0), volatility=path).draw((2000, 200), np.random.default_rng(4))
+    assert drawn.std() == pytest.approx(2.0, rel=0.02)
+    square = drawn**2 - np.mean(drawn**2)
+    lagged = float((square[1:] * square[:-1]).mean() / (square**2).mean())
+    expected = 0.1 * (1 - 0.9 * 0.8) / (1 - 2 * 0.1 * 0.8 - 0.8**2)
+    assert lagged == pytest.approx(expected, abs=0.02)
+    calm = normal_law(2.0).draw((2000, 200), np.random.default_rng(4))
+    square = calm**2 - np.mean(calm**2)
+    assert float((square[1:] * square[:-1]).mean() / (square**2).mean()) < 0.01
+
+
+def test_the_first_row_drawn_has_the_stationary_law() -> None:
+    """GARCH(.25, .65), normal: kurtosis 3(1 - .81)/(1 - .4225 - .325 - .1875) = 8.8, not 3."""
+    path = replace(volatility(), omega=0.4, alpha=0.25, beta=0.65)
+    drawn = replace(normal_law(1.0), volatility=path).draw((2, 4000), np.random.default_rng(4))
+    assert stats.kurtosis(drawn[0]) > 1.5
+
+
+def test_tail_index_is_the_smaller_of_the_two() -> None:
+    assert normal_law(1).tail_index == math.inf
+    assert student_law(3).tail_index == 3
+    assert law("spliced").tail_index == pytest.approx(5)
+    path = volatility()
+    assert replace(normal_law(1), volatility=path).tail_index == 12.5
+    assert replace(student_law(3), volatility=path).tail_index == 3
+    light = replace(law("spliced"), splice=fit_splice(np.arange(300.0), 0.0))
+    assert light.tail_index == math.inf
+
+
+def test_draws_of_a_spliced_law_carry_its_index() -> None:
+    found = law("spliced")
+    assert found.splice is not None
+    drawn = found.draw(300_000, np.random.default_rng(5)) + found.splice.mean_and_variance()[0]
+    shift = found.splice.right_scale / found.splice.gamma - found.splice.body[-1]
+    beyond = np.sort(drawn)[::-1] + shift
+    assert float(hill(beyond, 20_000)) == pytest.approx(0.2, rel=0.03)
+
+
+def test_variances_that_do_not_exist() -> None:
+    for df in (1.0, 2.0):
+        assert student_law(df).innovation_variance == math.inf
+        assert student_law(df).sd == math.inf
+    assert student_law(2.5, sd=3.0).sd == pytest.approx(3.0)
+    assert student_law(5, scale=2.0).sd == pytest.approx(2 * math.sqrt(5 / 3))
+    path = volatility()
+    found = replace(student_law(2.0), volatility=path).normal_innovations()
+    assert found.innovation_variance == 1.0
+
+
+def test_spliced_draws_without_a_mean_are_still_numbers() -> None:
+    sample = np.random.default_rng(1).standard_t(6, 600)
+    found = ErrorLaw(family="spliced", scale=1.0, splice=fit_splice(sample, 1.2))
+    assert np.isfinite(found.draw(1000, np.random.default_rng(1))).all()
+    assert found.sd == math.inf
+
+
+def test_normal_innovations_keep_path_and_variance() -> None:
+    found = replace(law("student-t"), volatility=volatility())
+    twin = found.normal_innovations()
+    assert twin.family == "normal"
+    assert twin.sd == pytest.approx(found.sd)
+    assert twin.volatility is found.volatility
+
+
+@pytest.mark.parametrize("family", FAMILIES)
+def test_without_volatility_the_sd_stays(family: str) -> None:
+    found = replace(law(family), volatility=volatility())
+    calm = found.without_volatility()
+    assert calm.volatility is None
+    assert calm.sd == pytest.approx(found.sd)
+    assert law(family).without_volatility().parameters == law(family).parameters
+    assert np.array_equal(calm.relative_variance(5), np.ones(5))
+    moving = found.relative_variance(ROWS)
+    assert moving.mean() == pytest.approx(1)
+    assert moving.max() / moving.min() > 3
+
+
+def fitted(family: str, df: float = 5, n: int = 400, seed: int = 6) -> ErrorLaw:
+    sample = np.random.default_rng(seed).standard_t(df, n)
+    return fit_innovations(sample - sample.mean(), family=family, seed=1)
+
+
+@pytest.mark.parametrize("family", FAMILIES)
+@pytest.mark.parametrize("factor", [1e-3, 7.0])
+def test_scaled_laws_draw_scaled_errors(family: str, factor: float) -> None:
+    plain = fitted(family)
+    scaled = plain.scaled(factor)
+    assert scaled.sd == pytest.approx(factor * plain.sd)
+    assert scaled.tail_index == plain.tail_index
+    for one, other in (
+        (plain, scaled),
+        *zip(
+            plain.parameter_draws(3, np.random.default_rng(7)),
+            scaled.parameter_draws(3, np.random.default_rng(7)),
+            strict=True,
+        ),
+    ):
+        first = one.draw(50, np.random.default_rng(8))
+        assert other.draw(50, np.random.default_rng(8)) == pytest.approx(factor * first, rel=1e-9)
+
+
+def test_a_law_stated_exactly_stays_as_it_is() -> None:
+    stated = student_law(4)
+    assert stated.parameter_draws(3, np.random.default_rng(1)) == (stated,) * 3
+
+
+@pytest.mark.parametrize("family", FAMILIES)
+def test_drawn_laws_spread_about_the_fit(family: str) -> None:
+    found = fitted(family)
+    laws = found.parameter_draws(200, np.random.default_rng(9))
+    assert len(laws) == 200
+    gammas = np.array([1 / drawn.tail_index for drawn in laws])
+    assert np.unique(gammas).size > 5
+    low, high = np.quantile(gammas, [0.05, 0.95])
+    assert low < 1 / 5 < high
+    assert 0.05 < high - low < 0.35
+    if family == "normal":  # a poor fit to these values, so that drawn laws correct its level
+        return
+    level = np.array(
+        [np.median(np.abs(drawn.draw(4001, np.random.default_rng(1)))) for drawn in laws]
+    )
+    assert np.median(level) == pytest.approx(
+        np.median(np.abs(found.draw(4001, np.random.default_rng(1)))), rel=0.06
+    )
+
+
+def test_drawn_laws_take_the_drawn_paths() -> None:
+    found = replace(fitted("student-t"), volatility=volatility())
+    first, second, third = found.parameter_draws(3, np.random.default_rng(9))
+    assert first.volatility is not None
+    assert second.volatility is not None
+    assert third.volatility is not None
+    assert second.volatility.path == pytest.approx(2 * first.volatility.path)
+    assert np.array_equal(third.volatility.path, first.volatility.path)
+
+
+def test_spreads_are_probabilities_and_narrow_with_the_sample() -> None:
+    rng = np.random.default_rng(10)
+    widths = []
+    for n in (100, 1600):
+        spread = student_spread(rng.standard_t(4, n))
+        assert spread.weights.sum() == pytest.approx(1)
+        assert (np.diff(spread.gammas) > 0).all()
+        mean = spread.gammas @ spread.weights
+        widths.append(float(np.sqrt((spread.gammas - mean) ** 2 @ spread.weights)))
+    assert widths[1] < 0.45 * widths[0]
+
+
+def test_spliced_spread_is_normal_about_the_estimate_with_its_bias() -> None:
+    from scantling.diagnostics.tail_index import tail_index
+
+    tail = replace(tail_index(np.random.default_rng(1).standard_t(3, 900)), gamma=0.5,
+                   gamma_error=0.04)  # fmt: skip
+    spread = spliced_spread(tail, 900)
+    mean = float(spread.gammas @ spread.weights)
+    assert mean == pytest.approx(0.5, abs=1e-6)
+    sd = math.sqrt((spread.gammas - mean) ** 2 @ spread.weights)
+    assert sd == pytest.approx(math.hypot(0.04, 0.06 / math.sqrt(3)), rel=0.03)
+    flat = spliced_spread(replace(tail, gamma=-0.3), 900)
+    assert flat.gammas[0] == 0
+    assert np.isfinite(flat.weights).all()
+
+
+def test_parameters_by_name() -> None:
+    assert normal_law(2.0).parameters == {"scale": 2.0}
+    assert student_law(4, scale=2.0).parameters == {"scale": 2.0, "df": 4}
+    assert set(law("spliced").parameters) == {"gamma", "left_scale", "right_scale"}
+    clustered = replace(normal_law(1.0), volatility=volatility()).parameters
+    assert clustered == pytest.approx({"scale": 1.0, "omega": 0.4, "alpha": 0.1, "beta": 0.8})

@@ -1,0 +1,204 @@
+"""Fitting an error law: the family chosen, its goodness of fit, refusals, notation."""
+
+from __future__ import annotations
+
+import math
+
+import numpy as np
+import pytest
+from scipy import stats
+
+from scantling.errors import InputError
+from scantling.law.fit import error_law, fit_law
+from scantling.law.goodness import anderson_darling, bootstrap_fit_test, fitted_distance
+from scantling.law.notation import parse_law
+from scantling.law.student import fit_student
+
+
+def students(n: int, df: float, seed: int = 1) -> np.ndarray:
+    return np.random.default_rng(seed).standard_t(df, n)
+
+
+def test_anderson_darling_is_its_integral() -> None:
+    """n times the integral of (F_n - u)^2 / (u (1 - u)), on a fine grid."""
+    uniforms = np.random.default_rng(1).random(25)
+    grid = (np.arange(2_000_000) + 0.5) / 2_000_000
+    gap = np.searchsorted(np.sort(uniforms), grid, side="right") / 25 - grid
+    expected = 25 * np.mean(gap**2 / (grid * (1 - grid)))
+    assert anderson_darling(uniforms) == pytest.approx(expected, rel=1e-4)
+    two = anderson_darling(np.stack([uniforms, uniforms**2]))
+    assert two[0] == anderson_darling(uniforms)
+    assert two[1] == anderson_darling(uniforms**2)
+
+
+def test_anderson_darling_of_a_value_the_law_cannot_reach_is_large_but_finite() -> None:
+    found = anderson_darling(np.array([0.0, 0.5, 1.0]))
+    assert np.isfinite(found)
+    assert found > 100
+
+
+@pytest.mark.parametrize("family", ["normal", "student-t"])
+def test_the_distance_has_no_unit(family: str) -> None:
+    sample = students(200, 4)[None]
+    plain = fitted_distance(sample, family)
+    assert fitted_distance(1e6 * sample, family) == pytest.approx(plain, rel=1e-6)
+
+
+def test_the_fit_test_is_reproducible_and_counts_itself() -> None:
+    sample = students(100, 3)
+    first = bootstrap_fit_test(sample, "normal", 0.0, seed=1, draws=19)
+    assert first == bootstrap_fit_test(sample, "normal", 0.0, seed=1, draws=19)
+    assert first[1] == 1 / 20
+    assert first[0] == fitted_distance(sample[None], "normal")[0]
+
+
+def test_the_family_chosen() -> None:
+    assert fit_law(students(1000, 3)).family == "student-t"
+    normal = fit_law(np.random.default_rng(2).standard_normal(1000))
+    assert normal.family == "normal"
+    assert normal.tail_index == math.inf
+    assert normal.fit.candidates[0][0] == "normal"
+    assert normal.fit.p_value is not None
+    assert normal.fit.p_value > 0.05
+    skewed = fit_law(np.random.default_rng(3).exponential(size=1000))
+    assert skewed.family == "spliced"
+    assert "rejected" in skewed.fit.note
+    short = fit_law(np.random.default_rng(3).exponential(size=200))
+    assert short.family != "spliced"
+    assert "too few to splice" in short.fit.note
+
+
+def test_a_tie_goes_to_the_heavier_law() -> None:
+    rng = np.random.default_rng(4)
+    seen = False
+    for _ in range(300):
+        sample = rng.standard_t(20, 150)
+        sample -= sample.mean()
+        _, _, likelihood = fit_student(sample[None])
+        student = -2 * float(likelihood[0]) + 2 * math.log(150)
+        normal = -2 * float(stats.norm.logpdf(sample, 0, sample.std()).sum()) + math.log(150)
+        if 0 < student - normal < 2:
+            assert fit_law(sample).family == "student-t"
+            seen = True
+            break
+    assert seen
+
+
+def test_criteria_are_those_of_the_likelihoods() -> None:
+    sample = students(300, 4)
+    sample -= sample.mean()
+    criteria = dict(fit_law(sample).fit.candidates)
+    df, _, scale = stats.t.fit(sample, floc=0)
+    student = stats.t.logpdf(sample, df, 0, scale).sum()
+    normal = stats.norm.logpdf(sample, 0, sample.std()).sum()
+    assert criteria["student-t"] == pytest.approx(-2 * student + 2 * math.log(300), abs=0.05)
+    assert criteria["normal"] == pytest.approx(-2 * normal + math.log(300), rel=1e-9)
+
+
+@pytest.mark.parametrize("family", ["normal", "student-t", "spliced"])
+def test_a_family_asked_for_is_fitted(family: str) -> None:
+    sample = 5 + 3 * students(400, 4)
+    found = fit_law(sample, family=family)
+    assert found.family == family
+    assert found.sd == pytest.approx(sample.std(), rel=0.25)
+    assert found.volatility is None
+    assert (found.fit.p_value is None) == (family == "spliced")
+
+
+@pytest.mark.parametrize("factor", [1e-12, 1e12])
+@pytest.mark.parametrize("family", ["normal", "student-t", "spliced"])
+def test_the_law_follows_the_unit(family: str, factor: float) -> None:
+    sample = students(300, 4)
+    plain, scaled = (fit_law(f * sample, family=family) for f in (1.0, factor))
+    assert scaled.sd == pytest.approx(factor * plain.sd, rel=1e-4)
+    assert scaled.tail_index == pytest.approx(plain.tail_index, rel=1e-6)
+
+
+def clustered(n: int, seed: int) -> np.ndarray:
+    """GARCH(1,1) with t(6) shocks, alpha .15, beta .80, unit variance."""
+    rng = np.random.default_rng(seed)
+    out, variance = np.empty(n), 1.0
+    for t in range(n):
+        out[t] = math.sqrt(variance * 4 / 6) * rng.standard_t(6)
+        variance = 0.05 + 0.15 * out[t] ** 2 + 0.80 * variance
+    return out
+
+
+def test_volatility_is_looked_for_in_time_order_alone() -> None:
+    sample = clustered(1200, 5)
+    ordered = fit_law(sample, time_ordered=True)
+    assert ordered.volatility is not None
+    assert ordered.innovation_variance == pytest.approx(1, rel=0.15)
+    assert ordered.sd == pytest.approx(sample.std(), rel=0.1)
+    assert ordered.tail_index <= ordered.volatility.tail_index
+    assert fit_law(sample).volatility is None
+    shuffled = np.random.default_rng(6).permutation(sample)
+    assert fit_law(shuffled, time_ordered=True).volatility is None
+
+
+def test_a_law_on_a_given_path_is_that_of_the_standardised_innovations() -> None:
+    sample = clustered(1200, 5)
+    volatility = fit_law(sample, time_ordered=True).volatility
+    assert volatility is not None
+    found = error_law(sample, volatility=volatility, seed=0, family="student-t")
+    z = sample / volatility.path
+    z = (z - z.mean()) / z.std()
+    assert 1 / found.df == pytest.approx(float(fit_student(z[None])[0][0]))
+    assert found.volatility is volatility
+
+
+@pytest.mark.parametrize(
+    ("values", "keywords", "words"),
+    [
+        (np.ones(100), {}, "values: constant"),
+        (np.arange(29.0), {}, "values: at least 30 values are needed; found 29"),
+        (np.r_[np.arange(40.0), np.inf], {}, "values: finite values are needed; value 41 is inf"),
+        (np.ones((40, 2)), {}, "values: one dimension is needed"),
+        (["x"] * 40, {}, "values: numbers are needed"),
+        (np.arange(40.0), {"family": "laplace"}, "family: one of normal, student-t, spliced"),
+        (np.arange(249.0), {"family": "spliced"}, "family: spliced tails need 250 values"),
+        (np.arange(40.0) * 1e150, {}, "values: a largest size between"),
+        (np.arange(40.0) * 1e-150, {}, "values: a largest size between"),
+        (np.arange(40.0), {"seed": -3}, "seed: 0 or more is needed"),
+    ],
+)
+def test_what_cannot_be_fitted_is_refused(values: object, keywords: dict, words: str) -> None:
+    with pytest.raises(InputError, match=words) as refusal:
+        fit_law(values, **keywords)
+    assert "\n" not in str(refusal.value)
+
+
+def test_stated_laws() -> None:
+    assert parse_law("normal").sd == 1
+    student = parse_law("student-t:df=3")
+    assert (student.family, student.df, student.tail_index) == ("student-t", 3, 3)
+    assert student.sd == pytest.approx(1)
+    heavy = parse_law("student-t: df = 1.5")
+    assert (heavy.df, heavy.scale, heavy.sd) == (1.5, 1.0, math.inf)
+    assert parse_law("student-t:df=2").scale == 1
+
+
+@pytest.mark.parametrize(
+    ("text", "words"),
+    [
+        ("gauss", "one of normal, student-t:df=5"),
+        ("", "one of normal"),
+        ("Normal", "one of normal"),
+        ("spliced", "one of normal"),
+        ("normal:df=3", "normal has no parameter 'df'"),
+        ("student-t", "student-t needs df, as in student-t:df=5"),
+        ("student-t:", "student-t needs df"),
+        ("student-t:df", "key=value is needed after the family; found 'df'"),
+        ("student-t:df=", "df: a number is needed; found ''"),
+        ("student-t:df=three", "df: a number is needed; found 'three'"),
+        ("student-t:df=0", "df: a number between 0 and 1e\\+06 is needed; found '0'"),
+        ("student-t:df=-1", "df: a number between"),
+        ("student-t:df=nan", "df: a number between"),
+        ("student-t:df=inf", "df: a number between"),
+        ("student-t:df=3,nu=4", "student-t has no parameter 'nu'"),
+        ("student-t:df=3,df=4", "df is given twice"),
+    ],
+)
+def test_laws_that_cannot_be_read(text: str, words: str) -> None:
+    with pytest.raises(InputError, match=f"^error law: {words}"):
+        parse_law(text, "error law")

@@ -1,0 +1,226 @@
+"""The verdict from constructed records: answers, cover, reasons and who is blamed."""
+
+from __future__ import annotations
+
+import math
+from dataclasses import replace
+from types import SimpleNamespace
+
+import pytest
+
+from scantling.core.estimate import Estimate
+from scantling.design.spec import TargetSpec
+from scantling.planning.budget import Allowed, Budget, combine
+from scantling.planning.ceiling import Ceiling
+from scantling.planning.limit import Limit, make_limit, missing_limit
+from scantling.planning.stress import Stress, StressRun
+from scantling.planning.verdict import (
+    ANSWERS,
+    BORDERLINE,
+    NONE,
+    OVER,
+    WITHIN,
+    variance_missing,
+    verdict,
+)
+
+CASE = SimpleNamespace(target=TargetSpec(), replicates=400, rows=200, columns=100)
+
+
+def limit(columns, low=None, high=None):
+    """A limit with a band; math.inf is not reached."""
+    low, high = columns if low is None else low, columns if high is None else high
+    return make_limit(columns, [low] * 3 + [columns] * 44 + [high] * 3, 100, mode="conditional")
+
+
+OPEN = limit(math.inf)
+
+
+def budget_of(*, noise=OPEN, signal=OPEN, stability=OPEN, geometry=OPEN, rate=1000, **changes):
+    allowed, binding = combine({"noise": noise, "signal": signal, "stability": stability}, 100)
+    budget = Budget(
+        asked=100, rows=200, noise=noise, signal=signal, stability=stability, geometry=geometry,
+        assured=missing_limit("not computed"),
+        ceiling=Ceiling(columns=rate, low=rate, high=rate, regime="", capped=False),
+        allowed=allowed, binding=binding,
+        risk_at_design=Estimate(value=0.21, low=0.1, high=0.3), curve=(), penalty_ratio=1.3,
+        equivalent_rows=118, rows_needed=900, rows_note="", detectable=0.22,
+        detectable_worst=0.3, worst_columns=(), worst_shares=(),
+    )  # fmt: skip
+    return replace(budget, **changes)
+
+
+def diagnosis_of(*, variance="exists", broken=0, width=100):
+    return SimpleNamespace(
+        moment=lambda order: variance if order == 2 else "exists",
+        scores_without_variance=tuple(range(broken)),
+        weight=("heavy",) * width,
+    )
+
+
+def estimate(value):
+    return Estimate(value=value, low=value - 0.05, high=value + 0.05)
+
+
+def stress_of(*, failing=("power",), power=0.41):
+    run = StressRun(
+        rows=200, columns=100, law="fitted", mode="conditional", replicates=400,
+        stability=estimate(0.62), power=estimate(power), false_share=estimate(0.11), exact=0.0,
+        mean_size=5.0,
+    )  # fmt: skip
+    twin = replace(run, law="twin", power=estimate(0.99))
+    return Stress(runs=(run, twin), stability=OPEN, geometry=OPEN, failing=failing)
+
+
+def judge(diagnosis=None, stress=None, **limits):
+    return verdict(CASE, diagnosis or diagnosis_of(), budget_of(**limits), stress)
+
+
+def test_answers_are_ordered_by_severity():
+    assert ANSWERS == ("within budget", "borderline", "over budget", "no budget")
+
+
+@pytest.mark.parametrize(
+    ("low", "high", "answer"),
+    [
+        (100, None, WITHIN),
+        (99, None, BORDERLINE),
+        (40, 120, BORDERLINE),
+        (40, 100, BORDERLINE),  # not above the high end
+        (40, 99, OVER),
+        (0, 0, OVER),
+        (None, None, BORDERLINE),  # unknown is never within
+    ],
+)
+def test_the_answer_follows_the_band(low, high, answer):
+    columns = None if low is None else max(low, 50)
+    changed = Allowed(columns=columns, low=low, high=high)
+    assert judge(noise=limit(50.0), allowed=changed).answer == answer
+
+
+def test_a_missing_limit_is_never_within_and_its_reason_is_given():
+    found = judge(signal=missing_limit("the fitted error law has no variance"))
+    assert found.answer == BORDERLINE
+    assert found.reasons == (
+        "The signal limit could not be computed: the fitted error law has no variance.",
+    )
+
+
+@pytest.mark.parametrize(
+    ("rate", "cover"),
+    [
+        (100, "theory and simulation"),
+        (99, "simulation only"),
+        (None, "simulation only"),
+        (10**12, "theory and simulation"),
+    ],
+)
+def test_cover_is_theorys_up_to_the_ceiling(rate, cover):
+    assert judge(rate=rate).cover == cover
+
+
+@pytest.mark.parametrize("answer", ["missing", "unclear", "exists"])
+def test_errors_without_variance_have_no_budget(answer):
+    found = judge(diagnosis_of(variance=answer), noise=limit(5.0))
+    if answer == "missing":
+        assert (found.answer, found.cover) == (NONE, "none")
+        assert found.reasons == (
+            "The errors have no variance, so least-squares selection has no footing.",
+        )
+    else:
+        assert found.answer == OVER
+
+
+def test_more_than_half_of_the_scores_without_variance_have_no_budget():
+    assert variance_missing(diagnosis_of(broken=50)) == ""
+    assert judge(diagnosis_of(broken=50)).answer == WITHIN
+    found = judge(diagnosis_of(broken=51))
+    assert (found.answer, found.cover) == (NONE, "none")
+    assert found.reasons == ("The scores of 51 of 100 columns have no variance.",)
+    assert variance_missing(diagnosis_of(broken=1, width=1)) != ""
+
+
+def test_the_binding_limit_comes_first_and_each_reason_is_one_sentence():
+    found = judge(stress=stress_of(), noise=limit(60.0), signal=limit(80.0), stability=limit(20.0))
+    assert [reason.split()[0] for reason in found.reasons] == ["Selection", "Noise", "Effect"]
+    for reason in found.reasons:
+        assert reason.endswith(".")
+        assert ". " not in reason
+        assert "\n" not in reason
+        assert reason[0].isupper()
+    swapped = judge(stress=stress_of(), noise=limit(10.0), stability=limit(20.0))
+    assert [reason.split()[0] for reason in swapped.reasons] == ["Noise", "Selection"]
+
+
+def test_limits_that_do_not_bite_are_not_mentioned():
+    found = judge(signal=limit(30.0))
+    assert len(found.reasons) == 1
+    assert found.reasons[0].startswith("Effect size binds")
+
+
+def test_nothing_binds():
+    found = judge()
+    assert found.answer == WITHIN
+    assert len(found.reasons) == 1
+    assert found.reasons[0].startswith("No limit is reached up to the 100 columns")
+
+
+def test_noise_names_the_tails_only_if_they_cost_something():
+    tails = judge(noise=limit(10.0)).reasons[0]
+    assert "0.21 (0.05 accepted)" in tails
+    assert "tails ask for 1.30 times the penalty of normal errors" in tails
+    for ratio in (1.05, 1.0, 0.9, None):
+        calm = judge(noise=limit(10.0), penalty_ratio=ratio).reasons[0]
+        assert "tails" not in calm
+        assert "normal errors would need about the same penalty" in calm
+
+
+def test_effect_size_names_what_is_detectable_and_asked_for():
+    reason = judge(signal=limit(10.0)).reasons[0]
+    assert "0.220 sd of the response against 0.15 asked for" in reason
+    assert "tails" not in reason
+
+
+def test_selection_names_what_fails():
+    reason = judge(stress=stress_of(failing=("stability", "power")), stability=limit(10.0)).reasons[
+        0
+    ]
+    assert "stability 0.62 against 0.75" in reason
+    assert "power 0.41 against 0.8" in reason
+    assert "false share" not in reason
+
+
+def blamed(stability: Limit, geometry: Limit) -> str:
+    reason = judge(stress=stress_of(), stability=stability, geometry=geometry).reasons[0]
+    if "so tails are to blame" in reason:
+        return "tails"
+    return "geometry" if "not tails" in reason else reason
+
+
+@pytest.mark.parametrize(
+    ("stability", "geometry", "culprit"),
+    [
+        (limit(20.0), limit(20.0), "geometry"),
+        (limit(20.0), limit(15.0), "geometry"),  # the twin does worse
+        (limit(20.0), limit(25.0), "geometry"),  # within a quarter
+        (limit(20.0), limit(60.0), "tails"),
+        (limit(20.0, 10, 45), limit(60.0, 40, 80), "geometry"),  # bands overlap
+        (limit(20.0, 10, 39), limit(60.0, 40, 80), "tails"),
+        (limit(20.0), OPEN, "tails"),
+        (limit(20.0, 10, math.inf), limit(60.0, 40, 80), "geometry"),  # so wide a band may reach it
+        (limit(90.0, 80, math.inf), OPEN, "geometry"),
+        (limit(0.0), limit(0.0), "geometry"),
+    ],
+)
+def test_tails_are_blamed_only_where_the_twin_does_better(stability, geometry, culprit):
+    assert blamed(stability, geometry) == culprit
+
+
+def test_a_twin_that_was_not_run_blames_nobody():
+    reason = blamed(limit(20.0), missing_limit("x"))
+    assert "the normal twin could not be run" in reason
+
+
+def test_the_twins_open_limit_is_said_to_be_open():
+    reason = judge(stress=stress_of(), stability=limit(20.0), geometry=OPEN).reasons[0]
+    assert "normal errors would carry at least 100 columns" in reason
