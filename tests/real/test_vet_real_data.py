@@ -204,7 +204,8 @@ def test_macro_growth(macro: Vetted) -> None:
     assert document["verdict"]["answer"] in ("borderline", "over budget")
     assert document["budget"]["stability"]["columns"] == 0
     assert document["budget"]["geometry"]["columns"] == 0
-    assert any("not tails" in reason for reason in document["verdict"]["reasons"])
+    reasons = document["verdict"]["reasons"]
+    assert any("geometry or effect size binds" in reason for reason in reasons)
     assert "198 rows, 1960-06 to 2009-09 (4 lost to lags)" in macro.text
 
 

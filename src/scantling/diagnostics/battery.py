@@ -239,7 +239,7 @@ def diagnose(X: FloatArray, residuals: Residuals, *, time_ordered: bool, seed: i
         co_movement=read_only(co_movement(X, e)),
         rank_co_movement=read_only(rank_co_movement(X, e)),
         structure=column_structure(X),
-        warnings=_warnings(e, errors, volatility),
+        warnings=sample_warnings(e, errors, volatility),
     )
 
 
@@ -289,9 +289,10 @@ def _judged(results: tuple[TestResult, ...], granted: set[int]) -> tuple[Finding
     )
 
 
-def _warnings(
+def sample_warnings(
     e: FloatArray, errors: TailIndex | None, volatility: Volatility | None
 ) -> tuple[str, ...]:
+    """Where the sample looks like a law that defeats the estimators: one sentence each."""
     out = []
     if errors is not None:
         # Hill further out, at k = sqrt(n): stable laws look lighter in range than they are.

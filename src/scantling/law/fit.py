@@ -21,7 +21,7 @@ from scantling.diagnostics.tail_index import (
 from scantling.diagnostics.volatility import Volatility
 from scantling.errors import InputError
 from scantling.law.families import FAMILIES, ErrorLaw, Fit, ShapeSpread
-from scantling.law.goodness import bootstrap_fit_test
+from scantling.law.goodness import bootstrap_fit_test, bootstrap_splice_test
 from scantling.law.splice import enough_for_splice, fit_splice
 from scantling.law.student import fit_student, profile
 
@@ -111,9 +111,10 @@ def fit_innovations(
         )
     tail = tail or tail_index(values, seed=seed)
     splice = fit_splice(values, tail.gamma)
+    distance, p_value = bootstrap_splice_test(values, splice, seed=seed)
     return ErrorLaw(
         family="spliced", scale=1.0, splice=splice, spread=spliced_spread(tail, n),
-        fit=replace(fit, p_value=None),
+        fit=replace(fit, distance=distance, p_value=p_value),
     )  # fmt: skip
 
 

@@ -11,9 +11,13 @@ from scipy.special import ndtr, stdtr
 
 from scantling.core.record import FloatArray
 from scantling.core.streams import stream
+from scantling.diagnostics.tail_estimators import weighted_hill
+from scantling.diagnostics.tail_index import one_side
+from scantling.law.splice import Splice, fit_splice
 from scantling.law.student import fit_student
 
 BOOTSTRAP_DRAWS = 199
+SPLICE_DRAWS = 99
 
 
 def anderson_darling(uniforms: FloatArray) -> FloatArray:
@@ -63,4 +67,35 @@ def bootstrap_fit_test(
         drawn = rng.standard_normal(size) if family == "normal" else rng.standard_t(1 / gamma, size)
         drawn -= drawn.mean(axis=1, keepdims=True)
         exceed += int((fitted_distance(drawn, family) >= distance).sum())
+    return distance, (1 + exceed) / (draws + 1)
+
+
+def bootstrap_splice_test(
+    sample: FloatArray, splice: Splice, *, seed: int, draws: int = SPLICE_DRAWS
+) -> tuple[float, float]:
+    """Distance of the sample from its spliced law, and its bootstrap p-value.
+
+    Each drawn sample gets its own tail index, body and scales, as the sample did. The body being
+    empirical, what is tested is the tails.
+
+    Parameters
+    ----------
+    sample : array, shape (n,)
+    splice : Splice
+        Fitted to the sample.
+    seed : int
+    draws : int
+
+    Returns
+    -------
+    distance, p_value : float
+    """
+    rng = stream(seed, "spliced fit test")
+    distance = float(anderson_darling(splice.cdf(sample)))
+    exceed = 0
+    for _ in range(draws):
+        drawn = splice.quantile(rng.random(sample.size))
+        ordered = one_side(drawn, "both")
+        again = fit_splice(drawn, float(weighted_hill(ordered, drawn.size // 2)))
+        exceed += float(anderson_darling(again.cdf(drawn))) >= distance
     return distance, (1 + exceed) / (draws + 1)

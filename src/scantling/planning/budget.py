@@ -54,6 +54,8 @@ class Budget:
     """noise | signal | stability; None if no limit is reached or one is missing."""
     risk_at_design: Estimate
     """Break-through risk at the columns asked for."""
+    draws: int
+    """Draws of errors behind its point value."""
     curve: tuple[CurvePoint, ...]
     """Break-through risk over p."""
     penalty_ratio: float | None
@@ -118,6 +120,7 @@ def assemble(
         allowed=allowed,
         binding=binding,
         risk_at_design=Estimate(value=last.risk, low=last.low, high=last.high),
+        draws=noise.fitted.found.draws,
         curve=noise.curve,
         penalty_ratio=noise.penalty_ratio,
         equivalent_rows=noise.equivalent_rows,

@@ -136,6 +136,7 @@ def budget(
         allowed=allowed,
         binding=binding,
         risk_at_design=Estimate(value=last.risk, low=last.low, high=last.high),
+        draws=found.draws,
         curve=curve,
         penalty_ratio=ratio,
         equivalent_rows=None if ratio is None else int(rows / max(1.0, ratio) ** 2),
@@ -274,6 +275,6 @@ def _signal(
     needed = math.ceil(max(rows * (detectable / smallest_effect) ** 2, 4 * level**2))
     note = ""
     if needed > MOST_TIMES_ROWS * rows:
-        note = f"more than {MOST_TIMES_ROWS} times the present rows"
+        note = f"up to {MOST_TIMES_ROWS} times the present rows do not lift the limit"
     limit = make_limit(point, [point] * LAW_DRAWS, columns, mode=MODE)
     return limit, detectable, None if note else needed, note

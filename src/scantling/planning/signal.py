@@ -101,7 +101,7 @@ def signal(case: Case, fitted: ScoreSample, drawn: tuple[ScoreSample, ...]) -> S
     rows = math.ceil(max(case.rows * (median / case.target.smallest_effect) ** 2, 4 * level**2))
     note = ""
     if rows > MOST_TIMES_ROWS * case.rows:
-        note = f"more than {MOST_TIMES_ROWS} times the present rows"
+        note = f"up to {MOST_TIMES_ROWS} times the present rows do not lift the limit"
     return Signal(
         limit=make_limit(point, draws, case.columns, mode="conditional"),
         detectable=median,

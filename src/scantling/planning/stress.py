@@ -156,10 +156,15 @@ def _run(case: Case, p: int, name: str, summary: SelectionSummary) -> StressRun:
 
 
 def _estimate(summary: SelectionSummary, name: str) -> Estimate:
-    """A criterion with its interval; an undefined stability index counts as 0."""
+    """A criterion with its interval.
+
+    The stability index is not defined where nothing is ever selected, which counts as 0, or
+    where every column always is, which counts as 1: it is the same selection each time.
+    """
     value, low, high = (getattr(summary, name + end) for end in ("", "_low", "_high"))
     if value is None:
-        return Estimate(value=0.0, low=0.0, high=0.0)
+        constant = float(summary.mean_size > 0)
+        return Estimate(value=constant, low=constant, high=constant)
     return Estimate(value=value, low=low, high=high)
 
 

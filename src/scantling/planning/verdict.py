@@ -7,7 +7,6 @@ from dataclasses import dataclass
 from scantling.diagnostics.battery import Diagnosis
 from scantling.planning.budget import Budget
 from scantling.planning.case import Case
-from scantling.planning.limit import Limit
 from scantling.planning.stress import Stress
 
 WITHIN = "within budget"
@@ -17,6 +16,7 @@ NONE = "no budget"
 ANSWERS = (WITHIN, BORDERLINE, OVER, NONE)
 """From mildest to most severe."""
 
+VOLATILITY = "volatility"
 TAIL_COST = 1.05
 """Penalty ratio from which tails are said to cost something."""
 
@@ -47,17 +47,20 @@ def variance_missing(diagnosis: Diagnosis) -> str:
 def verdict(case: Case, diagnosis: Diagnosis, budget: Budget, stress: Stress | None) -> Verdict:
     """Judge the columns asked for against the allowed ones.
 
-    within: at or below the low end of the band; over: above the high end; borderline between;
-    never within if a limit is missing; no budget if order 2 is missing for the errors or for
-    the scores of more than half of the columns.
+    within: at or below the low end of the band; over: above the high end (of any one limit
+    where another is missing); borderline between; never within if a limit is missing; no budget
+    if order 2 is missing for the errors or for the scores of more than half of the columns.
     """
     lack = variance_missing(diagnosis)
     if lack:
         return Verdict(answer=NONE, cover="none", reasons=(_sentence(lack),))
     allowed = budget.allowed
+    tops = [allowed.high]
+    if allowed.columns is None:
+        tops = [budget.noise.high, budget.signal.high, budget.stability.high]
     if allowed.low is not None and budget.asked <= allowed.low:
         answer = WITHIN
-    elif allowed.high is not None and budget.asked > allowed.high:
+    elif any(top is not None and budget.asked > top for top in tops):
         answer = OVER
     else:
         answer = BORDERLINE
@@ -89,11 +92,11 @@ def _reasons(case: Case, budget: Budget, stress: Stress | None) -> list[str]:
         elif name == budget.binding or limit.columns < budget.asked:
             reasons.append(words())
     if not reasons:
-        reasons.append(_nothing_binds(case, budget))
+        reasons.append(_nothing_binds(budget))
     return reasons
 
 
-def _nothing_binds(case: Case, budget: Budget) -> str:
+def _nothing_binds(budget: Budget) -> str:
     """No limit is reached under the fitted law; under others it may be."""
     limits = {"noise": budget.noise, "signal": budget.signal, "stability": budget.stability}
     open_ones = {
@@ -109,7 +112,7 @@ def _nothing_binds(case: Case, budget: Budget) -> str:
         )
     return (
         f"no limit is reached up to the {_columns(budget.asked)} at hand; noise passes the"
-        f" penalty with probability {chance(budget.risk_at_design.value, case.replicates)}"
+        f" penalty with probability {chance(budget.risk_at_design.value, budget.draws)}"
     )
 
 
@@ -128,12 +131,14 @@ def _noise_reason(case: Case, budget: Budget) -> str:
     risk = budget.risk_at_design
     ratio = budget.penalty_ratio
     if ratio is not None and ratio > TAIL_COST:
-        cause = f"tails ask for {ratio:.2f} times the penalty of normal errors"
+        cause = f"{_sources(case)} ask for {ratio:.2f} times the penalty of normal errors"
+        if _sources(case) == VOLATILITY:
+            cause = cause.replace(" ask ", " asks ")
     else:
         cause = "normal errors would need about the same penalty"
     return (
         f"noise binds: at {_columns(budget.asked)} a noise column passes the penalty with"
-        f" probability {chance(risk.value, case.replicates)} ({case.target.risk:g} accepted);"
+        f" probability {chance(risk.value, budget.draws)} ({case.target.risk:g} accepted);"
         f" {cause}"
     )
 
@@ -161,20 +166,38 @@ def _stability_reason(case: Case, budget: Budget, stress: Stress | None) -> str:
     missed = ", ".join(words[name] for name in stress.failing) or "a criterion near its bar"
     return (
         f"selection binds: refits at {_columns(budget.asked)} give {missed};"
-        f" {_blame(budget.stability, budget.geometry)}"
+        f" {_blame(budget, stress)}"
     )
 
 
-def _blame(stability: Limit, geometry: Limit) -> str:
-    """Whether tails or geometry and effect size are behind an unstable selection."""
+def _sources(case: Case) -> str:
+    """What sets the fitted errors apart from independent normal ones."""
+    if case.law.volatility is None:
+        return "tails"
+    return VOLATILITY if case.law.family == "normal" else "tails and volatility"
+
+
+def _blame(budget: Budget, stress: Stress) -> str:
+    """Whether geometry and effect size, volatility or tails are behind an unstable selection."""
+    stability, geometry = budget.stability, budget.geometry
     if stability.columns is None or geometry.columns is None:
         return "the normal twin could not be run"
     # A band without an upper end reaches as far as any other.
     overlap = stability.high is None or (geometry.low or 0) <= stability.high
     close = geometry.columns <= 1.25 * stability.columns
     if (geometry.reached and (close or overlap)) or stability.high is None:
-        return "normal errors do no better, so geometry or effect size is to blame, not tails"
-    return (
-        f"normal errors would carry {'at least ' if not geometry.reached else ''}"
-        f"{geometry.columns:,} columns, so tails are to blame"
-    )
+        return "normal errors do no better: geometry or effect size binds"
+    better = f"{'at least ' if not geometry.reached else ''}{geometry.columns:,}"
+    return f"normal errors would carry {better}: {_part_to_blame(stress)} to blame"
+
+
+def _part_to_blame(stress: Stress) -> str:
+    """Normal innovations on the fitted path tell volatility from tails, at the columns asked."""
+    last = {run.law: run.stability.value for run in stress.runs}
+    if "normal-volatility" not in last:
+        return "tails are"
+    lost = last["twin"] - last["fitted"]
+    by_volatility = last["twin"] - last["normal-volatility"]
+    if lost <= 0 or 0.25 < by_volatility / lost < 0.75:
+        return "tails and volatility are"
+    return "volatility is" if by_volatility >= 0.75 * lost else "tails are"

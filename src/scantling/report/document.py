@@ -79,7 +79,7 @@ def cautions(report: Report) -> tuple[str, ...]:
     """What always has to be said, and what this sample adds."""
     from scantling.report.wording import ALWAYS
 
-    spans = ()
+    spans: tuple[str, ...] = ()
     if report.read.rows_dropped and report.read.rows_lost:
         spans = ("Rows were dropped, so lags may span more than one step of time.",)
     assured = f"No columns are assured: {report.budget.assured.note}."

@@ -46,7 +46,7 @@ def limits(report: Report, width: int) -> list[str]:
         limit = getattr(budget, name)
         if limit.columns is None:
             lines += paragraph(f"The {name} limit is unknown: {limit.note}.", width)
-    risk, draws = budget.risk_at_design, report.receipt.replicates
+    risk, draws = budget.risk_at_design, budget.draws
     lines += paragraph(
         f"Break-through risk at {asked}: {chance(risk.value, draws)} (90 % band"
         f" {chance(risk.low, draws)} to {chance(risk.high, draws)}; accepted"

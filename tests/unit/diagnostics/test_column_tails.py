@@ -190,7 +190,7 @@ def test_mode_of_a_series() -> None:
 P_VALUES = st.sampled_from([0.0, 1e-4, 0.004, 0.01, 0.03, 0.05, 0.4, 1.0])
 
 
-@settings(max_examples=60, deadline=None)
+@settings(max_examples=25, deadline=None)
 @given(p_values=st.lists(P_VALUES, min_size=1, max_size=25))
 def test_holm_agrees_with_statsmodels(p_values: list[float]) -> None:
     expected = multipletests(p_values, alpha=0.05, method="holm")[0]

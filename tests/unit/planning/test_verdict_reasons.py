@@ -24,7 +24,8 @@ from scantling.planning.verdict import (
     verdict,
 )
 
-CASE = SimpleNamespace(target=TargetSpec(), replicates=400, rows=200, columns=100)
+TAILS = SimpleNamespace(volatility=None, family="student-t")
+CASE = SimpleNamespace(target=TargetSpec(), replicates=400, rows=200, columns=100, law=TAILS)
 
 
 def limit(columns, low=None, high=None):
@@ -43,7 +44,8 @@ def budget_of(*, noise=OPEN, signal=OPEN, stability=OPEN, geometry=OPEN, rate=10
         assured=missing_limit("not computed"),
         ceiling=Ceiling(columns=rate, low=rate, high=rate, regime="", capped=False),
         allowed=allowed, binding=binding,
-        risk_at_design=Estimate(value=0.21, low=0.1, high=0.3), curve=(), penalty_ratio=1.3,
+        risk_at_design=Estimate(value=0.21, low=0.1, high=0.3), draws=400, curve=(),
+        penalty_ratio=1.3,
         equivalent_rows=118, rows_needed=900, rows_note="", detectable=0.22,
         detectable_worst=0.3, worst_columns=(), worst_shares=(),
     )  # fmt: skip
@@ -62,14 +64,16 @@ def estimate(value):
     return Estimate(value=value, low=value - 0.05, high=value + 0.05)
 
 
-def stress_of(*, failing=("power",), power=0.41):
+def stress_of(*, failing=("power",), power=0.41, on_path=None):
     run = StressRun(
         rows=200, columns=100, law="fitted", mode="conditional", replicates=400,
         stability=estimate(0.62), power=estimate(power), false_share=estimate(0.11), exact=0.0,
         mean_size=5.0,
     )  # fmt: skip
-    twin = replace(run, law="twin", power=estimate(0.99))
-    return Stress(runs=(run, twin), stability=OPEN, geometry=OPEN, failing=failing)
+    runs = (run, replace(run, law="twin", power=estimate(0.99), stability=estimate(0.92)))
+    if on_path is not None:
+        runs += (replace(run, law="normal-volatility", stability=estimate(on_path)),)
+    return Stress(runs=runs, stability=OPEN, geometry=OPEN, failing=failing)
 
 
 def judge(diagnosis=None, stress=None, **limits):
@@ -95,7 +99,7 @@ def test_answers_are_ordered_by_severity():
 def test_the_answer_follows_the_band(low, high, answer):
     columns = None if low is None else max(low, 50)
     changed = Allowed(columns=columns, low=low, high=high)
-    assert judge(noise=limit(50.0), allowed=changed).answer == answer
+    assert judge(noise=limit(50.0, 40, math.inf), allowed=changed).answer == answer
 
 
 def test_a_missing_limit_is_never_within_and_its_reason_is_given():
@@ -192,9 +196,9 @@ def test_selection_names_what_fails():
 
 def blamed(stability: Limit, geometry: Limit) -> str:
     reason = judge(stress=stress_of(), stability=stability, geometry=geometry).reasons[0]
-    if "so tails are to blame" in reason:
+    if "tails are to blame" in reason:
         return "tails"
-    return "geometry" if "not tails" in reason else reason
+    return "geometry" if "geometry or effect size binds" in reason else reason
 
 
 @pytest.mark.parametrize(
@@ -221,6 +225,35 @@ def test_a_twin_that_was_not_run_blames_nobody():
     assert "the normal twin could not be run" in reason
 
 
+@pytest.mark.parametrize(
+    ("on_path", "culprit"),
+    [
+        (0.91, "tails are to blame"),  # normal innovations on the path do as well as the twin
+        (0.77, "tails and volatility are to blame"),
+        (0.63, "volatility is to blame"),  # they do as badly as the fitted law
+    ],
+)
+def test_volatility_is_told_from_tails(on_path, culprit):
+    stress = stress_of(on_path=on_path)
+    reason = judge(stress=stress, stability=limit(20.0), geometry=OPEN).reasons[0]
+    assert reason.endswith(f": {culprit}.")
+
+
+@pytest.mark.parametrize(
+    ("family", "words"),
+    [("normal", "; volatility asks for 1.30"), ("spliced", "; tails and volatility ask for 1.30")],
+)
+def test_noise_names_volatility_where_it_is_fitted(family, words):
+    case = SimpleNamespace(**vars(CASE) | {"law": SimpleNamespace(volatility=1, family=family)})
+    found = verdict(case, diagnosis_of(), budget_of(noise=limit(10.0)), None)
+    assert words in found.reasons[0]
+
+
+def test_one_limit_above_its_band_is_over_though_another_is_missing():
+    found = judge(signal=missing_limit("x"), noise=limit(10.0))
+    assert found.answer == OVER
+
+
 def test_the_twins_open_limit_is_said_to_be_open():
     reason = judge(stress=stress_of(), stability=limit(20.0), geometry=OPEN).reasons[0]
-    assert "normal errors would carry at least 100 columns" in reason
+    assert "normal errors would carry at least 100: tails are to blame" in reason
