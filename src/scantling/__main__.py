@@ -1,6 +1,6 @@
 """`python -m scantling` is the installed command."""
 
-from scantling.cli.main import main
+from scantling.cli.entry import main
 
 if __name__ == "__main__":
     main()

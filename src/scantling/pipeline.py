@@ -102,7 +102,7 @@ def vet(
         tell("remedies")
         found: tuple[Remedy, ...] = ()
         if diagnosis.moment(2) != "missing":
-            found = remedies(design, table, residuals, diagnosis, case, noise, mapper)
+            found = remedies(design, table, residuals, diagnosis, case, noise, limits[0], mapper)
     return Report(
         design=design,
         read=_as_read(table, columns, residuals),

@@ -20,7 +20,8 @@ from scantling.diagnostics.tail_estimators import (
     hill,
     hill_influence,
 )
-from scantling.diagnostics.tail_index import BIAS_BOUND, bias_aware_factor, tail_index
+from scantling.diagnostics.tail_index import tail_index
+from scantling.diagnostics.tail_interval import folded_quantile
 from scantling.law.fit import student_spread
 from scantling.law.goodness import bootstrap_fit_test
 from scantling.law.student import fit_student, profile
@@ -101,40 +102,53 @@ def test_greenwood_power() -> None:
 
 
 def covered(columns: np.ndarray, gamma: float) -> float:
-    low, high = column_tails(columns, dependent=True).intervals(0.90)
-    return float(np.mean((low <= gamma) & (gamma <= high)))
+    tails = column_tails(columns, dependent=True)
+    return float(np.mean((tails.gamma_low <= gamma) & (gamma <= tails.gamma_high)))
 
 
+@pytest.mark.parametrize("n", [250, 1000])
 @pytest.mark.parametrize(
-    ("df", "least"), [(2.5, 0.90), (3, 0.94), (4, 0.95), (6, 0.94), (10, 0.75)]
+    ("df", "least"), [(2.5, 0.88), (3, 0.88), (4, 0.88), (6, 0.88), (10, 0.80)]
 )
-def test_default_intervals_cover_under_student_laws(df: float, least: float) -> None:
-    """Nominal .90, n = 1000: elsewhere .96, .99, 1.00, .99, .83."""
-    assert covered(students(df, 1000, seed=6), 1 / df) >= least
+def test_default_intervals_cover_under_student_laws(df: float, least: float, n: int) -> None:
+    """Nominal .90; claimed .88, at 10 degrees of freedom .80; .03 is four errors of 1500 series."""
+    assert covered(students(df, n, 1500, seed=6), 1 / df) >= least - 0.03
 
 
 def test_default_intervals_cover_under_clustering() -> None:
-    """GARCH(.15, .80), index 5.758, n = 1000: elsewhere .98."""
+    """GARCH(.15, .80), index 5.758, n = 1000: .96 of 2000, see reports/validation; .04."""
     assert covered(garch(1000, 0.15, 0.80), 1 / 5.758) >= 0.92
 
 
-def test_bootstrap_intervals_cover_too() -> None:
-    """The single-series interval, t(4), n = 1000: at least .95."""
-    columns = students(4, 1000, 60, seed=7)
+def test_intervals_are_narrower_than_with_one_bound_on_the_bias() -> None:
+    """t(3), t(4), Pareto 3 at n = 1000: by a quarter, where the bound is 0.06 everywhere."""
+    rng = np.random.default_rng(7)
+    pareto = (1 + rng.pareto(3, (1000, COLUMNS))) * rng.choice([-1.0, 1.0], (1000, COLUMNS))
+    for columns in (students(3, 1000, seed=7), students(4, 1000, seed=7), pareto):
+        tails = column_tails(columns, dependent=True)
+        former = 2 * tails.error * folded_quantile(0.06 / tails.error, 0.90)
+        ratio = (tails.gamma_high - np.maximum(tails.gamma_low, 0)) / former
+        assert np.median(ratio) < 0.80
+
+
+def test_single_series_intervals_cover_too() -> None:
+    """t(4), n = 1000: .93 of 2000; 200 series leave .07."""
+    columns = students(4, 1000, 200, seed=7)
     inside = [found.low <= 4 <= found.high for found in (tail_index(x) for x in columns.T)]
-    assert np.mean(inside) >= 0.95
+    assert np.mean(inside) >= 0.86
 
 
 def test_intervals_fail_where_they_are_known_to() -> None:
-    """Controls: stable 1.7 (elsewhere .03), GARCH near integration (.11, .88), index 3.676
-    (elsewhere .72), and intervals without the bound on the bias under t(10) (elsewhere .15)."""
+    """Controls: stable 1.7 (.05), GARCH near integration (.11, .88), index 3.676 (.61), a law
+    skewed about its median, and intervals without the bias under t(10) (elsewhere .15)."""
     stable = levy_stable.rvs(1.7, 0, size=(1000, 100), random_state=np.random.default_rng(8))
     assert covered(stable, 1 / 1.7) < 0.2
-    assert covered(garch(1000, 0.11, 0.88), 1 / 3.676) < 0.88
+    assert covered(garch(1000, 0.11, 0.88), 1 / 3.676) < 0.75
+    size, right = np.abs(students(4, 1000, seed=8)), students(4, 1000, seed=9) > -0.47
+    assert covered(np.where(right, 1.5 * size, -size / 1.5), 1 / 4) < 0.7
     tails = column_tails(students(10, 1000, seed=6), dependent=True)
     plain = np.abs(tails.gamma - 0.1) <= 1.645 * tails.error
     assert plain.mean() < 0.4
-    assert bias_aware_factor(BIAS_BOUND / 0.025, 0.90) > 3
 
 
 def test_the_point_estimate_has_the_bias_and_error_stated() -> None:
@@ -193,7 +207,7 @@ def test_moment_answers_are_rarely_wrong_at_the_boundary() -> None:
 
 
 def test_single_series_answers_follow_the_same_shares() -> None:
-    """Second moment, n = 500, whole path with bootstrap and veto: t(1.2) never 'exists'."""
+    """Second moment, n = 500, whole path with block error and veto: t(1.2) never 'exists'."""
     heavy = [moment_exists(x, 2).answer for x in students(1.2, 500, 30, seed=12).T]
     assert heavy.count("exists") == 0
     assert heavy.count("missing") > 15

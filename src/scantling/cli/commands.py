@@ -85,19 +85,18 @@ def vet(
     Prints the report and writes it to DIR as text and JSON. The exit status is the verdict:
     0 within budget, 3 borderline, 4 over budget, 5 no budget.
     """
-    from scantling.cli.output import make_folder, print_report, write_files
+    from scantling.cli.output import print_report, reserved_folder, write_files
     from scantling.cli.progress import stages
     from scantling.pipeline import read_design, with_simulation
     from scantling.pipeline import vet as run
     from scantling.report.text import render
 
     read = read_design(design)
-    make_folder(out)
     asked = replicates if replicates is not None else PACE[pace] if pace else None
     changed = with_simulation(read, seed=seed, replicates=asked)
     options = [f"--seed {seed}"] if seed is not None else []
     options += [f"--replicates {asked}"] if asked is not None else []
-    with stages(quiet) as progress:
+    with reserved_folder(out), stages(quiet) as progress:
         report = run(
             changed, workers=workers, progress=progress,
             command=" ".join(["scantling vet", quote(design.name), *options]),

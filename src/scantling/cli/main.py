@@ -22,6 +22,9 @@ def run(arguments: list[str] | None = None) -> int:
         return int(status or 0)
     except click.exceptions.Exit as leave:
         return int(leave.exit_code)
+    except click.exceptions.NoArgsIsHelpError:
+        known = ", ".join(commands.list_commands(click.Context(commands)))
+        return _refuse(f"a command is needed: {known} (--help says more)")
     except click.UsageError as fault:
         where = "" if fault.ctx is None else f"{fault.ctx.command_path}: "
         return _refuse(f"{where}{fault.format_message()} (--help says more)")

@@ -5,6 +5,8 @@ from __future__ import annotations
 import os
 import sys
 import tempfile
+from collections.abc import Iterator
+from contextlib import contextmanager, suppress
 from pathlib import Path
 
 import click
@@ -14,20 +16,29 @@ from scantling.errors import InputError
 EMPHASISED = ("Verdict", "Because", "Columns", "Limits", "Rows", "Remedies")
 
 
-def make_folder(folder: Path) -> None:
-    """Create the folder reports go to, before the run, so that nothing is lost after it.
+@contextmanager
+def reserved_folder(folder: Path) -> Iterator[None]:
+    """Make sure before a run that its results can be written; leave no empty folder behind.
 
     Raises
     ------
     InputError
-        If it cannot be created or written to.
+        If the folder cannot be created or written to.
     """
+    made = not folder.exists()
     try:
         folder.mkdir(parents=True, exist_ok=True)
     except OSError as fault:
         raise InputError(f"--out {folder}: cannot be made a folder ({fault.strerror})") from fault
     if not os.access(folder, os.W_OK):
         raise InputError(f"--out {folder}: cannot be written to")
+    try:
+        yield
+    except BaseException:
+        if made:
+            with suppress(OSError):
+                folder.rmdir()
+        raise
 
 
 def write_files(folder: Path, stem: str, contents: dict[str, str]) -> None:
@@ -94,4 +105,5 @@ def _echo(text: str) -> None:
 
 
 def _styled() -> bool:
-    return sys.stdout.isatty() and not os.environ.get("NO_COLOR")
+    plain = os.environ.get("NO_COLOR") or os.environ.get("TERM") == "dumb"
+    return sys.stdout.isatty() and not plain

@@ -51,6 +51,10 @@ _MEANING = {
 }
 
 
+_RESPONSES = ("y", "response", "target", "dependent")
+"""Names a response often has; else the first numeric column is guessed."""
+
+
 @dataclass(frozen=True, slots=True, kw_only=True)
 class _Findings:
     """What a table offers to a design, and what has to be mended in it."""
@@ -73,7 +77,7 @@ def draft_design(data_path: str | Path, *, folder: str | Path | None = None) -> 
     """Return the text of a starter design file for a table.
 
     The time is the first column that increases strictly and is named or shaped
-    like a date or an index; the response, a guess to be changed, is the first
+    like a date or an index; the response, a guess to be changed, is one named so or the first
     numeric column that is not the time. When the table is clean the draft can
     be vetted as it is; when not, columns that cannot be used are left out of
     `columns`, rows with missing values are dropped, and comments name what has
@@ -118,9 +122,7 @@ def _data_rows(findings: _Findings, file: str) -> list[str]:
         lines.append(
             '# time = "..."  # a column, unique and increasing; without it rows have no order'
         )
-    lines.append(
-        f"response = {_quoted(findings.response)}  # a guess: the first numeric column; change it"
-    )
+    lines.append(f"response = {_quoted(findings.response)}  # a guess, to be changed")
     about = "# names or glob patterns of the candidate columns"
     if findings.all_others:
         lines.append(f'columns = ["*"]  {about}; "*": all other numeric ones')
@@ -188,10 +190,11 @@ def _examine(path: Path) -> _Findings:
     if len(kept) < FEWEST_ROWS:
         notes.append(f"To mend: {len(kept)} usable rows; at least {FEWEST_ROWS} are needed.")
     names = [raw.names[j] for j in good]
+    response = next((name for name in names if name.lower() in _RESPONSES), names[0])
     return _Findings(
         time=time,
-        response=names[0],
-        columns=tuple(names[1:]),
+        response=response,
+        columns=tuple(name for name in names if name != response),
         all_others=len(good) == len(usable) and not mixed and not gaps,
         drop_rows=len(kept) < rows,
         notes=tuple(notes),
@@ -265,8 +268,8 @@ def _kept_rows(raw: RawColumns, usable: list[int]) -> tuple[NDArray[np.intp], li
     order = np.argsort(filled, kind="stable")[:3]
     worst = [raw.names[usable[j]] for j in order if filled[j] < len(fine)]
     return kept, [
-        f"To mend: {int((~fine).sum())} missing or infinite values; dropping their rows leaves"
-        f" {len(kept)} of {len(fine)} (most in {listed(worst)})."
+        f"{int((~fine).sum())} missing or infinite values, most in {listed(worst)};"
+        f" this draft drops their rows: {len(kept)} of {len(fine)} are left."
     ]
 
 

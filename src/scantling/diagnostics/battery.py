@@ -39,7 +39,6 @@ from scantling.diagnostics.variance import (
     co_movement_test,
     glejser_permutation,
     koenker,
-    rank_co_movement,
     scale_suspects,
     white,
 )
@@ -49,6 +48,7 @@ from scantling.errors import InputError
 ANSWERS = {1: "exists", -1: "missing", 0: "unclear"}
 FEW_VALUES = 10
 """A series of fewer distinct values is bounded."""
+ORDINALS = {2: "2nd moment", 4: "4th moment"}
 SIDED_ROWS = 500
 """Rows from which left and right tails are told apart."""
 
@@ -60,7 +60,9 @@ class Finding:
     result: TestResult
     """The test's name, statistic and p-value."""
     valid: bool
-    """True for permutation tests, else whether the needed moment was found to exist."""
+    """Whether the conditions of the test's p-value are granted by the diagnosis."""
+    lacks: str = ""
+    """What is not granted; empty if valid."""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -103,8 +105,6 @@ class Diagnosis:
     """None where rows have no order."""
     co_movement: FloatArray
     """Per column, sd of the score over what independence of sizes would give, shape (P,)."""
-    rank_co_movement: FloatArray
-    """Per column, Spearman correlation of |x| and |e|, shape (P,)."""
     structure: Structure
     """Factors, condition and correlations of the columns."""
     warnings: tuple[str, ...]
@@ -175,6 +175,8 @@ def _scores(
     own = {
         "gamma": errors.gamma,
         "error": errors.gamma_error,
+        "gamma_low": 0.0 if np.isinf(errors.high) else 1 / errors.high,
+        "gamma_high": 1 / errors.low,
         "hill_gamma": errors.hill_gamma,
         "hill_error": errors.hill_error,
         "p_value": errors.p_value,
@@ -218,7 +220,8 @@ def diagnose(X: FloatArray, residuals: Residuals, *, time_ordered: bool, seed: i
     clustering = find_clustering(e, seed=seed) if time_ordered else None
     volatility = None if clustering is None else clustering.volatility
     implied = None if volatility is None else volatility.tail_index
-    moments = _error_moments(e, errors, errors_note, implied, seed)
+    judged = None if errors is None else heavier_side(errors, sides)
+    moments = _error_moments(e, judged, errors_note, implied, seed)
     granted = {int(m.order) for m in moments if m.answer == "exists"}
     columns = series_group(X, dependent=time_ordered)
     scores = _scores(X, e, columns.tails, errors, moments, dependent=time_ordered)
@@ -234,10 +237,9 @@ def diagnose(X: FloatArray, residuals: Residuals, *, time_ordered: bool, seed: i
         scores=scores,
         weight=column_weights(columns.tails),
         variance=_judged(variance, granted),
-        dependence=_judged(dependence, granted),
+        dependence=_judged(dependence, granted, steady=block is None),
         clustering=clustering,
         co_movement=read_only(co_movement(X, e)),
-        rank_co_movement=read_only(rank_co_movement(X, e)),
         structure=column_structure(X),
         warnings=sample_warnings(e, errors, volatility),
     )
@@ -282,11 +284,33 @@ def _dependence_tests(e: FloatArray, clustering: Clustering | None) -> tuple[Tes
     return (*first, robust_ljung_box(e), ljung_box(e), arch_lm(e), mcleod_li(e))
 
 
-def _judged(results: tuple[TestResult, ...], granted: set[int]) -> tuple[Finding, ...]:
-    return tuple(
-        Finding(result=r, valid=r.method == "permutation" or r.needs_moment in granted)
-        for r in results
-    )
+def _judged(
+    results: tuple[TestResult, ...], granted: set[int], *, steady: bool = True
+) -> tuple[Finding, ...]:
+    """Hold each test's conditions against the diagnosis; `steady`: no clustering was found."""
+
+    def lacks(result: TestResult) -> str:
+        if result.method == "permutation":
+            return ""
+        if result.needs_moment not in granted:
+            return ORDINALS.get(result.needs_moment, f"moment {result.needs_moment}")
+        if result.test == "Ljung-Box" and not steady:
+            return "constant variance"
+        return ""
+
+    return tuple(Finding(result=r, valid=not lacks(r), lacks=lacks(r)) for r in results)
+
+
+def heavier_side(both: TailIndex, sides: tuple[TailIndex, ...]) -> TailIndex:
+    """The tail that decides which moments exist: the heavier one if the two differ.
+
+    They differ if their gammas are more than two joint standard errors apart.
+    """
+    if len(sides) != 2:
+        return both
+    left, right = sides
+    apart = abs(left.gamma - right.gamma) > 2 * np.hypot(left.gamma_error, right.gamma_error)
+    return max(sides, key=lambda side: side.gamma) if apart else both
 
 
 def sample_warnings(

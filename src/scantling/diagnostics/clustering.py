@@ -38,7 +38,7 @@ def find_clustering(values: FloatArray, *, seed: int) -> Clustering:
     test = absolute_ljung_box_permutation(values, seed=seed)
     if test.p_value > LEVEL:
         return Clustering(test=test, volatility=None, reason="no clustering found")
-    fitted = fit_garch(values)
+    fitted = fit_garch(values, seed=seed)
     if isinstance(fitted, Volatility):
         return Clustering(test=test, volatility=fitted, reason="")
     return Clustering(test=test, volatility=None, reason=fitted)

@@ -6,33 +6,23 @@ form, through the influence of each row, so that thousands of columns take secon
 
 from __future__ import annotations
 
-import math
-from dataclasses import dataclass
+from dataclasses import dataclass, fields
 
 import numpy as np
 
 from scantling.core.record import FloatArray, read_only
-from scantling.diagnostics.greenwood import greenwood_p_value, greenwood_statistic
-from scantling.diagnostics.tail_estimators import (
-    block_standard_error,
-    hill,
-    hill_influence,
-    influence,
-    weighted_hill,
-    weighted_hill_coefficients,
-)
 from scantling.diagnostics.tail_index import (
-    BIAS_BOUND,
     TIE_SHARE,
-    bias_aware_factor,
     block_length,
-    hill_count,
+    index_ends,
+    magnitudes,
     moderate,
     prepare,
     repeat_share,
-    thin_count,
+    tail_counts,
     tied_share,
 )
+from scantling.diagnostics.tail_kernel import TailEstimates, tail_estimates
 from scantling.errors import InputError
 
 SPARSE_SHARE = 0.05
@@ -47,6 +37,10 @@ class ColumnTails:
     """1/index by the weighted Hill regression, shape (P,)."""
     error: FloatArray
     """Its standard error, block form, shape (P,)."""
+    gamma_low: FloatArray
+    """Lower end of gamma's 90 % interval, shape (P,); may be negative."""
+    gamma_high: FloatArray
+    """Upper end, shape (P,)."""
     hill_gamma: FloatArray
     """Hill on the largest 5 %, shape (P,)."""
     hill_error: FloatArray
@@ -70,13 +64,9 @@ class ColumnTails:
         """Which series differ from their mode on under 5 % of rows, shape (P,), bool."""
         return self.active_share < SPARSE_SHARE
 
-    def intervals(self, level: float = 0.90) -> tuple[FloatArray, FloatArray]:
-        """Ends of the bias-aware interval of gamma, each (P,); nan where not assessed."""
-        half = np.full(self.gamma.shape, np.nan)
-        for j in np.flatnonzero(self.assessed):
-            error = max(float(self.error[j]), 1e-12)
-            half[j] = error * bias_aware_factor(BIAS_BOUND / error, level)
-        return self.gamma - half, self.gamma + half
+    def interval(self, series: int) -> tuple[float, float]:
+        """Ends of the 90 % interval of one series' index; the upper may be inf."""
+        return index_ends(float(self.gamma_low[series]), float(self.gamma_high[series]))
 
     def median_column(self) -> int | None:
         """Number of the series whose gamma is the (lower) median; None if none is assessed."""
@@ -85,13 +75,6 @@ class ColumnTails:
             return None
         order = known[np.argsort(self.gamma[known], kind="stable")]
         return int(order[(order.size - 1) // 2])
-
-
-def mode_of(column: FloatArray) -> tuple[float, float]:
-    """The commonest value of a series and its share of the rows."""
-    values, counts = np.unique(column, return_counts=True)
-    top = int(counts.argmax())
-    return float(values[top]), float(counts[top]) / column.size
 
 
 def column_tails(series: FloatArray, *, dependent: bool) -> ColumnTails:
@@ -109,44 +92,40 @@ def column_tails(series: FloatArray, *, dependent: bool) -> ColumnTails:
     ColumnTails
     """
     n, width = series.shape
-    out = {
-        name: np.full(width, np.nan)
-        for name in ("gamma", "error", "hill_gamma", "hill_error", "active_share")
-    }
-    p_value = np.ones(width)
+    out = {field.name: np.full(width, np.nan) for field in fields(TailEstimates)}
+    active_share = np.empty(width)
     odd: list[int] = []
+
+    def keep(columns: list[int], part: FloatArray) -> None:
+        block = block_length(len(part)) if dependent else 1
+        found = tail_estimates(magnitudes(part, "both"), tail_counts(len(part)), block=block)
+        for name, values in out.items():
+            values[columns] = getattr(found, name)
+
     for first in range(0, width, COLUMNS_PER_PASS):
         here = slice(first, min(first + COLUMNS_PER_PASS, width))
         part = moderate(series[:, here])
         mode_share, tied = _repeats(part)
-        out["active_share"][here] = 1 - mode_share
+        active_share[here] = 1 - mode_share
         plain = (mode_share <= repeat_share(n)) & (tied <= TIE_SHARE)
         odd += [first + int(j) for j in np.flatnonzero(~plain)]
         if plain.any():
-            columns = first + np.flatnonzero(plain)
-            for name, values in _estimates(part[:, plain], dependent).items():
-                target = p_value if name == "p_value" else out[name]
-                target[columns] = values
+            keep([first + int(j) for j in np.flatnonzero(plain)], part[:, plain])
     refused = []
     for j in odd:
-        column = moderate(series[:, j])
-        value, share = mode_of(column)
-        column = column - (value if share > repeat_share(n) else 0.0)
         try:
-            ready = prepare(column, name="series").values
+            ready = prepare(series[:, j], name="series").values
         except InputError as reason:
             refused.append((j, str(reason).removeprefix("series: ")))
             continue
-        kappa = ready.size // 2
-        if np.sort(np.abs(ready - np.median(ready)))[::-1][kappa] <= 0:
+        if np.sort(magnitudes(ready, "both"))[::-1][ready.size // 2] <= 0:
             refused.append((j, "more than half of the values are equal"))
             continue
-        for name, values in _estimates(ready[:, None], dependent).items():
-            target = p_value if name == "p_value" else out[name]
-            target[j] = values[0]
+        keep([j], ready[:, None])
+    out["p_value"][np.isnan(out["p_value"])] = 1.0
     return ColumnTails(
         **{name: read_only(values) for name, values in out.items()},
-        p_value=read_only(p_value),
+        active_share=read_only(active_share),
         threshold_count=n // 2,
         refused=tuple(refused),
     )
@@ -163,33 +142,6 @@ def _repeats(part: FloatArray) -> tuple[FloatArray, FloatArray]:
     for j in range(part.shape[1]):
         mode_share[j] = np.diff(np.flatnonzero(edges[:, j])).max() / n
     return mode_share, tied
-
-
-def _estimates(part: FloatArray, dependent: bool) -> dict[str, FloatArray]:
-    """All estimates for columns without ties or zeros."""
-    n = part.shape[0]
-    kappa, k_hill, k_thin = n // 2, hill_count(n), thin_count(n)
-    magnitude = np.abs(part - np.median(part, axis=0))
-    order = np.argsort(-magnitude, axis=0, kind="stable")
-    ordered = np.take_along_axis(magnitude, order, axis=0)
-    logs = np.log(np.maximum(ordered, np.finfo(float).tiny))
-    block = block_length(n) if dependent else 1
-    errors = []
-    for by_rank in (
-        influence(logs, weighted_hill_coefficients(kappa)),
-        hill_influence(logs, k_hill),
-    ):
-        in_time = np.empty_like(logs)
-        np.put_along_axis(in_time, order, by_rank, axis=0)
-        errors.append(block_standard_error(in_time, block))
-    second = hill(ordered, k_hill)
-    return {
-        "gamma": weighted_hill(ordered, kappa),
-        "error": errors[0],
-        "hill_gamma": second,
-        "hill_error": np.maximum(errors[1], second / math.sqrt(k_hill)),
-        "p_value": greenwood_p_value(greenwood_statistic(ordered, k_thin), k_thin),
-    }
 
 
 def holm_rejections(p_values: FloatArray, level: float = 0.05) -> np.ndarray:

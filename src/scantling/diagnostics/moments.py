@@ -71,7 +71,7 @@ def normal_moment(order: float) -> float:
 
 def scaled_moment(values: FloatArray, order: float) -> float:
     """Scale-free absolute moment of the given order: 1 for normal data, diverging if infinite."""
-    low = 1.0 if order <= 2 else 2.0
+    low = order / 2 if order <= 1 else 1.0 if order <= 2 else 2.0
     values = moderate(values)
     magnitude = np.abs(values - values.mean())
     magnitude = magnitude / magnitude.max()
@@ -144,7 +144,10 @@ def moment_answer(
         return MomentAnswer(order=order, answer="unclear", reason=reason)
     answer = {1: "exists", -1: "missing", 0: "unclear"}[code]
     word = {1: "above", -1: "below", 0: "on both sides of"}[code]
-    reason = f"the interval of the tail index from the {shown} of values lies {word} {order:g}"
+    where = "" if tail.side == "both" else f" on the {tail.side}, the heavier side,"
+    reason = (
+        f"the interval of the tail index from the {shown} of values{where} lies {word} {order:g}"
+    )
     return MomentAnswer(order=order, answer=answer, reason=reason)
 
 

@@ -1,8 +1,9 @@
 """Tail index of one series: estimate, interval, thin-tail test, and what was done to ties.
 
 Default estimator, threshold and interval as measured in reports/validation: weighted Hill
-regression on half of the absolute median-centred values; standard error by a circular
-moving-block bootstrap; interval widened for the largest bias seen over the laws of interest.
+regression on half of the absolute median-centred values; standard error of the circular
+moving-block bootstrap, in closed form; interval from the range of biases over the laws of
+interest.
 """
 
 from __future__ import annotations
@@ -12,22 +13,18 @@ from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
-from scipy.stats import norm
 
 from scantling.core.checks import between, finite_vector
 from scantling.core.record import FloatArray
 from scantling.core.streams import stream
-from scantling.diagnostics.greenwood import greenwood_p_value, greenwood_statistic
-from scantling.diagnostics.tail_estimators import hill, weighted_hill
+from scantling.diagnostics.tail_kernel import tail_estimates
 from scantling.errors import InputError
 
-BIAS_BOUND = 0.06
-"""Bound on the bias of gamma: the largest seen in simulation over Student t, Pareto and GARCH."""
 THIN_LEVEL = 0.05
-BOOTSTRAP_DRAWS = 199
 MINIMUM = 30
 """Fewest values an index is estimated from."""
 ZERO_SHARE = 0.02
+SPIKE_TIMES = 3
 TIE_SHARE = 0.5
 GAMMA_FLOOR = 0.02
 """Below it 1/gamma says nothing: the index is given as infinite, read 'above 50'."""
@@ -62,7 +59,7 @@ class TailIndex:
     gamma: float
     """1/index before any rounding to inf."""
     gamma_error: float
-    """Standard error of gamma, block bootstrap."""
+    """Standard error of gamma, the block bootstrap's in closed form."""
     hill_gamma: float
     """Second opinion: Hill on the largest 5 %."""
     hill_error: float
@@ -105,31 +102,15 @@ def repeat_share(n: int) -> float:
     return max(ZERO_SHARE, 1 / n)
 
 
-def bias_aware_factor(ratio: float, level: float) -> float:
-    """The `level` quantile of |N(ratio, 1)|: critical value when bias/s.e. is at most `ratio`.
-
-    Armstrong et al. (2018), Econometrica 86. ratio 0 and level 0.90 give 1.645.
-    """
-    low, high = 0.0, ratio + 6.0
-    for _ in range(60):
-        middle = (low + high) / 2
-        if norm.cdf(middle - ratio) - norm.cdf(-middle - ratio) < level:
-            low = middle
-        else:
-            high = middle
-    return high
-
-
 def index_from_gamma(gamma: float) -> float:
     """1/gamma, or inf where gamma <= 0.02."""
     return 1 / gamma if gamma > GAMMA_FLOOR else math.inf
 
 
-def interval_from_gamma(gamma: float, error: float, level: float) -> tuple[float, float]:
-    """Ends of the interval for the index: the bias-aware interval of gamma, inverted."""
-    half = error * bias_aware_factor(BIAS_BOUND / max(error, 1e-12), level) if error else BIAS_BOUND
-    top, bottom = gamma + half, gamma - half
-    return (1 / top if top > 0 else math.inf), (1 / bottom if bottom > 0 else math.inf)
+def index_ends(gamma_low: float, gamma_high: float) -> tuple[float, float]:
+    """Ends of the index's interval from those of gamma; inf where gamma's is not positive."""
+    low = 1 / gamma_high if gamma_high > 0 else math.inf
+    return low, (1 / gamma_low if gamma_low > 0 else math.inf)
 
 
 def moderate(values: FloatArray) -> FloatArray:
@@ -163,12 +144,29 @@ def tied_share(values: FloatArray) -> tuple[FloatArray, FloatArray]:
     return np.asarray(tied.sum(axis=0) / far.sum(axis=0)), np.asarray(near)
 
 
-def prepare(values: FloatArray, *, name: str = "values", seed: int = 0) -> Magnitudes:
-    """Drop exact zeros and break ties, by the rules below, saying so.
+def spike(values: FloatArray) -> float | None:
+    """The value to set aside before a tail is estimated; None if there is none.
 
-    More than 2 % exact zeros: they are dropped. More than half of the largest tenth tied:
-    the values are rounded; uniform noise of the rounding step is added. A step above half a
-    standard deviation, or fewer than 30 values left, is refused.
+    Exact zeros above 2 % (a day without a trade), or, as centring may have moved them, a value
+    as frequent and three times as frequent as the next: rounding alone makes neighbours alike.
+    """
+    least = repeat_share(values.size)
+    if (values == 0).mean() > least:
+        return 0.0
+    distinct, counts = np.unique(values, return_counts=True)
+    first = int(counts.argmax())
+    top = int(counts[first])
+    counts[first] = 0
+    alone = top > least * values.size and top >= SPIKE_TIMES * int(counts.max())
+    return float(distinct[first]) if alone else None
+
+
+def prepare(values: FloatArray, *, name: str = "values", seed: int = 0) -> Magnitudes:
+    """Drop repeated values and break ties, by the rules below, saying so.
+
+    A `spike`, as zeros are, is dropped. More than half of the largest tenth tied: the values
+    are rounded; uniform noise of the rounding step is added. A step above half a standard
+    deviation, or fewer than 30 values left, is refused.
 
     Raises
     ------
@@ -176,42 +174,49 @@ def prepare(values: FloatArray, *, name: str = "values", seed: int = 0) -> Magni
         If the series is constant, discrete, or too short for an index.
     """
     notes = []
+    noise = stream(seed, "ties")  # made whether used or not, so that a bad seed is refused
     values = moderate(values)
-    zeros = values == 0
-    if zeros.mean() > repeat_share(values.size):
-        values = values[~zeros]
-        notes.append(f"{zeros.mean():.0%} exact zeros dropped")
+    if np.ptp(values) == 0:
+        raise InputError(f"{name}: constant, so it has no tail")
+    aside = spike(values)
+    if aside is not None:
+        kept = values != aside
+        notes.append(f"{1 - kept.mean():.0%} equal values dropped")
+        values = values[kept]
     if values.size < MINIMUM:
-        raise InputError(f"{name}: {values.size} values other than 0; an index needs {MINIMUM}")
+        raise InputError(
+            f"{name}: {values.size} values besides the commonest; an index needs {MINIMUM}"
+        )
     spread = float(values.std())
     if np.ptp(values) == 0 or spread == 0:
-        raise InputError(f"{name}: constant, so it has no tail")
+        raise InputError(f"{name}: {'two-valued' if notes else 'constant'}, so it has no tail")
     tied, near = tied_share(values)
     if tied > TIE_SHARE:
         gaps = np.diff(np.sort(values))
         gaps = gaps[gaps > near]
         step = float(gaps.min(initial=np.inf))
         if step > spread / 2 or gaps.size < 9:
-            raise InputError(
-                f"{name}: discrete ({gaps.size + 1} distinct values), so it has no tail index"
-            )
-        noise = stream(seed, "ties").uniform(-step / 2, step / 2, values.size)
-        values = values + noise
+            few = "two-valued" if gaps.size == 1 else f"discrete ({gaps.size + 1} distinct values)"
+            raise InputError(f"{name}: {few}, so it has no tail index")
+        values = values + noise.uniform(-step / 2, step / 2, values.size)
         notes.append(f"rounded in steps of {step:.3g}; uniform noise of one step added")
     return Magnitudes(values=values, note="; ".join(notes))
 
 
-def one_side(values: FloatArray, side: str) -> FloatArray:
-    """Decreasing magnitudes about the median along the last axis; one side keeps its own sign."""
-    centred = values - np.median(values, axis=-1, keepdims=True)
+def magnitudes(values: FloatArray, side: str) -> FloatArray:
+    """Distances from the median along the first axis; one side keeps its own sign."""
+    centred = values - np.median(values, axis=0)
     if side == "both":
-        chosen = np.abs(centred)
-    else:
-        chosen = centred if side == "right" else -centred
-    return np.asarray(np.sort(chosen, axis=-1)[..., ::-1])
+        return np.asarray(np.abs(centred))
+    return np.asarray(centred if side == "right" else -centred)
 
 
-def _counts(n: int, side: str) -> tuple[int, int, int]:
+def one_side(values: FloatArray, side: str) -> FloatArray:
+    """The magnitudes of a series in decreasing order."""
+    return np.asarray(np.sort(magnitudes(values, side))[::-1])
+
+
+def tail_counts(n: int, side: str = "both") -> tuple[int, int, int]:
     """Order statistics for the weighted Hill, Hill and the thin-tail test."""
     tail_rows = n if side == "both" else n // 2
     return tail_rows // 2, hill_count(tail_rows), thin_count(tail_rows)
@@ -229,7 +234,7 @@ def tail_index(values: Any, *, side: str = "both", level: float = 0.90, seed: in
     level : float
         Nominal coverage of the interval.
     seed : int
-        Of the bootstrap and the tie-breaking noise.
+        Of the tie-breaking noise.
 
     Raises
     ------
@@ -239,24 +244,24 @@ def tail_index(values: Any, *, side: str = "both", level: float = 0.90, seed: in
     Notes
     -----
     Point: Huisman et al. (2001), Journal of Business & Economic Statistics 19, with
-    kappa = n/2. Interval: circular block bootstrap, block ceil(n^0.6), then the bias-aware
-    length of Armstrong et al. (2018), Econometrica 86, with bound 0.06 on gamma.
+    kappa = n/2. Interval: the circular block bootstrap's error in closed form, block
+    ceil(n^0.6), then a bias-aware length after Armstrong et al. (2018), Econometrica 86, with
+    the range of biases of `tail_interval`.
     """
     if side not in SIDES:
         raise InputError(f"side: one of both, left, right is needed; found {side!r}")
     between(level, "level", 0, 1)
     series = prepare(finite_vector(values, "values", minimum=MINIMUM), seed=seed)
-    sample = series.values
-    n = sample.size
-    kappa, k_hill, k_thin = _counts(n, side)
-    ordered = one_side(sample, side)
-    if ordered[kappa] <= 0:
+    size = magnitudes(series.values, side)
+    n = size.size
+    counts = tail_counts(n, side)
+    kappa, k_hill, _ = counts
+    if np.partition(size, n - 1 - kappa)[n - 1 - kappa] <= 0:
         raise InputError("values: more than half of them are equal, so there is no tail index")
-    gamma = float(weighted_hill(ordered, kappa))
-    second = float(hill(ordered, k_hill))
-    weighted_error, block_hill_error = _bootstrap_errors(sample, side, kappa, k_hill, seed)
-    low, high = interval_from_gamma(gamma, weighted_error, level)
-    p_value = float(greenwood_p_value(greenwood_statistic(ordered, k_thin), k_thin))
+    found = tail_estimates(size[:, None], counts, block=block_length(n), level=level)
+    gamma = float(found.gamma[0])
+    low, high = index_ends(float(found.gamma_low[0]), float(found.gamma_high[0]))
+    p_value = float(found.p_value[0])
     return TailIndex(
         index=index_from_gamma(gamma),
         low=low,
@@ -267,32 +272,10 @@ def tail_index(values: Any, *, side: str = "both", level: float = 0.90, seed: in
         level=level,
         p_value=p_value,
         gamma=gamma,
-        gamma_error=weighted_error,
-        hill_gamma=second,
-        hill_error=max(block_hill_error, second / math.sqrt(k_hill)),
+        gamma_error=float(found.error[0]),
+        hill_gamma=float(found.hill_gamma[0]),
+        hill_error=float(found.hill_error[0]),
         hill_count=k_hill,
         rows=n,
         note=series.note,
-    )
-
-
-def _bootstrap_errors(
-    sample: FloatArray, side: str, kappa: int, k_hill: int, seed: int
-) -> tuple[float, float]:
-    """Standard errors of the weighted Hill and of Hill by the circular block bootstrap."""
-    n = sample.size
-    block = block_length(n)
-    rng = stream(seed, "tail bootstrap")
-    starts = rng.integers(0, n, (BOOTSTRAP_DRAWS, math.ceil(n / block)))
-    weighted, plain = [], []
-    per_pass = max(1, 4_000_000 // n)
-    for first in range(0, BOOTSTRAP_DRAWS, per_pass):
-        rows = starts[first : first + per_pass, :, None] + np.arange(block)
-        drawn = sample[rows.reshape(rows.shape[0], -1)[:, :n] % n]
-        ordered = np.maximum(one_side(drawn, side).T[: kappa + 1], np.finfo(float).tiny)
-        weighted.append(weighted_hill(ordered, kappa))
-        plain.append(hill(ordered, k_hill))
-    return (
-        float(np.concatenate(weighted).std(ddof=1)),
-        float(np.concatenate(plain).std(ddof=1)),
     )

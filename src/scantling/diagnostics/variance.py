@@ -317,7 +317,7 @@ def co_movement_test(
     for rows in permuted(target, draws, generator, block):
         exceeding += int(np.count_nonzero(rows @ profile >= observed - slack))
     return TestResult(
-        test="co-movement of |x| and |e|, rank correlation",
+        test="co-movement of |x| and |e|, rank corr.",
         statistic=observed,
         p_value=(1 + exceeding) / (draws + 1),
         needs_moment=0,

@@ -72,6 +72,7 @@ def fit_garch(
     *,
     innovation: Innovation = "student-t",
     mean: Literal["zero", "constant"] = "zero",
+    seed: int = 0,
 ) -> Volatility | str:
     """Fit a GARCH(1,1) by maximum likelihood, or say why there is none.
 
@@ -86,6 +87,8 @@ def fit_garch(
         Law of the innovations.
     mean : 'zero' or 'constant'
         'constant' estimates the mean with the rest, as for raw returns.
+    seed : int
+        Of the drawn paths.
 
     Returns
     -------
@@ -113,7 +116,7 @@ def fit_garch(
         return f"{series.size} values: a GARCH fit needs {FEWEST}"
     centred = series / top - np.mean(series / top)
     spread = float(centred.std())
-    fitted = _maximise(centred / spread, laws[innovation], mean)
+    fitted = _maximise(centred / spread, laws[innovation], mean, seed)
     if isinstance(fitted, str):
         return fitted
     parameters = fitted.parameters
@@ -291,7 +294,7 @@ class _Maximised:
     """Paths under drawn parameters, shape (PATH_DRAWS, n)."""
 
 
-def _maximise(series: FloatArray, law: str, mean: str) -> _Maximised | str:
+def _maximise(series: FloatArray, law: str, mean: str, seed: int) -> _Maximised | str:
     """Return arch's fit, or why there is none."""
     from arch import arch_model
 
@@ -321,11 +324,11 @@ def _maximise(series: FloatArray, law: str, mean: str) -> _Maximised | str:
             path=path,
             log_likelihood=log_likelihood,
             residuals=np.asarray(result.resid, dtype=np.float64),
-            path_draws=_path_draws(model, result, path),
+            path_draws=_path_draws(model, result, path, seed),
         )
 
 
-def _path_draws(model: Any, result: Any, path: FloatArray) -> FloatArray:
+def _path_draws(model: Any, result: Any, path: FloatArray, seed: int) -> FloatArray:
     """Volatility paths under parameters the sample cannot tell from the fitted ones.
 
     Parameters are drawn from the normal law about the estimate with arch's robust covariance,
@@ -340,7 +343,7 @@ def _path_draws(model: Any, result: Any, path: FloatArray) -> FloatArray:
         root = np.linalg.cholesky(covariance)
     except (ValueError, np.linalg.LinAlgError):
         return np.tile(path, (PATH_DRAWS, 1))
-    rng = stream(0, "volatility draws")
+    rng = stream(seed, "volatility draws")
     out: list[FloatArray] = []
     for _ in range(20 * PATH_DRAWS):
         omega, alpha, beta = centre[spots] + root @ rng.standard_normal(3)

@@ -3,12 +3,12 @@
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 
 from scantling.core.record import FloatArray, read_only
-from scantling.diagnostics.volatility import Volatility
+from scantling.diagnostics.volatility import Volatility, kesten_index
 from scantling.law.splice import Splice
 
 FAMILIES = ("normal", "student-t", "spliced")
@@ -56,13 +56,13 @@ class ErrorLaw:
     """normal: sd of z; student-t: scale; spliced: 1."""
     df: float = math.inf
     """Degrees of freedom of a student-t; inf otherwise."""
-    splice: Splice | None = None
+    splice: Splice | None = field(default=None, repr=False)
     """Body and tails of a spliced law."""
-    volatility: Volatility | None = None
+    volatility: Volatility | None = field(default=None, repr=False)
     """Fitted volatility; None: constant."""
     fit: Fit = Fit(distance=None, p_value=None)
     """How well it fits; empty for a stated law."""
-    spread: ShapeSpread | None = None
+    spread: ShapeSpread | None = field(default=None, repr=False)
     """Uncertainty of the shape, from which `parameter_draws` draws; None: stated exactly."""
 
     @property
@@ -103,13 +103,21 @@ class ErrorLaw:
 
     @property
     def tail_index(self) -> float:
-        """Tail index of the errors, the volatility's share included."""
-        own = math.inf
-        if self.family == "student-t":
-            own = self.df
-        elif self.family == "spliced" and self.splice is not None and self.splice.gamma > 0:
-            own = 1 / self.splice.gamma
-        return own if self.volatility is None else min(own, self.volatility.tail_index)
+        """Tail index of the errors, the volatility's share included.
+
+        Under volatility the root of the Kesten equation for the law's own innovations; of a
+        spliced law, whose tails have no closed moments, that for the sample's, never above the
+        innovations' own.
+        """
+        if self.family == "spliced" and self.splice is not None:
+            own = 1 / self.splice.gamma if self.splice.gamma > 0 else math.inf
+            return own if self.volatility is None else min(own, self.volatility.tail_index)
+        path = self.volatility
+        if path is None:
+            return self.df
+        if self.family == "normal":
+            return kesten_index(path.alpha, path.beta)
+        return self.df if self.df <= 2 else kesten_index(path.alpha, path.beta, moment_of=self.df)
 
     def innovations(self, size: int | tuple[int, ...], rng: np.random.Generator) -> FloatArray:
         """Independent draws of z."""
@@ -194,13 +202,14 @@ class ErrorLaw:
         spread = self.spread
         picks = rng.choice(spread.gammas.size, size=count, p=spread.weights)
         shifts = np.exp(spread.log_scale_error * rng.standard_normal(count))
+        paths = np.empty((0, 0)) if self.volatility is None else self.volatility.path_draws
+        moves = rng.integers(max(1, len(paths)), size=count)
         laws = []
-        for number, (pick, shift) in enumerate(zip(picks, shifts, strict=True)):
+        for pick, shift, move in zip(picks, shifts, moves, strict=True):
             gamma, scale = float(spread.gammas[pick]), float(spread.scales[pick]) * float(shift)
             path = self.volatility
             if path is not None:
-                moved = path.path_draws[number % len(path.path_draws)]
-                path = replace(path, path=read_only(moved))
+                path = replace(path, path=read_only(paths[move]))
             if self.splice is not None:
                 tails = replace(
                     self.splice,

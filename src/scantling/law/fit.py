@@ -25,6 +25,7 @@ from scantling.law.goodness import bootstrap_fit_test, bootstrap_splice_test
 from scantling.law.splice import enough_for_splice, fit_splice
 from scantling.law.student import fit_student, profile
 
+Z90 = 1.6448536269514722
 REJECT_LEVEL = 0.05
 TIE_UNITS = 2.0
 """Criteria this close are a tie, and the heavier law is taken."""
@@ -55,13 +56,11 @@ def student_spread(values: FloatArray) -> ShapeSpread:
 
 
 def spliced_spread(tail: TailIndex, n: int) -> ShapeSpread:
-    """Weights over the shape of spliced tails: normal about the estimate, bias included.
-
-    The bias of the estimator is treated as uniform within its bound 0.06, hence 0.06/sqrt(3).
-    """
-    error = math.hypot(tail.gamma_error, 0.06 / math.sqrt(3))
-    gammas = np.linspace(max(0.0, tail.gamma - 3 * error), max(0.02, tail.gamma + 3 * error), 61)
-    weight = np.exp(-0.5 * ((gammas - tail.gamma) / error) ** 2)
+    """Weights over the shape of spliced tails: normal, with the tail index's interval as theirs."""
+    top, bottom = 1 / tail.low, 1 / tail.high
+    centre, error = (top + bottom) / 2, max((top - bottom) / 2 / Z90, 1e-3)
+    gammas = np.linspace(max(0.0, centre - 3 * error), max(0.02, centre + 3 * error), 61)
+    weight = np.exp(-0.5 * ((gammas - centre) / error) ** 2)
     return ShapeSpread(
         gammas=read_only(gammas),
         weights=read_only(weight / weight.sum()),
@@ -96,8 +95,9 @@ def fit_innovations(
         distance, p_value = bootstrap_fit_test(values, chosen, gamma, seed=seed)
         fit = replace(fit, distance=distance, p_value=p_value)
         rejected = p_value <= REJECT_LEVEL
-        if family or not (rejected and enough_for_splice(n)):
-            note = f"the {chosen} law is rejected and {n} rows are too few to splice tails"
+        tail, why = _tail_or_reason(values, tail, seed)
+        if family or not (rejected and tail):
+            note = f"the {chosen} law is rejected and {why}"
             if chosen == "normal":
                 scale, df = float(np.sqrt((values**2).mean())), math.inf
             else:
@@ -109,13 +109,28 @@ def fit_innovations(
         fit = replace(
             fit, note=f"the {chosen} law is rejected (p = {p_value:.3f}), so tails are spliced"
         )
-    tail = tail or tail_index(values, seed=seed)
+    if tail is None:
+        tail = tail_index(values, seed=seed)
     splice = fit_splice(values, tail.gamma)
     distance, p_value = bootstrap_splice_test(values, splice, seed=seed)
     return ErrorLaw(
         family="spliced", scale=1.0, splice=splice, spread=spliced_spread(tail, n),
         fit=replace(fit, distance=distance, p_value=p_value),
     )  # fmt: skip
+
+
+def _tail_or_reason(
+    values: FloatArray, tail: TailIndex | None, seed: int
+) -> tuple[TailIndex | None, str]:
+    """The tail index a spliced law needs, or why there can be no such law."""
+    if not enough_for_splice(values.size):
+        return None, f"{values.size} rows are too few to splice tails"
+    if tail is not None:
+        return tail, ""
+    try:
+        return tail_index(values, seed=seed), ""
+    except InputError as reason:
+        return None, f"tails cannot be spliced: {str(reason).removeprefix('values: ')}"
 
 
 def error_law(

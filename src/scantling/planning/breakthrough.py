@@ -7,12 +7,13 @@ from dataclasses import dataclass
 import numpy as np
 
 from scantling.core.record import FloatArray, read_only
-from scantling.core.streams import Mapper, blocks, stream
+from scantling.core.streams import MEMORY_BOUND, Mapper, blocks, stream
 from scantling.law.families import ErrorLaw
-from scantling.planning.case import Case, column_grid
+from scantling.planning.case import LAW_DRAWS, Case, column_grid
 from scantling.planning.limit import Limit, band, make_limit
 from scantling.simulation.scores import (
     Passers,
+    Ranked,
     centre,
     column_shares,
     first_above,
@@ -33,6 +34,11 @@ CELLS = 60_000_000
 """Rows times columns times draws under one law up to which more draws are taken than asked:
 they cost little and the risk is a small probability."""
 MOST_TIMES = 10
+FEWEST_DRAWS = 50
+PASSING_SHARE = 0.05
+"""Share of ratios above L(1), rounded up: 0.03 under normal errors."""
+MANY_COLUMNS = 50
+"""From here on the largest ratio's quantiles lie above L(1), and less has to be kept."""
 QUANTILE_FLOOR = 1.4
 """Ratios kept where quantiles are wanted; single columns' 95 % points lie near 1.96."""
 
@@ -45,6 +51,8 @@ class ScoreSample:
     """Ratios above the floor."""
     loadings: FloatArray
     """Typical (median over draws) loading: shape (1,) equal, (P,) self-normalised."""
+    typical_sd: float | None = None
+    """Median over draws of the errors' root mean square; None: take the law's sd."""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -96,12 +104,12 @@ def sample_scores(
     units = [(k, b, stop - start) for k in range(len(laws))
              for b, (start, stop) in enumerate(blocks(draws, BLOCK))]  # fmt: skip
 
-    def one(unit: tuple[int, int, int]) -> tuple[Passers, FloatArray]:
+    def one(unit: tuple[int, int, int]) -> tuple[Passers, FloatArray, FloatArray]:
         k, block, size = unit
         rng = stream(case.seed, purpose, k, block)
         errors = centre(laws[k].draw_given_path(case.rows, size, rng))
         ratios, loadings = score_ratios(case.X, errors, case.rule, squares)
-        return passers(ratios, floor), loadings
+        return passers(ratios, floor), loadings, np.sqrt((errors**2).mean(axis=0))
 
     done = mapper(one, units)
     out = []
@@ -113,25 +121,56 @@ def sample_scores(
             ScoreSample(
                 found=join([part[0] for part in mine]),
                 loadings=read_only(np.median(loadings, axis=1)),
+                typical_sd=float(np.median(np.concatenate([part[2] for part in mine]))),
             )
         )
     return tuple(out)
 
 
 def score_draws(case: Case) -> tuple[int, int]:
-    """Draws of errors under the fitted law and its twin, and under each drawn law."""
+    """Draws of errors under the fitted law and its twin, and under each drawn law.
+
+    Of very many columns fewer draws are taken under each drawn law, so that the ratios kept
+    stay within the memory bound.
+    """
     affordable = min(CELLS // (case.rows * case.columns), MOST_TIMES * case.replicates)
-    return (
-        max(case.replicates, affordable),
-        max(min(case.replicates, DRAWS_PER_LAW), min(affordable, 2 * case.replicates)),
-    )
+    per_law = max(min(case.replicates, DRAWS_PER_LAW), min(affordable, 2 * case.replicates))
+    kept = MEMORY_BOUND // 2 // int(PASSING_SHARE * 16 * case.columns * LAW_DRAWS + 1)
+    return max(case.replicates, affordable), max(FEWEST_DRAWS, min(per_law, kept))
+
+
+def steadied(curves: FloatArray, chance: FloatArray) -> FloatArray:
+    """Risk curves (B, P) under drawn laws, freed of most of their simulation error.
+
+    Each is drawn towards their mean by the share of their variance that chance explains: the
+    usual random-effects predictor. `chance` (P,) is the simulation variance of one curve.
+    """
+    mean = curves.mean(axis=0)
+    share = np.clip(1 - chance / np.maximum(curves.var(axis=0), 1e-300), 0, 1)
+    return np.asarray(mean + share * (curves - mean))
+
+
+def simulation_variance(found: Passers, risk: float, grid: np.ndarray) -> FloatArray:
+    """Variance that one draw brings to the risk at every p, shape (P,).
+
+    Computed on the grid and interpolated in log p; at small p it is far below risk (1 - risk),
+    because a draw's risk is averaged over which columns are taken.
+    """
+    errors = [risk_at(found, int(p), float(penalty_level(int(p), risk)))[1] for p in grid]
+    p = np.arange(1, found.columns + 1)
+    return np.asarray(found.draws * np.interp(np.log(p), np.log(grid), errors) ** 2)
 
 
 def curve_points(curve: FloatArray, many: FloatArray, grid: np.ndarray) -> tuple[CurvePoint, ...]:
-    """The risk curve (P,) on a grid of p, its band from curves under drawn laws (B, P)."""
+    """The risk curve (P,) on a grid of p, its band from curves under drawn laws (B, P).
+
+    A band contains its point.
+    """
     return tuple(
-        CurvePoint(p=int(p), risk=float(curve[p - 1]), low=low, high=high)
-        for p, (low, high) in zip(grid, map(band, many[:, grid - 1].T), strict=True)
+        CurvePoint(p=int(p), risk=risk, low=min(low, risk), high=max(high, risk))
+        for p, risk, (low, high) in zip(
+            grid, map(float, curve[grid - 1]), map(band, many[:, grid - 1].T), strict=True
+        )
     )
 
 
@@ -148,7 +187,7 @@ def break_through(case: Case, mapper: Mapper, *, bands: bool = True) -> BreakThr
     """
     risk = case.target.risk
     floor = float(penalty_level(1, risk))
-    low_floor = min(floor, QUANTILE_FLOOR)
+    low_floor = floor if case.columns >= MANY_COLUMNS else min(floor, QUANTILE_FLOOR)
     draws, draws_per_law = score_draws(case)
     fitted, twin = (
         sample_scores(case, (law,), draws, low_floor, purpose, mapper)[0]
@@ -162,16 +201,24 @@ def break_through(case: Case, mapper: Mapper, *, bands: bool = True) -> BreakThr
         drawn = sample_scores(
             case, case.law_draws, draws_per_law, floor, "scores, drawn laws", mapper
         )
+    grid = column_grid(case.columns)
     curve = risk_curves(fitted.found, risk)[0]
-    many = [risk_curves(sample.found, risk)[0] for sample in drawn] or [curve]
+    many = curve[None]
+    if drawn:
+        spread = simulation_variance(fitted.found, risk, grid)
+        curves = np.array([risk_curves(sample.found, risk)[0] for sample in drawn])
+        many = steadied(curves, spread / draws_per_law)
+        # The point's own simulation error belongs to the band.
+        chance = stream(case.seed, "risk error").standard_normal((len(drawn), 1))
+        many = np.clip(many + chance * np.sqrt(spread / draws), 0, 1)
     limits = [first_above(each, risk) for each in many]
     ratio = _penalty_ratio(case, fitted, twin)
-    seen = join([sample.found for sample in drawn]) if drawn else fitted.found
-    shares = column_shares(seen, float(penalty_level(case.columns, risk)))
-    order = np.argsort(-shares, kind="stable")[:50]
+    level = float(penalty_level(case.columns, risk))
+    shares = np.mean([column_shares(s.found, level) for s in drawn or (fitted,)], axis=0)
+    order = np.argsort(-shares, kind="stable")
     return BreakThrough(
         noise=make_limit(first_above(curve, risk), limits, case.columns, mode="conditional"),
-        curve=curve_points(curve, np.array(many), column_grid(case.columns)),
+        curve=curve_points(curve, many, grid),
         penalty_ratio=ratio,
         equivalent_rows=None if ratio is None else int(case.rows / max(1.0, ratio) ** 2),
         worst_columns=tuple(int(j) for j in order if shares[j] > 0),
@@ -181,11 +228,9 @@ def break_through(case: Case, mapper: Mapper, *, bands: bool = True) -> BreakThr
     )
 
 
-def needed_penalty(found: Passers, p: int, risk: float) -> float:
+def needed_penalty(found: Passers | Ranked, p: int, risk: float) -> float:
     """lambda*(p): the plug-in level, or the simulated quantile where noise passes it."""
     level = float(penalty_level(p, risk))
-    if risk_at(found, p, level)[0] <= risk:
-        return level
     quantile = largest_quantile(found, p, 1 - risk)
     return level if quantile is None else max(level, quantile)
 
@@ -193,9 +238,11 @@ def needed_penalty(found: Passers, p: int, risk: float) -> float:
 def _penalty_ratio(case: Case, fitted: ScoreSample, twin: ScoreSample) -> float | None:
     p, risk = case.columns, case.target.risk
     if case.rule == "self-normalised":
+        # Loadings over the typical error, so that a law with rare huge errors is not taken for
+        # a quiet one.
         needed = [
-            needed_penalty(sample.found, p, risk) * float(np.median(sample.loadings))
-            for sample in (fitted, twin)
+            needed_penalty(s.found, p, risk) * float(np.median(s.loadings)) / (s.typical_sd or 1.0)
+            for s in (fitted, twin)
         ]
         return needed[0] / needed[1] if needed[1] > 0 else None
     quantiles = [largest_quantile(sample.found, p, 1 - risk) for sample in (fitted, twin)]

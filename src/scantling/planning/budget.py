@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 
 from scantling.core.estimate import Estimate
 from scantling.planning.breakthrough import BreakThrough, CurvePoint
@@ -56,7 +56,7 @@ class Budget:
     """Break-through risk at the columns asked for."""
     draws: int
     """Draws of errors behind its point value."""
-    curve: tuple[CurvePoint, ...]
+    curve: tuple[CurvePoint, ...] = field(repr=False)
     """Break-through risk over p."""
     penalty_ratio: float | None
     """Needed penalty over the Gaussian twin's; None if no quantile was found."""
@@ -76,6 +76,20 @@ class Budget:
     """Those shares."""
 
 
+WITHIN = "within budget"
+BORDERLINE = "borderline"
+OVER = "over budget"
+
+
+def standing(allowed: Allowed, asked: int) -> str:
+    """within budget if asked lies at or below the band, over budget above it, else borderline."""
+    if allowed.low is not None and asked <= allowed.low:
+        return WITHIN
+    if allowed.high is not None and asked > allowed.high:
+        return OVER
+    return BORDERLINE
+
+
 def combine(limits: dict[str, Limit], most: int) -> tuple[Allowed, str | None]:
     """Smallest of the limits with its band, and the name of the one that attains it.
 
@@ -85,7 +99,7 @@ def combine(limits: dict[str, Limit], most: int) -> tuple[Allowed, str | None]:
     for name, limit in limits.items():
         if limit.columns is None:
             return Allowed(columns=None, low=None, high=None, note=f"{name}: {limit.note}"), None
-    draws = [min(values) for values in zip(*(x.draws for x in limits.values()), strict=False)]
+    draws = [min(values) for values in zip(*(x.draws for x in limits.values()), strict=True)]
     low, high = band(draws)
     columns = min(limit.columns for limit in limits.values() if limit.columns is not None)
     reached = {name: limit for name, limit in limits.items() if limit.reached}

@@ -58,14 +58,9 @@ def ceiling(diagnosis: Diagnosis, rows: int, rule: str) -> Ceiling:
     known = np.flatnonzero(heavy & tails.assessed)
     scores: Ends | None = None
     if known.size:
-        gamma_low, gamma_high = tails.intervals()
         pick = known[np.argsort(tails.gamma[known], kind="stable")]
         j = int(pick[(pick.size - 1) // 2])
-        scores = (
-            index_from_gamma(float(tails.gamma[j])),
-            1 / float(gamma_high[j]) if gamma_high[j] > 0 else math.inf,
-            1 / float(gamma_low[j]) if gamma_low[j] > 0 else math.inf,
-        )
+        scores = (index_from_gamma(float(tails.gamma[j])), *tails.interval(j))
     return rate_by_regime(
         rows=rows,
         rule=rule,
@@ -81,10 +76,9 @@ def rate_by_regime(
     """Rate by the regime that applies.
 
     Self-normalised loadings: exp(n^(1/3)), Belloni et al. (2012), Econometrica 80. Equal
-    loadings: a share h of heavy columns may number n^(q/2-1), q of the scores (Fuk et al.
-    (1971), Theory of Probability and its Applications 16), so p is at most that over h; light
-    columns exp(n^(1-2/q)), q of the errors (truncation and Bennett (1962), Journal of the
-    American Statistical Association 57).
+    loadings, any column heavy or sparse: n^(q/2-1), q of the scores (Fuk et al. (1971), Theory
+    of Probability and its Applications 16); all light: exp(n^(1-2/q)), q of the errors
+    (truncation and Bennett (1962), Journal of the American Statistical Association 57).
 
     Parameters
     ----------
@@ -104,24 +98,22 @@ def rate_by_regime(
             capped=columns >= MOST,
             regime="squared loss, self-normalised loadings: exp(n^(1/3))",
         )
-    rates: list[list[float]] = []
-    names = []
     if heavy_share > 0:
         if scores is None:
             return _unknown("heavy columns, whose scores' tail index is unknown")
-        rates.append([heavy_rate(rows, q) - math.log(heavy_share) for q in scores])
-        names.append(f"heavy columns ({heavy_share:.0%}) n^(q/2-1), q of the scores")
-    if heavy_share < 1:
+        rates = [heavy_rate(rows, q) for q in scores]
+        regime = f"heavy columns ({heavy_share:.0%}): n^(q/2-1), q of the median heavy score"
+    else:
         if errors is None:
             return _unknown("light columns; the errors' tail index is unknown")
-        rates.append([light_rate(rows, q) for q in errors])
-        names.append("light columns exp(n^(1-2/q)), q of the errors")
-    point, low, high = (_whole(min(ends)) for ends in zip(*rates, strict=True))
+        rates = [light_rate(rows, q) for q in errors]
+        regime = "light columns: exp(n^(1-2/q)), q of the errors"
+    point, low, high = (_whole(rate) for rate in rates)
     return Ceiling(
         columns=point,
         low=low,
         high=None if high >= MOST else high,
-        regime="squared loss, equal loadings: " + "; ".join(names),
+        regime=f"squared loss, equal loadings, {regime}",
         capped=point >= MOST,
     )
 

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 
 import numpy as np
 
@@ -28,7 +28,7 @@ class Limit:
     """Whether the criterion fails within the columns examined."""
     note: str = ""
     """'at least' if the limit was not reached; the reason if it could not be computed."""
-    draws: tuple[float, ...] = ()
+    draws: tuple[float, ...] = field(default=(), repr=False)
     """The limit under each draw of the law; inf where it was not reached."""
 
 

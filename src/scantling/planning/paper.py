@@ -30,6 +30,7 @@ from scantling.simulation.scores import (
     largest_quantile,
     passers,
     penalty_level,
+    ranked,
     risk_curves,
     score_ratios,
 )
@@ -260,8 +261,10 @@ def _signal(
     response_sd = errors.sd / math.sqrt(1 - explained)
     added = float(norm.ppf(power)) * errors.sd
 
+    table = ranked(found)
+
     def effect(p: int) -> float:
-        needed = needed_penalty(found, p, risk)
+        needed = needed_penalty(table, p, risk)
         return (needed * loading + added) / (math.sqrt(rows) * response_sd)
 
     detectable = effect(columns)
@@ -275,6 +278,6 @@ def _signal(
     needed = math.ceil(max(rows * (detectable / smallest_effect) ** 2, 4 * level**2))
     note = ""
     if needed > MOST_TIMES_ROWS * rows:
-        note = f"up to {MOST_TIMES_ROWS} times the present rows do not lift the limit"
+        note = f"not within {MOST_TIMES_ROWS} times the present rows, at the present penalty"
     limit = make_limit(point, [point] * LAW_DRAWS, columns, mode=MODE)
     return limit, detectable, None if note else needed, note

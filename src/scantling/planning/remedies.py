@@ -18,8 +18,9 @@ from scantling.diagnostics.battery import Diagnosis
 from scantling.diagnostics.residuals import Residuals
 from scantling.errors import InputError
 from scantling.planning.breakthrough import BreakThrough, break_through
-from scantling.planning.budget import Allowed, combine
+from scantling.planning.budget import Allowed, combine, standing
 from scantling.planning.case import Case, draw_laws
+from scantling.planning.limit import Limit
 from scantling.planning.signal import signal
 from scantling.planning.stress import stress
 from scantling.simulation.scores import (
@@ -43,14 +44,20 @@ class Remedy:
     """The change, in words."""
     columns: int
     """Columns of the changed design."""
+    answer: str
+    """within budget | borderline | over budget: the changed design by its own columns."""
     allowed: Allowed
     """Of the changed design."""
     binding: str | None
     """Limit that binds the changed design; None if none is reached."""
     risk_at_design: Estimate
     """At all of the changed design's columns."""
+    draws: int
+    """Draws of errors behind its point value."""
     refitted: bool
     """Whether selection was simulated; if not, `allowed` is of noise and signal alone."""
+    dropped: tuple[int, ...]
+    """Columns of the present design that it drops by name, worst first."""
     price: str
     """What the change costs, in words."""
 
@@ -65,6 +72,8 @@ class Change:
     """The changed design, ready for simulation."""
     price: str
     """What it costs, in words."""
+    dropped: tuple[int, ...] = ()
+    """Columns dropped by name, worst first."""
 
 
 def changes(
@@ -90,7 +99,7 @@ def _expansions(design: Design, table: Table, case: Case) -> Iterator[Change]:
     if spec.transform != "normal-scores":
         other.append(
             (
-                "normal scores of the raw columns",
+                "normal scores of columns",
                 replace(spec, transform="normal-scores"),
                 "effects are read per normal score of a column, not per unit",
             )
@@ -118,6 +127,7 @@ def _fewer_columns(diagnosis: Diagnosis, case: Case, noise: BreakThrough) -> Ite
             name=f"drop the {_columns(len(broken))} whose scores lack a variance",
             case=_with_columns(case, kept),
             price="these columns are not searched",
+            dropped=broken,
         )
     if noise.noise.reached:
         dropped = worst_to_drop(case, noise)
@@ -129,6 +139,7 @@ def _fewer_columns(diagnosis: Diagnosis, case: Case, noise: BreakThrough) -> Ite
                 else "drop the worst column",
                 case=_with_columns(case, kept),
                 price="the columns that break through most are not searched",
+                dropped=tuple(int(j) for j in dropped),
             )
 
 
@@ -200,43 +211,31 @@ def standardise(X: FloatArray) -> FloatArray:
 
 def remedies(
     design: Design, table: Table, residuals: Residuals, diagnosis: Diagnosis, case: Case,
-    noise: BreakThrough, mapper: Mapper,
+    noise: BreakThrough, stability: Limit, mapper: Mapper,
 ) -> tuple[Remedy, ...]:  # fmt: skip
-    """All remedies, best first: by allowed columns, then by lower risk.
+    """All remedies, best first: those whose selection was simulated, by allowed columns.
 
-    Noise and signal are recomputed for all; selection for the best three.
+    Noise and signal are recomputed for all; selection for the best three, and where selection
+    is what fails for more of them, until three pass.
     """
     computed = [
         (change, *_limits(change.case, mapper))
         for change in changes(design, table, residuals, diagnosis, case, noise)
     ]
 
-    def rank(item: tuple[Change, dict, BreakThrough]) -> tuple[float, float]:
+    def rank(item: tuple[Change, dict[str, Limit], BreakThrough]) -> tuple[float, float]:
         allowed, _ = combine(item[1], item[0].case.columns)
         return -(allowed.columns or 0), item[2].curve[-1].risk
 
-    out = []
+    out: list[Remedy] = []
     for place, (change, limits, again) in enumerate(sorted(computed, key=rank)):
-        refitted = place < REFITTED and math.isfinite(change.case.law.sd)
+        passing = sum(remedy.refitted and bool(remedy.allowed.columns) for remedy in out)
+        wanted = place < REFITTED or (stability.reached and passing < REFITTED)
+        refitted = wanted and math.isfinite(change.case.law.sd)
         if refitted:
-            limits = limits | {
-                "stability": stress(
-                    change.case, mapper, twins=False, points=STRESS_POINTS
-                ).stability
-            }
-        allowed, binding = combine(limits, change.case.columns)
-        last = again.curve[-1]
-        out.append(
-            Remedy(
-                name=change.name,
-                columns=change.case.columns,
-                allowed=allowed,
-                binding=binding,
-                risk_at_design=Estimate(value=last.risk, low=last.low, high=last.high),
-                refitted=refitted,
-                price=change.price,
-            )
-        )
+            again_fitted = stress(change.case, mapper, twins=False, points=STRESS_POINTS)
+            limits = limits | {"stability": again_fitted.stability}
+        out.append(_remedy(change, limits, again, refitted))
     return tuple(
         sorted(
             out,
@@ -245,7 +244,26 @@ def remedies(
     )
 
 
-def _limits(case: Case, mapper: Mapper) -> tuple[dict, BreakThrough]:
+def _remedy(
+    change: Change, limits: dict[str, Limit], noise: BreakThrough, refitted: bool
+) -> Remedy:
+    allowed, binding = combine(limits, change.case.columns)
+    last = noise.curve[-1]
+    return Remedy(
+        name=change.name,
+        columns=change.case.columns,
+        answer=standing(allowed, change.case.columns),
+        allowed=allowed,
+        binding=binding,
+        risk_at_design=Estimate(value=last.risk, low=last.low, high=last.high),
+        draws=noise.fitted.found.draws,
+        refitted=refitted,
+        dropped=change.dropped,
+        price=change.price,
+    )
+
+
+def _limits(case: Case, mapper: Mapper) -> tuple[dict[str, Limit], BreakThrough]:
     noise = break_through(case, mapper)
     found = signal(case, noise.fitted, noise.drawn)
     return {"noise": noise.noise, "signal": found.limit}, noise

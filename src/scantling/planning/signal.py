@@ -13,7 +13,7 @@ from scantling.law.families import ErrorLaw
 from scantling.planning.breakthrough import ScoreSample, needed_penalty
 from scantling.planning.case import Case, column_grid
 from scantling.planning.limit import Limit, last_below, make_limit, missing_limit
-from scantling.simulation.scores import penalty_level
+from scantling.simulation.scores import Ranked, penalty_level, ranked
 
 MOST_TIMES_ROWS = 64
 """Rows needed are searched up to so many times the present rows."""
@@ -35,21 +35,27 @@ class Signal:
     """Why rows_needed is None; empty otherwise."""
 
 
-def score_deviation(X: FloatArray, law: ErrorLaw) -> FloatArray:
-    """sd of S_j under the law: sqrt(mean_i x_ij^2 sigma_i^2), shape (P,)."""
+def score_deviation(X: FloatArray, law: ErrorLaw, typical_sd: float | None = None) -> FloatArray:
+    """sd of S_j under the law: sd(e) sqrt(mean_i x_ij^2 sigma_i^2 / mean_i sigma_i^2), shape (P,).
+
+    With `typical_sd`, the errors' typical root mean square in samples of this size takes the
+    place of sd(e): near two moments the latter is ruled by errors that hardly any sample has.
+    """
+    sd = law.sd if typical_sd is None or not math.isfinite(law.sd) else typical_sd
     if law.volatility is None:
-        return np.full(X.shape[1], law.sd)
-    path = law.volatility.path
-    return np.asarray(
-        np.sqrt(law.innovation_variance * np.einsum("ij,ij,i->j", X, X, path**2) / path.size)
-    )
+        return np.full(X.shape[1], sd)
+    square = law.volatility.path**2
+    return np.asarray(sd * np.sqrt(np.einsum("ij,ij,i->j", X, X, square / square.mean()) / len(X)))
 
 
 def detectable_effects(
-    case: Case, sample: ScoreSample, deviation: FloatArray, p: int
+    case: Case, sample: ScoreSample, deviation: FloatArray, p: int, table: Ranked | None = None
 ) -> FloatArray:
-    """b_j(p) = (lambda*(p) v_j + Phi^-1(power) tau_j) / (sqrt(n) sd(y)), shape (P,)."""
-    needed = needed_penalty(sample.found, p, case.target.risk)
+    """b_j(p) = (lambda*(p) v_j + Phi^-1(power) tau_j) / (sqrt(n) sd(y)), shape (P,).
+
+    `table` is the sample's passers, ranked once where many p are asked for.
+    """
+    needed = needed_penalty(table or sample.found, p, case.target.risk)
     power = float(norm.ppf(case.target.power))
     return np.asarray(
         (needed * sample.loadings + power * deviation) / (math.sqrt(case.rows) * case.response_sd)
@@ -58,12 +64,13 @@ def detectable_effects(
 
 def signal_limit_of(case: Case, law: ErrorLaw, sample: ScoreSample) -> float:
     """Largest p whose median detectable effect is small enough; inf if all are, 0 if none."""
-    deviation = score_deviation(case.X, law)
+    deviation = score_deviation(case.X, law, sample.typical_sd)
     if not np.isfinite(deviation).all():
         return 0.0
+    table = ranked(sample.found)
 
     def detects(p: int) -> bool:
-        effects = detectable_effects(case, sample, deviation, p)
+        effects = detectable_effects(case, sample, deviation, p, table)
         return float(np.median(effects)) <= case.target.smallest_effect
 
     if detects(case.columns):
@@ -83,7 +90,7 @@ def signal(case: Case, fitted: ScoreSample, drawn: tuple[ScoreSample, ...]) -> S
     Rows needed keep the penalty level and loadings of the present sample; only the signal
     limit is covered.
     """
-    deviation = score_deviation(case.X, case.law)
+    deviation = score_deviation(case.X, case.law, fitted.typical_sd)
     if not np.isfinite(deviation).all():
         reason = "the fitted error law has no variance"
         return Signal(
@@ -101,7 +108,7 @@ def signal(case: Case, fitted: ScoreSample, drawn: tuple[ScoreSample, ...]) -> S
     rows = math.ceil(max(case.rows * (median / case.target.smallest_effect) ** 2, 4 * level**2))
     note = ""
     if rows > MOST_TIMES_ROWS * case.rows:
-        note = f"up to {MOST_TIMES_ROWS} times the present rows do not lift the limit"
+        note = f"not within {MOST_TIMES_ROWS} times the present rows, at the present penalty"
     return Signal(
         limit=make_limit(point, draws, case.columns, mode="conditional"),
         detectable=median,

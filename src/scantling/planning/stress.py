@@ -23,7 +23,7 @@ from scantling.simulation.selection import (
 
 SUPPORTS = 5
 """Sets of relevant columns the replicates are shared among."""
-GRID_POINTS = 6
+GRID_POINTS = 7
 TOLERANCE = 1e-5
 """Duality gap of the refits, relative; selections no longer change below it."""
 REFITS_PER_LAW = 20
@@ -55,6 +55,8 @@ class StressRun:
     """Share of refits that select exactly the relevant columns."""
     mean_size: float
     """Columns selected on average."""
+    errors: tuple[float, float, float]
+    """Monte Carlo standard errors of stability, power and false share."""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -102,7 +104,10 @@ def refit(
     X = case.X[:, chosen.order[:p]]
     effect = case.target.smallest_effect * case.response_sd
     mean = X[:, :relevant] @ (effect * chosen.signs[:relevant])
-    errors = centre(law.draw_given_path(case.rows, size, rng)) * (case.residual_sd / law.sd)
+    errors = centre(law.draw_given_path(case.rows, size, rng))
+    # The typical draw is as loud as the residuals. The law's own sd would not do: near two
+    # moments it is ruled by errors that hardly any sample has.
+    errors *= case.residual_sd / np.median(np.sqrt((errors**2).mean(axis=0)))
     level = float(penalty_level(p, case.target.risk)) / math.sqrt(case.rows)
     if case.rule == "self-normalised":
         weights = level * np.sqrt((X**2).T @ errors**2 / case.rows)
@@ -115,9 +120,13 @@ def refit(
 
 
 def grid_of(case: Case, points: int = GRID_POINTS) -> list[int]:
-    """Numbers of columns the refits are run at: from twice the relevant ones to all."""
-    fewest = min(case.columns, max(2 * case.target.relevant, case.target.relevant + 1))
-    return [int(p) for p in column_grid(case.columns, fewest=fewest, points=points)]
+    """Numbers of columns the refits are run at: from the relevant ones alone to all.
+
+    Neighbours differ by at least a fifth.
+    """
+    fewest = min(case.columns, case.target.relevant)
+    steps = int(math.log(case.columns / fewest) / math.log(1.2)) + 1
+    return [int(p) for p in column_grid(case.columns, fewest=fewest, points=min(points, steps + 1))]
 
 
 def run_law(
@@ -152,7 +161,10 @@ def _run(case: Case, p: int, name: str, summary: SelectionSummary) -> StressRun:
         false_share=_estimate(summary, "false_share"),
         exact=summary.exact,
         mean_size=summary.mean_size,
-    )
+        errors=(
+            summary.stability_error or 0.0, summary.power_error, summary.false_share_error,
+        ),
+    )  # fmt: skip
 
 
 def _estimate(summary: SelectionSummary, name: str) -> Estimate:
@@ -213,9 +225,8 @@ def law_effects(case: Case, p: int, mapper: Mapper) -> FloatArray:
 
     def one(k: int) -> FloatArray:
         rng = stream(case.seed, "refits, drawn laws", k)
-        # A drawn law without variance cannot be scaled to the residual sd; it is judged below.
-        law = case.law_draws[k] if math.isfinite(case.law_draws[k].sd) else case.law
-        summary = refit(case, support_set(case, k % SUPPORTS), p, law, REFITS_PER_LAW, rng)
+        chosen = support_set(case, k % SUPPORTS)
+        summary = refit(case, chosen, p, case.law_draws[k], REFITS_PER_LAW, rng)
         return np.array(_criteria(summary))
 
     values = np.array(mapper(one, range(len(case.law_draws))))
@@ -224,10 +235,7 @@ def law_effects(case: Case, p: int, mapper: Mapper) -> FloatArray:
         values[groups == group] -= values[groups == group].mean(axis=0)
     values[:, 2] *= -1  # as margins: a larger false share is worse
     total = values.var(axis=0, ddof=SUPPORTS)
-    effects = values * _law_share(case, p, total)
-    # No column is selected reliably under errors without a variance.
-    effects[[not math.isfinite(law.sd) for law in case.law_draws]] = -1.0
-    return np.asarray(effects)
+    return np.asarray(values * _law_share(case, p, total))
 
 
 def _law_share(case: Case, p: int, total: FloatArray) -> FloatArray:
@@ -283,18 +291,13 @@ def _limit(
     """Limit with its band: the criteria's Monte Carlo error, and the drawn laws' effect."""
     margin = np.array([margins(case, run) for run in runs])
     point = limit_on_grid(grid, margin)
-    half = np.array(
-        [
-            [(e.high - e.low) / 2 / 1.645 for e in (run.stability, run.power, run.false_share)]
-            for run in runs
-        ]
-    )
+    error = np.array([run.errors for run in runs])
     effects = np.zeros((len(case.law_draws), 3))
     if drawn and case.law.spread is not None:
         near = grid[-1] if math.isinf(point) else min(grid, key=lambda p: abs(p - point))
         effects = law_effects(case, near, mapper)
     noise = stream(case.seed, "criteria error").standard_normal((len(case.law_draws), 3))
     draws = [
-        limit_on_grid(grid, margin + u + z * half) for u, z in zip(effects, noise, strict=True)
+        limit_on_grid(grid, margin + u + z * error) for u, z in zip(effects, noise, strict=True)
     ]
     return make_limit(point, draws, grid[-1], mode="conditional")

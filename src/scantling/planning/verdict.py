@@ -5,13 +5,10 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 from scantling.diagnostics.battery import Diagnosis
-from scantling.planning.budget import Budget
+from scantling.planning.budget import BORDERLINE, OVER, WITHIN, Budget, standing
 from scantling.planning.case import Case
 from scantling.planning.stress import Stress
 
-WITHIN = "within budget"
-BORDERLINE = "borderline"
-OVER = "over budget"
 NONE = "no budget"
 ANSWERS = (WITHIN, BORDERLINE, OVER, NONE)
 """From mildest to most severe."""
@@ -54,16 +51,11 @@ def verdict(case: Case, diagnosis: Diagnosis, budget: Budget, stress: Stress | N
     lack = variance_missing(diagnosis)
     if lack:
         return Verdict(answer=NONE, cover="none", reasons=(_sentence(lack),))
-    allowed = budget.allowed
-    tops = [allowed.high]
-    if allowed.columns is None:
-        tops = [budget.noise.high, budget.signal.high, budget.stability.high]
-    if allowed.low is not None and budget.asked <= allowed.low:
-        answer = WITHIN
-    elif any(top is not None and budget.asked > top for top in tops):
-        answer = OVER
-    else:
-        answer = BORDERLINE
+    answer = standing(budget.allowed, budget.asked)
+    if budget.allowed.columns is None:
+        tops = [limit.high for limit in (budget.noise, budget.signal, budget.stability)]
+        over = any(top is not None and budget.asked > top for top in tops)
+        answer = OVER if over else BORDERLINE
     rate = budget.ceiling.columns
     covered = rate is not None and budget.asked <= rate
     return Verdict(
@@ -128,7 +120,9 @@ def chance(value: float, draws: int) -> str:
 
 
 def _noise_reason(case: Case, budget: Budget) -> str:
-    risk = budget.risk_at_design
+    risk = chance(budget.risk_at_design.value, budget.draws)
+    if risk == f"{case.target.risk:.3f}":
+        risk = f"{budget.risk_at_design.value:.4f}"
     ratio = budget.penalty_ratio
     if ratio is not None and ratio > TAIL_COST:
         cause = f"{_sources(case)} ask for {ratio:.2f} times the penalty of normal errors"
@@ -138,7 +132,7 @@ def _noise_reason(case: Case, budget: Budget) -> str:
         cause = "normal errors would need about the same penalty"
     return (
         f"noise binds: at {_columns(budget.asked)} a noise column passes the penalty with"
-        f" probability {chance(risk.value, budget.draws)} ({case.target.risk:g} accepted);"
+        f" probability {risk} ({case.target.risk:g} accepted);"
         f" {cause}"
     )
 

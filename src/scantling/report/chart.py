@@ -45,7 +45,8 @@ def risk_chart(curve: Sequence[CurvePoint], accepted: float, width: int) -> list
         rows[height(risk)][x] = "*"
     lines = []
     for y in range(HEIGHT - 1, -1, -1):
-        label = f"{top * y / (HEIGHT - 1):.3f}"
+        # The row that stands for the accepted risk is labelled with it.
+        label = f"{accepted if y == height(accepted) else top * y / (HEIGHT - 1):.3f}"
         lines.append(f"  {label:>6} |" + "".join(rows[y]).rstrip())
     lines.append("  " + " " * 6 + " +" + "-" * span)
     ends = f"{curve[0].p:,}", f"{curve[-1].p:,} columns"

@@ -64,7 +64,7 @@ def document(report: Report) -> dict[str, Any]:
         "law": _law(report),
         "budget": _budget(report),
         "stress": [] if report.stress is None else [_run(run) for run in report.stress.runs],
-        "remedies": [_remedy(remedy) for remedy in report.remedies],
+        "remedies": [_remedy(remedy, report.read.names) for remedy in report.remedies],
         "verdict": {
             "answer": report.verdict.answer,
             "cover": report.verdict.cover,
@@ -82,6 +82,11 @@ def cautions(report: Report) -> tuple[str, ...]:
     spans: tuple[str, ...] = ()
     if report.read.rows_dropped and report.read.rows_lost:
         spans = ("Rows were dropped, so lags may span more than one step of time.",)
+    if report.read.rows_lost and report.design.data.time is None:
+        spans += ("There is no time column: lags follow the order of rows in the file.",)
+    relevant, asked = report.design.target.relevant, len(report.read.names)
+    if relevant > asked:
+        spans += (f"[target] relevant = {relevant} exceeds the {asked} columns: all are taken.",)
     assured = f"No columns are assured: {report.budget.assured.note}."
     return (*report.diagnosis.warnings, *spans, assured, *ALWAYS)
 
@@ -172,22 +177,23 @@ def _finding(finding: Finding) -> dict[str, Any]:
         "valid": finding.valid,
         "method": result.method,
         "needs_moment": result.needs_moment,
+        **({"lacks": finding.lacks} if finding.lacks else {}),
     }
 
 
 def _group(group: SeriesGroup, names: tuple[str, ...], weight: tuple[str, ...] | None) -> dict:
     tails = group.tails
-    low, high = tails.intervals()
     refused = dict(tails.refused)
     middle = tails.median_column()
 
     def tail(j: int) -> dict[str, Any]:
         if j in refused:
             return _unknown_tail(refused[j])
+        low, high = tails.interval(j)
         return {
             **noted("index", index_from_gamma(float(tails.gamma[j])), ABOVE),
-            **noted("low", 1 / float(high[j]) if high[j] > 0 else None, ABOVE),
-            **noted("high", 1 / float(low[j]) if low[j] > 0 else None, UNBOUNDED),
+            **noted("low", low, ABOVE),
+            **noted("high", high, UNBOUNDED),
             "finite": bool(tails.p_value[j] <= 0.05),
             "threshold_count": tails.threshold_count,
             "side": "both",
@@ -320,7 +326,7 @@ def _run(run: StressRun) -> dict[str, Any]:
     }
 
 
-def _remedy(remedy: Remedy) -> dict[str, Any]:
+def _remedy(remedy: Remedy, names: tuple[str, ...]) -> dict[str, Any]:
     allowed = remedy.allowed
     notes = [remedy.price]
     if not remedy.refitted:
@@ -333,6 +339,8 @@ def _remedy(remedy: Remedy) -> dict[str, Any]:
         **noted("low", allowed.low, allowed.note),
         **noted("high", allowed.high, _beyond(allowed)),
         "risk_at_design": estimate(remedy.risk_at_design),
+        "answer": remedy.answer,
+        **({"dropped": [names[j] for j in remedy.dropped]} if remedy.dropped else {}),
         "note": "; ".join(notes),
     }
 

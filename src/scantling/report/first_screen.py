@@ -5,7 +5,7 @@ from __future__ import annotations
 import textwrap
 
 from scantling.planning.remedies import Remedy
-from scantling.planning.verdict import NONE, WITHIN
+from scantling.planning.verdict import BORDERLINE, NONE, WITHIN
 from scantling.report.record import Report
 from scantling.report.wording import (
     LABEL,
@@ -26,9 +26,7 @@ def first_screen(report: Report, width: int) -> list[str]:
     """At most twelve lines: verdict, reason, columns, limits, rows, remedies."""
     title = shortened(report.design.title, width - len("scantling: "))
     lines = [f"scantling: {title}"]
-    lines += labelled(
-        "Verdict", f"{report.verdict.answer.upper()} (cover: {report.verdict.cover})", width
-    )
+    lines += labelled("Verdict", _verdict(report), width)
     lines += _reason(report, width)
     lines += labelled("Columns", _columns(report), width)
     lines += labelled("Limits", _limits(report), width)[:2]
@@ -45,6 +43,18 @@ def _reason(report: Report, width: int) -> list[str]:
     return labelled("Because", body, width)[:REASON_LINES]
 
 
+def _verdict(report: Report) -> str:
+    """The answer; what covers it is said where there is something to cover."""
+    answer = report.verdict.answer
+    covered = answer in (WITHIN, BORDERLINE)
+    return answer.upper() + (f" (cover: {report.verdict.cover})" if covered else "")
+
+
+def reason_is_cut(report: Report, width: int) -> bool:
+    """Whether the first screen shows the first reason only in part."""
+    return len(labelled("Because", report.verdict.reasons[0], width)) > REASON_LINES
+
+
 def _columns(report: Report) -> str:
     budget = report.budget
     asked = f"{budget.asked:,} asked for; "
@@ -55,6 +65,10 @@ def _columns(report: Report) -> str:
         return asked + "allowed: unknown"
     if allowed.note and allowed.low is not None and allowed.low >= budget.asked:
         return asked + "all of them allowed"
+    if allowed.columns == 0 and allowed.high == 0:
+        tried = 1 if budget.binding != "stability" or not report.stress else None
+        fewest = tried or (report.stress.runs[0].columns if report.stress else 1)
+        return asked + f"none allowed, {fewest:,} being the fewest tried"
     return asked + f"{columns(allowed)} allowed (90 % band {band(allowed, budget.asked)})"
 
 
@@ -79,9 +93,10 @@ def _rows(report: Report) -> str:
     if report.verdict.answer == NONE:
         return used
     if budget.equivalent_rows is not None and budget.equivalent_rows < 0.97 * budget.rows:
-        used += f", worth {budget.equivalent_rows:,} under normal errors"
+        lost = budget.rows - budget.equivalent_rows
+        used += f"; tails cost as much as losing {lost:,} of them"
     if budget.rows_needed is not None:
-        return f"{used}; the effects need {count(budget.rows_needed)}"
+        return f"{used}; effects need {count(budget.rows_needed)}"
     return f"{used}; rows needed unknown" + (f": {budget.rows_note}" if budget.rows_note else "")
 
 
@@ -97,14 +112,16 @@ def _remedies(report: Report, width: int, room: int) -> list[str]:
     lines = []
     for place, remedy in enumerate(found):
         label = "Remedies" if place == 0 else ""
-        text = shortened(f"{place + 1}. {remedy.name}: {outcome(remedy)}", width - LABEL)
+        end = f": {outcome(remedy)}"
+        name = shortened(f"{place + 1}. {remedy.name}", width - LABEL - len(end))
+        text = name + end
         lines.append(f"{label:<{LABEL}}{text}")
     return lines
 
 
 def helps(report: Report, remedy: Remedy) -> bool:
     """Whether a remedy allows more columns than the design does, or settles more of them."""
-    if report.verdict.answer == WITHIN:
+    if report.verdict.answer == WITHIN or not remedy.refitted:
         return False
     now, then = report.budget.allowed, remedy.allowed
     if report.verdict.answer == NONE:
@@ -113,13 +130,13 @@ def helps(report: Report, remedy: Remedy) -> bool:
 
 
 def outcome(remedy: Remedy) -> str:
-    """What a remedy allows, in a few words."""
+    """What a remedy makes of the design, in a few words."""
     allowed = remedy.allowed
     if allowed.columns is None:
         return "unknown"
-    if allowed.note and allowed.low is not None and allowed.low >= remedy.columns:
-        return f"all {remedy.columns:,} allowed"
-    words = f"{allowed.columns:,} of {remedy.columns:,}"
+    if remedy.answer == WITHIN:
+        return f"within, all {remedy.columns:,}"
+    words = f"{remedy.answer.split()[0]}, {allowed.columns:,} of {remedy.columns:,}"
     if allowed.low is not None and allowed.low < allowed.columns:
         words += f" (low end {allowed.low:,})"
     return words

@@ -6,8 +6,9 @@ from scantling.planning.remedies import Remedy
 from scantling.planning.verdict import chance
 from scantling.report.chart import risk_chart
 from scantling.report.document import cautions as all_cautions
+from scantling.report.first_screen import reason_is_cut
 from scantling.report.record import Report
-from scantling.report.sections import heading
+from scantling.report.sections import heading, listing
 from scantling.report.wording import (
     band,
     columns,
@@ -17,6 +18,7 @@ from scantling.report.wording import (
     paragraph,
     rate,
     table,
+    two,
 )
 
 LAW_WORDS = {
@@ -87,22 +89,24 @@ def selection(report: Report, width: int) -> list[str]:
         rows.append(
             [
                 f"{run.columns:,} {LAW_WORDS[run.law]}",
-                f"{run.stability.value:.2f}",
-                f"{run.stability.low:.2f} to {run.stability.high:.2f}",
-                f"{run.power.value:.2f}",
-                f"{run.false_share.value:.2f}",
+                two(run.stability.value),
+                f"{two(run.stability.low)} to {two(run.stability.high)}",
+                two(run.power.value),
+                two(run.false_share.value),
                 f"{run.mean_size:.1f}",
             ]
         )
     lines += table(rows)
     target = report.design.target
+    relevant = min(target.relevant, report.budget.asked)
     failing = ", ".join(name.replace("_", " ") for name in report.stress.failing)
     met = f"{failing} missed" if failing else "all are met"
     return lines + paragraph(
         f"Asked for: stability {target.stability:g}, power {target.power:g}, false share at most"
         f" {target.false_share:g}. At {many(report.budget.asked, 'column')}"
         f" {met}; {report.stress.runs[0].replicates}"
-        f" refits a row over 5 supports of {target.relevant} relevant columns.",
+        f" refits a row over 5 supports of {relevant} relevant columns. Refits use the rule's own"
+        " penalty; the signal limit uses the larger one that would hold noise to the risk.",
         width,
     )
 
@@ -113,15 +117,22 @@ def remedies(report: Report, width: int) -> list[str]:
     if not report.remedies:
         return lines + paragraph("None computed applies.", width)
     for place, remedy in enumerate(report.remedies):
-        risk = chance(remedy.risk_at_design.value, report.receipt.replicates)
+        risk = chance(remedy.risk_at_design.value, remedy.draws)
         kept = f"{count(remedy.allowed.columns)} of {many(remedy.columns, 'column')}"
         lines += paragraph(
             f"{place + 1}. {remedy.name}: {kept} ({_band_words(remedy)}), break-through risk"
             f" {risk}. {'' if remedy.refitted else 'Noise and signal only. '}Price:"
-            f" {remedy.price}.",
+            f" {remedy.price}{_dropped(report, remedy)}.",
             width,
         )
-    return lines
+    return lines + paragraph(
+        "The present errors are kept; a design changed so and vetted afresh fits its own.", width
+    )
+
+
+def _dropped(report: Report, remedy: Remedy) -> str:
+    names = tuple(report.read.names[j] for j in remedy.dropped)
+    return f" ({listing(names, 3)})" if names else ""
 
 
 def _band_words(remedy: Remedy) -> str:
@@ -130,7 +141,9 @@ def _band_words(remedy: Remedy) -> str:
 
 
 def reasons(report: Report, width: int) -> list[str]:
-    """All reasons, the binding one first."""
+    """All reasons, the binding one first, where the first screen does not show them all."""
+    if len(report.verdict.reasons) == 1 and not reason_is_cut(report, width):
+        return []
     lines = heading("Reasons")
     for reason in report.verdict.reasons:
         lines += paragraph(reason, width)

@@ -79,11 +79,9 @@ def design(report: Report, width: int) -> list[str]:
 
 
 def _tail_words(tail: TailIndex) -> str:
-    found = "a finite index is found" if tail.finite else "no finite index is found"
-    words = f"index {index(tail.index)} (90 % {index_interval(tail.low, tail.high)}); {found}"
-    if not tail.finite:
-        words += f", indices below {index(tail.low)} are excluded"
-    return f"{words} ({p_value(tail.p_value)})"
+    found = "thin tails are excluded" if tail.finite else "thin tails are not excluded"
+    ends = index_interval(tail.low, tail.high)
+    return f"index {index(tail.index)} (90 % {ends}); {found} ({p_value(tail.p_value)})"
 
 
 def tails(report: Report, width: int) -> list[str]:
@@ -102,7 +100,8 @@ def tails(report: Report, width: int) -> list[str]:
     lines += _group_words("Columns", found.columns, report.read.names, width)
     lines += paragraph(
         f"By the thin-tail test (Holm over columns), of {many(len(found.weight), 'column')}"
-        f" {weights['heavy']:,} heavy, {weights['sparse']:,} sparse, {weights['light']:,} light.",
+        f" {weights['heavy']:,} shown heavy, {weights['sparse']:,} sparse,"
+        f" {weights['light']:,} not shown heavy.",
         width,
     )
     lines += _group_words("Scores", found.scores, report.read.names, width)
@@ -120,16 +119,12 @@ def _group_words(label: str, group: SeriesGroup, names: tuple[str, ...], width: 
     middle = group.tails.median_column()
     if middle is None:
         return paragraph(f"{label}: none has a tail index.", width)
-    low, high = group.tails.intervals()
     known = group.tails.gamma[group.tails.assessed]
     spread = ""
     if known.size >= FEWEST_SPREAD:
         ends = [index(index_from_gamma(float(np.quantile(known, q)))) for q in (0.9, 0.1)]
         spread = f"; four in five lie between {ends[0]} and {ends[1]}"
-    words = index_interval(
-        1 / float(high[middle]) if high[middle] > 0 else float("inf"),
-        1 / float(low[middle]) if low[middle] > 0 else float("inf"),
-    )
+    words = index_interval(*group.tails.interval(middle))
     return paragraph(
         f"{label}: the median one, {shortened(names[middle], 30)}, has index"
         f" {index(index_from_gamma(float(group.tails.gamma[middle])))} (90 % {words}){spread}.",
@@ -182,7 +177,7 @@ def _findings(findings: tuple[Finding, ...]) -> list[str]:
     rows = [["Test", "statistic", "p", "valid"]]
     for finding in findings:
         result = finding.result
-        valid = "yes" if finding.valid else f"no: moment {result.needs_moment}"
+        valid = "yes" if finding.valid else f"no: {finding.lacks}"
         shown = f"{result.p_value:.3f}" if result.p_value >= 0.001 else "< 0.001"
         rows.append([shortened(result.test, 44), f"{result.statistic:.3g}", shown, valid])
     return table(rows)
@@ -193,16 +188,20 @@ def variance(report: Report, width: int) -> list[str]:
     found = report.diagnosis
     lines = heading("Variance and dependence")
     lines += _findings((*found.variance, *found.dependence))
+    if any(not finding.valid for finding in (*found.variance, *found.dependence)):
+        lines += paragraph("After 'no': what the p-value needs and is not found here.", width)
     path = found.volatility
     if found.clustering is None:
         lines += paragraph("Rows have no order, so dependence is not tested.", width)
     elif path is None:
         lines += paragraph(f"Volatility is taken as constant: {found.clustering.reason}.", width)
     else:
-        implied = "no finite index" if path.tail_index > 50 else f"index {path.tail_index:.1f}"
+        joint = report.law.tail_index
+        implied = "no finite index" if joint > 50 else f"index {joint:.1f}"
         lines += paragraph(
             f"Volatility clusters: GARCH(1,1) with alpha {path.alpha:.3f}, beta {path.beta:.3f}"
-            f" (sum {path.persistence:.3f}), which by itself implies {implied} for the errors.",
+            f" (sum {path.persistence:.3f}), which with the law of the innovations implies"
+            f" {implied} for the errors.",
             width,
         )
     together = found.co_movement

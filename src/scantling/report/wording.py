@@ -62,6 +62,11 @@ def p_value(value: float) -> str:
     return "p < 0.001" if value < 0.001 else f"p = {value:.3f}"
 
 
+def two(value: float) -> str:
+    """A number to two decimals, never minus zero."""
+    return f"{round(value, 2) + 0.0:.2f}"
+
+
 def share(value: float) -> str:
     """A share in per cent."""
     return f"{100 * value:.0f} %"

@@ -15,6 +15,7 @@ from scipy.special import gammaln
 from scipy.stats import norm
 
 from scantling.core.record import FloatArray
+from scantling.errors import InputError
 
 RULES = ("plug-in", "self-normalised")
 ROUNDING = 1e-12
@@ -67,6 +68,8 @@ def score_ratios(
     ratios : array, shape (P, R)
     loadings : array, shape (1, R) for equal loadings, else (P, R)
     """
+    if rule not in RULES:
+        raise InputError(f"rule: one of {', '.join(RULES)} is needed; found {rule!r}")
     n = X.shape[0]
     scores = X.T @ errors
     np.abs(scores, out=scores)
@@ -83,7 +86,8 @@ def passers(ratios: FloatArray, floor: float) -> Passers:
     """The entries of (P, R) ratios above the floor."""
     column, draw = np.nonzero(ratios > floor)
     return Passers(
-        columns=ratios.shape[0], draws=ratios.shape[1], draw=draw, column=column,
+        columns=ratios.shape[0], draws=ratios.shape[1],
+        draw=draw.astype(np.int32), column=column.astype(np.int32),
         ratio=ratios[column, draw],
     )  # fmt: skip
 
@@ -178,18 +182,42 @@ def first_above(curve: FloatArray, risk: float) -> float:
     return float(over[0]) if over.size else math.inf
 
 
-def largest_quantile(found: Passers, p: int, probability: float) -> float | None:
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Ranked:
+    """Passers from the largest ratio down, ready for quantiles at many p."""
+
+    columns: int
+    """P."""
+    draws: int
+    """R."""
+    ratio: FloatArray
+    """Decreasing, shape (m,)."""
+    rank: np.ndarray
+    """How many ratios of the same draw are larger, shape (m,)."""
+
+
+def ranked(found: Passers) -> Ranked:
+    """Sort and rank the passers once."""
+    order = np.argsort(-found.ratio, kind="stable")
+    return Ranked(
+        columns=found.columns,
+        draws=found.draws,
+        ratio=found.ratio[order],
+        rank=ranks_in_draw(found.draw, found.ratio)[order],
+    )
+
+
+def largest_quantile(found: Passers | Ranked, p: int, probability: float) -> float | None:
     """Quantile of the largest ratio over p of the P columns, averaged over which are taken.
 
     None if it lies at or below the floor of the passers.
     """
     # Walking down the ratios, each raises one draw's K; find where P(max > t) passes 1 - prob.
-    order = np.argsort(-found.ratio, kind="stable")
-    ratio, rank = found.ratio[order], ranks_in_draw(found.draw, found.ratio)[order]
-    kept = none_taken(np.arange(rank.max(initial=-1) + 2), found.columns, p)
-    exceed = np.cumsum(kept[rank] - kept[rank + 1]) / found.draws
+    table = found if isinstance(found, Ranked) else ranked(found)
+    kept = none_taken(np.arange(table.rank.max(initial=-1) + 2), table.columns, p)
+    exceed = np.cumsum((kept[:-1] - kept[1:])[table.rank]) / table.draws
     place = int(np.searchsorted(exceed, 1 - probability + ROUNDING, side="right"))
-    return float(ratio[place]) if place < ratio.size else None
+    return float(table.ratio[place]) if place < table.ratio.size else None
 
 
 def column_shares(found: Passers, level: float) -> FloatArray:

@@ -95,13 +95,24 @@ def test_the_first_row_drawn_has_the_stationary_law() -> None:
     assert stats.kurtosis(drawn[0]) > 1.5
 
 
-def test_tail_index_is_the_smaller_of_the_two() -> None:
+def test_tail_index_under_volatility() -> None:
+    """exact: 3a^2 + 2ab + b^2 = 1 gives 4 for normal shocks, 4.5a^2 + 2ab + b^2 = 1 for t(8).
+
+    A spliced law takes the smaller of its own and the volatility's.
+    """
     assert normal_law(1).tail_index == math.inf
     assert student_law(3).tail_index == 3
     assert law("spliced").tail_index == pytest.approx(5)
     path = volatility()
-    assert replace(normal_law(1), volatility=path).tail_index == 12.5
-    assert replace(student_law(3), volatility=path).tail_index == 3
+    four = replace(path, alpha=0.1704959016, beta=0.8)
+    assert replace(normal_law(1), volatility=four).tail_index == pytest.approx(4, abs=1e-6)
+    four = replace(path, alpha=0.1562954751, beta=0.8)
+    assert replace(student_law(8), volatility=four).tail_index == pytest.approx(4, abs=1e-6)
+    assert 2 < replace(student_law(3), volatility=path).tail_index < 3
+    assert replace(student_law(2), volatility=path).tail_index == 2
+    assert replace(law("spliced"), volatility=path).tail_index == pytest.approx(5)
+    low = replace(path, tail_index=3.5)
+    assert replace(law("spliced"), volatility=low).tail_index == 3.5
     light = replace(law("spliced"), splice=fit_splice(np.arange(300.0), 0.0))
     assert light.tail_index == math.inf
 
@@ -205,12 +216,15 @@ def test_drawn_laws_spread_about_the_fit(family: str) -> None:
 
 def test_drawn_laws_take_the_drawn_paths() -> None:
     found = replace(fitted("student-t"), volatility=volatility())
-    first, second, third = found.parameter_draws(3, np.random.default_rng(9))
-    assert first.volatility is not None
-    assert second.volatility is not None
-    assert third.volatility is not None
-    assert second.volatility.path == pytest.approx(2 * first.volatility.path)
-    assert np.array_equal(third.volatility.path, first.volatility.path)
+    levels = []
+    for drawn in found.parameter_draws(60, np.random.default_rng(9)):
+        assert drawn.volatility is not None
+        level = float(drawn.volatility.path[0] / volatility().path[0])
+        assert drawn.volatility.path == pytest.approx(level * volatility().path)
+        levels.append(level)
+    # Two stored paths, either as likely: 60 draws give 30 of each, four errors being 15.
+    assert set(np.round(levels, 9)) == {1.0, 2.0}
+    assert levels.count(1.0) == pytest.approx(30, abs=15)
 
 
 def test_spreads_are_probabilities_and_narrow_with_the_sample() -> None:
@@ -225,19 +239,26 @@ def test_spreads_are_probabilities_and_narrow_with_the_sample() -> None:
     assert widths[1] < 0.45 * widths[0]
 
 
-def test_spliced_spread_is_normal_about_the_estimate_with_its_bias() -> None:
+def test_spliced_spread_has_the_interval_of_the_tail_as_its_own() -> None:
     from scantling.diagnostics.tail_index import tail_index
 
-    tail = replace(tail_index(np.random.default_rng(1).standard_t(3, 900)), gamma=0.5,
-                   gamma_error=0.04)  # fmt: skip
+    estimated = tail_index(np.random.default_rng(1).standard_t(3, 900))
+    tail = replace(estimated, low=1 / 0.6, high=1 / 0.4)
     spread = spliced_spread(tail, 900)
     mean = float(spread.gammas @ spread.weights)
     assert mean == pytest.approx(0.5, abs=1e-6)
     sd = math.sqrt((spread.gammas - mean) ** 2 @ spread.weights)
-    assert sd == pytest.approx(math.hypot(0.04, 0.06 / math.sqrt(3)), rel=0.03)
-    flat = spliced_spread(replace(tail, gamma=-0.3), 900)
-    assert flat.gammas[0] == 0
-    assert np.isfinite(flat.weights).all()
+    assert sd == pytest.approx(0.1 / 1.6448536, rel=0.03)
+    inside = (spread.gammas >= 0.4) & (spread.gammas <= 0.6)
+    assert spread.weights[inside].sum() == pytest.approx(0.90, abs=0.02)
+    real = spliced_spread(estimated, 900)
+    assert 1 / estimated.high < real.gammas @ real.weights < 1 / estimated.low
+    # No index excluded from above; no tail at all; no width.
+    for low, high in ((8.0, math.inf), (math.inf, math.inf), (2.0, 2.0)):
+        flat = spliced_spread(replace(tail, low=low, high=high), 900)
+        assert flat.gammas[0] >= 0
+        assert (np.diff(flat.gammas) > 0).all()
+        assert flat.weights.sum() == pytest.approx(1)
 
 
 def test_parameters_by_name() -> None:

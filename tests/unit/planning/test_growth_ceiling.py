@@ -1,4 +1,4 @@
-"""The ceiling: the rates by regime, exact floors, caps, and the mixed rule."""
+"""The ceiling: the rates by regime, exact floors, caps, and which regime applies."""
 
 from __future__ import annotations
 
@@ -9,7 +9,6 @@ import numpy as np
 import pytest
 
 from scantling.diagnostics.column_tails import ColumnTails
-from scantling.diagnostics.tail_index import interval_from_gamma
 from scantling.planning.ceiling import MOST, ceiling, heavy_rate, light_rate, rate_by_regime
 
 
@@ -68,15 +67,14 @@ def test_no_finite_index_is_capped():
     assert rate(10_000, scores=same(12)).capped
 
 
-def test_mixed_columns_take_the_smaller_of_both_rates():
-    # Half heavy: they may number n^(q/2-1) = 100, so p = 200; light alone would allow e^10.
-    found = rate(100, share=0.5, errors=same(4), scores=same(4))
-    assert found.columns == 200
-    assert "heavy columns (50%)" in found.regime
-    assert "light columns" in found.regime
-    # With few heavy columns the light ones' rate takes over.
-    few = rate(100, share=0.001, errors=same(3), scores=same(4))
-    assert few.columns == 103
+def test_one_heavy_column_in_a_thousand_sets_the_rate():
+    # n^(q/2-1) = 100 at q = 4 of the scores, however few; e^10 = 22026 by the errors with none.
+    for share in (0.001, 0.5, 1.0):
+        found = rate(100, share=share, errors=same(4), scores=same(4))
+        assert found.columns == 100
+        assert f"heavy columns ({share:.0%})" in found.regime
+        assert "light" not in found.regime
+    assert rate(100, share=0.0, errors=same(4), scores=same(4)).columns == 22_026
 
 
 def test_self_normalised_columns_by_hand():
@@ -92,7 +90,8 @@ def test_what_is_unknown_is_null_with_its_reason():
     found = rate(100, errors=same(4))
     assert (found.columns, found.low, found.high) == (None, None, None)
     assert "scores' tail index is unknown" in found.regime
-    assert "errors' tail index is unknown" in rate(100, share=0.5, scores=same(4)).regime
+    assert "errors' tail index is unknown" in rate(100, share=0.0, scores=same(4)).regime
+    assert rate(100, share=0.5, scores=same(4)).columns == 100  # the errors are not needed
     assert rate(100, share=0.0, errors=same(4)).columns == 22_026  # scores are not needed
 
 
@@ -106,7 +105,8 @@ def test_rates_in_logs():
 def diagnosed(weight, gammas, errors):
     gamma = np.array(gammas, dtype=float)
     tails = ColumnTails(
-        gamma=gamma, error=np.where(np.isfinite(gamma), 0.03, np.nan), hill_gamma=gamma,
+        gamma=gamma, error=np.where(np.isfinite(gamma), 0.03, np.nan), gamma_low=gamma - 0.15,
+        gamma_high=gamma + 0.1, hill_gamma=gamma,
         hill_error=gamma, p_value=gamma, active_share=np.ones(gamma.size), threshold_count=10,
     )  # fmt: skip
     return SimpleNamespace(weight=weight, errors=errors, scores=SimpleNamespace(tails=tails))
@@ -118,11 +118,10 @@ def test_a_diagnosed_design_uses_the_median_heavy_columns_scores():
     # Heavy and sparse columns: gammas .5, .25, .4, .8 and one unknown; the lower median is .4.
     diagnosis = diagnosed(weight, [0.01, 0.5, 0.25, 0.4, np.nan, 0.8], errors)
     found = ceiling(diagnosis, 200, "plug-in")
-    low, high = interval_from_gamma(0.4, 0.03, 0.90)
+    low, high = 1 / (0.4 + 0.1), 1 / (0.4 - 0.15)  # that column's own interval
     expected = rate(200, share=5 / 6, errors=(4.0, 3.0, 8.0), scores=(2.5, low, high))
     assert found == expected
-    assert found.columns == int(200**0.25 / (5 / 6))
-    assert low < 2.5 < high
+    assert (found.columns, found.low, found.high) == (int(200**0.25), 1, 200)
 
 
 def test_a_diagnosed_design_of_light_columns_needs_the_errors_alone():
