@@ -10,14 +10,19 @@ from dataclasses import replace
 from datetime import UTC, datetime
 from importlib.metadata import version
 
+import numpy as np
+
 from scantling.core.streams import Mapper, worker_pool
 from scantling.design.expand import Columns, expand
 from scantling.design.parse import read_design
+from scantling.design.series_file import SeriesFile
 from scantling.design.spec import Design
 from scantling.design.table import Table, read_table
 from scantling.diagnostics.battery import Diagnosis, diagnose
 from scantling.diagnostics.residuals import Residuals, fit_pilot
+from scantling.diagnostics.series import diagnose_series
 from scantling.errors import InputError
+from scantling.law.extremes_check import extremes_against_law
 from scantling.law.families import ErrorLaw
 from scantling.law.fit import error_law
 from scantling.planning.breakthrough import break_through
@@ -29,7 +34,13 @@ from scantling.planning.remedies import Remedy, remedies
 from scantling.planning.signal import signal
 from scantling.planning.stress import Stress, stress
 from scantling.planning.verdict import variance_missing, verdict
-from scantling.report.record import DesignAsRead, Receipt, Report
+from scantling.report.record import (
+    DesignAsRead,
+    DesignDiagnosis,
+    Receipt,
+    Report,
+    SeriesReport,
+)
 
 LIBRARIES = ("numpy", "scipy", "pandas", "statsmodels", "scikit-learn", "arch")
 STAGES = ("read", "residuals", "diagnose", "law", "limits", "stress", "remedies")
@@ -69,14 +80,7 @@ def vet(
     columns = expand(design, table)
     with worker_pool(workers) as mapper:
         tell("residuals")
-        residuals = fit_pilot(
-            columns.values, columns.response, time_ordered=columns.time_ordered, seed=seed
-        )
-        if residuals.sd <= EXACT * residuals.response_sd:
-            raise InputError(
-                f"{table.file_name}: the columns explain {table.response_name!r} exactly, so"
-                " there are no errors to diagnose; another response or fewer columns are needed"
-            )
+        residuals = pilot(design, table, columns)
         tell("diagnose")
         diagnosis = diagnose(
             columns.values, residuals, time_ordered=columns.time_ordered, seed=seed
@@ -114,6 +118,87 @@ def vet(
         verdict=verdict(case, diagnosis, budget, selection),
         receipt=_receipt(design, table, command, started),
     )
+
+
+def diagnose_design(design: Design, *, command: str | None = None) -> DesignDiagnosis:
+    """The diagnostics stage alone: read, pilot, diagnosis, error law.
+
+    Raises
+    ------
+    InputError
+        If the data are not usable.
+    """
+    started = time.monotonic()
+    seed = design.simulation.seed
+    table = read_table(design)
+    columns = expand(design, table)
+    with worker_pool(1):
+        residuals = pilot(design, table, columns)
+        diagnosis = diagnose(
+            columns.values, residuals, time_ordered=columns.time_ordered, seed=seed
+        )
+        law = error_law(
+            residuals.values, volatility=diagnosis.volatility, seed=seed, tail=diagnosis.errors
+        )
+    return DesignDiagnosis(
+        design=design,
+        read=_as_read(table, columns, residuals),
+        diagnosis=diagnosis,
+        law=law,
+        receipt=_receipt(
+            design, table, command or f"scantling diagnose {design.path.name}", started
+        ),
+    )
+
+
+def diagnose_column(
+    source: SeriesFile, *, time_ordered: bool = True, seed: int = 1, command: str = ""
+) -> SeriesReport:
+    """The diagnostics of one bare series, such as the residuals of a submitted model.
+
+    Parameters
+    ----------
+    source : SeriesFile
+        From `read_series`.
+    time_ordered : bool
+        Whether its values follow one another in time.
+    seed : int
+    command : str
+        The command line to put in the receipt.
+    """
+    started = time.monotonic()
+    values = np.asarray(source.values)
+    with worker_pool(1):
+        found = diagnose_series(values, time_ordered=time_ordered, seed=seed)
+        volatility = None if found.clustering is None else found.clustering.volatility
+        law = error_law(values - values.mean(), volatility=volatility, seed=seed, tail=found.tail)
+        extremes = extremes_against_law(values, law, seed=seed)
+    return SeriesReport(
+        source=source,
+        time_ordered=time_ordered,
+        diagnosis=found,
+        law=law,
+        extremes=extremes,
+        receipt=_receipt_of(
+            seed, 0, ((source.file_name, source.sha256),), command or "scantling diagnose", started
+        ),
+    )
+
+
+def pilot(design: Design, table: Table, columns: Columns) -> Residuals:
+    """Residuals of the pilot, refused where nothing is left to diagnose."""
+    residuals = fit_pilot(
+        columns.values,
+        columns.response,
+        time_ordered=columns.time_ordered,
+        seed=design.simulation.seed,
+    )
+    if residuals.sd <= EXACT * residuals.response_sd:
+        raise InputError(
+            f"{table.file_name}: the columns explain {table.response_name!r} exactly, so"
+            " there are no errors to diagnose; another response or fewer columns are needed"
+        )
+    return residuals
 
 
 def make_case(design: Design, columns: Columns, residuals: Residuals, law: ErrorLaw) -> Case:
@@ -164,16 +249,28 @@ def _as_read(table: Table, columns: Columns, residuals: Residuals) -> DesignAsRe
 
 
 def _receipt(design: Design, table: Table, command: str | None, started: float) -> Receipt:
+    return _receipt_of(
+        design.simulation.seed,
+        design.simulation.replicates,
+        ((design.path.name, design.sha256), (table.file_name, table.sha256)),
+        command or f"scantling vet {design.path.name}",
+        started,
+    )
+
+
+def _receipt_of(
+    seed: int, replicates: int, inputs: tuple[tuple[str, str], ...], command: str, started: float
+) -> Receipt:
     return Receipt(
         version=version("scantling"),
-        seed=design.simulation.seed,
-        replicates=design.simulation.replicates,
-        inputs=((design.path.name, design.sha256), (table.file_name, table.sha256)),
+        seed=seed,
+        replicates=replicates,
+        inputs=inputs,
         libraries=(
             ("python", platform.python_version()),
             *((name, version(name)) for name in LIBRARIES),
         ),
-        command=command or f"scantling vet {design.path.name}",
+        command=command,
         seconds=round(time.monotonic() - started, 2),
         finished=datetime.now(UTC).isoformat(timespec="seconds"),
     )

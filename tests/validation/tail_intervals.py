@@ -198,7 +198,10 @@ def reading(cells: list[Cell]) -> list[str]:
     ratio = np.median([c.now.width / c.before.width for c in claimed])
 
     def names(some: list[Cell]) -> str:
-        words = [f"{c.law.name} at {c.rows} ({100 * c.now.coverage:.1f} %)" for c in some]
+        words = [
+            f"{c.law.name} at {c.rows} ({share_words(c.now.coverage, c.replications)})"
+            for c in some
+        ]
         return ", ".join(words) or "none"
 
     defeated = []
@@ -209,6 +212,8 @@ def reading(cells: list[Cell]) -> list[str]:
     wide = [c for c in claimed if c not in narrow]
     return [
         "## Reading",
+        "",
+        "Shares in per cent, Monte Carlo standard errors behind them.",
         "",
         f"- Laws the interval is meant for, 250 rows or more: coverage reaches {LEAST:.0%}"
         f" (t 10: {LEAST_T10:.0%}) in {len(covered)} of {len(claimed)} cells; it misses it in "

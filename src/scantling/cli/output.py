@@ -25,7 +25,7 @@ def reserved_folder(folder: Path) -> Iterator[None]:
     InputError
         If the folder cannot be created or written to.
     """
-    made = not folder.exists()
+    made = [path for path in (folder, *folder.parents) if not path.exists()]
     try:
         folder.mkdir(parents=True, exist_ok=True)
     except OSError as fault:
@@ -35,9 +35,9 @@ def reserved_folder(folder: Path) -> Iterator[None]:
     try:
         yield
     except BaseException:
-        if made:
-            with suppress(OSError):
-                folder.rmdir()
+        with suppress(OSError):
+            for path in made:
+                path.rmdir()
         raise
 
 

@@ -216,18 +216,18 @@ def diagnose(X: FloatArray, residuals: Residuals, *, time_ordered: bool, seed: i
         Of permutations and bootstraps.
     """
     e = np.asarray(residuals.values)
-    errors, sides, errors_note = _error_tails(e, seed)
+    errors, sides, errors_note = error_tails(e, seed)
     clustering = find_clustering(e, seed=seed) if time_ordered else None
     volatility = None if clustering is None else clustering.volatility
     implied = None if volatility is None else volatility.tail_index
-    judged = None if errors is None else heavier_side(errors, sides)
-    moments = _error_moments(e, judged, errors_note, implied, seed)
+    decisive = None if errors is None else heavier_side(errors, sides)
+    moments = error_moments(e, decisive, errors_note, implied, seed)
     granted = {int(m.order) for m in moments if m.answer == "exists"}
     columns = series_group(X, dependent=time_ordered)
     scores = _scores(X, e, columns.tails, errors, moments, dependent=time_ordered)
     block = block_length(e.size) if clustering and clustering.test.p_value <= 0.05 else None
     variance = _variance_tests(X, residuals, block, seed)
-    dependence = _dependence_tests(e, clustering) if time_ordered else ()
+    dependence = dependence_tests(e, clustering) if time_ordered else ()
     return Diagnosis(
         errors=errors,
         errors_note=errors_note,
@@ -236,8 +236,8 @@ def diagnose(X: FloatArray, residuals: Residuals, *, time_ordered: bool, seed: i
         columns=columns,
         scores=scores,
         weight=column_weights(columns.tails),
-        variance=_judged(variance, granted),
-        dependence=_judged(dependence, granted, steady=block is None),
+        variance=judged(variance, granted),
+        dependence=judged(dependence, granted, steady=block is None),
         clustering=clustering,
         co_movement=read_only(co_movement(X, e)),
         structure=column_structure(X),
@@ -245,7 +245,7 @@ def diagnose(X: FloatArray, residuals: Residuals, *, time_ordered: bool, seed: i
     )
 
 
-def _error_tails(e: FloatArray, seed: int) -> tuple[TailIndex | None, tuple[TailIndex, ...], str]:
+def error_tails(e: FloatArray, seed: int) -> tuple[TailIndex | None, tuple[TailIndex, ...], str]:
     try:
         errors = tail_index(e, seed=seed)
     except InputError as reason:
@@ -256,7 +256,7 @@ def _error_tails(e: FloatArray, seed: int) -> tuple[TailIndex | None, tuple[Tail
     return errors, sides, errors.note
 
 
-def _error_moments(
+def error_moments(
     e: FloatArray, errors: TailIndex | None, note: str, implied: float | None, seed: int
 ) -> tuple[MomentAnswer, ...]:
     if errors is None:
@@ -279,12 +279,12 @@ def _variance_tests(
     )
 
 
-def _dependence_tests(e: FloatArray, clustering: Clustering | None) -> tuple[TestResult, ...]:
+def dependence_tests(e: FloatArray, clustering: Clustering | None) -> tuple[TestResult, ...]:
     first = () if clustering is None else (clustering.test,)
     return (*first, robust_ljung_box(e), ljung_box(e), arch_lm(e), mcleod_li(e))
 
 
-def _judged(
+def judged(
     results: tuple[TestResult, ...], granted: set[int], *, steady: bool = True
 ) -> tuple[Finding, ...]:
     """Hold each test's conditions against the diagnosis; `steady`: no clustering was found."""

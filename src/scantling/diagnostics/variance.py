@@ -147,7 +147,7 @@ def glejser_permutation(
     centring at the median. Needs a second moment for its power to be usual.
     """
     error, suspects = _pair(u, Z)
-    name = "Glejser, |e| on the pilot and its columns"
+    name = "Glejser, |e| on pilot and its columns"
     size = np.abs(error - np.median(error))
     if steady(size):
         return unmoved(name, 2, "permutation")

@@ -46,7 +46,7 @@ class StressRun:
     replicates: int
     """Refits."""
     stability: Estimate
-    """Stability index, 90 % interval; 0 if nothing or everything is always selected."""
+    """Stability index, 90 % interval; 0 if nothing is ever selected, 1 if everything always is."""
     power: Estimate
     """Mean share of relevant columns selected."""
     false_share: Estimate
@@ -125,7 +125,7 @@ def grid_of(case: Case, points: int = GRID_POINTS) -> list[int]:
     Neighbours differ by at least a fifth.
     """
     fewest = min(case.columns, case.target.relevant)
-    steps = int(math.log(case.columns / fewest) / math.log(1.2)) + 1
+    steps = max(1, int(math.log(case.columns / fewest) / math.log(1.2)))
     return [int(p) for p in column_grid(case.columns, fewest=fewest, points=min(points, steps + 1))]
 
 

@@ -18,7 +18,7 @@ from scantling.planning.remedies import Remedy
 from scantling.planning.stress import StressRun
 
 if TYPE_CHECKING:
-    from scantling.report.record import Report
+    from scantling.report.record import Diagnosed, HasLaw, Receipt, Report
 
 SCHEMA = "scantling-report/1"
 DIGITS = 10
@@ -59,9 +59,9 @@ def document(report: Report) -> dict[str, Any]:
     return {
         "schema": SCHEMA,
         "title": report.design.title,
-        "design": _design(report),
-        "diagnosis": _diagnosis(report),
-        "law": _law(report),
+        "design": design_part(report),
+        "diagnosis": diagnosis_part(report),
+        "law": law_part(report),
         "budget": _budget(report),
         "stress": [] if report.stress is None else [_run(run) for run in report.stress.runs],
         "remedies": [_remedy(remedy, report.read.names) for remedy in report.remedies],
@@ -71,7 +71,7 @@ def document(report: Report) -> dict[str, Any]:
             "reasons": list(report.verdict.reasons),
         },
         "cautions": list(cautions(report)),
-        "receipt": _receipt(report),
+        "receipt": receipt_part(report.receipt),
     }
 
 
@@ -91,7 +91,7 @@ def cautions(report: Report) -> tuple[str, ...]:
     return (*report.diagnosis.warnings, *spans, assured, *ALWAYS)
 
 
-def _design(report: Report) -> dict[str, Any]:
+def design_part(report: Diagnosed) -> dict[str, Any]:
     design, read = report.design, report.read
     return {
         "rows": read.rows,
@@ -116,7 +116,7 @@ def _design(report: Report) -> dict[str, Any]:
     }
 
 
-def _tail(tail: TailIndex) -> dict[str, Any]:
+def tail_part(tail: TailIndex) -> dict[str, Any]:
     return {
         **noted("index", tail.index, ABOVE),
         **noted("low", tail.low, ABOVE),
@@ -129,7 +129,7 @@ def _tail(tail: TailIndex) -> dict[str, Any]:
     }
 
 
-def _unknown_tail(note: str) -> dict[str, Any]:
+def unknown_tail(note: str) -> dict[str, Any]:
     return {
         "index": None, "index_note": note, "low": None, "low_note": note, "high": None,
         "high_note": note, "finite": None, "finite_note": note, "threshold_count": None,
@@ -137,22 +137,22 @@ def _unknown_tail(note: str) -> dict[str, Any]:
     }  # fmt: skip
 
 
-def _diagnosis(report: Report) -> dict[str, Any]:
+def diagnosis_part(report: Diagnosed) -> dict[str, Any]:
     found = report.diagnosis
     names = report.read.names
-    errors = _tail(found.errors) if found.errors else _unknown_tail(found.errors_note)
+    errors = tail_part(found.errors) if found.errors else unknown_tail(found.errors_note)
     structure = found.structure
     return {
         "errors": {
             "tail": errors,
             "moments": {str(m.order): m.answer for m in found.error_moments},
             "moment_reasons": {str(m.order): m.reason for m in found.error_moments},
-            "sides": [_tail(side) for side in found.sides],
+            "sides": [tail_part(side) for side in found.sides],
         },
         "columns": _group(found.columns, names, found.weight),
         "scores": _group(found.scores, names, None),
-        "variance": [_finding(f) for f in found.variance],
-        "dependence": [_finding(f) for f in found.dependence],
+        "variance": [finding_part(f) for f in found.variance],
+        "dependence": [finding_part(f) for f in found.dependence],
         "structure": {
             "factors": structure.factors,
             **noted("condition", structure.condition, structure.condition_note or ""),
@@ -168,7 +168,7 @@ def _diagnosis(report: Report) -> dict[str, Any]:
     }
 
 
-def _finding(finding: Finding) -> dict[str, Any]:
+def finding_part(finding: Finding) -> dict[str, Any]:
     result = finding.result
     return {
         "test": result.test,
@@ -188,7 +188,7 @@ def _group(group: SeriesGroup, names: tuple[str, ...], weight: tuple[str, ...] |
 
     def tail(j: int) -> dict[str, Any]:
         if j in refused:
-            return _unknown_tail(refused[j])
+            return unknown_tail(refused[j])
         low, high = tails.interval(j)
         return {
             **noted("index", index_from_gamma(float(tails.gamma[j])), ABOVE),
@@ -204,7 +204,7 @@ def _group(group: SeriesGroup, names: tuple[str, ...], weight: tuple[str, ...] |
 
     note = "no column has a tail index"
     return {
-        "tail": _unknown_tail(note) if middle is None else tail(middle),
+        "tail": unknown_tail(note) if middle is None else tail(middle),
         "moments": dict.fromkeys(map(str, ORDERS), "unclear")
         if middle is None
         else moments(middle),
@@ -222,7 +222,7 @@ def _group(group: SeriesGroup, names: tuple[str, ...], weight: tuple[str, ...] |
     }
 
 
-def _law(report: Report) -> dict[str, Any]:
+def law_part(report: HasLaw) -> dict[str, Any]:
     law = report.law
     path = law.volatility
     volatility: dict[str, Any] = {"volatility": None, "volatility_note": "constant"}
@@ -345,8 +345,8 @@ def _remedy(remedy: Remedy, names: tuple[str, ...]) -> dict[str, Any]:
     }
 
 
-def _receipt(report: Report) -> dict[str, Any]:
-    receipt = report.receipt
+def receipt_part(receipt: Receipt) -> dict[str, Any]:
+    """The receipt's keys."""
     return {
         "version": receipt.version,
         "seed": receipt.seed,

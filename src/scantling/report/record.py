@@ -3,9 +3,12 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import Protocol
 
+from scantling.design.series_file import SeriesFile
 from scantling.design.spec import Design
 from scantling.diagnostics.battery import Diagnosis
+from scantling.diagnostics.series import SeriesDiagnosis
 from scantling.law.families import ErrorLaw
 from scantling.planning.budget import Budget
 from scantling.planning.remedies import Remedy
@@ -67,6 +70,68 @@ class Receipt:
     """Wall-clock time of the run; volatile."""
     finished: str
     """When it ended, UTC; volatile."""
+
+
+class HasLaw(Protocol):
+    """What the section on the error law needs."""
+
+    @property
+    def law(self) -> ErrorLaw:
+        """Fitted error law."""
+
+
+class Diagnosed(Protocol):
+    """What the sections on design, tails, moments and law need."""
+
+    @property
+    def design(self) -> Design:
+        """The design file."""
+
+    @property
+    def read(self) -> DesignAsRead:
+        """What reading and expanding made of it."""
+
+    @property
+    def diagnosis(self) -> Diagnosis:
+        """What the data say."""
+
+    @property
+    def law(self) -> ErrorLaw:
+        """Fitted error law."""
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class DesignDiagnosis:
+    """The diagnostics of one design, without a budget."""
+
+    design: Design
+    """The design file."""
+    read: DesignAsRead
+    """What reading and expanding made of it."""
+    diagnosis: Diagnosis
+    """What the data say."""
+    law: ErrorLaw
+    """Fitted error law."""
+    receipt: Receipt
+    """What is needed to run it again."""
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class SeriesReport:
+    """The diagnostics of one bare series."""
+
+    source: SeriesFile
+    """Where it comes from."""
+    time_ordered: bool
+    """Whether its values follow one another in time."""
+    diagnosis: SeriesDiagnosis
+    """What it says."""
+    law: ErrorLaw
+    """Law fitted to it."""
+    extremes: tuple[tuple[int, float, float, float], ...]
+    """Rank, observed size, the law's median and 95 % point there."""
+    receipt: Receipt
+    """What is needed to run it again."""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

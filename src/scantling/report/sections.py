@@ -7,7 +7,7 @@ import numpy as np
 from scantling.diagnostics.battery import Finding, SeriesGroup
 from scantling.diagnostics.moments import ORDERS
 from scantling.diagnostics.tail_index import TailIndex, index_from_gamma
-from scantling.report.record import Report
+from scantling.report.record import Diagnosed, HasLaw, Receipt, Report
 from scantling.report.wording import (
     count,
     index,
@@ -37,7 +37,7 @@ def listing(names: tuple[str, ...], most: int = LISTED) -> str:
     return shown if len(names) <= most else f"{shown} and {len(names) - most:,} more"
 
 
-def design(report: Report, width: int) -> list[str]:
+def design(report: Diagnosed, width: int) -> list[str]:
     """What was read, expanded, lost and dropped."""
     read, spec = report.read, report.design
     lines = heading("Design as read")
@@ -78,24 +78,24 @@ def design(report: Report, width: int) -> list[str]:
     return lines + paragraph(pilot + ".", width)
 
 
-def _tail_words(tail: TailIndex) -> str:
+def tail_words(tail: TailIndex) -> str:
     found = "thin tails are excluded" if tail.finite else "thin tails are not excluded"
     ends = index_interval(tail.low, tail.high)
     return f"index {index(tail.index)} (90 % {ends}); {found} ({p_value(tail.p_value)})"
 
 
-def tails(report: Report, width: int) -> list[str]:
+def tails(report: Diagnosed, width: int) -> list[str]:
     """Tail index of errors, columns and scores."""
     found = report.diagnosis
     lines = heading("Tails")
     if found.errors is None:
         lines += paragraph(f"Errors: not assessed, {found.errors_note}.", width)
     else:
-        lines += paragraph(f"Errors: {_tail_words(found.errors)}.", width)
+        lines += paragraph(f"Errors: {tail_words(found.errors)}.", width)
         if found.errors.note:
             lines += paragraph(f"Before that: {found.errors.note}.", width)
     for side in found.sides:
-        lines += paragraph(f"{side.side.capitalize()} tail: {_tail_words(side)}.", width)
+        lines += paragraph(f"{side.side.capitalize()} tail: {tail_words(side)}.", width)
     weights = {w: found.weight.count(w) for w in ("heavy", "sparse", "light")}
     lines += _group_words("Columns", found.columns, report.read.names, width)
     lines += paragraph(
@@ -105,7 +105,6 @@ def tails(report: Report, width: int) -> list[str]:
         width,
     )
     lines += _group_words("Scores", found.scores, report.read.names, width)
-    lines += _worst_columns(report)
     refused = found.columns.tails.refused
     if refused:
         names = tuple(f"{report.read.names[j]} ({why})" for j, why in refused)
@@ -132,7 +131,7 @@ def _group_words(label: str, group: SeriesGroup, names: tuple[str, ...], width: 
     )
 
 
-def _worst_columns(report: Report) -> list[str]:
+def worst_columns(report: Report, width: int) -> list[str]:
     """The columns that break through most, and how heavy their scores are."""
     group, budget = report.diagnosis.scores, report.budget
     if not budget.worst_columns:
@@ -151,7 +150,7 @@ def _worst_columns(report: Report) -> list[str]:
     return table(rows)
 
 
-def moments(report: Report, width: int) -> list[str]:
+def moments(report: Diagnosed, width: int) -> list[str]:
     """Which moments exist."""
     found = report.diagnosis
     lines = heading("Moments")
@@ -173,23 +172,23 @@ def moments(report: Report, width: int) -> list[str]:
     return lines
 
 
-def _findings(findings: tuple[Finding, ...]) -> list[str]:
-    rows = [["Test", "statistic", "p", "valid"]]
+def findings_table(findings: tuple[Finding, ...]) -> list[str]:
+    rows = [["Test", "statistic", "p", "lacks"]]
     for finding in findings:
         result = finding.result
-        valid = "yes" if finding.valid else f"no: {finding.lacks}"
+        lacks = finding.lacks or "nothing"
         shown = f"{result.p_value:.3f}" if result.p_value >= 0.001 else "< 0.001"
-        rows.append([shortened(result.test, 44), f"{result.statistic:.3g}", shown, valid])
+        rows.append([shortened(result.test, 39), f"{result.statistic:.3g}", shown, lacks])
     return table(rows)
 
 
-def variance(report: Report, width: int) -> list[str]:
+def variance(report: Diagnosed, width: int) -> list[str]:
     """Variance and dependence tests, volatility, co-movement."""
     found = report.diagnosis
     lines = heading("Variance and dependence")
-    lines += _findings((*found.variance, *found.dependence))
+    lines += findings_table((*found.variance, *found.dependence))
     if any(not finding.valid for finding in (*found.variance, *found.dependence)):
-        lines += paragraph("After 'no': what the p-value needs and is not found here.", width)
+        lines += paragraph("Lacks: what the p-value needs and is not found here.", width)
     path = found.volatility
     if found.clustering is None:
         lines += paragraph("Rows have no order, so dependence is not tested.", width)
@@ -215,7 +214,7 @@ def variance(report: Report, width: int) -> list[str]:
     return lines
 
 
-def structure(report: Report, width: int) -> list[str]:
+def structure(report: Diagnosed, width: int) -> list[str]:
     """Geometry of the columns."""
     shape = report.diagnosis.structure
     lines = heading("Columns among themselves")
@@ -237,7 +236,7 @@ def structure(report: Report, width: int) -> list[str]:
     return lines
 
 
-def law(report: Report, width: int) -> list[str]:
+def law(report: HasLaw, width: int) -> list[str]:
     """The fitted law and how well it fits."""
     fitted = report.law
     lines = heading("Error law")
@@ -263,7 +262,11 @@ def law(report: Report, width: int) -> list[str]:
 
 def receipt(report: Report, width: int) -> list[str]:
     """What is needed to run it again."""
-    record = report.receipt
+    return receipt_lines(report.receipt, width)
+
+
+def receipt_lines(record: Receipt, width: int) -> list[str]:
+    """A receipt, whatever it belongs to."""
     lines = heading("Receipt")
     lines += paragraph(
         f"scantling {record.version}, seed {record.seed}, {count(record.replicates)} replicates,"

@@ -24,6 +24,7 @@ def render(report: Report, width: int = 80) -> str:
         limits_section.reasons,
         sections.design,
         sections.tails,
+        sections.worst_columns,
         sections.moments,
         sections.variance,
         sections.structure,

@@ -98,7 +98,9 @@ def join(parts: list[Passers]) -> Passers:
     return Passers(
         columns=parts[0].columns,
         draws=int(offsets[-1]),
-        draw=np.concatenate([p.draw + start for p, start in zip(parts, offsets, strict=False)]),
+        draw=np.concatenate(
+            [p.draw + np.int32(start) for p, start in zip(parts, offsets, strict=False)]
+        ),
         column=np.concatenate([part.column for part in parts]),
         ratio=np.concatenate([part.ratio for part in parts]),
     )

@@ -18,7 +18,6 @@ from scantling.diagnostics.tail_index import (
     block_length,
     hill_count,
     magnitudes,
-    mode_of,
     one_side,
     tail_index,
 )
@@ -206,10 +205,6 @@ def test_intervals_and_the_median_column() -> None:
     assert middle is not None
     assert many.gamma[middle] == np.sort(many.gamma[:5])[2]
     assert column_tails(np.ones((50, 2)), dependent=False).median_column() is None
-
-
-def test_mode_of_a_series() -> None:
-    assert mode_of(np.array([1.0, 2, 2, 3, 2, 3])) == (2.0, 0.5)
 
 
 P_VALUES = st.sampled_from([0.0, 1e-4, 0.004, 0.01, 0.03, 0.05, 0.4, 1.0])

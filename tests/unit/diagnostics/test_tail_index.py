@@ -17,6 +17,7 @@ from scantling.diagnostics.tail_index import (
     index_ends,
     moderate,
     one_side,
+    spike,
     tail_index,
     tied_share,
 )
@@ -204,6 +205,18 @@ def test_zeros_are_dropped_beyond_two_per_cent() -> None:
     moved = tail_index(many - 0.7)  # zeros of the raw series, centred since
     assert (moved.note, moved.rows) == (found.note, 700)
     assert moved.gamma == pytest.approx(found.gamma, rel=1e-9)
+
+
+def test_a_spike_stands_out_and_rounding_does_not() -> None:
+    """Above 2 % of the rows and three times as frequent as the next; exact zeros by share alone."""
+    rest = students(1000)
+    assert spike(rest) is None
+    assert spike(np.r_[np.full(20, 0.7), rest[20:]]) is None
+    assert spike(np.r_[np.full(21, 0.7), rest[21:]]) == 0.7
+    assert spike(np.r_[np.full(60, 0.7), np.full(21, -0.7), rest[81:]]) is None
+    assert spike(np.r_[np.full(63, 0.7), np.full(21, -0.7), rest[84:]]) == 0.7
+    assert spike(np.r_[np.full(60, 0.7), np.zeros(21), rest[81:]]) == 0.0
+    assert spike(np.round(4 * rest) / 4 + 0.1) is None
 
 
 @pytest.mark.parametrize("step", [0.25, 0.5])

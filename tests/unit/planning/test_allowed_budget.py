@@ -8,7 +8,7 @@ import numpy as np
 import pytest
 
 from scantling.planning.breakthrough import BreakThrough, CurvePoint, ScoreSample
-from scantling.planning.budget import assemble, combine
+from scantling.planning.budget import Allowed, assemble, combine, standing
 from scantling.planning.ceiling import rate_by_regime
 from scantling.planning.limit import make_limit, missing_limit
 from scantling.planning.signal import Signal
@@ -74,6 +74,23 @@ def test_an_unreached_limit_never_binds_over_a_reached_one():
     assert (allowed.columns, allowed.low, allowed.high, binding) == (99, 99, None, "signal")
 
 
+@pytest.mark.parametrize(
+    ("low", "high", "answer"),
+    [
+        (100, None, "within budget"),
+        (100, 100, "within budget"),
+        (99, 100, "borderline"),
+        (99, 99, "over budget"),
+        (0, 0, "over budget"),
+        (0, None, "borderline"),
+        (None, None, "borderline"),
+        (None, 99, "over budget"),
+    ],
+)
+def test_standing_by_the_band(low, high, answer):
+    assert standing(Allowed(columns=50, low=low, high=high), 100) == answer
+
+
 def test_a_missing_limit_leaves_nothing_allowed_and_nothing_binding():
     allowed, binding = combine(
         {"noise": limit(5.0, [5.0] * 50), "stability": missing_limit("no variance")}, 100
@@ -112,6 +129,7 @@ def test_assemble_puts_each_figure_in_its_place():
     assert (risk.value, risk.low, risk.high) == (0.3, 0.2, 0.4)
     assert (found.penalty_ratio, found.equivalent_rows, found.rows_needed) == (1.25, 128, 350)
     assert found.geometry.columns == 90  # it never enters what is allowed
+    assert found.draws == 2  # of the sample behind the risk
     assert found.ceiling.columns == 200
     assert found.assured.columns is None
     assert found.assured.note

@@ -125,6 +125,32 @@ def test_score_deviation_with_a_volatility_path_against_simulation():
     assert (deviation > 1.2 * law.sd).all()
 
 
+def test_the_typical_sd_takes_the_place_of_the_laws():
+    case = case_of(law=student_law(2.05, sd=2.0))
+    assert score_deviation(case.X, case.law).tolist() == [2.0] * 60
+    assert score_deviation(case.X, case.law, 0.7).tolist() == [0.7] * 60
+    path = volatile(np.linspace(0.2, 3, 100))
+    law = replace(case.law, volatility=path)
+    np.testing.assert_allclose(
+        score_deviation(case.X, law, 0.7), score_deviation(case.X, law) * 0.7 / law.sd, rtol=1e-12
+    )
+    # A law without variance has none, whatever the samples show.
+    assert np.isinf(score_deviation(case.X, student_law(1.8), 0.7)).all()
+    sample = replace(sample_of(), typical_sd=0.7)
+    found = signal(case, sample, ())
+    assert found.detectable == pytest.approx(by_hand(60, tau=0.7), rel=1e-12)
+    # (3.6757 * 1.9 + .8416 * .7) / 25 = .3029; with the law's 2 it is .3467.
+    plain = signal(case, sample_of(), ())
+    assert found.detectable == pytest.approx(0.3029, abs=1e-4)
+    assert plain.detectable == pytest.approx(0.3467, abs=1e-4)
+    limits = [
+        signal_limit_of(replace(case, target=TargetSpec(smallest_effect=0.31)), case.law, s)
+        for s in (sample, sample_of())
+    ]
+    assert limits[0] == math.inf
+    assert limits[1] < 60
+
+
 def test_a_law_without_variance_has_no_signal_limit():
     found = signal(case_of(law=student_law(1.8)), sample_of(), ())
     assert found.limit.columns is None
@@ -168,7 +194,7 @@ def test_rows_needed_stops_at_sixty_four_times_the_present():
     assert just.rows_needed == math.ceil(100 * 7.99**2)
     beyond = signal(case_of(target=TargetSpec(smallest_effect=at_100 / 8.01)), sample_of(), ())
     assert beyond.rows_needed is None
-    assert "64 times" in beyond.rows_note
+    assert beyond.rows_note == "not within 64 times the present rows, at the present penalty"
 
 
 def test_heavier_scores_raise_the_detectable_effect():

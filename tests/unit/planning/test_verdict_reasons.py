@@ -68,7 +68,7 @@ def stress_of(*, failing=("power",), power=0.41, on_path=None):
     run = StressRun(
         rows=200, columns=100, law="fitted", mode="conditional", replicates=400,
         stability=estimate(0.62), power=estimate(power), false_share=estimate(0.11), exact=0.0,
-        mean_size=5.0,
+        mean_size=5.0, errors=(0.03, 0.03, 0.03),
     )  # fmt: skip
     runs = (run, replace(run, law="twin", power=estimate(0.99), stability=estimate(0.92)))
     if on_path is not None:
@@ -249,9 +249,38 @@ def test_noise_names_volatility_where_it_is_fitted(family, words):
     assert words in found.reasons[0]
 
 
-def test_one_limit_above_its_band_is_over_though_another_is_missing():
-    found = judge(signal=missing_limit("x"), noise=limit(10.0))
-    assert found.answer == OVER
+@pytest.mark.parametrize(
+    ("noise", "answer"),
+    [
+        (limit(10.0), OVER),
+        (limit(10.0, 5, 99), OVER),
+        (limit(10.0, 5, 100), BORDERLINE),  # it may yet carry all that is asked for
+        (limit(10.0, 5, math.inf), BORDERLINE),
+        (OPEN, BORDERLINE),
+    ],
+)
+@pytest.mark.parametrize("missing", ["signal", "stability"])
+def test_one_limit_above_its_band_is_over_though_another_is_missing(noise, answer, missing):
+    found = judge(noise=noise, **{missing: missing_limit("x")})
+    assert found.answer == answer
+    assert f"The {missing} limit could not be computed: x." in found.reasons
+
+
+@pytest.mark.parametrize(
+    ("risk", "draws", "words"),
+    [
+        (0.0, 400, "below 0.0075"),
+        (0.0, 4000, "below 0.00075"),
+        (0.0002, 4000, "below 0.00075"),  # not even one draw
+        (0.00025, 4000, "0.000"),
+        (0.031, 400, "0.031"),
+        (0.21, 4000, "0.21"),
+    ],
+)
+def test_a_risk_is_no_finer_than_its_draws(risk, draws, words):
+    estimate_ = Estimate(value=risk, low=0.0, high=0.3)
+    found = judge(risk_at_design=estimate_, draws=draws)
+    assert found.reasons[0].endswith(f"noise passes the penalty with probability {words}.")
 
 
 def test_the_twins_open_limit_is_said_to_be_open():

@@ -10,6 +10,7 @@ import numpy as np
 import pytest
 from scipy.stats import norm
 
+from scantling.errors import InputError
 from scantling.simulation import scores
 from scantling.simulation.scores import (
     Passers,
@@ -22,6 +23,7 @@ from scantling.simulation.scores import (
     none_taken,
     passers,
     penalty_level,
+    ranked,
     ranks_in_draw,
     risk_at,
     risk_curves,
@@ -86,6 +88,13 @@ def test_a_column_idle_where_errors_are_has_ratio_zero():
     X = np.array([[1.0], [0.0], [0.0]])
     E = np.array([[0.0], [1.0], [-1.0]])
     assert score_ratios(X, E, "self-normalised")[0][0, 0] == 0.0
+
+
+@pytest.mark.parametrize("rule", ["plugin", "", "bic", "self normalised"])
+def test_an_unknown_rule_is_refused(rule):
+    words = f"^rule: one of plug-in, self-normalised is needed; found {rule!r}$"
+    with pytest.raises(InputError, match=words):
+        score_ratios(np.eye(3), np.eye(3), rule)
 
 
 def test_centre_takes_out_each_draws_mean():
@@ -189,6 +198,24 @@ def test_largest_quantile_grows_with_p_at_every_step():
     assert quantiles[0] < quantiles[-1]
 
 
+def test_ranked_passers_by_hand_and_the_same_quantiles_from_them():
+    found = Passers(
+        columns=4, draws=3, draw=np.array([2, 0, 2, 0, 2]), column=np.array([0, 1, 2, 3, 3]),
+        ratio=np.array([3.0, 1.0, 9.0, 2.0, 5.0]),
+    )  # fmt: skip
+    table = ranked(found)
+    assert (table.columns, table.draws) == (4, 3)
+    assert table.ratio.tolist() == [9, 5, 3, 2, 1]
+    assert table.rank.tolist() == [0, 1, 2, 0, 1]
+    whole = passers(heavy_ratios(40, 200, seed=3), 0.3)
+    table = ranked(whole)
+    for p in (1, 2, 17, 40):
+        for probability in (0.5, 0.8, 0.95):
+            plain = largest_quantile(whole, p, probability)
+            assert largest_quantile(table, p, probability) == plain
+    assert largest_quantile(ranked(passers(np.zeros((4, 3)), 1.0)), 2, 0.95) is None
+
+
 def test_risk_curves_equal_the_risk_at_every_p():
     found = passers(heavy_ratios(120, 90, seed=6), 1.4)
     curve = risk_curves(found, 0.05)
@@ -234,6 +261,8 @@ def test_join_numbers_the_draws_on():
     np.testing.assert_array_equal(joined.draw[key], whole.draw)
     np.testing.assert_array_equal(joined.column[key], whole.column)
     np.testing.assert_array_equal(joined.ratio[key], whole.ratio)
+    # 16 bytes a ratio, as the bound on memory counts them.
+    assert joined.draw.itemsize + joined.column.itemsize + joined.ratio.itemsize == 16
     assert risk_at(joined, 4, 2.0)[0] == risk_at(whole, 4, 2.0)[0]
 
 
