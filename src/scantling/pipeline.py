@@ -83,7 +83,11 @@ def vet(
         residuals = pilot(design, table, columns)
         tell("diagnose")
         diagnosis = diagnose(
-            columns.values, residuals, time_ordered=columns.time_ordered, seed=seed
+            columns.values,
+            residuals,
+            time_ordered=columns.time_ordered,
+            seed=seed,
+            first_powers=(columns.power == 1) & (columns.base >= 0),
         )
         tell("law")
         law = error_law(
@@ -135,7 +139,11 @@ def diagnose_design(design: Design, *, command: str | None = None) -> DesignDiag
     with worker_pool(1):
         residuals = pilot(design, table, columns)
         diagnosis = diagnose(
-            columns.values, residuals, time_ordered=columns.time_ordered, seed=seed
+            columns.values,
+            residuals,
+            time_ordered=columns.time_ordered,
+            seed=seed,
+            first_powers=(columns.power == 1) & (columns.base >= 0),
         )
         law = error_law(
             residuals.values, volatility=diagnosis.volatility, seed=seed, tail=diagnosis.errors

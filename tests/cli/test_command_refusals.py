@@ -8,6 +8,7 @@ from pathlib import Path
 import numpy as np
 import pytest
 
+from scantling.cli.commands import commands
 from scantling.cli.main import run
 
 ROWS = 40
@@ -62,6 +63,7 @@ def refused(
     assert printed == ""
     assert message.startswith("scantling: ") and message.endswith("\n")
     assert message.count("\n") == 1 and message.strip().isprintable()
+    assert not (folder / "out").exists()
     written = [path for path in folder.rglob("*") if path.is_file()]
     assert sorted(path.name for path in written) == ["d.toml", "t.csv"]
     return message
@@ -221,6 +223,16 @@ def test_bad_usage(
     assert message.count("\n") == 1 and message.startswith("scantling: ")
     assert all(part in message for part in parts), message
     assert list(tmp_path.iterdir()) == []
+
+
+def test_the_bare_command_is_one_line(capsys: pytest.CaptureFixture[str]) -> None:
+    assert run([]) == 2
+    printed, message = capsys.readouterr()
+    names = ", ".join(sorted(commands.commands))
+    assert "draft" in names and names.endswith("vet")
+    assert (printed, message) == (
+        "", f"scantling: a command is needed: {names} (--help says more)\n"
+    )  # fmt: skip
 
 
 def test_fault_inside_is_one_line_too(

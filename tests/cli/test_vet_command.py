@@ -16,6 +16,7 @@ import numpy as np
 import pytest
 
 from scantling.cli.main import run
+from scantling.cli.output import reserved_folder
 
 STATUS = {"within budget": 0, "borderline": 3, "over budget": 4, "no budget": 5}
 Start = Callable[..., subprocess.CompletedProcess[str]]
@@ -66,7 +67,10 @@ def twin(
 def test_status_is_the_verdict(vetted: Vetted) -> None:
     answer = vetted.document["verdict"]["answer"]
     assert vetted.done.returncode == STATUS[answer]
-    assert vetted.done.stdout.split("\n")[1].startswith(f"Verdict     {answer.upper()} (cover: ")
+    # What covers an answer is said of those answers alone that it could speak for.
+    cover = vetted.document["verdict"]["cover"]
+    ending = f" (cover: {cover})" if answer in ("within budget", "borderline") else ""
+    assert vetted.done.stdout.split("\n")[1] == f"Verdict     {answer.upper()}{ending}"
     # Columns and errors share a volatile, heavy-tailed path: this cannot be within budget.
     assert vetted.done.returncode in (3, 4, 5)
     assert vetted.done.stderr == ""
@@ -79,17 +83,32 @@ def test_first_twelve_lines_say_what_has_to_be_decided(vetted: Vetted) -> None:
     for label in ("Verdict", "Because", "Columns", "Limits", "Rows", "Remedies"):
         assert found[label][12:].strip(), label
     assert found["Columns"].startswith("Columns     25 asked for; ")
-    if vetted.document["verdict"]["answer"] != "no budget":
+    if budget["allowed"]["high"] == 0:
+        assert found["Columns"].endswith("none allowed, 1 being the fewest tried")
+    elif vetted.document["verdict"]["answer"] != "no budget":
         assert f"{budget['allowed']['columns']} allowed" in found["Columns"]
         assert "90 % band" in found["Columns"]
-        assert (
-            f"{budget['binding']} {budget[budget['binding']]['columns']} binds" in (found["Limits"])
-        )
+    if vetted.document["verdict"]["answer"] != "no budget":
+        named, _, rest = found["Limits"][12:].partition(" bind")
+        assert named.startswith(budget["binding"])
+        assert named.endswith(f" {budget[budget['binding']]['columns']}")
+        assert rest.startswith("s; " if " and " not in named else "; ")
     for name in ("noise", "signal", "stability"):
         assert name in found["Limits"]
     assert found["Rows"].startswith("Rows        304 used")
-    first = vetted.document["remedies"][0]["remedy"]
-    assert found["Remedies"].startswith(f"Remedies    1. {first}: ")
+    first = vetted.document["remedies"][0]
+    if first["answer"] == "within budget":
+        outcome = f"within, all {first['columns']}"
+    else:
+        low = f" (low end {first['low']})" if first["low"] < first["allowed_columns"] else ""
+        outcome = (
+            f"{first['answer'].split()[0]}, {first['allowed_columns']} of {first['columns']}{low}"
+        )
+    assert found["Remedies"] == f"Remedies    1. {first['remedy']}: {outcome}"
+    # Remedies whose selection was not simulated stay off the first screen.
+    unsure = [r["remedy"] for r in vetted.document["remedies"] if "noise and signal" in r["note"]]
+    assert unsure
+    assert not [name for name in unsure if any(f"{name}: " in line for line in head)]
     assert head[0] == "scantling: Harbour dues, heavy tails"
 
 
@@ -282,7 +301,7 @@ def test_file_that_cannot_be_replaced(
 
 @pytest.mark.parametrize("workers", ["1", "2"])
 def test_interrupt(harbour: Path, command: list[str], tmp_path: Path, workers: str) -> None:
-    out = tmp_path / "out"
+    out = tmp_path / "made" / "out"
     with subprocess.Popen(
         [
             *command, "vet", str(harbour), "--out", str(out), "--replicates", "100000",
@@ -303,4 +322,43 @@ def test_interrupt(harbour: Path, command: list[str], tmp_path: Path, workers: s
     assert running.returncode == 130
     assert printed == ""
     assert message == "scantling: interrupted; nothing was written\n"
-    assert list(out.iterdir()) == []
+    # Folders made for a report that never came are taken away again.
+    assert list(tmp_path.iterdir()) == []
+
+
+@pytest.mark.parametrize("stop", [KeyboardInterrupt, RuntimeError])
+def test_a_stopped_run_removes_only_folders_it_made_and_left_empty(
+    stop: type[BaseException], tmp_path: Path
+) -> None:
+    def attempt(folder: Path, write: str = "") -> None:
+        with pytest.raises(stop), reserved_folder(folder):  # noqa: PT012
+            assert folder.is_dir()
+            if write:
+                (folder / write).touch()
+            raise stop
+
+    (tmp_path / "there").mkdir()
+    attempt(tmp_path / "there")
+    assert (tmp_path / "there").is_dir()  # it was there before
+    attempt(tmp_path / "there" / "a" / "b")
+    assert list((tmp_path / "there").iterdir()) == []
+    attempt(tmp_path / "kept" / "a", write="half.txt")
+    assert [path.name for path in (tmp_path / "kept" / "a").iterdir()] == ["half.txt"]
+    with reserved_folder(tmp_path / "done" / "a"):
+        pass
+    assert (tmp_path / "done" / "a").is_dir()
+
+
+def test_an_interrupt_while_libraries_load_is_no_traceback(
+    monkeypatch: pytest.MonkeyPatch, capsys: pytest.CaptureFixture[str]
+) -> None:
+    def interrupted() -> None:
+        raise KeyboardInterrupt
+
+    from scantling.cli import entry
+
+    monkeypatch.setattr("scantling.cli.main.main", interrupted)
+    with pytest.raises(SystemExit) as left:
+        entry.main()
+    assert left.value.code == 130
+    assert capsys.readouterr() == ("", "scantling: interrupted; nothing was written\n")

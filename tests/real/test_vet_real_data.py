@@ -210,7 +210,10 @@ def test_macro_growth(macro: Vetted) -> None:
 
 
 def test_output_growth_has_a_thin_tail(macro_table: Any) -> None:
-    """Growth, demeaned: index 10.2, interval 4.0 to infinity, thin-tail p .72 (separate code).
+    """Growth, demeaned: index 10.2, thin-tail p .72 (separate code), and no upper end.
+
+    With a bias of gamma up to .06 and no widening for dependence, separate code has the lower
+    end at 4.0; an interval that allows for both dependence and larger biases ends below it.
 
     ARCH-LM(4) 9.9290491 and McLeod-Li(4) 12.0404214 by statsmodels.
     """
@@ -219,7 +222,7 @@ def test_output_growth_has_a_thin_tail(macro_table: Any) -> None:
     assert growth.size == 202
     found = scantling.tail_index(growth)
     assert found.index == pytest.approx(10.2, abs=0.1)
-    assert found.low == pytest.approx(4.0, abs=0.3)
+    assert 2.5 < found.low < 4.0
     assert found.high > 50
     assert found.finite is False and found.p_value == pytest.approx(0.72, abs=0.03)
     assert arch_lm(growth, 4).statistic == pytest.approx(9.9290491, abs=1e-5)

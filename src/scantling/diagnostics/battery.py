@@ -25,16 +25,20 @@ from scantling.diagnostics.moments import (
     interval_answers,
     moment_answer,
 )
+from scantling.diagnostics.powers import PowerRule, power_rule
 from scantling.diagnostics.residuals import Residuals
+from scantling.diagnostics.signal_shape import SignalShape, signal_shape
 from scantling.diagnostics.structure import Structure, column_structure
 from scantling.diagnostics.tail_estimators import hill
 from scantling.diagnostics.tail_index import (
     TailIndex,
     block_length,
+    index_from_gamma,
     one_side,
     tail_index,
 )
 from scantling.diagnostics.variance import (
+    CO_MOVEMENT,
     co_movement,
     co_movement_test,
     glejser_permutation,
@@ -105,6 +109,10 @@ class Diagnosis:
     """None where rows have no order."""
     co_movement: FloatArray
     """Per column, sd of the score over what independence of sizes would give, shape (P,)."""
+    signal: SignalShape
+    """Evidence on a sparse against a dense signal."""
+    powers: PowerRule | None
+    """Which powers of the columns keep their scores' moments; None if an index is unknown."""
     structure: Structure
     """Factors, condition and correlations of the columns."""
     warnings: tuple[str, ...]
@@ -201,7 +209,14 @@ def column_weights(columns: ColumnTails) -> tuple[str, ...]:
     )
 
 
-def diagnose(X: FloatArray, residuals: Residuals, *, time_ordered: bool, seed: int) -> Diagnosis:
+def diagnose(
+    X: FloatArray,
+    residuals: Residuals,
+    *,
+    time_ordered: bool,
+    seed: int,
+    first_powers: np.ndarray | None = None,
+) -> Diagnosis:
     """Run every diagnostic.
 
     Parameters
@@ -214,6 +229,8 @@ def diagnose(X: FloatArray, residuals: Residuals, *, time_ordered: bool, seed: i
         Whether rows follow one another in time.
     seed : int
         Of permutations and bootstraps.
+    first_powers : array of bool, shape (P,), optional
+        Which columns are raw ones, neither powers nor products; default: all.
     """
     e = np.asarray(residuals.values)
     errors, sides, errors_note = error_tails(e, seed)
@@ -240,8 +257,33 @@ def diagnose(X: FloatArray, residuals: Residuals, *, time_ordered: bool, seed: i
         dependence=judged(dependence, granted, steady=block is None),
         clustering=clustering,
         co_movement=read_only(co_movement(X, e)),
+        signal=signal_shape(
+            X,
+            residuals.fitted + e,
+            sparse_fitted=residuals.fitted,
+            time_ordered=time_ordered,
+            seed=seed,
+        ),
+        powers=_power_rule(columns.tails, errors, variance, first_powers),
         structure=column_structure(X),
         warnings=sample_warnings(e, errors, volatility),
+    )
+
+
+def _power_rule(
+    columns: ColumnTails,
+    errors: TailIndex | None,
+    variance: tuple[TestResult, ...],
+    first_powers: np.ndarray | None,
+) -> PowerRule | None:
+    """The planning rule for the median raw column; sizes that move together share volatility."""
+    raw = columns.assessed if first_powers is None else columns.assessed & first_powers
+    if errors is None or not raw.any():
+        return None
+    middle = float(np.median(columns.gamma[raw]))
+    together = next(test for test in variance if test.test == CO_MOVEMENT)
+    return power_rule(
+        index_from_gamma(middle), errors.index, shared_volatility=together.p_value <= 0.05
     )
 
 

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import math
 import operator
+from dataclasses import dataclass
 from typing import Any
 
 from scantling.core.checks import between
@@ -12,6 +13,37 @@ from scantling.errors import InputError
 STRICT = 1e-12
 """Relative excess of the index over the order below which they count as equal: a moment of the
 order of the index does not exist, and rounding must not make it."""
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class PowerRule:
+    """Up to which power a column's score keeps its moments, by the rule for planning."""
+
+    column_index: float
+    """Tail index of the median first-power column; may be inf."""
+    error_index: float
+    """Tail index of the errors; may be inf."""
+    shared_volatility: bool
+    """Whether columns and errors are large together."""
+    keeping_variance: int
+    """Highest power, up to 6, whose score has a variance; 0: none."""
+    keeping_fourth: int
+    """Highest power whose score has a fourth moment; 0: none."""
+
+
+def power_rule(column_index: float, error_index: float, *, shared_volatility: bool) -> PowerRule:
+    """The rule at orders 2 and 4; arguments as of `highest_power`."""
+    variance, fourth = (
+        highest_power(column_index, error_index, order, shared_volatility=shared_volatility)
+        for order in (2.0, 4.0)
+    )
+    return PowerRule(
+        column_index=column_index,
+        error_index=error_index,
+        shared_volatility=shared_volatility,
+        keeping_variance=variance,
+        keeping_fourth=fourth,
+    )
 
 
 def power_score_index(

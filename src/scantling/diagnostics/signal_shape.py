@@ -221,21 +221,28 @@ def _answer(useful: dict[str, Comparison], against: dict[str, Comparison]) -> st
     return "undecided"
 
 
+def _share(value: float) -> str:
+    """A share in per cent, never minus zero."""
+    return f"{round(100 * value, 1) + 0.0:.1f} %"
+
+
 def _reason(
     answer: str, useful: dict[str, Comparison], components: int, apart: Comparison, best: str
 ) -> str:
     """The numbers in one sentence."""
+    plural = "" if components == 1 else "s"
     shares = (
-        f"out of fold the sparse fit explains {useful['sparse'].gain:.1%}, ridge"
-        f" {useful['ridge'].gain:.1%} and {components} principal component(s)"
-        f" {useful['factors'].gain:.1%} of the variance"
+        f"out of fold the sparse fit explains {_share(useful['sparse'].gain)}, ridge"
+        f" {_share(useful['ridge'].gain)} and {components} principal component{plural}"
+        f" {_share(useful['factors'].gain)} of the variance"
     )
     if answer == "no signal":
         most = max(useful.values(), key=lambda found: found.gain)
-        return f"{shares}, none clearly above 0 (standard error {most.error:.1%})"
+        return f"{shares}, none clearly above 0 (standard error {_share(most.error)})"
     dense = {"ridge": "ridge", "factors": "components"}[best]
     return (
-        f"{shares}; sparse minus {dense} is {apart.gain:+.1%} with standard error {apart.error:.1%}"
+        f"{shares}; sparse minus {dense} is {_share(apart.gain)} with standard error"
+        f" {_share(apart.error)}"
     )
 
 

@@ -34,6 +34,10 @@ COMPONENTS = 3
 """Principal components that stand for the columns when none is selected."""
 
 
+CO_MOVEMENT = "co-movement of |x| and |e|, rank corr."
+"""Name of the test of sizes that move together."""
+
+
 def koenker(u: Any, Z: Any, *, studentised: bool = True) -> TestResult:
     """Test u^2 against Z: n R^2 of u^2 on a constant and Z, chi2(m).
 
@@ -317,7 +321,7 @@ def co_movement_test(
     for rows in permuted(target, draws, generator, block):
         exceeding += int(np.count_nonzero(rows @ profile >= observed - slack))
     return TestResult(
-        test="co-movement of |x| and |e|, rank corr.",
+        test=CO_MOVEMENT,
         statistic=observed,
         p_value=(1 + exceeding) / (draws + 1),
         needs_moment=0,

@@ -114,7 +114,7 @@ def _expansions(design: Design, table: Table, case: Case) -> Iterator[Change]:
             columns = expand(replace(design, expand=changed), table)
         except InputError:
             continue  # the change leaves no usable design; there is nothing to compute
-        if np.array_equal(columns.values, case.X):
+        if columns.values.shape == case.X.shape and np.allclose(columns.values, case.X):
             continue  # as with powers of dummies: the design stays as it is
         yield Change(name=name, case=replace(case, X=columns.values), price=price)
 

@@ -16,6 +16,8 @@ ANSWERS = (WITHIN, BORDERLINE, OVER, NONE)
 VOLATILITY = "volatility"
 TAIL_COST = 1.05
 """Penalty ratio from which tails are said to cost something."""
+LEAST_SHOWN = 0.0005
+"""Smaller probabilities would be shown as 0.000."""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -61,7 +63,7 @@ def verdict(case: Case, diagnosis: Diagnosis, budget: Budget, stress: Stress | N
     return Verdict(
         answer=answer,
         cover="theory and simulation" if covered else "simulation only",
-        reasons=tuple(_sentence(text) for text in _reasons(case, budget, stress)),
+        reasons=tuple(_sentence(text) for text in _reasons(case, diagnosis, budget, stress)),
     )
 
 
@@ -69,7 +71,7 @@ def _sentence(text: str) -> str:
     return text[0].upper() + text[1:] + "."
 
 
-def _reasons(case: Case, budget: Budget, stress: Stress | None) -> list[str]:
+def _reasons(case: Case, diagnosis: Diagnosis, budget: Budget, stress: Stress | None) -> list[str]:
     limits = {
         "noise": (budget.noise, lambda: _noise_reason(case, budget)),
         "signal": (budget.signal, lambda: _signal_reason(case, budget)),
@@ -85,6 +87,8 @@ def _reasons(case: Case, budget: Budget, stress: Stress | None) -> list[str]:
             reasons.append(words())
     if not reasons:
         reasons.append(_nothing_binds(budget))
+    if diagnosis.signal.answer == "dense":
+        reasons.append("the signal looks dense, so a budget of columns may be the wrong question")
     return reasons
 
 
@@ -116,6 +120,8 @@ def chance(value: float, draws: int) -> str:
     """A simulated probability, no finer than its draws support."""
     if value * draws < 1:
         return f"below {3 / draws:.2g}"
+    if value < LEAST_SHOWN:
+        return f"below {LEAST_SHOWN}"
     return f"{value:.3f}" if value < 0.1 else f"{value:.2f}"
 
 

@@ -160,6 +160,24 @@ def diagnosis_part(report: Diagnosed) -> dict[str, Any]:
             "leading_share": number(structure.leading_share),
             "largest_correlation": number(structure.largest_correlation),
         },
+        "signal": {
+            "answer": found.signal.answer,
+            "reason": found.signal.reason,
+            "sparse_explained": number(found.signal.sparse_explained),
+            "ridge_explained": number(found.signal.ridge_explained),
+            "factor_explained": number(found.signal.factor_explained),
+        },
+        **(
+            {"powers": None, "powers_note": "a tail index is unknown"}
+            if found.powers is None
+            else {
+                "powers": {
+                    "keeping_variance": found.powers.keeping_variance,
+                    "keeping_fourth": found.powers.keeping_fourth,
+                    "shared_volatility": found.powers.shared_volatility,
+                }
+            }
+        ),
         "co_movement": {
             "median": number(float(np.median(found.co_movement))),
             "largest": number(float(found.co_movement.max())),

@@ -21,6 +21,7 @@ from scantling.report.wording import (
 )
 
 WORST = 5
+MOST_POWER = 6
 FEWEST_SPREAD = 5
 """Series from which on the spread of their indices is told."""
 LISTED = 6
@@ -234,6 +235,30 @@ def structure(report: Diagnosed, width: int) -> list[str]:
         width,
     )
     return lines
+
+
+def signal(report: Diagnosed, width: int) -> list[str]:
+    """Sparse or dense, and which powers keep their scores' moments."""
+    shape, rule = report.diagnosis.signal, report.diagnosis.powers
+    lines = heading("Signal and powers")
+    lines += paragraph(f"{shape.answer.capitalize()} signal: {shape.reason}.", width)
+    if rule is not None:
+        together = "and errors large together" if rule.shared_volatility else "independent of them"
+        lines += paragraph(
+            f"By the planning rule (index {index(rule.column_index)} of the median raw column,"
+            f" {index(rule.error_index)} of the errors, columns {together}) scores have a variance"
+            f" up to {_power(rule.keeping_variance)} and a fourth moment up to"
+            f" {_power(rule.keeping_fourth)}.",
+            width,
+        )
+    return lines
+
+
+def _power(highest: int) -> str:
+    """The highest power that keeps a moment, in words."""
+    if highest == 0:
+        return "no power"
+    return f"power {highest}" + (", the highest looked at," if highest == MOST_POWER else "")
 
 
 def law(report: HasLaw, width: int) -> list[str]:

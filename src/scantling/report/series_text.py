@@ -49,6 +49,7 @@ def render_design_diagnosis(report: DesignDiagnosis, width: int = 80) -> str:
         sections.moments,
         sections.variance,
         sections.structure,
+        sections.signal,
         sections.law,
     ):
         lines += section(report, width)

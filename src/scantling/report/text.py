@@ -28,6 +28,7 @@ def render(report: Report, width: int = 80) -> str:
         sections.moments,
         sections.variance,
         sections.structure,
+        sections.signal,
         sections.law,
         limits_section.limits,
         limits_section.selection,

@@ -49,7 +49,7 @@ def test_a_clean_table_is_ready_to_vet(tmp_path: Path) -> None:
     text, table = read_back(tmp_path, data)
     assert (table.time_name, table.response_name, table.names) == ("when", "y", ("a", "b"))
     assert 'columns = ["*"]' in text and 'missing = "refuse"' in text
-    assert "# a guess: the first numeric column; change it" in text
+    assert 'response = "y"  # a guess, to be changed' in text
     assert "To mend" not in text
     tree = tomllib.loads(text)
     assert tree.pop("title") == "panel" and tree["target"]["relevant"] == 2
@@ -58,6 +58,31 @@ def test_a_clean_table_is_ready_to_vet(tmp_path: Path) -> None:
     }
     for line in text.splitlines():
         assert " = " not in line or "  # " in line or line.startswith(("title", "#"))
+
+
+@pytest.mark.parametrize(
+    ("names", "response"),
+    [
+        (("a", "y", "b"), "y"),
+        (("a", "b", "Target"), "Target"),
+        (("a", "RESPONSE", "b"), "RESPONSE"),
+        (("a", "dependent", "y"), "dependent"),  # the first of those named so
+        (("a", "ya", "response_2"), "a"),  # no name but the whole one
+    ],
+)
+def test_the_response_is_guessed_by_its_name(
+    tmp_path: Path, names: tuple[str, ...], response: str
+) -> None:
+    data = write(tmp_path, {name: numbers(place) for place, name in enumerate(names)})
+    _, table = read_back(tmp_path, data)
+    assert table.response_name == response
+    assert table.names == tuple(name for name in names if name != response)
+
+
+def test_a_response_without_numbers_is_not_guessed(tmp_path: Path) -> None:
+    columns = {"a": numbers(0), "y": ["u"] * ROWS, "target": ["3"] * ROWS, "b": numbers(1)}
+    _, table = read_back(tmp_path, write(tmp_path, columns))
+    assert (table.response_name, table.names) == ("a", ("b",))
 
 
 def test_paths_are_relative_to_where_the_draft_goes(tmp_path: Path) -> None:
@@ -120,8 +145,8 @@ def test_what_has_to_be_mended_is_named_and_worked_around(tmp_path: Path) -> Non
         "# Columns without any number, skipped: 'when', 'name'.",
         "# To mend: constant, left out: 'flat'.",
         "# To mend: 'copy' is left out; identical to 'a'.",
-        "# To mend: 2 missing or infinite values; dropping their rows leaves 48 of 50 (most in"
-        " 'gaps').",
+        "# 2 missing or infinite values, most in 'gaps'; this draft drops their rows: 48 of 50 are"
+        " left.",
         "# To mend: 'mixed' is left out; row 7 (line 8), 'oops', is not a number.",
         "# To mend: over half of the values missing or infinite, left out: 'hollow'.",
         'missing = "drop-rows"',
@@ -175,4 +200,7 @@ def test_any_name_is_escaped(tmp_path: Path, names: list[str]) -> None:
     columns = {name: numbers(place) for place, name in enumerate(names)}
     data = write(tmp_path, {**columns, 'flat \\ "': ["1"] * ROWS})
     _, table = read_back(tmp_path, data)
-    assert (table.response_name, *table.names) == tuple(names)
+    named = [name for name in names if name.lower() in ("y", "response", "target", "dependent")]
+    response = [*named, names[0]][0]
+    assert table.response_name == response
+    assert table.names == tuple(name for name in names if name != response)

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
 
@@ -9,6 +11,7 @@ from scantling.core.record import read_only
 from scantling.diagnostics.battery import (
     column_weights,
     diagnose,
+    heavier_side,
     sample_warnings,
     series_group,
 )
@@ -77,10 +80,38 @@ def test_a_diagnosis_without_time(mixed: tuple) -> None:
         needs = finding.result.needs_moment
         granted = finding.result.method == "permutation" or found.moment(needs) == "exists"
         assert finding.valid == granted
+        assert finding.lacks == ("" if granted else "4th moment")
     # t(3) has no fourth moment: tests that need it are not to be trusted.
     assert any(not finding.valid for finding in found.variance)
     assert found.co_movement.shape == (5,)
     assert found.warnings == ()
+
+
+def test_the_heavier_side_decides_if_the_two_differ() -> None:
+    both = tail_index(np.random.default_rng(1).standard_t(3, 600))
+    left, right = (replace(both, side=side, gamma_error=0.05) for side in ("left", "right"))
+    # Joint standard error .0707: two of them are .1414.
+    light, heavy = replace(left, gamma=0.25), replace(right, gamma=0.40)
+    assert heavier_side(both, (light, heavy)) is heavy
+    assert heavier_side(both, (replace(left, gamma=0.40), replace(right, gamma=0.25))).side == "left"
+    assert heavier_side(both, (light, replace(right, gamma=0.39))) is both
+    assert heavier_side(both, ()) is both
+
+
+def test_moments_are_those_of_the_heavier_side() -> None:
+    """Pareto gains of index 1.5 over normal losses ten times as large as the least of them."""
+    rng = np.random.default_rng(3)
+    gains = rng.pareto(1.5, 4000) + 1
+    e = np.where(rng.random(4000) < 0.5, gains, -10 * np.abs(rng.standard_normal(4000)))
+    X = standard(rng.random((4000, 2)))
+    found = diagnose(X, residuals(e), time_ordered=False, seed=1)
+    assert found.moment(2) == "missing"
+    second = found.error_moments[1]
+    assert "on the right, the heavier side," in second.reason
+    mirrored = diagnose(X, residuals(-e), time_ordered=False, seed=1)
+    assert "on the left, the heavier side," in mirrored.error_moments[1].reason
+    alike = diagnose(X, residuals(rng.standard_t(3, 4000)), time_ordered=False, seed=1)
+    assert all("side" not in answer.reason for answer in alike.error_moments)
 
 
 def test_scores_of_bounded_columns_have_the_errors_tail(mixed: tuple) -> None:
@@ -161,6 +192,14 @@ def test_clustering_is_found_in_time_order_and_its_index_vetoes() -> None:
     shuffled = np.random.default_rng(5).permutation(e)
     calm = diagnose(X, residuals(shuffled), time_ordered=True, seed=1)
     assert calm.volatility is None
+    # Ljung-Box needs a variance, which both have, and a constant one, which clustering is not.
+    plain, steady = (
+        next(f for f in each.dependence if f.result.test == "Ljung-Box") for each in (found, calm)
+    )
+    assert found.moment(2) == calm.moment(2) == "exists"
+    assert (plain.valid, plain.lacks) == (False, "constant variance")
+    assert (steady.valid, steady.lacks) == (True, "")
+    assert all(finding.valid == (not finding.lacks) for finding in found.dependence)
 
 
 def test_near_integration_is_warned_of() -> None:

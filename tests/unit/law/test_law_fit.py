@@ -68,6 +68,19 @@ def test_the_family_chosen() -> None:
     assert "too few to splice" in short.fit.note
 
 
+def test_why_tails_are_not_spliced_is_said() -> None:
+    # 600 values of a rejected law: thrown dice have no tail index at all.
+    dice = np.random.default_rng(3).integers(1, 7, 600).astype(float)
+    found = fit_law(dice)
+    assert found.family in ("normal", "student-t")
+    note = f"the {found.family} law is rejected and tails cannot be spliced: "
+    assert found.fit.note.startswith(note)
+    assert "discrete (6 distinct values)" in found.fit.note
+    assert "values:" not in found.fit.note
+    # Asked for by name it is not judged, so nothing has to be explained.
+    assert fit_law(dice, family="normal").fit.note == ""
+
+
 def test_a_tie_goes_to_the_heavier_law() -> None:
     rng = np.random.default_rng(4)
     seen = False

@@ -21,12 +21,17 @@ from scantling.diagnostics.volatility import Volatility
 from scantling.law.families import student_law
 from scantling.law.fit import fit_law
 from scantling.planning.breakthrough import break_through
+from scantling.planning.budget import standing
 from scantling.planning.case import Case, draw_laws
+from scantling.planning.limit import make_limit
 from scantling.planning.remedies import REFITTED, changes, remedies, standardise, worst_to_drop
 from scantling.planning.signal import signal
 from scantling.simulation.scores import join, penalty_level
 
 ROWS, RAW = 120, 8
+OPEN = make_limit(math.inf, [math.inf] * 50, 52, mode="conditional")
+FAILING = make_limit(0.0, [0.0] * 50, 52, mode="conditional")
+"""Stability limits of the design itself: selection holds, or is what fails."""
 DESIGN = """\
 title = "Grain freight"
 [data]
@@ -107,7 +112,7 @@ def test_the_changes_that_apply(work):
     drop = {name for name in names if name.startswith("drop")}
     assert len(drop) == 1
     assert names - drop == {
-        "self-normalised loadings", "normal scores of the raw columns", "powers up to 2",
+        "self-normalised loadings", "normal scores of columns", "powers up to 2",
         "no powers", "no products",
     }  # fmt: skip
 
@@ -131,7 +136,7 @@ def test_fewer_powers_and_no_products_by_hand(work):
 def test_normal_scores_by_hand(work):
     scores = ndtri((rankdata(work.raw, axis=0) - 0.5) / ROWS)
     expected = by_hand(scores, powers=3, products=True)
-    changed = work.changes()["normal scores of the raw columns"].case
+    changed = work.changes()["normal scores of columns"].case
     np.testing.assert_allclose(changed.X, expected, atol=1e-9)
     # Nothing else moves: law, rule, target and sizes are the design's.
     assert replace(changed, X=work.case.X) == work.case
@@ -175,6 +180,42 @@ def test_the_worst_columns_are_dropped_as_few_as_suffice(work):
     assert risk_without(dropped[:1]) > 0.05
     (name,) = [n for n in work.changes() if n.startswith("drop")]
     np.testing.assert_array_equal(work.changes()[name].case.X, work.case.X[:, rest])
+
+
+def test_what_is_dropped_is_named_worst_first(work):
+    found = join([sample.found for sample in work.noise.drawn])
+    level = float(penalty_level(work.case.columns, 0.05))
+    counts = np.bincount(found.column[found.ratio > level], minlength=work.case.columns)
+    named = {n: change.dropped for n, change in work.changes(broken=(1, 4, 30)).items()}
+    assert named.pop("drop the 3 columns whose scores lack a variance") == (1, 4, 30)
+    (worst,) = [n for n in named if n.startswith("drop")]
+    dropped = named.pop(worst)
+    assert dropped == tuple(worst_to_drop(work.case, work.noise))
+    assert list(counts[list(dropped)]) == sorted(counts[list(dropped)], reverse=True)
+    assert len(dropped) == work.case.columns - work.changes()[worst].case.columns
+    # Other changes drop nothing by name.
+    assert set(named.values()) == {()}
+
+
+@pytest.mark.parametrize("products", [True, False])
+def test_a_change_that_leaves_the_design_as_it_is_is_skipped(work, tmp_path, products):
+    # Powers of a dummy are the dummy: "no powers" would compute the same columns again. So are
+    # its normal scores, but for rounding; not their products.
+    dummies = (work.raw > 0).astype(float)
+    lines = ["freight," + ",".join(f"g{j}" for j in range(RAW))]
+    for y, row in zip(work.table.response, dummies, strict=True):
+        lines.append(",".join(repr(float(v)) for v in (y, *row)))
+    (tmp_path / "grain.csv").write_text("\n".join(lines) + "\n")
+    text = DESIGN if products else DESIGN.replace("products = true", "products = false")
+    (tmp_path / "grain.toml").write_text(text)
+    design = read_design(tmp_path / "grain.toml")
+    table = read_table(design)
+    case = replace(work.case, X=expand(design, table).values)
+    assert case.columns == RAW + products * RAW * (RAW - 1) // 2
+    names = set(replace(work, design=design, table=table, case=case).changes())
+    assert names >= {"self-normalised loadings"}
+    assert not names & {"no powers", "powers up to 2"}
+    assert ("normal scores of columns" in names) is ("no products" in names) is products
 
 
 def test_nothing_is_dropped_where_noise_does_not_bind(work):
@@ -230,8 +271,9 @@ def test_standardise_leaves_out_what_became_constant():
 def ranked(work):
     diagnosis = SimpleNamespace(scores_without_variance=())
     return remedies(
-        work.design, work.table, work.residuals, diagnosis, work.case, work.noise, serial_map
-    )
+        work.design, work.table, work.residuals, diagnosis, work.case, work.noise, OPEN,
+        serial_map,
+    )  # fmt: skip
 
 
 def test_all_are_ranked_with_a_name_and_a_price(work, ranked):
@@ -269,13 +311,64 @@ def test_what_theory_says_helps_does_help(work, ranked):
     own = work.noise.curve[-1].risk
     assert own > 0.05
     assert risk["self-normalised loadings"] < 0.02
-    assert risk["normal scores of the raw columns"] < own / 2
+    assert risk["normal scores of columns"] < own / 2
 
 
 def test_workers_do_not_change_the_remedies(work, ranked):
     diagnosis = SimpleNamespace(scores_without_variance=())
     with worker_pool(2) as mapper:
         again = remedies(
-            work.design, work.table, work.residuals, diagnosis, work.case, work.noise, mapper
-        )
+            work.design, work.table, work.residuals, diagnosis, work.case, work.noise, OPEN,
+            mapper,
+        )  # fmt: skip
     assert again == ranked
+
+
+def refitted_names(found):
+    return {remedy.name for remedy in found if remedy.refitted}
+
+
+def test_more_are_refitted_where_selection_is_what_fails(work, ranked, monkeypatch):
+    """Refits are replaced by what they might find, so that only their order is looked at."""
+    import scantling.planning.remedies as module
+
+    def run(stability, allowed):
+        tried = []
+
+        def refits(case, mapper, *, twins, points):
+            assert (twins, points) == (False, module.STRESS_POINTS)
+            tried.append(case.columns)
+            columns = float(allowed(len(tried)))
+            limit = make_limit(columns, [columns] * 50, case.columns, mode="conditional")
+            return SimpleNamespace(stability=limit)
+
+        monkeypatch.setattr(module, "stress", refits)
+        found = remedies(
+            work.design, work.table, work.residuals,
+            SimpleNamespace(scores_without_variance=()), work.case, work.noise, stability,
+            serial_map,
+        )  # fmt: skip
+        assert len(tried) == len(refitted_names(found))
+        return found
+
+    # Nothing passes: all are tried, but only if it is selection that fails.
+    assert len(refitted_names(run(FAILING, lambda k: 0))) == len(ranked) > REFITTED
+    assert len(refitted_names(run(OPEN, lambda k: 0))) == REFITTED
+    # Three that pass are enough.
+    assert len(refitted_names(run(FAILING, lambda k: 5))) == REFITTED
+    later = run(FAILING, lambda k: 5 if k >= 3 else 0)
+    assert len(refitted_names(later)) == 5
+    assert [remedy.refitted for remedy in later] == [True] * 5 + [False] * (len(later) - 5)
+    assert [remedy.allowed.columns for remedy in later[:5]] == [5, 5, 5, 0, 0]
+    assert {remedy.binding for remedy in later[:5]} == {"stability"}
+    assert {remedy.answer for remedy in later[:5]} == {"over budget"}
+    assert {remedy.answer for remedy in later[5:]} != {"over budget"}
+
+
+def test_each_is_judged_by_its_own_columns_and_says_what_its_risk_rests_on(work, ranked):
+    changed = work.changes()
+    for remedy in ranked:
+        assert remedy.answer == standing(remedy.allowed, remedy.columns)
+        assert remedy.dropped == changed[remedy.name].dropped
+        noise = break_through(changed[remedy.name].case, serial_map, bands=False)
+        assert remedy.draws == noise.fitted.found.draws >= 100

@@ -272,7 +272,8 @@ def test_one_limit_above_its_band_is_over_though_another_is_missing(noise, answe
         (0.0, 400, "below 0.0075"),
         (0.0, 4000, "below 0.00075"),
         (0.0002, 4000, "below 0.00075"),  # not even one draw
-        (0.00025, 4000, "0.000"),
+        (0.00025, 4000, "below 0.0005"),  # not 0.000
+        (0.0005, 40_000, "0.001"),
         (0.031, 400, "0.031"),
         (0.21, 4000, "0.21"),
     ],
