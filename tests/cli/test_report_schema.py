@@ -119,6 +119,15 @@ MISFITS: list[tuple[str, Callable[[dict[str, Any]], Any]]] = [
     ("null where none may be", lambda d: d["design"].update(rows=None, rows_note="why")),
     ("risk above 1", lambda d: d["budget"]["risk_at_design"].update(value=1.2)),
     ("p-value below 0", lambda d: d["diagnosis"]["variance"][0].update(p_value=-0.1)),
+    ("valid, yet lacking", lambda d: d["diagnosis"]["variance"][0].update(lacks="4th moment")),
+    ("not valid, lacks unsaid", lambda d: d["diagnosis"]["variance"][0].update(valid=False)),
+    (
+        "unknown lack",
+        lambda d: d["diagnosis"]["variance"][0].update(valid=False, lacks="patience"),
+    ),
+    ("remedy without answer", lambda d: d["remedies"][0].pop("answer")),
+    ("remedy's answer unknown", lambda d: d["remedies"][0].update(answer="no budget")),
+    ("nothing dropped", lambda d: d["remedies"][0].update(dropped=[])),
     ("unknown answer", lambda d: d["verdict"].update(answer="fine")),
     ("answer in capitals", lambda d: d["verdict"].update(answer="OVER BUDGET")),
     ("unknown cover", lambda d: d["verdict"].update(cover="theory")),
@@ -226,6 +235,13 @@ def test_odd_designs_give_valid_reports(kind: str, tmp_path: Path, valid_documen
         assert document["diagnosis"]["structure"]["condition"] is None
     if kind == "more columns than rows":
         assert document["design"]["columns"] == 150 > document["design"]["rows"]
+    for finding in document["diagnosis"]["variance"]:
+        assert finding["valid"] is ("lacks" not in finding)
+    for remedy in document["remedies"]:
+        named = remedy.get("dropped", [])
+        assert set(named) <= set(names)
+        assert bool(named) is remedy["remedy"].startswith("drop ")
+        assert remedy["columns"] + len(named) in (len(names) - 1, remedy["columns"])
     if kind == "thirty rows":
         assert set(document["diagnosis"]["errors"]["moments"].values()) == {"unclear"}
     if kind == "nothing to find":

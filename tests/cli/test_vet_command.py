@@ -104,7 +104,10 @@ def test_first_twelve_lines_say_what_has_to_be_decided(vetted: Vetted) -> None:
         outcome = (
             f"{first['answer'].split()[0]}, {first['allowed_columns']} of {first['columns']}{low}"
         )
-    assert found["Remedies"] == f"Remedies    1. {first['remedy']}: {outcome}"
+    # A name that is too long is cut, never what comes of it.
+    name, room = f"1. {first['remedy']}", 80 - 12 - len(f": {outcome}")
+    name = name if len(name) <= room else name[: room - 3] + "..."
+    assert found["Remedies"] == f"Remedies    {name}: {outcome}"
     # Remedies whose selection was not simulated stay off the first screen.
     unsure = [r["remedy"] for r in vetted.document["remedies"] if "noise and signal" in r["note"]]
     assert unsure

@@ -288,6 +288,7 @@ def _power_rule(
 
 
 def error_tails(e: FloatArray, seed: int) -> tuple[TailIndex | None, tuple[TailIndex, ...], str]:
+    """Tail of a series on both sides, left and right from 500 rows on, and what was done to it."""
     try:
         errors = tail_index(e, seed=seed)
     except InputError as reason:
@@ -301,6 +302,7 @@ def error_tails(e: FloatArray, seed: int) -> tuple[TailIndex | None, tuple[TailI
 def error_moments(
     e: FloatArray, errors: TailIndex | None, note: str, implied: float | None, seed: int
 ) -> tuple[MomentAnswer, ...]:
+    """Moment answers at orders 1 to 4; all unclear where there is no tail index."""
     if errors is None:
         return tuple(MomentAnswer(order=q, answer="unclear", reason=note) for q in ORDERS)
     return tuple(
@@ -322,6 +324,7 @@ def _variance_tests(
 
 
 def dependence_tests(e: FloatArray, clustering: Clustering | None) -> tuple[TestResult, ...]:
+    """Every test of serial dependence, that for clustering first if it was run."""
     first = () if clustering is None else (clustering.test,)
     return (*first, robust_ljung_box(e), ljung_box(e), arch_lm(e), mcleod_li(e))
 

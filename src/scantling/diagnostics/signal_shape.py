@@ -93,9 +93,11 @@ def signal_shape(
 
     Notes
     -----
-    A fit is clearly better than another if its mean squared error is smaller by more than two
-    standard errors and its mean absolute error, about its median, is smaller too: under heavy
-    tails a few rows can carry the squares. 'no signal': no fit is clearly better than the mean.
+    The answer is about prediction from n rows: a sparse signal too weak to be found by selection
+    may still be 'dense' here. A fit is clearly better than another if its mean squared error is
+    smaller by more than two standard errors and its mean absolute error, about its median, is
+    smaller too: under heavy tails a few rows can carry the squares. 'no signal': no fit is
+    clearly better than the mean.
     'dense': ridge or factors are, and clearly better than the sparse fit. 'sparse': the sparse
     fit is, and clearly better than both. Ridge: penalty by leave-one-out inside the training
     rows, Golub et al. (1979), Technometrics 21. Components: up to 8, by the criterion of

@@ -92,6 +92,7 @@ def cautions(report: Report) -> tuple[str, ...]:
 
 
 def design_part(report: Diagnosed) -> dict[str, Any]:
+    """The design as read."""
     design, read = report.design, report.read
     return {
         "rows": read.rows,
@@ -117,6 +118,7 @@ def design_part(report: Diagnosed) -> dict[str, Any]:
 
 
 def tail_part(tail: TailIndex) -> dict[str, Any]:
+    """One tail index."""
     return {
         **noted("index", tail.index, ABOVE),
         **noted("low", tail.low, ABOVE),
@@ -130,6 +132,7 @@ def tail_part(tail: TailIndex) -> dict[str, Any]:
 
 
 def unknown_tail(note: str) -> dict[str, Any]:
+    """The keys of a tail index that could not be assessed, and why."""
     return {
         "index": None, "index_note": note, "low": None, "low_note": note, "high": None,
         "high_note": note, "finite": None, "finite_note": note, "threshold_count": None,
@@ -138,6 +141,7 @@ def unknown_tail(note: str) -> dict[str, Any]:
 
 
 def diagnosis_part(report: Diagnosed) -> dict[str, Any]:
+    """What the data say."""
     found = report.diagnosis
     names = report.read.names
     errors = tail_part(found.errors) if found.errors else unknown_tail(found.errors_note)
@@ -187,6 +191,7 @@ def diagnosis_part(report: Diagnosed) -> dict[str, Any]:
 
 
 def finding_part(finding: Finding) -> dict[str, Any]:
+    """One test."""
     result = finding.result
     return {
         "test": result.test,
@@ -241,6 +246,7 @@ def _group(group: SeriesGroup, names: tuple[str, ...], weight: tuple[str, ...] |
 
 
 def law_part(report: HasLaw) -> dict[str, Any]:
+    """The error law and its fit."""
     law = report.law
     path = law.volatility
     volatility: dict[str, Any] = {"volatility": None, "volatility_note": "constant"}

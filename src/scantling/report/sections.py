@@ -80,6 +80,7 @@ def design(report: Diagnosed, width: int) -> list[str]:
 
 
 def tail_words(tail: TailIndex) -> str:
+    """A tail index in words, without a full stop."""
     found = "thin tails are excluded" if tail.finite else "thin tails are not excluded"
     ends = index_interval(tail.low, tail.high)
     return f"index {index(tail.index)} (90 % {ends}); {found} ({p_value(tail.p_value)})"
@@ -174,6 +175,7 @@ def moments(report: Diagnosed, width: int) -> list[str]:
 
 
 def findings_table(findings: tuple[Finding, ...]) -> list[str]:
+    """A table of tests, with what each lacks here."""
     rows = [["Test", "statistic", "p", "lacks"]]
     for finding in findings:
         result = finding.result

@@ -1,0 +1,183 @@
+"""The first screen from constructed records: cover, columns, rows, remedies, page width."""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass, replace
+from types import SimpleNamespace
+from typing import Any
+
+import pytest
+
+from scantling.core.estimate import Estimate
+from scantling.planning.budget import Budget, combine, standing
+from scantling.planning.ceiling import Ceiling
+from scantling.planning.limit import make_limit, missing_limit
+from scantling.planning.remedies import Remedy
+from scantling.planning.verdict import ANSWERS, Verdict
+from scantling.report.first_screen import first_screen, helps, outcome, reason_is_cut
+from scantling.report.limits_section import reasons
+
+SHORT = "Noise binds: at 100 columns a noise column passes."
+LONG = "Noise binds: " + "a reason that takes more than its three lines of the page " * 6
+
+
+def limit(columns, low=None, high=None, most=100):
+    """A limit with a band; math.inf is not reached."""
+    low, high = columns if low is None else low, columns if high is None else high
+    return make_limit(columns, [low] * 3 + [columns] * 44 + [high] * 3, most, mode="conditional")
+
+
+OPEN = limit(math.inf)
+
+
+def budget_of(*, noise=OPEN, signal=OPEN, stability=OPEN, **changes):
+    allowed, binding = combine({"noise": noise, "signal": signal, "stability": stability}, 100)
+    budget = Budget(
+        asked=100, rows=1000, noise=noise, signal=signal, stability=stability, geometry=OPEN,
+        assured=missing_limit("not computed"),
+        ceiling=Ceiling(columns=31, low=31, high=31, regime="", capped=False),
+        allowed=allowed, binding=binding,
+        risk_at_design=Estimate(value=0.21, low=0.1, high=0.3), draws=400, curve=(),
+        penalty_ratio=1.3, equivalent_rows=592, rows_needed=1900, rows_note="",
+        detectable=0.22, detectable_worst=0.3, worst_columns=(), worst_shares=(),
+    )  # fmt: skip
+    return replace(budget, **changes)
+
+
+def remedy_of(columns, low=None, high=None, *, name="no powers", most=100, **changes):
+    allowed, binding = combine({"noise": limit(columns, low, high, most)}, most)
+    remedy = Remedy(
+        name=name, columns=most, answer=standing(allowed, most), allowed=allowed, binding=binding,
+        risk_at_design=Estimate(value=0.02, low=0.01, high=0.03), draws=400, refitted=True,
+        dropped=(), price="a price",
+    )  # fmt: skip
+    return replace(remedy, **changes)
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Made:
+    """As much of a report as the first screen reads."""
+
+    design: Any
+    """Its title."""
+    verdict: Verdict
+    """What is said first."""
+    budget: Budget
+    """The figures."""
+    stress: Any = None
+    """Refits."""
+    remedies: tuple[Remedy, ...] = ()
+    """What would help."""
+
+
+def report(answer="over budget", *, budget=None, why=(SHORT,), **changes):
+    verdict = Verdict(answer=answer, cover="simulation only", reasons=why)
+    made = Made(
+        design=SimpleNamespace(title="Cargo"), verdict=verdict,
+        budget=budget or budget_of(noise=limit(40.0, 20, 60)),
+    )  # fmt: skip
+    return replace(made, **changes)
+
+
+def line(made, label):
+    """The text beside a label, its lines joined."""
+    lines = first_screen(made, 80)
+    start = next(k for k, text in enumerate(lines) if text.startswith(f"{label} "))
+    more = [text[12:] for text in lines[start + 1 :]]
+    count = next((k for k, text in enumerate(lines[start + 1 :]) if text[:1] != " "), len(more))
+    return " ".join([lines[start][12:], *more[:count]])
+
+
+@pytest.mark.parametrize("answer", ANSWERS)
+def test_cover_is_said_where_there_is_something_to_cover(answer):
+    covered = answer in ("within budget", "borderline")
+    ending = " (cover: simulation only)" if covered else ""
+    assert line(report(answer), "Verdict") == answer.upper() + ending
+
+
+def test_rows_say_what_tails_cost_and_what_effects_need():
+    words = "1,000 used; tails cost as much as losing 408 of them; effects need 1,900"
+    assert line(report(), "Rows") == words
+    cheap = budget_of(noise=limit(40.0), equivalent_rows=980)
+    assert line(report(budget=cheap), "Rows") == "1,000 used; effects need 1,900"
+    note = "not within 64 times the present rows, at the present penalty"
+    hopeless = budget_of(noise=limit(40.0), equivalent_rows=1000, rows_needed=None, rows_note=note)
+    assert line(report(budget=hopeless), "Rows") == f"1,000 used; rows needed unknown: {note}"
+    assert line(report("no budget"), "Rows") == "1,000 used"
+
+
+def test_columns_allowed():
+    assert line(report(), "Columns") == "100 asked for; 40 allowed (90 % band 20 to 60)"
+    nothing = budget_of(noise=limit(0.0))
+    assert line(report(budget=nothing), "Columns") == (
+        "100 asked for; none allowed, 1 being the fewest tried"
+    )
+    # Refits start at the relevant columns, and nothing is known of fewer.
+    stress = SimpleNamespace(runs=(SimpleNamespace(columns=7), SimpleNamespace(columns=100)))
+    unstable = report(budget=budget_of(stability=limit(0.0)), stress=stress)
+    assert line(unstable, "Columns").endswith("none allowed, 7 being the fewest tried")
+    noisy = report(budget=nothing, stress=stress)
+    assert line(noisy, "Columns").endswith("none allowed, 1 being the fewest tried")
+    perhaps = report(budget=budget_of(noise=limit(0.0, 0, 12)))
+    assert line(perhaps, "Columns") == "100 asked for; 0 allowed (90 % band 0 to 12)"
+
+
+@pytest.mark.parametrize(
+    ("remedy", "words"),
+    [
+        (remedy_of(math.inf), "within, all 100"),
+        (remedy_of(math.inf, 30), "borderline, 100 of 100 (low end 30)"),
+        (remedy_of(60.0, 60, 60), "over, 60 of 100"),
+        (remedy_of(60.0, 40, 80), "over, 60 of 100 (low end 40)"),
+        (remedy_of(1500.0, 40, math.inf, most=2000), "borderline, 1,500 of 2,000 (low end 40)"),
+    ],
+)
+def test_what_a_remedy_makes_of_the_design(remedy, words):
+    assert outcome(remedy) == words
+
+
+def test_only_remedies_whose_selection_was_simulated_are_shown():
+    sure, unsure = remedy_of(math.inf, name="a"), remedy_of(math.inf, name="b", refitted=False)
+    made = report(remedies=(sure, unsure))
+    assert helps(made, sure)
+    assert not helps(made, unsure)
+    assert line(made, "Remedies") == "1. a: within, all 100"
+    assert line(report(remedies=(unsure,)), "Remedies") == "none of the 1 computed helps"
+    assert line(report(), "Remedies") == "none computed applies"
+    assert line(report("within budget", remedies=(sure,)), "Remedies") == "none needed"
+    worse = remedy_of(40.0, 10, 60)
+    assert not helps(made, worse)
+    assert helps(made, remedy_of(40.0, 21, 60))
+
+
+def test_a_long_remedys_name_is_cut_and_not_its_outcome():
+    made = report(remedies=(remedy_of(math.inf, 30, name="n" * 90),))
+    (text,) = [text for text in first_screen(made, 80) if text.startswith("Remedies")]
+    assert text.endswith("n...: borderline, 100 of 100 (low end 30)")
+    assert len(text) == 80
+
+
+def test_reasons_are_given_below_only_if_the_first_screen_does_not_show_them_all():
+    assert not reason_is_cut(report(), 80)
+    assert reasons(report(), 80) == []
+    cut = report(why=(LONG,))
+    assert reason_is_cut(cut, 80)
+    assert " ".join(text.strip() for text in reasons(cut, 80)).endswith(LONG.strip())
+    two = reasons(report(why=(SHORT, "Effect size binds.")), 80)
+    assert [text.strip() for text in two if text.strip()][-1] == "Effect size binds."
+    assert any(SHORT in text for text in two)
+
+
+@pytest.mark.parametrize("answer", ANSWERS)
+@pytest.mark.parametrize("why", [SHORT, LONG])
+def test_never_more_than_twelve_lines_of_eighty_columns(answer, why):
+    note = "not within 64 times the present rows, at the present penalty"
+    budget = budget_of(
+        noise=limit(40.0, 20, 60), signal=missing_limit("x"), rows_needed=None, rows_note=note
+    )
+    many = tuple(remedy_of(math.inf, 30, name=f"remedy {'n' * 80} {k}") for k in range(5))
+    made = report(answer, budget=budget, why=(why,), remedies=many)
+    lines = first_screen(made, 80)
+    assert len(lines) <= 12
+    assert max(map(len, lines)) <= 80
