@@ -108,10 +108,6 @@ def test_first_twelve_lines_say_what_has_to_be_decided(vetted: Vetted) -> None:
     name, room = f"1. {first['remedy']}", 80 - 12 - len(f": {outcome}")
     name = name if len(name) <= room else name[: room - 3] + "..."
     assert found["Remedies"] == f"Remedies    {name}: {outcome}"
-    # Remedies whose selection was not simulated stay off the first screen.
-    unsure = [r["remedy"] for r in vetted.document["remedies"] if "noise and signal" in r["note"]]
-    assert unsure
-    assert not [name for name in unsure if any(f"{name}: " in line for line in head)]
     assert head[0] == "scantling: Harbour dues, heavy tails"
 
 
@@ -334,7 +330,7 @@ def test_a_stopped_run_removes_only_folders_it_made_and_left_empty(
     stop: type[BaseException], tmp_path: Path
 ) -> None:
     def attempt(folder: Path, write: str = "") -> None:
-        with pytest.raises(stop), reserved_folder(folder):  # noqa: PT012
+        with pytest.raises(stop), reserved_folder(folder):
             assert folder.is_dir()
             if write:
                 (folder / write).touch()

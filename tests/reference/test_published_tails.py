@@ -191,11 +191,11 @@ def test_indices_of_real_series(series: dict, name: str, index: float, digits: i
 @pytest.mark.parametrize(
     ("name", "low", "high", "apart"),
     [
-        ("S&P 500", 2.7, 7.0, 0.02),
+        ("S&P 500", 2.7, 7.0, 0.03),
         ("Nasdaq", 3.0, 7.7, 0.02),
         ("WTI", 2.7, 5.1, 0.03),
         ("VIX", 2.8, 6.0, 0.03),
-        ("Mkt-RF", 2.3, 5.3, 0.06),
+        ("Mkt-RF", 2.3, 5.3, 0.08),
     ],
 )
 def test_ends_of_real_series_are_near_another_methods(

@@ -93,7 +93,8 @@ def test_the_heavier_side_decides_if_the_two_differ() -> None:
     # Joint standard error .0707: two of them are .1414.
     light, heavy = replace(left, gamma=0.25), replace(right, gamma=0.40)
     assert heavier_side(both, (light, heavy)) is heavy
-    assert heavier_side(both, (replace(left, gamma=0.40), replace(right, gamma=0.25))).side == "left"
+    mirrored = replace(left, gamma=0.40), replace(right, gamma=0.25)
+    assert heavier_side(both, mirrored) is mirrored[0]
     assert heavier_side(both, (light, replace(right, gamma=0.39))) is both
     assert heavier_side(both, ()) is both
 

@@ -100,16 +100,18 @@ def test_more_dependence_means_a_larger_error(
 def test_the_ends_by_hand() -> None:
     """gamma .30 at 250 rows: the interpolated biases, half the step plain and half on logs."""
     gamma, error = 0.30, 0.05
-    high_bias = 0.020 + (0.30 - 0.285) / (0.32 - 0.285) * (0.006 - 0.020)
-    low_bias = -0.006 + (0.30 - 0.285) / (0.32 - 0.285) * (-0.017 + 0.006) - 0.03
+    high, low = dict(zip(*BIAS_HIGH, strict=True)), dict(zip(*BIAS_LOW, strict=True))
+    way = (0.30 - 0.285) / (0.32 - 0.285)  # between the two points of either table
+    high_bias = (1 - way) * high[0.285] + way * high[0.32]
+    low_bias = (1 - way) * low[0.285] + way * low[0.32] - 0.03
     half = (high_bias - low_bias) / 2
-    point = foldnorm.ppf(1 - 0.76 * 0.10, half / error)
+    point = foldnorm.ppf(1 - MISSES * 0.10, half / error)
     step = (point - half / error) * error
-    low, high = interval(gamma, error, 250, 0.90)
-    assert low == pytest.approx(
+    lower, upper = interval(gamma, error, 250, 0.90)
+    assert lower == pytest.approx(
         (gamma - step + gamma * math.exp(-step / gamma)) / 2 - high_bias, abs=1e-9
     )
-    assert high == pytest.approx(
+    assert upper == pytest.approx(
         (gamma + step + gamma * math.exp(step / gamma)) / 2 - low_bias, abs=1e-9
     )
 
@@ -150,7 +152,7 @@ def test_level_and_error_widen_it_and_fewer_rows_raise_the_upper_end(
 
 
 def test_the_level_counts_with_the_calibrated_misses() -> None:
-    """Far out, one side only: the step is the normal point of 1 - 0.76 (1 - level)."""
+    """Far out, one side only: the step is the normal point of 1 - MISSES (1 - level)."""
     gamma, error = 0.30, 1e-4
     low, _ = interval(gamma, error, 250, 0.90)
     step = gamma - np.interp(gamma, *BIAS_HIGH) - low

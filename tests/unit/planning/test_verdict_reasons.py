@@ -52,8 +52,9 @@ def budget_of(*, noise=OPEN, signal=OPEN, stability=OPEN, geometry=OPEN, rate=10
     return replace(budget, **changes)
 
 
-def diagnosis_of(*, variance="exists", broken=0, width=100):
+def diagnosis_of(*, variance="exists", broken=0, width=100, signal="sparse"):
     return SimpleNamespace(
+        signal=SimpleNamespace(answer=signal),
         moment=lambda order: variance if order == 2 else "exists",
         scores_without_variance=tuple(range(broken)),
         weight=("heavy",) * width,
@@ -167,6 +168,15 @@ def test_nothing_binds():
     assert found.answer == WITHIN
     assert len(found.reasons) == 1
     assert found.reasons[0].startswith("No limit is reached up to the 100 columns")
+
+
+@pytest.mark.parametrize("signal", ["sparse", "dense", "undecided", "no signal"])
+def test_a_dense_signal_is_named_last_and_changes_no_answer(signal):
+    words = "The signal looks dense, so a budget of columns may be the wrong question."
+    for limits in ({}, {"noise": limit(10.0)}):
+        found, plain = judge(diagnosis_of(signal=signal), **limits), judge(**limits)
+        assert found.answer == plain.answer
+        assert found.reasons == plain.reasons + ((words,) if signal == "dense" else ())
 
 
 def test_noise_names_the_tails_only_if_they_cost_something():

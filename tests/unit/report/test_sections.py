@@ -59,9 +59,7 @@ def test_each_test_says_what_its_p_value_lacks():
 def test_thin_tails_are_excluded_or_not():
     tail = tail_index(np.random.default_rng(1).standard_t(3, 600))
     shown = replace(tail, index=2.96, low=2.2, high=4.1, finite=True, p_value=0.001)
-    assert tail_words(shown) == (
-        "index 3.0 (90 % 2.2 to 4.1); thin tails are excluded (p = 0.001)"
-    )
+    assert tail_words(shown) == ("index 3.0 (90 % 2.2 to 4.1); thin tails are excluded (p = 0.001)")
     thin = tail_words(replace(shown, finite=False, p_value=0.4))
     assert thin.endswith("; thin tails are not excluded (p = 0.400)")
 
