@@ -192,7 +192,7 @@ def test_indices_of_real_series(series: dict, name: str, index: float, digits: i
     ("name", "low", "high", "apart"),
     [
         ("S&P 500", 2.7, 7.0, 0.03),
-        ("Nasdaq", 3.0, 7.7, 0.02),
+        ("Nasdaq", 3.0, 7.7, 0.03),
         ("WTI", 2.7, 5.1, 0.03),
         ("VIX", 2.8, 6.0, 0.03),
         ("Mkt-RF", 2.3, 5.3, 0.08),

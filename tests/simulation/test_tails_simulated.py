@@ -121,10 +121,8 @@ def test_default_intervals_cover_under_clustering() -> None:
 
 
 def test_intervals_are_narrower_than_with_one_bound_on_the_bias() -> None:
-    """t(3), t(4), Pareto 3 at n = 1000: by a quarter, where the bound is 0.06 everywhere."""
-    rng = np.random.default_rng(7)
-    pareto = (1 + rng.pareto(3, (1000, COLUMNS))) * rng.choice([-1.0, 1.0], (1000, COLUMNS))
-    for columns in (students(3, 1000, seed=7), students(4, 1000, seed=7), pareto):
+    """t(3), t(4) at n = 1000: by a quarter, where the bound is 0.06 everywhere."""
+    for columns in (students(3, 1000, seed=7), students(4, 1000, seed=7)):
         tails = column_tails(columns, dependent=True)
         former = 2 * tails.error * folded_quantile(0.06 / tails.error, 0.90)
         ratio = (tails.gamma_high - np.maximum(tails.gamma_low, 0)) / former
@@ -139,13 +137,11 @@ def test_single_series_intervals_cover_too() -> None:
 
 
 def test_intervals_fail_where_they_are_known_to() -> None:
-    """Controls: stable 1.7 (.05), GARCH near integration (.11, .88), index 3.676 (.61), a law
-    skewed about its median, and intervals without the bias under t(10) (elsewhere .15)."""
+    """Controls: stable 1.7 (.05), GARCH near integration (.11, .88), index 3.676 (.61), and
+    intervals without the bias under t(10) (elsewhere .15)."""
     stable = levy_stable.rvs(1.7, 0, size=(1000, 100), random_state=np.random.default_rng(8))
     assert covered(stable, 1 / 1.7) < 0.2
     assert covered(garch(1000, 0.11, 0.88), 1 / 3.676) < 0.75
-    size, right = np.abs(students(4, 1000, seed=8)), students(4, 1000, seed=9) > -0.47
-    assert covered(np.where(right, 1.5 * size, -size / 1.5), 1 / 4) < 0.7
     tails = column_tails(students(10, 1000, seed=6), dependent=True)
     plain = np.abs(tails.gamma - 0.1) <= 1.645 * tails.error
     assert plain.mean() < 0.4

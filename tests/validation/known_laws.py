@@ -9,6 +9,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from scantling.core.record import FloatArray
+from scantling.diagnostics.tail_interval import asymmetry_bias
 from scantling.diagnostics.volatility import kesten_index
 
 BURN_IN = 1000
@@ -38,8 +39,16 @@ class KnownLaw:
 
     def magnitudes(self, rng: np.random.Generator, rows: int, replications: int) -> FloatArray:
         """Absolute distances from the centre, shape (rows, replications)."""
+        return self.with_skew(rng, rows, replications)[0]
+
+    def with_skew(
+        self, rng: np.random.Generator, rows: int, replications: int
+    ) -> tuple[FloatArray, FloatArray]:
+        """The same, and the bias that pooling unequal halves may add, shape (replications,)."""
         drawn = self.draw(rng, rows, replications)
-        return np.abs(drawn - np.median(drawn, axis=0)) if self.centred else np.abs(drawn)
+        if not self.centred:
+            return np.abs(drawn), np.zeros(replications)
+        return np.abs(drawn - np.median(drawn, axis=0)), asymmetry_bias(drawn)
 
 
 def student(df: float) -> KnownLaw:

@@ -22,6 +22,7 @@ from scantling.diagnostics.tail_index import (
     tail_counts,
     tied_share,
 )
+from scantling.diagnostics.tail_interval import asymmetry_bias
 from scantling.diagnostics.tail_kernel import TailEstimates, tail_estimates
 from scantling.errors import InputError
 
@@ -98,7 +99,12 @@ def column_tails(series: FloatArray, *, dependent: bool) -> ColumnTails:
 
     def keep(columns: list[int], part: FloatArray) -> None:
         block = block_length(len(part)) if dependent else 1
-        found = tail_estimates(magnitudes(part, "both"), tail_counts(len(part)), block=block)
+        found = tail_estimates(
+            magnitudes(part, "both"),
+            tail_counts(len(part)),
+            block=block,
+            skew_bias=asymmetry_bias(part),
+        )
         for name, values in out.items():
             values[columns] = getattr(found, name)
 

@@ -17,6 +17,7 @@ import numpy as np
 from scantling.core.checks import between, finite_vector
 from scantling.core.record import FloatArray
 from scantling.core.streams import stream
+from scantling.diagnostics.tail_interval import asymmetry_bias
 from scantling.diagnostics.tail_kernel import tail_estimates
 from scantling.errors import InputError
 
@@ -258,7 +259,10 @@ def tail_index(values: Any, *, side: str = "both", level: float = 0.90, seed: in
     kappa, k_hill, _ = counts
     if np.partition(size, n - 1 - kappa)[n - 1 - kappa] <= 0:
         raise InputError("values: more than half of them are equal, so there is no tail index")
-    found = tail_estimates(size[:, None], counts, block=block_length(n), level=level)
+    skew = asymmetry_bias(series.values[:, None]) if side == "both" else 0.0
+    found = tail_estimates(
+        size[:, None], counts, block=block_length(n), level=level, skew_bias=skew
+    )
     gamma = float(found.gamma[0])
     low, high = index_ends(float(found.gamma_low[0]), float(found.gamma_high[0]))
     p_value = float(found.p_value[0])

@@ -36,6 +36,29 @@ MISSES = 0.73
 """Share of the nominal misses allowed before the steps above; calibrated with them."""
 
 
+ASYMMETRY_BIAS = 0.3
+"""Bias that pooling unequal halves adds, per squared log ratio of their outer deciles: between
+0.24 and 0.38 over two-piece Student laws with 3, 4 and 6 degrees of freedom (simulated)."""
+MOST_ASYMMETRY_BIAS = 0.10
+"""Where one half is far larger, as in a squared series, the other no longer matters."""
+ASYMMETRY_NOISE = 13.0
+"""Twice n times the mean squared log ratio of symmetric samples, taken off before."""
+
+
+def asymmetry_bias(values: FloatArray) -> FloatArray:
+    """Upward bias that pooling both tails of skewed series may add, shape (P,).
+
+    `values` is (n, P). The outer deciles' distances from the median are compared; series whose
+    deciles coincide with the median have none.
+    """
+    low, middle, high = np.quantile(values, [0.1, 0.5, 0.9], axis=0)
+    above, below = high - middle, middle - low
+    fine = (above > 0) & (below > 0)
+    ratio = np.log(np.where(fine, above, 1.0) / np.where(fine, below, 1.0))
+    excess = np.maximum(ratio**2 - ASYMMETRY_NOISE / values.shape[0], 0.0)
+    return np.asarray(np.minimum(ASYMMETRY_BIAS * excess, MOST_ASYMMETRY_BIAS))
+
+
 def folded_quantile(ratio: FloatArray | float, level: float) -> FloatArray:
     """The `level` quantile of |N(ratio, 1)|: critical value when bias/s.e. is at most `ratio`.
 
@@ -65,7 +88,12 @@ def dependent_error(
 
 
 def gamma_interval(
-    gamma: FloatArray, error: FloatArray, n: int, level: float
+    gamma: FloatArray,
+    error: FloatArray,
+    n: int,
+    level: float,
+    *,
+    skew_bias: FloatArray | float = 0.0,
 ) -> tuple[FloatArray, FloatArray]:
     """Ends of the interval for gamma.
 
@@ -82,8 +110,10 @@ def gamma_interval(
         Rows behind them.
     level : float
         Nominal coverage.
+    skew_bias : float or array, shape (P,)
+        `asymmetry_bias` of the series, where both tails are pooled.
     """
-    high_bias = np.interp(gamma, *BIAS_HIGH)
+    high_bias = np.interp(gamma, *BIAS_HIGH) + skew_bias
     low_bias = np.interp(gamma, *BIAS_LOW) - SLOW_MIXING * (250 / n) ** 0.25
     half_range = (high_bias - low_bias) / 2 / np.maximum(error, 1e-12)
     critical = folded_quantile(half_range, 1 - MISSES * (1 - level)) - half_range

@@ -40,7 +40,12 @@ class TailEstimates:
 
 
 def tail_estimates(
-    magnitude: FloatArray, counts: tuple[int, int, int], *, block: int, level: float = 0.90
+    magnitude: FloatArray,
+    counts: tuple[int, int, int],
+    *,
+    block: int,
+    level: float = 0.90,
+    skew_bias: FloatArray | float = 0.0,
 ) -> TailEstimates:
     """Estimate the tail of every column of `magnitude`.
 
@@ -54,6 +59,8 @@ def tail_estimates(
         Rows that may depend on each other; 1: none do.
     level : float
         Nominal coverage of the interval.
+    skew_bias : float or array, shape (P,)
+        Upward bias from pooling unequal halves.
     """
     n = magnitude.shape[0]
     kappa, k_hill, k_thin = counts
@@ -73,7 +80,7 @@ def tail_estimates(
     gamma = weighted_hill(ordered, kappa)
     second = hill(ordered, k_hill)
     robust = dependent_error(errors[0], independent, n, block)
-    low, high = gamma_interval(gamma, robust, 2 * kappa, level)
+    low, high = gamma_interval(gamma, robust, 2 * kappa, level, skew_bias=skew_bias)
     return TailEstimates(
         gamma=gamma,
         error=errors[0],

@@ -102,6 +102,7 @@ def combine(limits: dict[str, Limit], most: int) -> tuple[Allowed, str | None]:
     draws = [min(values) for values in zip(*(x.draws for x in limits.values()), strict=True)]
     low, high = band(draws)
     columns = min(limit.columns for limit in limits.values() if limit.columns is not None)
+    low, high = min(low, columns), max(high, columns)  # a band contains its point
     reached = {name: limit for name, limit in limits.items() if limit.reached}
     binding = min(reached, key=lambda name: reached[name].columns or 0) if reached else None
     allowed = Allowed(

@@ -44,6 +44,7 @@ def make_limit(point: float, draws: Sequence[float], most: int, *, mode: str) ->
     """
     reached = math.isfinite(point)
     low, high = band(draws)
+    low, high = min(low, point), max(high, point)  # a band contains its point
     return Limit(
         columns=int(point) if reached else most,
         low=most if math.isinf(low) else int(low),

@@ -120,11 +120,12 @@ def refit(
 
 
 def grid_of(case: Case, points: int = GRID_POINTS) -> list[int]:
-    """Numbers of columns the refits are run at: from the relevant ones alone to all.
+    """Numbers of columns the refits are run at, neighbours at least a fifth apart.
 
-    Neighbours differ by at least a fifth.
+    From one more than the relevant ones: of these alone, always selected, the stability index
+    says nothing.
     """
-    fewest = min(case.columns, case.target.relevant)
+    fewest = min(case.columns, case.target.relevant + 1)
     steps = max(1, int(math.log(case.columns / fewest) / math.log(1.2)))
     return [int(p) for p in column_grid(case.columns, fewest=fewest, points=min(points, steps + 1))]
 

@@ -29,8 +29,8 @@ def test_the_band_is_of_the_smallest_under_each_draw():
     down = limit(30.0, [float(d) for d in range(50, 0, -1)])
     allowed, binding = combine({"noise": up, "signal": down, "stability": OPEN}, 100)
     assert (up.low, up.high) == (down.low, down.high) == (3, 48)
-    # Minima 1, 1, 2, 2, ..., 25, 25: third smallest 2, third largest 24.
-    assert (allowed.columns, allowed.low, allowed.high) == (25, 2, 24)
+    # Minima 1, 1, 2, 2, ..., 25, 25: third smallest 2, third largest 24; the point 25 is in it.
+    assert (allowed.columns, allowed.low, allowed.high) == (25, 2, 25)
     assert binding == "noise"
     assert allowed.note == ""
 
@@ -123,7 +123,7 @@ def test_assemble_puts_each_figure_in_its_place():
         ),
     )  # fmt: skip
     assert (found.asked, found.rows) == (100, 200)
-    assert (found.allowed.columns, found.allowed.low, found.allowed.high) == (30, 20, 20)
+    assert (found.allowed.columns, found.allowed.low, found.allowed.high) == (30, 20, 30)
     assert found.binding == "noise"
     risk = found.risk_at_design
     assert (risk.value, risk.low, risk.high) == (0.3, 0.2, 0.4)
