@@ -194,7 +194,13 @@ def diagnose_column(
 
 
 def pilot(design: Design, table: Table, columns: Columns) -> Residuals:
-    """Residuals of the pilot, refused where nothing is left to diagnose."""
+    """Residuals of the pilot; refused where nothing is left to diagnose or to tell apart."""
+    relevant, asked = design.target.relevant, len(columns.names)
+    if relevant >= max(2, asked):
+        raise InputError(
+            f"{design.path.name}: [target] relevant = {relevant}: the design has {asked} candidate"
+            f" columns; a number below {max(2, asked)} is needed"
+        )
     residuals = fit_pilot(
         columns.values,
         columns.response,

@@ -250,3 +250,22 @@ def test_fault_inside_is_one_line_too(
     monkeypatch.setenv("SCANTLING_DEBUG", "1")
     with pytest.raises(RuntimeError):
         run(["vet", str(small), "--out", str(tmp_path)])
+
+
+@pytest.mark.parametrize("relevant", [3, 300])
+def test_as_many_relevant_columns_as_there_are_is_refused(small, tmp_path, capsys, relevant):
+    """There would be nothing to tell them apart from; the number is said."""
+    from scantling.cli.main import run
+
+    text = small.read_text(encoding="utf-8").replace("relevant = 1", f"relevant = {relevant}")
+    text = text.replace('"small.csv"', f'"{small.with_name("small.csv").as_posix()}"')
+    design = tmp_path / "many.toml"
+    design.write_text(text, encoding="utf-8")
+    assert run(["vet", str(design), "--out", str(tmp_path / "out")]) == 2
+    seen = capsys.readouterr()
+    assert seen.out == ""
+    assert seen.err == (
+        f"scantling: many.toml: [target] relevant = {relevant}: the design has 3 candidate columns;"
+        " a number below 3 is needed\n"
+    )
+    assert not (tmp_path / "out").exists()

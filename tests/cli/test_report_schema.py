@@ -189,7 +189,7 @@ def _columns(kind: str) -> tuple[np.ndarray, str]:
     if kind == "counts":
         return np.column_stack([rng.poisson(0.4, N), rng.poisson(2.0, (N, 3))]), ""
     if kind == "nothing to find":
-        return np.column_stack([y, X]), "[target]\nsmallest_effect = 0.001\nrelevant = 4\n"
+        return np.column_stack([y, X]), "[target]\nsmallest_effect = 0.001\nrelevant = 3\n"
     if kind == "collinear":
         rule = '[penalty]\nrule = "self-normalised"\n'
         return np.column_stack([y, X, X.sum(axis=1)]), rule
@@ -212,7 +212,8 @@ def test_odd_designs_give_valid_reports(kind: str, tmp_path: Path, valid_documen
     names = ["y", *(f"x{j}" for j in range(1, values.shape[1]))]
     lines = [",".join(names), *(",".join(map(repr, map(float, row))) for row in values)]
     (tmp_path / "odd.csv").write_text("\n".join(lines) + "\n")
-    target = "" if "[target]" in more else "[target]\nrelevant = 2\nsmallest_effect = 0.4\n"
+    few = 1 if values.shape[1] == 2 else 2
+    target = "" if "[target]" in more else f"[target]\nrelevant = {few}\nsmallest_effect = 0.4\n"
     (tmp_path / "odd.toml").write_text(
         f'[data]\nfile = "odd.csv"\nresponse = "y"\n{more}{target}[simulation]\nreplicates = 50\n'
     )

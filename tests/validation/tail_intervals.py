@@ -44,6 +44,7 @@ from scantling.diagnostics.tail_interval import (
     BIAS_HIGH,
     BIAS_LOW,
     SLOW_MIXING,
+    SLOW_SHARE,
     folded_quantile,
 )
 from scantling.diagnostics.tail_kernel import tail_estimates
@@ -290,7 +291,8 @@ def grid_row(law: KnownLaw, counts: dict[int, int], seed: int) -> list[str]:
             ]
         )
         mean = float(found.mean())
-        low = np.interp(mean, *BIAS_LOW) - SLOW_MIXING * (250 / rows) ** 0.25
+        slow = SLOW_MIXING * np.interp(mean, *SLOW_SHARE) * (250 / rows) ** 0.25
+        low = np.interp(mean, *BIAS_LOW) - slow
         high = np.interp(mean, *BIAS_HIGH)
         bias = mean - law.gamma
         error = found.std() / np.sqrt(replications)

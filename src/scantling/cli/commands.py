@@ -163,11 +163,15 @@ def diagnose(
         from scantling.report.series_text import render_series
 
         source = read_series(file, column=column)
+        repeat = [file if file == "-" else quote(source.file_name)]
+        repeat += [] if column is None else ["--column", quote(column)]
+        repeat += ["--unordered"] if unordered else []
+        repeat += [] if seed is None else ["--seed", str(seed)]
         series = diagnose_column(
             source,
             time_ordered=not unordered,
             seed=1 if seed is None else seed,
-            command=f"scantling diagnose {source.file_name}",
+            command=" ".join(["scantling diagnose", *repeat]),
         )
         text = series_json(series) if as_json else render_series(series)
     print_report(text, plain=True)

@@ -26,7 +26,8 @@ def run(arguments: list[str] | None = None) -> int:
         known = ", ".join(commands.list_commands(click.Context(commands)))
         return _refuse(f"a command is needed: {known} (--help says more)")
     except click.UsageError as fault:
-        where = "" if fault.ctx is None else f"{fault.ctx.command_path}: "
+        path = "" if fault.ctx is None else fault.ctx.command_path.removeprefix("scantling").strip()
+        where = f"{path}: " if path else ""
         return _refuse(f"{where}{fault.format_message()} (--help says more)")
     except click.ClickException as fault:
         return _refuse(fault.format_message())

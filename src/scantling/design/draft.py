@@ -104,7 +104,7 @@ def draft_design(data_path: str | Path, *, folder: str | Path | None = None) -> 
     rows += _data_rows(findings, _relative(path, folder))
     defaults = ExpandSpec(own_lags=0 if findings.columns else _DRAFT_OWN_LAGS)
     target = TargetSpec()
-    relevant = min(target.relevant, max(len(findings.columns), 1))
+    relevant = min(target.relevant, max(len(findings.columns) // 2, 1))
     rows += _table_rows("expand", asdict(defaults))
     rows += _table_rows("purpose", {"kind": "regression"})
     rows += _table_rows("target", {**asdict(target), "relevant": relevant})

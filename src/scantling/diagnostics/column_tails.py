@@ -78,7 +78,7 @@ class ColumnTails:
         return int(order[(order.size - 1) // 2])
 
 
-def column_tails(series: FloatArray, *, dependent: bool) -> ColumnTails:
+def column_tails(series: FloatArray, *, dependent: bool, side: str = "both") -> ColumnTails:
     """Estimate the tails of every column of `series`.
 
     Parameters
@@ -87,6 +87,8 @@ def column_tails(series: FloatArray, *, dependent: bool) -> ColumnTails:
         Trusted: finite.
     dependent : bool
         Whether rows are in time order; standard errors then use blocks of ceil(n^0.6) rows.
+    side : {'both', 'left', 'right'}
+        Which tail; 'both' pools magnitudes about the median.
 
     Returns
     -------
@@ -100,10 +102,10 @@ def column_tails(series: FloatArray, *, dependent: bool) -> ColumnTails:
     def keep(columns: list[int], part: FloatArray) -> None:
         block = block_length(len(part)) if dependent else 1
         found = tail_estimates(
-            magnitudes(part, "both"),
-            tail_counts(len(part)),
+            magnitudes(part, side),
+            tail_counts(len(part), side),
             block=block,
-            skew_bias=asymmetry_bias(part),
+            skew_bias=asymmetry_bias(part) if side == "both" else 0.0,
         )
         for name, values in out.items():
             values[columns] = getattr(found, name)
@@ -132,7 +134,7 @@ def column_tails(series: FloatArray, *, dependent: bool) -> ColumnTails:
     return ColumnTails(
         **{name: read_only(values) for name, values in out.items()},
         active_share=read_only(active_share),
-        threshold_count=n // 2,
+        threshold_count=tail_counts(n, side)[0],
         refused=tuple(refused),
     )
 

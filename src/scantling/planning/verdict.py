@@ -89,6 +89,11 @@ def _reasons(case: Case, diagnosis: Diagnosis, budget: Budget, stress: Stress | 
         reasons.append(_nothing_binds(budget))
     if diagnosis.signal.answer == "dense":
         reasons.append("the signal looks dense, so a budget of columns may be the wrong question")
+    if diagnosis.signal.answer == "no signal":
+        reasons.append(
+            "no fit finds a signal in these columns, so the verdict rests on the effects assumed in"
+            " [target] alone"
+        )
     return reasons
 
 

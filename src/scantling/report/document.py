@@ -84,9 +84,6 @@ def cautions(report: Report) -> tuple[str, ...]:
         spans = ("Rows were dropped, so lags may span more than one step of time.",)
     if report.read.rows_lost and report.design.data.time is None:
         spans += ("There is no time column: lags follow the order of rows in the file.",)
-    relevant, asked = report.design.target.relevant, len(report.read.names)
-    if relevant > asked:
-        spans += (f"[target] relevant = {relevant} exceeds the {asked} columns: all are taken.",)
     assured = f"No columns are assured: {report.budget.assured.note}."
     return (*report.diagnosis.warnings, *spans, assured, *ALWAYS)
 

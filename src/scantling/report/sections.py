@@ -22,6 +22,12 @@ from scantling.report.wording import (
 
 WORST = 5
 MOST_POWER = 6
+SHAPES = {
+    "sparse": "Sparse signal",
+    "dense": "Dense signal",
+    "undecided": "Sparse or dense is undecided",
+    "no signal": "No signal found",
+}
 FEWEST_SPREAD = 5
 """Series from which on the spread of their indices is told."""
 LISTED = 6
@@ -169,7 +175,9 @@ def moments(report: Diagnosed, width: int) -> list[str]:
     if without:
         names = tuple(report.read.names[j] for j in without)
         lines += paragraph(
-            f"Scores without a variance: {many(len(without), 'column')}, {listing(names)}.", width
+            f"Scores whose variance is found missing: {many(len(without), 'column')},"
+            f" {listing(names)}. (Products of heavy variables look heavier than they are.)",
+            width,
         )
     return lines
 
@@ -243,13 +251,13 @@ def signal(report: Diagnosed, width: int) -> list[str]:
     """Sparse or dense, and which powers keep their scores' moments."""
     shape, rule = report.diagnosis.signal, report.diagnosis.powers
     lines = heading("Signal and powers")
-    lines += paragraph(f"{shape.answer.capitalize()} signal: {shape.reason}.", width)
+    lines += paragraph(f"{SHAPES[shape.answer]}: {shape.reason}.", width)
     if rule is not None:
         together = "and errors large together" if rule.shared_volatility else "independent of them"
         lines += paragraph(
-            f"By the planning rule (index {index(rule.column_index)} of the median raw column,"
-            f" {index(rule.error_index)} of the errors, columns {together}) scores have a variance"
-            f" up to {_power(rule.keeping_variance)} and a fourth moment up to"
+            f"By the planning rule, a worst case (index {index(rule.column_index)} of the median raw"
+            f" column, {index(rule.error_index)} of the errors, columns {together}), scores have a"
+            f" variance up to {_power(rule.keeping_variance)} and a fourth moment up to"
             f" {_power(rule.keeping_fourth)}.",
             width,
         )
@@ -305,4 +313,4 @@ def receipt_lines(record: Receipt, width: int) -> list[str]:
     )
     for name, digest in record.inputs:
         lines += [f"  sha-256 of {shortened(name, width - 20)}", f"    {digest}"]
-    return [*lines, *paragraph(f"Command: {record.command}", width)]
+    return [*lines, *paragraph(f"Command, where the input lies: {record.command}", width)]

@@ -172,11 +172,17 @@ def test_nothing_binds():
 
 @pytest.mark.parametrize("signal", ["sparse", "dense", "undecided", "no signal"])
 def test_a_dense_signal_is_named_last_and_changes_no_answer(signal):
-    words = "The signal looks dense, so a budget of columns may be the wrong question."
+    words = {
+        "dense": "The signal looks dense, so a budget of columns may be the wrong question.",
+        "no signal": (
+            "No fit finds a signal in these columns, so the verdict rests on the effects assumed in"
+            " [target] alone."
+        ),
+    }
     for limits in ({}, {"noise": limit(10.0)}):
         found, plain = judge(diagnosis_of(signal=signal), **limits), judge(**limits)
         assert found.answer == plain.answer
-        assert found.reasons == plain.reasons + ((words,) if signal == "dense" else ())
+        assert found.reasons == plain.reasons + ((words[signal],) if signal in words else ())
 
 
 def test_noise_names_the_tails_only_if_they_cost_something():
