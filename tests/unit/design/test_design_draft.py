@@ -52,7 +52,7 @@ def test_a_clean_table_is_ready_to_vet(tmp_path: Path) -> None:
     assert 'response = "y"  # a guess, to be changed' in text
     assert "To mend" not in text
     tree = tomllib.loads(text)
-    assert tree.pop("title") == "panel" and tree["target"]["relevant"] == 2
+    assert tree.pop("title") == "panel" and tree["target"]["relevant"] == 1
     assert {name: set(keys) for name, keys in tree.items()} == {
         name: set(keys) for name, keys in LANGUAGE.items()
     }
