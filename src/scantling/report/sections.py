@@ -256,8 +256,8 @@ def signal(report: Diagnosed, width: int) -> list[str]:
         together = "and errors large together" if rule.shared_volatility else "independent of them"
         lines += paragraph(
             f"By the planning rule, a worst case (index {index(rule.column_index)} of the median"
-            f" raw column, {index(rule.error_index)} of the errors, columns {together}), scores have"
-            f" a variance up to {_power(rule.keeping_variance)} and a fourth moment up to"
+            f" raw column, {index(rule.error_index)} of the errors, columns {together}), scores"
+            f" have a variance up to {_power(rule.keeping_variance)} and a fourth moment up to"
             f" {_power(rule.keeping_fourth)}.",
             width,
         )
