@@ -16,6 +16,7 @@ import numpy as np
 from scantling.core.checks import finite_matrix
 from scantling.core.record import FloatArray
 from scantling.core.streams import blocks, stream
+from scantling.design.expand import normal_scores
 from scantling.errors import InputError
 
 CHUNK = 2**20
@@ -235,21 +236,6 @@ def irrepresentable(
     """
     chosen = np.asarray(support, dtype=np.intp)
     return _row_sums(np.asarray(correlation, dtype=np.float64)[:, chosen], chosen, signs)
-
-
-def normal_scores(columns: FloatArray) -> FloatArray:
-    """Return Phi^-1((rank - 1/2)/n) column by column, shape (n, P).
-
-    Ties share their average rank; the bound is Phi^-1(1 - 1/(2n)).
-    """
-    from scipy.special import ndtri
-    from scipy.stats import rankdata
-
-    scores = np.empty(columns.shape)
-    for start, stop in column_blocks(columns):
-        ranks = rankdata(columns[:, start:stop], axis=0)
-        scores[:, start:stop] = ndtri((ranks - 0.5) / columns.shape[0])
-    return scores
 
 
 def column_blocks(columns: FloatArray) -> list[tuple[int, int]]:
