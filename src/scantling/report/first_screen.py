@@ -108,6 +108,9 @@ def _remedies(report: Report, width: int, room: int) -> list[str]:
         if report.verdict.answer != WITHIN:
             tried = len(report.remedies)
             text = f"none of the {tried} computed helps" if tried else "none computed applies"
+            needed = report.budget.rows_needed
+            if report.budget.signal.reached and needed is not None and needed > report.budget.rows:
+                text += f"; {count(needed)} rows would detect the effects"
         return labelled("Remedies", text, width)[:1]
     lines = []
     for place, remedy in enumerate(found):
