@@ -17,7 +17,3 @@ class InputError(ScantlingError, ValueError):
 
 class NotAvailableError(InputError):
     """A part of the design language that this version does not carry out."""
-
-
-class ScantlingWarning(UserWarning):
-    """Base of every warning the package issues."""

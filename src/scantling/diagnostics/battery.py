@@ -8,22 +8,18 @@ from typing import Any
 import numpy as np
 
 from scantling.core.record import FloatArray, read_only
-from scantling.diagnostics.clustering import NEAR_INTEGRATION, Clustering, find_clustering
+from scantling.diagnostics.clustering import NEAR_INTEGRATION, Clustering
 from scantling.diagnostics.column_tails import ColumnTails, column_tails, holm_rejections
 from scantling.diagnostics.dependence import (
     TestResult,
-    arch_lm,
-    ljung_box,
-    mcleod_li,
-    robust_ljung_box,
 )
+from scantling.diagnostics.error_findings import Finding, error_findings, judged
 from scantling.diagnostics.moments import (
     MINIMUM_ROWS,
     ORDERS,
     Z90,
     MomentAnswer,
     interval_answers,
-    moment_answer,
 )
 from scantling.diagnostics.powers import PowerRule, power_rule
 from scantling.diagnostics.residuals import Residuals
@@ -35,7 +31,6 @@ from scantling.diagnostics.tail_index import (
     block_length,
     index_from_gamma,
     one_side,
-    tail_index,
 )
 from scantling.diagnostics.variance import (
     CO_MOVEMENT,
@@ -47,26 +42,10 @@ from scantling.diagnostics.variance import (
     white,
 )
 from scantling.diagnostics.volatility import Volatility
-from scantling.errors import InputError
 
 ANSWERS = {1: "exists", -1: "missing", 0: "unclear"}
 FEW_VALUES = 10
 """A series of fewer distinct values is bounded."""
-ORDINALS = {2: "2nd moment", 4: "4th moment"}
-SIDED_ROWS = 500
-"""Rows from which left and right tails are told apart."""
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class Finding:
-    """A test, and whether the moment it needs is granted."""
-
-    result: TestResult
-    """The test's name, statistic and p-value."""
-    valid: bool
-    """Whether the conditions of the test's p-value are granted by the diagnosis."""
-    lacks: str = ""
-    """What is not granted; empty if valid."""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -233,29 +212,23 @@ def diagnose(
         Which columns are raw ones, neither powers nor products; default: all.
     """
     e = np.asarray(residuals.values)
-    errors, sides, errors_note = error_tails(e, seed)
-    clustering = find_clustering(e, seed=seed) if time_ordered else None
-    volatility = None if clustering is None else clustering.volatility
-    implied = None if volatility is None else volatility.tail_index
-    decisive = None if errors is None else heavier_side(errors, sides)
-    moments = error_moments(e, decisive, errors_note, implied, seed)
-    granted = {int(m.order) for m in moments if m.answer == "exists"}
+    own = error_findings(e, time_ordered=time_ordered, seed=seed)
+    errors = own.tail
     columns = series_group(X, dependent=time_ordered)
-    scores = _scores(X, e, columns.tails, errors, moments, dependent=time_ordered)
-    block = block_length(e.size) if clustering and clustering.test.p_value <= 0.05 else None
+    scores = _scores(X, e, columns.tails, errors, own.moments, dependent=time_ordered)
+    block = block_length(e.size) if own.clustered else None
     variance = _variance_tests(X, residuals, block, seed)
-    dependence = dependence_tests(e, clustering) if time_ordered else ()
     return Diagnosis(
         errors=errors,
-        errors_note=errors_note,
-        sides=sides,
-        error_moments=moments,
+        errors_note=own.note,
+        sides=own.sides,
+        error_moments=own.moments,
         columns=columns,
         scores=scores,
         weight=column_weights(columns.tails),
-        variance=judged(variance, granted),
-        dependence=judged(dependence, granted, steady=block is None),
-        clustering=clustering,
+        variance=judged(variance, own.granted),
+        dependence=own.dependence,
+        clustering=own.clustering,
         co_movement=read_only(co_movement(X, e)),
         signal=signal_shape(
             X,
@@ -266,7 +239,9 @@ def diagnose(
         ),
         powers=_power_rule(columns.tails, errors, variance, first_powers),
         structure=column_structure(X),
-        warnings=sample_warnings(e, errors, volatility),
+        warnings=sample_warnings(
+            e, errors, None if own.clustering is None else own.clustering.volatility
+        ),
     )
 
 
@@ -287,29 +262,6 @@ def _power_rule(
     )
 
 
-def error_tails(e: FloatArray, seed: int) -> tuple[TailIndex | None, tuple[TailIndex, ...], str]:
-    """Tail of a series on both sides, left and right from 500 rows on, and what was done to it."""
-    try:
-        errors = tail_index(e, seed=seed)
-    except InputError as reason:
-        return None, (), str(reason).removeprefix("values: ")
-    if e.size < SIDED_ROWS:
-        return errors, (), errors.note
-    sides = tuple(tail_index(e, side=side, seed=seed) for side in ("left", "right"))
-    return errors, sides, errors.note
-
-
-def error_moments(
-    e: FloatArray, errors: TailIndex | None, note: str, implied: float | None, seed: int
-) -> tuple[MomentAnswer, ...]:
-    """Moment answers at orders 1 to 4; all unclear where there is no tail index."""
-    if errors is None:
-        return tuple(MomentAnswer(order=q, answer="unclear", reason=note) for q in ORDERS)
-    return tuple(
-        moment_answer(e, errors, order, seed=seed, volatility_index=implied) for order in ORDERS
-    )
-
-
 def _variance_tests(
     X: FloatArray, residuals: Residuals, block: int | None, seed: int
 ) -> tuple[TestResult, ...]:
@@ -321,41 +273,6 @@ def _variance_tests(
         koenker(e, suspects),
         white(e, suspects),
     )
-
-
-def dependence_tests(e: FloatArray, clustering: Clustering | None) -> tuple[TestResult, ...]:
-    """Every test of serial dependence, that for clustering first if it was run."""
-    first = () if clustering is None else (clustering.test,)
-    return (*first, robust_ljung_box(e), ljung_box(e), arch_lm(e), mcleod_li(e))
-
-
-def judged(
-    results: tuple[TestResult, ...], granted: set[int], *, steady: bool = True
-) -> tuple[Finding, ...]:
-    """Hold each test's conditions against the diagnosis; `steady`: no clustering was found."""
-
-    def lacks(result: TestResult) -> str:
-        if result.method == "permutation":
-            return ""
-        if result.needs_moment not in granted:
-            return ORDINALS.get(result.needs_moment, f"moment {result.needs_moment}")
-        if result.test == "Ljung-Box" and not steady:
-            return "constant variance"
-        return ""
-
-    return tuple(Finding(result=r, valid=not lacks(r), lacks=lacks(r)) for r in results)
-
-
-def heavier_side(both: TailIndex, sides: tuple[TailIndex, ...]) -> TailIndex:
-    """The tail that decides which moments exist: the heavier one if the two differ.
-
-    They differ if their gammas are more than two joint standard errors apart.
-    """
-    if len(sides) != 2:
-        return both
-    left, right = sides
-    apart = abs(left.gamma - right.gamma) > 2 * np.hypot(left.gamma_error, right.gamma_error)
-    return max(sides, key=lambda side: side.gamma) if apart else both
 
 
 def sample_warnings(

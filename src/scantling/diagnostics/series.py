@@ -5,16 +5,9 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 from scantling.core.record import FloatArray
-from scantling.diagnostics.battery import (
-    Finding,
-    dependence_tests,
-    error_moments,
-    error_tails,
-    heavier_side,
-    judged,
-    sample_warnings,
-)
-from scantling.diagnostics.clustering import Clustering, find_clustering
+from scantling.diagnostics.battery import sample_warnings
+from scantling.diagnostics.clustering import Clustering
+from scantling.diagnostics.error_findings import Finding, error_findings
 from scantling.diagnostics.extremes import (
     ExtremeClustering,
     effective_rows,
@@ -71,28 +64,19 @@ def diagnose_series(values: FloatArray, *, time_ordered: bool, seed: int) -> Ser
     seed : int
         Of permutations and tie-breaking noise.
     """
-    centred = values - values.mean()
-    tail, sides, note = error_tails(values, seed)
-    clustering = find_clustering(centred, seed=seed) if time_ordered else None
+    own = error_findings(values, time_ordered=time_ordered, seed=seed)
+    tail, clustering = own.tail, own.clustering
     volatility = None if clustering is None else clustering.volatility
-    implied = None if volatility is None else volatility.tail_index
-    decisive = None if tail is None else heavier_side(tail, sides)
-    moments = error_moments(values, decisive, note, implied, seed)
-    granted = {int(m.order) for m in moments if m.answer == "exists"}
-    dependence: tuple[Finding, ...] = ()
-    if time_ordered:
-        clustered = clustering is not None and clustering.test.p_value <= 0.05
-        dependence = judged(dependence_tests(centred, clustering), granted, steady=not clustered)
     ordered = time_ordered and tail is not None
     return SeriesDiagnosis(
         rows=values.size,
         tail=tail,
-        note=note,
-        sides=sides,
+        note=own.note,
+        sides=own.sides,
         opinions=() if tail is None else second_opinions(values, tail),
         path=None if tail is None else threshold_path(values),
-        moments=moments,
-        dependence=dependence,
+        moments=own.moments,
+        dependence=own.dependence,
         clustering=clustering,
         extremes=extreme_clustering(values) if ordered else None,
         effective_rows=effective_rows(values) if ordered else None,

@@ -11,6 +11,7 @@ import numpy as np
 from scantling.core.checks import finite_vector
 from scantling.core.record import FloatArray, read_only
 from scantling.diagnostics.clustering import find_clustering
+from scantling.diagnostics.moments import Z90
 from scantling.diagnostics.tail_index import (
     LARGEST,
     MINIMUM,
@@ -25,7 +26,6 @@ from scantling.law.goodness import bootstrap_fit_test, bootstrap_splice_test
 from scantling.law.splice import enough_for_splice, fit_splice
 from scantling.law.student import fit_student, profile
 
-Z90 = 1.6448536269514722
 REJECT_LEVEL = 0.05
 TIE_UNITS = 2.0
 """Criteria this close are a tie, and the heavier law is taken."""

@@ -9,7 +9,8 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from scantling.core.estimate import Estimate
-from scantling.diagnostics.battery import Finding, SeriesGroup
+from scantling.diagnostics.battery import SeriesGroup
+from scantling.diagnostics.error_findings import Finding
 from scantling.diagnostics.moments import ORDERS
 from scantling.diagnostics.tail_index import TailIndex, index_from_gamma
 from scantling.planning.budget import Allowed

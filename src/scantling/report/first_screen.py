@@ -66,8 +66,8 @@ def _columns(report: Report) -> str:
     if allowed.note and allowed.low is not None and allowed.low >= budget.asked:
         return asked + "all of them allowed"
     if allowed.columns == 0 and allowed.high == 0:
-        tried = 1 if budget.binding != "stability" or not report.stress else None
-        fewest = tried or (report.stress.runs[0].columns if report.stress else 1)
+        refitted = budget.binding == "stability" and report.stress is not None
+        fewest = report.stress.runs[0].columns if refitted and report.stress else 1
         return asked + f"none allowed, {fewest:,} being the fewest tried"
     return asked + f"{columns(allowed)} allowed (90 % band {band(allowed, budget.asked)})"
 

@@ -4,7 +4,8 @@ from __future__ import annotations
 
 import numpy as np
 
-from scantling.diagnostics.battery import Finding, SeriesGroup
+from scantling.diagnostics.battery import SeriesGroup
+from scantling.diagnostics.error_findings import Finding
 from scantling.diagnostics.moments import ORDERS
 from scantling.diagnostics.tail_index import TailIndex, index_from_gamma
 from scantling.report.record import Diagnosed, HasLaw, Receipt, Report

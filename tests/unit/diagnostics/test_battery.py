@@ -8,14 +8,9 @@ import numpy as np
 import pytest
 
 from scantling.core.record import read_only
-from scantling.diagnostics.battery import (
-    column_weights,
-    diagnose,
-    heavier_side,
-    sample_warnings,
-    series_group,
-)
+from scantling.diagnostics.battery import column_weights, diagnose, sample_warnings, series_group
 from scantling.diagnostics.column_tails import column_tails
+from scantling.diagnostics.error_findings import heavier_side
 from scantling.diagnostics.residuals import Residuals
 from scantling.diagnostics.tail_index import tail_index
 

@@ -9,8 +9,9 @@ import numpy as np
 import pytest
 
 from scantling.core.record import read_only
-from scantling.diagnostics.battery import Finding, diagnose
+from scantling.diagnostics.battery import diagnose
 from scantling.diagnostics.dependence import TestResult as Result
+from scantling.diagnostics.error_findings import Finding
 from scantling.diagnostics.residuals import Residuals
 from scantling.diagnostics.tail_index import tail_index
 from scantling.report.document import cautions

@@ -1,0 +1,154 @@
+"""What one series of errors says by itself: tails, moments, dependence; shared by the battery
+of a design and the diagnosis of a bare series."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from scantling.core.record import FloatArray
+from scantling.diagnostics.clustering import LEVEL, Clustering, find_clustering
+from scantling.diagnostics.dependence import (
+    TestResult,
+    arch_lm,
+    ljung_box,
+    mcleod_li,
+    robust_ljung_box,
+)
+from scantling.diagnostics.moments import ORDERS, MomentAnswer, moment_answer
+from scantling.diagnostics.tail_index import TailIndex, tail_index
+from scantling.errors import InputError
+
+ORDINALS = {2: "2nd moment", 4: "4th moment"}
+SIDED_ROWS = 500
+"""Rows from which left and right tails are told apart."""
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Finding:
+    """A test, and whether the moment it needs is granted."""
+
+    result: TestResult
+    """The test's name, statistic and p-value."""
+    valid: bool
+    """Whether the conditions of the test's p-value are granted by the diagnosis."""
+    lacks: str = ""
+    """What is not granted; empty if valid."""
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class ErrorFindings:
+    """Tails, moments and dependence of one series."""
+
+    tail: TailIndex | None
+    """Both sides; None if it could not be assessed."""
+    note: str
+    """Why it could not be, or what was done to the series first."""
+    sides: tuple[TailIndex, ...]
+    """Left and right; empty below 500 values."""
+    moments: tuple[MomentAnswer, ...]
+    """Orders 1, 2, 3, 4."""
+    granted: frozenset[int]
+    """Orders found to exist."""
+    dependence: tuple[Finding, ...]
+    """Tests of dependence; empty where values have no order."""
+    clustering: Clustering | None
+    """None where values have no order."""
+
+    @property
+    def clustered(self) -> bool:
+        """Whether volatility clustering was found."""
+        return self.clustering is not None and self.clustering.test.p_value <= LEVEL
+
+
+def error_findings(values: FloatArray, *, time_ordered: bool, seed: int) -> ErrorFindings:
+    """Everything about one series that needs no columns.
+
+    Parameters
+    ----------
+    values : array, shape (n,), n >= 30
+    time_ordered : bool
+        Whether they follow one another in time.
+    seed : int
+        Of permutations and tie-breaking noise.
+    """
+    centred = values - values.mean()
+    tail, sides, note = error_tails(values, seed)
+    clustering = find_clustering(centred, seed=seed) if time_ordered else None
+    volatility = None if clustering is None else clustering.volatility
+    implied = None if volatility is None else volatility.tail_index
+    decisive = None if tail is None else heavier_side(tail, sides)
+    moments = error_moments(values, decisive, note, implied, seed)
+    granted = frozenset(int(m.order) for m in moments if m.answer == "exists")
+    dependence: tuple[Finding, ...] = ()
+    if clustering is not None:
+        steady = clustering.test.p_value > LEVEL
+        dependence = judged(dependence_tests(centred, clustering), granted, steady=steady)
+    return ErrorFindings(
+        tail=tail,
+        note=note,
+        sides=sides,
+        moments=moments,
+        granted=granted,
+        dependence=dependence,
+        clustering=clustering,
+    )
+
+
+def error_tails(e: FloatArray, seed: int) -> tuple[TailIndex | None, tuple[TailIndex, ...], str]:
+    """Tail of a series on both sides, left and right from 500 rows on, and what was done to it."""
+    try:
+        errors = tail_index(e, seed=seed)
+    except InputError as reason:
+        return None, (), str(reason).removeprefix("values: ")
+    if e.size < SIDED_ROWS:
+        return errors, (), errors.note
+    sides = tuple(tail_index(e, side=side, seed=seed) for side in ("left", "right"))
+    return errors, sides, errors.note
+
+
+def error_moments(
+    e: FloatArray, errors: TailIndex | None, note: str, implied: float | None, seed: int
+) -> tuple[MomentAnswer, ...]:
+    """Moment answers at orders 1 to 4; all unclear where there is no tail index."""
+    if errors is None:
+        return tuple(MomentAnswer(order=q, answer="unclear", reason=note) for q in ORDERS)
+    return tuple(
+        moment_answer(e, errors, order, seed=seed, volatility_index=implied) for order in ORDERS
+    )
+
+
+def dependence_tests(e: FloatArray, clustering: Clustering | None) -> tuple[TestResult, ...]:
+    """Every test of serial dependence, that for clustering first if it was run."""
+    first = () if clustering is None else (clustering.test,)
+    return (*first, robust_ljung_box(e), ljung_box(e), arch_lm(e), mcleod_li(e))
+
+
+def judged(
+    results: tuple[TestResult, ...], granted: frozenset[int], *, steady: bool = True
+) -> tuple[Finding, ...]:
+    """Hold each test's conditions against the diagnosis; `steady`: no clustering was found."""
+
+    def lacks(result: TestResult) -> str:
+        if result.method == "permutation":
+            return ""
+        if result.needs_moment not in granted:
+            return ORDINALS.get(result.needs_moment, f"moment {result.needs_moment}")
+        if result.test == "Ljung-Box" and not steady:
+            return "constant variance"
+        return ""
+
+    return tuple(Finding(result=r, valid=not lacks(r), lacks=lacks(r)) for r in results)
+
+
+def heavier_side(both: TailIndex, sides: tuple[TailIndex, ...]) -> TailIndex:
+    """The tail that decides which moments exist: the heavier one if the two differ.
+
+    They differ if their gammas are more than two joint standard errors apart.
+    """
+    if len(sides) != 2:
+        return both
+    left, right = sides
+    apart = abs(left.gamma - right.gamma) > 2 * np.hypot(left.gamma_error, right.gamma_error)
+    return max(sides, key=lambda side: side.gamma) if apart else both
