@@ -15,5 +15,12 @@ class InputError(ScantlingError, ValueError):
     """
 
 
+class ResourceError(InputError):
+    """The machine stopped the run, not the input: a full disk, a lost worker.
+
+    What is finished by then is worth keeping.
+    """
+
+
 class NotAvailableError(InputError):
     """A part of the design language that this version does not carry out."""

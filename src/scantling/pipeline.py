@@ -5,23 +5,24 @@ from __future__ import annotations
 import math
 import platform
 import time
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 from dataclasses import replace
 from datetime import UTC, datetime
 from importlib.metadata import version
+from shlex import quote
 
 import numpy as np
 
-from scantling.core.streams import Mapper, worker_pool
-from scantling.design.expand import Columns, expand
+from scantling.core.streams import Mapper, Work, worker_pool
+from scantling.design.expand import Columns, expanded_count
 from scantling.design.parse import read_design
 from scantling.design.series_file import SeriesFile
 from scantling.design.spec import Design
-from scantling.design.table import Table, read_table
-from scantling.diagnostics.battery import Diagnosis, diagnose
-from scantling.diagnostics.residuals import Residuals, fit_pilot
+from scantling.design.table import Table, read_tables
+from scantling.diagnostics.battery import Diagnosis
+from scantling.diagnostics.residuals import Residuals
 from scantling.diagnostics.series import diagnose_series
-from scantling.errors import InputError
+from scantling.law.diagnosed import Diagnosed, diagnosed
 from scantling.law.extremes_check import extremes_against_law
 from scantling.law.families import ErrorLaw
 from scantling.law.fit import error_law
@@ -30,6 +31,7 @@ from scantling.planning.budget import assemble
 from scantling.planning.case import Case, draw_laws
 from scantling.planning.ceiling import ceiling
 from scantling.planning.limit import Limit, missing_limit
+from scantling.planning.outlook import outlook
 from scantling.planning.remedies import Remedy, remedies
 from scantling.planning.signal import signal
 from scantling.planning.stress import Stress, stress
@@ -43,15 +45,13 @@ from scantling.report.record import (
 )
 
 LIBRARIES = ("numpy", "scipy", "pandas", "statsmodels", "scikit-learn", "arch")
-STAGES = ("read", "residuals", "diagnose", "law", "limits", "stress", "remedies")
-EXACT = 1e-7
-"""Residual sd over response sd below which a fit counts as exact."""
+STAGES = ("read", "residuals", "diagnose", "law", "limits", "stress", "rows", "remedies")
 Progress = Callable[[str], None]
 """Called with the name of each stage as it begins."""
 
 
 def vet(
-    design: Design, *, workers: int = 1, progress: Progress | None = None,
+    design: Design, *, workers: int | Work = 1, progress: Progress | None = None,
     command: str | None = None,
 ) -> Report:  # fmt: skip
     """Vet a design: read, diagnose, fit the error law, find the limits, judge.
@@ -60,8 +60,8 @@ def vet(
     ----------
     design : Design
         From `read_design`.
-    workers : int
-        Threads; the result does not depend on it.
+    workers : int or Work
+        Processes, or all about how the work is done; the result does not depend on it.
     progress : callable, optional
         Called with each stage's name.
     command : str, optional
@@ -72,53 +72,104 @@ def vet(
     InputError
         If the data are not usable.
     """
+    commands = None if command is None else (command,)
+    return vet_each((design,), workers=workers, progress=progress, commands=commands)[0]
+
+
+def vet_each(
+    designs: Sequence[Design], *, workers: int | Work = 1, progress: Progress | None = None,
+    commands: Sequence[str] | None = None,
+) -> tuple[Report, ...]:  # fmt: skip
+    """Vet one response after another of one design file, with what they share done once.
+
+    Each report is the one `vet` makes of its design. The table is read once; where the raw
+    columns and the rows are the same, they are expanded and diagnosed once.
+
+    Parameters
+    ----------
+    designs : sequence of Design
+        From `read_designs`.
+    workers, progress
+        As in `vet`; with several designs each stage's name is followed by ": " and the response.
+    commands : sequence of str, optional
+        The command line to put in each receipt.
+
+    Raises
+    ------
+    InputError
+        If the data are not usable for one of them.
+    """
     started = time.monotonic()
     tell: Progress = progress or (lambda stage: None)
-    seed = design.simulation.seed
     tell("read")
-    table = read_table(design)
-    columns = expand(design, table)
-    with worker_pool(workers) as mapper:
-        tell("residuals")
-        residuals = pilot(design, table, columns)
-        tell("diagnose")
-        diagnosis = diagnose(
-            columns.values,
-            residuals,
-            time_ordered=columns.time_ordered,
-            seed=seed,
-            first_powers=(columns.power == 1) & (columns.base >= 0),
-        )
-        tell("law")
-        law = error_law(
-            residuals.values, volatility=diagnosis.volatility, seed=seed, tail=diagnosis.errors
-        )
-        case = make_case(design, columns, residuals, law)
-        tell("limits")
-        noise = break_through(case, mapper)
-        tell("stress")
-        selection, limits = _selection(case, diagnosis, mapper)
-        budget = assemble(
-            rows=case.rows,
-            asked=case.columns,
-            noise=noise,
-            signal=signal(case, noise.fitted, noise.drawn),
-            stability=limits[0],
-            geometry=limits[1],
-            ceiling=ceiling(diagnosis, case.rows, case.rule),
-        )
-        tell("remedies")
-        found: tuple[Remedy, ...] = ()
-        if diagnosis.moment(2) != "missing":
-            found = remedies(design, table, residuals, diagnosis, case, noise, limits[0], mapper)
+    tables = read_tables(designs)
+    shared, reports = None, []
+    with worker_pool(workers, _largest(designs, tables)) as mapper:
+        for place, (design, table) in enumerate(zip(designs, tables, strict=True)):
+            named = _naming(tell, design)
+            found = diagnosed(design, table, named, shared)
+            shared = found.shared
+            command = commands[place] if commands else None
+            reports.append(_judged(design, table, found, mapper, named, command, started))
+            started = time.monotonic()
+    return tuple(reports)
+
+
+def _naming(tell: Progress, design: Design) -> Progress:
+    """What is told of a stage also names the response, where the design file lists several."""
+    if not design.data.other_responses:
+        return tell
+    return lambda stage: tell(f"{stage}: {design.data.response}")
+
+
+def _largest(designs: Sequence[Design], tables: Sequence[Table]) -> int:
+    """Bytes of the largest table of columns there will be."""
+    return max(
+        8 * table.response.size * expanded_count(len(table.names), design.expand)
+        for design, table in zip(designs, tables, strict=True)
+    )
+
+
+def _judged(
+    design: Design, table: Table, found: Diagnosed, mapper: Mapper, tell: Progress,
+    command: str | None, started: float,
+) -> Report:  # fmt: skip
+    """Limits, refits, remedies and the verdict on what was found."""
+    residuals, diagnosis = found.residuals, found.diagnosis
+    case = make_case(design, found.columns, residuals, found.law)
+    tell("limits")
+    noise = break_through(case, mapper)
+    tell("stress")
+    selection, limits = _selection(case, diagnosis, mapper)
+    tell("rows")
+    ahead = outlook(
+        design, case, found.columns, residuals, diagnosis, noise, mapper,
+        refits=selection is not None,
+    )  # fmt: skip
+    budget = assemble(
+        rows=case.rows,
+        asked=case.columns,
+        noise=noise,
+        signal=signal(case, noise.fitted, noise.drawn),
+        stability=limits[0],
+        geometry=limits[1],
+        ceiling=ceiling(diagnosis, case.rows, case.rule, case.loss),
+        assured=ahead.assured,
+        plan=ahead.rows,
+        effects=ahead.effects,
+    )
+    tell("remedies")
+    helpful: tuple[Remedy, ...] = ()
+    if diagnosis.moment(2) != "missing":
+        helpful = remedies(design, table, residuals, diagnosis, case, noise, limits[0], mapper)
     return Report(
         design=design,
-        read=_as_read(table, columns, residuals),
+        read=_as_read(table, found.columns, residuals),
         diagnosis=diagnosis,
-        law=law,
+        law=found.law,
         budget=budget,
         stress=selection,
-        remedies=found,
+        remedies=helpful,
         verdict=verdict(case, diagnosis, budget, selection),
         receipt=_receipt(design, table, command, started),
     )
@@ -132,31 +183,43 @@ def diagnose_design(design: Design, *, command: str | None = None) -> DesignDiag
     InputError
         If the data are not usable.
     """
+    return diagnose_each((design,), commands=None if command is None else (command,))[0]
+
+
+def diagnose_each(
+    designs: Sequence[Design], *, commands: Sequence[str] | None = None
+) -> tuple[DesignDiagnosis, ...]:
+    """The diagnostics of one response after another, with what they share done once.
+
+    Parameters and errors as in `vet_each`.
+    """
     started = time.monotonic()
-    seed = design.simulation.seed
-    table = read_table(design)
-    columns = expand(design, table)
+    tables = read_tables(designs)
+    shared, out = None, []
     with worker_pool(1):
-        residuals = pilot(design, table, columns)
-        diagnosis = diagnose(
-            columns.values,
-            residuals,
-            time_ordered=columns.time_ordered,
-            seed=seed,
-            first_powers=(columns.power == 1) & (columns.base >= 0),
-        )
-        law = error_law(
-            residuals.values, volatility=diagnosis.volatility, seed=seed, tail=diagnosis.errors
-        )
-    return DesignDiagnosis(
-        design=design,
-        read=_as_read(table, columns, residuals),
-        diagnosis=diagnosis,
-        law=law,
-        receipt=_receipt(
-            design, table, command or f"scantling diagnose {design.path.name}", started
-        ),
-    )
+        for place, (design, table) in enumerate(zip(designs, tables, strict=True)):
+            found = diagnosed(design, table, lambda stage: None, shared)
+            shared = found.shared
+            command = commands[place] if commands else repeating("diagnose", design)
+            out.append(
+                DesignDiagnosis(
+                    design=design,
+                    read=_as_read(table, found.columns, found.residuals),
+                    diagnosis=found.diagnosis,
+                    law=found.law,
+                    receipt=_receipt(design, table, command, started),
+                )
+            )
+            started = time.monotonic()
+    return tuple(out)
+
+
+def repeating(command: str, design: Design, *options: str) -> str:
+    """The command line that computes a design's one response again."""
+    words = ["scantling", command, quote(design.path.name)]
+    if design.data.other_responses:
+        words += ["--response", quote(design.data.response)]
+    return " ".join([*words, *options])
 
 
 def diagnose_column(
@@ -193,28 +256,6 @@ def diagnose_column(
     )
 
 
-def pilot(design: Design, table: Table, columns: Columns) -> Residuals:
-    """Residuals of the pilot; refused where nothing is left to diagnose or to tell apart."""
-    relevant, asked = design.target.relevant, len(columns.names)
-    if relevant >= max(2, asked):
-        raise InputError(
-            f"{design.path.name}: [target] relevant = {relevant}: the design has {asked} candidate"
-            f" columns; a number below {max(2, asked)} is needed"
-        )
-    residuals = fit_pilot(
-        columns.values,
-        columns.response,
-        time_ordered=columns.time_ordered,
-        seed=design.simulation.seed,
-    )
-    if residuals.sd <= EXACT * residuals.response_sd:
-        raise InputError(
-            f"{table.file_name}: the columns explain {table.response_name!r} exactly, so"
-            " there are no errors to diagnose; another response or fewer columns are needed"
-        )
-    return residuals
-
-
 def make_case(design: Design, columns: Columns, residuals: Residuals, law: ErrorLaw) -> Case:
     """The design as the simulations see it."""
     return Case(
@@ -225,6 +266,7 @@ def make_case(design: Design, columns: Columns, residuals: Residuals, law: Error
         residual_sd=residuals.sd,
         target=design.target,
         rule=design.penalty.rule,
+        loss=design.penalty.loss,
         replicates=design.simulation.replicates,
         seed=design.simulation.seed,
     )
@@ -267,7 +309,7 @@ def _receipt(design: Design, table: Table, command: str | None, started: float) 
         design.simulation.seed,
         design.simulation.replicates,
         ((design.path.name, design.sha256), (table.file_name, table.sha256)),
-        command or f"scantling vet {design.path.name}",
+        command or repeating("vet", design),
         started,
     )
 

@@ -39,8 +39,13 @@ HOMES = {
     "statsmodels": {"diagnostics", "law"},
     "sklearn": {"diagnostics"},
     "threadpoolctl": {"core"},
+    "joblib": {"core"},
+    "distributed": {"core"},
 }
-LATE = {"pandas", "pyarrow", "statsmodels", "sklearn", "arch", "rich", "threadpoolctl"}
+LATE = {
+    "pandas", "pyarrow", "statsmodels", "sklearn", "arch", "rich", "threadpoolctl", "joblib",
+    "distributed",
+}  # fmt: skip
 """Imported inside the function that needs them."""
 
 

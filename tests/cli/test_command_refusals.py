@@ -135,7 +135,6 @@ DESIGNS = [
     ("no match", design(data=DATA + '\ncolumns = ["price*"]'), ["price*", "no column"]),
     ("absent column", design(data=DATA + '\ncolumns = ["x9"]'), ["'x9'", "nearest"]),
     ("response as column", design(data=DATA + '\ncolumns = ["y"]'), ["'y'", "response"]),
-    ("several", design(data='file = "t.csv"\nresponse = ["y", "x1"]'), ["several responses"]),
     ("stated", "[stated]\nrows = 500\ncolumns = 900\n", ["stated", "not available"]),
     *[
         (f"kind {kind}", design(purpose=f'kind = "{kind}"'), [kind, "not available", "regression"])

@@ -165,13 +165,14 @@ def test_gjr_index(alpha: float, gamma: float, beta: float, index: float) -> Non
 
 
 def test_garch_log_likelihood_of_stock_indices(stocks: np.ndarray) -> None:
-    """arch 8.0, constant mean, per cent returns; parameters of S&P 500 to three digits."""
+    """arch 8.0, constant mean, per cent returns, GARCH and GJR; parameters of S&P 500 to three
+    digits."""
     from arch.data import nasdaq
 
     technology = percent_returns(nasdaq.load())
-    for returns, normal, student in (
-        (stocks, -6941.54, -6834.48),
-        (technology, -8264.87, -8205.34),
+    for returns, normal, student, *leaning in (
+        (stocks, -6941.54, -6834.48, -6831.79, -6748.27),
+        (technology, -8264.87, -8205.34, -8203.95, -8152.70),
     ):
         one = volatility.fit_garch(returns, innovation="normal", mean="constant")
         two = volatility.fit_garch(returns, innovation="student-t", mean="constant")
@@ -179,6 +180,16 @@ def test_garch_log_likelihood_of_stock_indices(stocks: np.ndarray) -> None:
         assert isinstance(two, volatility.Volatility)
         assert one.log_likelihood == pytest.approx(normal, abs=0.05)
         assert two.log_likelihood == pytest.approx(student, abs=0.05)
+        for innovation, value in zip(("normal", "student-t"), leaning, strict=True):
+            gjr = volatility.fit_garch(
+                returns, innovation=innovation, leverage=True, mean="constant"
+            )
+            assert isinstance(gjr, volatility.Volatility)
+            assert gjr.log_likelihood == pytest.approx(value, abs=0.05)
+            if returns is stocks and innovation == "student-t":
+                got = (gjr.omega, gjr.alpha, gjr.leverage, gjr.beta)
+                assert got == pytest.approx((0.0132, 0, 0.1815, 0.8987), abs=6e-4)
+                assert gjr.nu == pytest.approx(7.50, abs=0.05)
         if returns is stocks:
             got = (one.omega, one.alpha, one.beta, two.omega, two.alpha, two.beta)
             assert got == pytest.approx((0.0177, 0.1019, 0.8853, 0.0086, 0.0995, 0.9002), abs=6e-4)

@@ -11,7 +11,7 @@ from pathlib import Path
 
 import click
 
-from scantling.errors import InputError
+from scantling.errors import InputError, ResourceError
 
 EMPHASISED = ("Verdict", "Because", "Columns", "Limits", "Rows", "Remedies")
 
@@ -65,7 +65,7 @@ def _replace(path: Path, text: str) -> None:
     try:
         handle, name = tempfile.mkstemp(dir=path.parent, prefix=f".{path.name}.")
     except OSError as fault:
-        raise InputError(f"{path}: cannot be written ({fault.strerror})") from fault
+        raise ResourceError(f"{path}: cannot be written ({fault.strerror})") from fault
     try:
         with os.fdopen(handle, "w", encoding="utf-8") as stream:
             stream.write(text)
@@ -77,7 +77,7 @@ def _replace(path: Path, text: str) -> None:
         Path(name).replace(path)
     except OSError as fault:
         Path(name).unlink(missing_ok=True)
-        raise InputError(f"{path}: cannot be written ({fault.strerror})") from fault
+        raise ResourceError(f"{path}: cannot be written ({fault.strerror})") from fault
     except BaseException:
         Path(name).unlink(missing_ok=True)
         raise

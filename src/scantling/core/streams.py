@@ -9,21 +9,26 @@ many workers there are, on the order of work or on interruption.
 from __future__ import annotations
 
 import operator
+import time
 import zlib
 from collections.abc import Callable, Iterable, Iterator
-from concurrent.futures import ThreadPoolExecutor
 from contextlib import contextmanager
-from typing import Any, TypeVar
+from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 
+from scantling.core.journal import Journal
+from scantling.core.workers import Cluster, Here, Processes
 from scantling.errors import InputError
 
 MEMORY_BOUND = 2 * 1024**3
 """Bytes a run may hold; what would exceed it is refused or streamed."""
 
-Unit = TypeVar("Unit")
-Result = TypeVar("Result")
+WORKER_BYTES = 200 * 1024**2
+"""Bytes a worker process takes for itself: interpreter and libraries."""
+WORKER_TABLES = 5
+"""Tables of the size of X that a unit holds at its peak: columns taken, their products, draws."""
 Mapper = Callable[[Callable[[Any], Any], Iterable[Any]], list[Any]]
 """Anything that applies a function to every unit and keeps their order."""
 
@@ -60,19 +65,86 @@ def serial_map(function: Callable[[Any], Any], units: Iterable[Any]) -> list[Any
     return [function(unit) for unit in units]
 
 
-@contextmanager
-def worker_pool(workers: int) -> Iterator[Mapper]:
-    """Yield a mapper over `workers` threads, with one BLAS thread in each.
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Work:
+    """How units are to be carried out; nothing in it changes a result."""
 
-    One BLAS thread per kernel keeps sums in the same order whatever the
-    number of workers; the kernels spend their time in numpy, which releases
-    the interpreter lock.
+    workers: int = 1
+    """Processes on this machine."""
+    cluster: str | None = None
+    """Address of a dask scheduler that takes the place of `workers`."""
+    journal: Journal | None = None
+    """Where finished units are kept and found again."""
+    watch: Callable[[int, int], None] | None = None
+    """Called with the units done and all units of a mapper call, as it goes on."""
+
+
+@contextmanager
+def worker_pool(work: int | Work, table: int = 0) -> Iterator[Mapper]:
+    """Yield a mapper over worker processes, with one BLAS thread in each.
+
+    One BLAS thread per kernel keeps sums in the same order whatever the number of workers.
+
+    Parameters
+    ----------
+    work : int or Work
+        The number of workers, or everything about them.
+    table : int
+        Bytes of the largest table the units work on; workers are left out that would not fit
+        into the memory bound.
+
+    Raises
+    ------
+    InputError
+        If a cluster is asked for that is not there.
     """
     from threadpoolctl import threadpool_limits
 
+    asked = work if isinstance(work, Work) else Work(workers=work)
     with threadpool_limits(limits=1):
-        if workers <= 1:
-            yield serial_map
-            return
-        with ThreadPoolExecutor(max_workers=workers) as pool:
-            yield lambda function, units: list(pool.map(function, units))
+        pool: Here | Processes | Cluster
+        if asked.cluster is not None:
+            pool = Cluster(asked.cluster)
+        elif workers_that_fit(asked.workers, table) > 1:
+            pool = Processes(workers_that_fit(asked.workers, table))
+        else:
+            pool = Here()
+        try:
+            yield _Mapping(pool, asked)
+        except BaseException:
+            pool.close(stopped=True)
+            raise
+        pool.close(stopped=False)
+
+
+def workers_that_fit(workers: int, table: int) -> int:
+    """How many of the workers the memory bound allows beside this process; at least 1."""
+    one = WORKER_BYTES + WORKER_TABLES * table
+    return max(1, min(workers, (MEMORY_BOUND - one) // one))
+
+
+class _Mapping:
+    """The mapper: journal first, then the pool; results in the order of the units."""
+
+    __slots__ = ("_pool", "_work")
+
+    def __init__(self, pool: Here | Processes | Cluster, work: Work) -> None:
+        self._pool, self._work = pool, work
+
+    def __call__(self, function: Callable[[Any], Any], units: Iterable[Any]) -> list[Any]:
+        """Apply `function` to every unit and keep their order."""
+        every = list(units)
+        journal, watch = self._work.journal, self._work.watch
+        name = f"{function.__module__}.{function.__qualname__}"
+        call = journal.begin() if journal is not None else 0
+        done = journal.find(call, name, len(every)) if journal is not None else {}
+        left = [(number, unit) for number, unit in enumerate(every) if number not in done]
+        if watch is not None:
+            watch(len(done), len(every))
+        for number, result in self._pool.run(function, left):
+            done[number] = result
+            if journal is not None:
+                journal.keep(call, name, len(every), number, result, time.monotonic())
+            if watch is not None:
+                watch(len(done), len(every))
+        return [done[number] for number in range(len(every))]

@@ -5,6 +5,7 @@ from __future__ import annotations
 import json
 import os
 import re
+import textwrap
 from dataclasses import asdict, dataclass
 from pathlib import Path
 
@@ -25,6 +26,7 @@ _TIME_NAME = re.compile(
     re.IGNORECASE,
 )
 _DRAFT_OWN_LAGS = 5
+_WIDEST = 80
 # Dropping the rows of a column with more gaps than values would cost most of the table.
 _LEAST_FILLED = 0.5
 
@@ -98,8 +100,8 @@ def draft_design(data_path: str | Path, *, folder: str | Path | None = None) -> 
     """
     path = Path(data_path)
     findings = _examine(path)
-    rows = [f"# A draft for {shown(file_label(path))}: read it through before relying on it."]
-    rows += [f"# {note}" for note in findings.notes]
+    about = f"A draft for {shown(file_label(path))}: read it through before relying on it."
+    rows = [line for note in (about, *findings.notes) for line in _comment(note)]
     rows += [f"title = {_quoted(_stem(path))}", ""]
     rows += _data_rows(findings, _relative(path, folder))
     defaults = ExpandSpec(own_lags=0 if findings.columns else _DRAFT_OWN_LAGS)
@@ -115,34 +117,47 @@ def draft_design(data_path: str | Path, *, folder: str | Path | None = None) -> 
 
 def _data_rows(findings: _Findings, file: str) -> list[str]:
     """Return the lines of [data]."""
-    lines = ["[data]", f"file = {_quoted(file)}  # csv or tsv (also .gz), or parquet"]
+    lines = ["[data]", *_line("file", _quoted(file), "csv or tsv (also .gz), or parquet")]
     if findings.time is not None:
-        lines.append(f"time = {_quoted(findings.time)}  # unique and increasing; optional")
+        lines += _line("time", _quoted(findings.time), "unique and increasing; optional")
     else:
-        lines.append(
-            '# time = "..."  # a column, unique and increasing; without it rows have no order'
-        )
-    lines.append(f"response = {_quoted(findings.response)}  # a guess, to be changed")
-    about = "# names or glob patterns of the candidate columns"
+        lines += _line("# time", '"..."', "unique and increasing; without it rows have no order")
+    lines += _line("response", _quoted(findings.response), "a guess, to be changed, or a list of several")
+    about = "names or glob patterns of the candidate columns"
     if findings.all_others:
-        lines.append(f'columns = ["*"]  {about}; "*": all other numeric ones')
+        lines += _line("columns", '["*"]', f'{about}; "*": all other numeric ones')
     elif not findings.columns:
-        lines.append(f"columns = []  {about}; none is usable, so lags of the response are used")
+        lines += _line(
+            "columns", "[]", f"{about}; none is usable, so lags of the response are used"
+        )
     else:
-        lines += [about, "columns = ["]
+        lines += [*_comment(about), "columns = ["]
         lines += [f"    {_quoted(name)}," for name in findings.columns]
         lines.append("]")
     missing = "drop-rows" if findings.drop_rows else "refuse"
-    return [*lines, f'missing = "{missing}"  # {_accepted("data", "missing")}', ""]
+    return [*lines, *_line("missing", f'"{missing}"', _accepted("data", "missing")), ""]
 
 
 def _table_rows(table: str, values: dict[str, object]) -> list[str]:
     """Return the lines of one table: each key with its meaning and what is accepted."""
-    lines = [
-        f"{key} = {json.dumps(value)}  # {_MEANING[key]}: {_accepted(table, key)}"
-        for key, value in values.items()
-    ]
-    return [f"[{table}]", *lines, ""]
+    lines = [f"[{table}]"]
+    for key, value in values.items():
+        lines += _line(key, json.dumps(value), f"{_MEANING[key]}: {_accepted(table, key)}")
+    return [*lines, ""]
+
+
+def _line(key: str, value: str, about: str) -> list[str]:
+    """Return a key with its comment behind it, or above it where both would be too wide."""
+    together = f"{key} = {value}  # {about}"
+    return [together] if len(together) <= _WIDEST else [*_comment(about), f"{key} = {value}"]
+
+
+def _comment(text: str) -> list[str]:
+    """Return a comment, wrapped; names are not broken, however long."""
+    return textwrap.wrap(
+        text, _WIDEST, initial_indent="# ", subsequent_indent="# ",
+        break_long_words=False, break_on_hyphens=False,
+    )  # fmt: skip
 
 
 def _accepted(table: str, key: str) -> str:

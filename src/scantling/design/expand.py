@@ -2,27 +2,25 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterable, Sequence
 from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
 
 from scantling.core.record import FloatArray, read_only
-from scantling.core.streams import MEMORY_BOUND, stream
+from scantling.core.streams import MEMORY_BOUND
 from scantling.design.message import file_label, listed, shown
+from scantling.design.repeats import repeated_rows
 from scantling.design.spec import Design, ExpandSpec
 from scantling.design.table import FEWEST_ROWS, Table
+from scantling.design.transforms import clipped, normal_scores
 from scantling.errors import InputError
 
-CLIP_AT = 5.0
-"""Clipping point in robust standard deviations; METHODS 7: at 5 MADs or more."""
-MAD_TO_SD = 1.4826
-"""1 / Phi^-1(3/4): a normal column's standard deviation over its MAD."""
 _COPIES = 4
 # Rounding of a mean is some 1e-16 of the largest value: what varies by less than
 # this share of it does not vary.
 _CONSTANT = 1e-12
-_SAME = 1e-9
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -55,6 +53,27 @@ class Columns:
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
+class RawExpansion:
+    """The candidates that do not depend on the response: all but its own lags."""
+
+    source: FloatArray
+    """The raw columns they were made of: `values` of the table, (rows of the table, k)."""
+    spec: ExpandSpec
+    """How they were made."""
+    candidates: tuple[_Candidate, ...]
+    """Those kept."""
+    values: FloatArray
+    """Shape (n, P0), columns contiguous, on the rows that all lags leave; read-only."""
+    dropped: tuple[tuple[str, str], ...]
+    """(name, reason) of those left out."""
+
+    @property
+    def all_names(self) -> tuple[str, ...]:
+        """Names of those kept, and of those left out."""
+        return (*(c.name for c in self.candidates), *(name for name, _ in self.dropped))
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
 class _Candidate:
     """One candidate before it is computed."""
 
@@ -70,7 +89,7 @@ class _Candidate:
     """Rows by which it is lagged."""
 
 
-def expand(design: Design, table: Table) -> Columns:
+def expand(design: Design, table: Table, *, raw: RawExpansion | None = None) -> Columns:
     """Return the candidate columns of a design, standardised on the rows they share.
 
     In this order. The raw columns are transformed on all rows of the table:
@@ -90,6 +109,8 @@ def expand(design: Design, table: Table) -> Columns:
         another `expand` may be given with the same table.
     table : Table
         The checked raw columns.
+    raw : RawExpansion, optional
+        From `expand_raw`; by default, or if it is of other columns, it is computed.
 
     Raises
     ------
@@ -99,29 +120,25 @@ def expand(design: Design, table: Table) -> Columns:
         none is left.
     """
     spec, label = design.expand, file_label(design.path)
-    _check_spec(spec, label)
+    made = expand_raw(design, table, known=raw)
     lost = max(spec.lags, spec.own_lags)
-    rows = len(table.response) - lost
-    _check_rows(len(table.response), lost, label)
-    _check_size(rows, expanded_count(len(table.names), spec), label)
-    candidates = _candidates(spec, table)
-    _check_twice(candidates, label)
-    raw = _transformed(table.values, spec.transform)
-    stack = np.empty((len(candidates), rows))
-    for place, candidate in enumerate(candidates):
-        source = table.response if candidate.base < 0 else _computed(raw, candidate)
-        stack[place] = source[lost - candidate.lag : lost - candidate.lag + rows]
-    constant = _standardise(stack)
-    reasons = _reasons(stack, constant, candidates)
-    kept = [place for place in range(len(candidates)) if place not in reasons]
-    if not kept:
+    own = _own_lags(spec, table)
+    _check_twice([*made.all_names, *(candidate.name for candidate in own)], label)
+    left, stack, dropped = list(made.candidates), made.values.T, made.dropped
+    if own:
+        added = _lagged_rows([table.response] * len(own), own, lost, len(table.response))
+        constant = _standardise(added)
+        left += own
+        stack = np.concatenate([stack, added])
+        idle = np.concatenate([np.zeros(len(made.candidates), dtype=bool), constant])
+        stack, left, more = _distinct(stack, idle, left)
+        dropped += more
+    if not left:
+        names = [name for name, _ in dropped]
         raise InputError(
-            f"{label}: [expand] leaves no candidate column; all {len(candidates)} are constant"
-            f" or repeated: {listed(candidate.name for candidate in candidates)}"
+            f"{label}: [expand] leaves no candidate column; all {len(names)} are constant"
+            f" or repeated: {listed(names)}"
         )
-    if reasons:
-        stack = stack[kept]
-    left = [candidates[place] for place in kept]
     products = np.array([candidate.partner >= 0 for candidate in left])
     products.flags.writeable = False
     return Columns(
@@ -132,11 +149,63 @@ def expand(design: Design, table: Table) -> Columns:
         power=_whole([candidate.power for candidate in left]),
         is_product=products,
         lag=_whole([candidate.lag for candidate in left]),
-        dropped=tuple((candidates[place].name, reason) for place, reason in reasons.items()),
+        dropped=dropped,
         rows_lost=lost,
         time_ordered=table.time is not None or lost > 0,
         time=None if table.time is None else table.time[lost:],
     )
+
+
+def expand_raw(design: Design, table: Table, *, known: RawExpansion | None = None) -> RawExpansion:
+    """Return the candidates that do not depend on the response, for `expand`.
+
+    `known`, of another response, is returned as it is where both tables share `values`.
+    Errors as in `expand`.
+    """
+    spec, label = design.expand, file_label(design.path)
+    if known is not None and known.source is table.values and known.spec == spec:
+        return known
+    _check_spec(spec, label)
+    lost = max(spec.lags, spec.own_lags)
+    rows = len(table.response) - lost
+    _check_rows(len(table.response), lost, label)
+    _check_size(rows, expanded_count(len(table.names), spec), label)
+    candidates = _raw_candidates(spec, table)
+    _check_twice([candidate.name for candidate in candidates], label)
+    raw = _transformed(table.values, spec.transform)
+    columns = (_computed(raw, candidate) for candidate in candidates)
+    stack = _lagged_rows(columns, candidates, lost, len(table.response))
+    constant = _standardise(stack)
+    stack, left, dropped = _distinct(stack, constant, candidates)
+    return RawExpansion(
+        source=table.values,
+        spec=spec,
+        candidates=tuple(left),
+        values=read_only(stack.T),
+        dropped=dropped,
+    )
+
+
+def _lagged_rows(
+    columns: Iterable[FloatArray], candidates: Sequence[_Candidate], lost: int, rows: int
+) -> FloatArray:
+    """Return each candidate, given on all `rows` of the table, on the rows that lags leave."""
+    stack = np.empty((len(candidates), rows - lost))
+    for place, (column, candidate) in enumerate(zip(columns, candidates, strict=True)):
+        stack[place] = column[lost - candidate.lag : rows - candidate.lag]
+    return stack
+
+
+def _distinct(
+    stack: FloatArray, constant: NDArray[np.bool_], candidates: list[_Candidate]
+) -> tuple[FloatArray, list[_Candidate], tuple[tuple[str, str], ...]]:
+    """Return rows and candidates without constants and repeats, and those left out with reasons."""
+    reasons = _reasons(stack, constant, candidates)
+    kept = [place for place in range(len(candidates)) if place not in reasons]
+    dropped = tuple((candidates[place].name, reason) for place, reason in reasons.items())
+    if reasons:
+        stack = stack[kept]
+    return stack, [candidates[place] for place in kept], dropped
 
 
 def expanded_count(columns: int, spec: ExpandSpec) -> int:
@@ -188,8 +257,16 @@ def _check_size(rows: int, candidates: int, label: str) -> None:
         )
 
 
-def _candidates(spec: ExpandSpec, table: Table) -> list[_Candidate]:
-    """Return every candidate: columns with their powers, products, then lags of the response.
+def _own_lags(spec: ExpandSpec, table: Table) -> list[_Candidate]:
+    """Return the lags of the response."""
+    return [
+        _Candidate(name=f"{table.response_name}.lag{lag}", base=-1, lag=lag)
+        for lag in range(1, spec.own_lags + 1)
+    ]
+
+
+def _raw_candidates(spec: ExpandSpec, table: Table) -> list[_Candidate]:
+    """Return every other candidate: columns with their powers, then products.
 
     Lags of one column stand together; lag 0 bears the plain name.
     """
@@ -208,7 +285,7 @@ def _candidates(spec: ExpandSpec, table: Table) -> list[_Candidate]:
             for two in range(one + 1, count)
         ]
     first = 0 if spec.contemporaneous or not spec.lags else 1
-    lagged = [
+    return [
         _Candidate(
             name=f"{entry.name}.lag{lag}" if lag else entry.name,
             base=entry.base,
@@ -219,23 +296,18 @@ def _candidates(spec: ExpandSpec, table: Table) -> list[_Candidate]:
         for entry in plain
         for lag in range(first, spec.lags + 1)
     ]
-    own = [
-        _Candidate(name=f"{table.response_name}.lag{lag}", base=-1, lag=lag)
-        for lag in range(1, spec.own_lags + 1)
-    ]
-    return lagged + own
 
 
-def _check_twice(candidates: list[_Candidate], label: str) -> None:
+def _check_twice(names: list[str], label: str) -> None:
     """Refuse two candidates of one name: a file may hold both x and x^2."""
     seen: set[str] = set()
-    for candidate in candidates:
-        if candidate.name in seen:
+    for name in names:
+        if name in seen:
             raise InputError(
-                f"{label}: [expand] makes a column {shown(candidate.name)} and there is another of"
+                f"{label}: [expand] makes a column {shown(name)} and there is another of"
                 " that name; rename the column in the file"
             )
-        seen.add(candidate.name)
+        seen.add(name)
 
 
 def _transformed(values: FloatArray, transform: str) -> FloatArray:
@@ -245,32 +317,6 @@ def _transformed(values: FloatArray, transform: str) -> FloatArray:
     if transform == "normal-scores":
         return normal_scores(values)
     return clipped(values)
-
-
-def normal_scores(values: FloatArray) -> FloatArray:
-    """Return Phi^-1((rank - 1/2)/n) of each column of `values` (n, k), ties at average ranks."""
-    from scipy.special import ndtri
-    from scipy.stats import rankdata
-
-    scores: FloatArray = ndtri((rankdata(values, axis=0) - 0.5) / len(values))
-    return scores
-
-
-def clipped(values: FloatArray) -> FloatArray:
-    """Return each column of `values` (n, k) clipped at its median +- 5 * 1.4826 MAD.
-
-    A column whose MAD is 0 is clipped at its mean +- 5 sd instead: around a
-    median that half of the values share, every other value would be an outlier.
-    """
-    scale = np.abs(values).max(axis=0)
-    scale = np.where(scale > 0, scale, 1.0)
-    unit = values / scale
-    centre = np.median(unit, axis=0)
-    spread = MAD_TO_SD * np.median(np.abs(unit - centre), axis=0)
-    sparse = spread == 0
-    centre = np.where(sparse, unit.mean(axis=0), centre)
-    spread = np.where(sparse, unit.std(axis=0), spread)
-    return np.clip(unit, centre - CLIP_AT * spread, centre + CLIP_AT * spread) * scale
 
 
 def _computed(raw: FloatArray, candidate: _Candidate) -> FloatArray:
@@ -316,38 +362,6 @@ def _reasons(
     for place, first in repeated_rows(stack, constant).items():
         reasons[place] = f"the same as {candidates[first].name} up to sign and scale"
     return dict(sorted(reasons.items()))
-
-
-def repeated_rows(stack: FloatArray, ignored: NDArray[np.bool_]) -> dict[int, int]:
-    """Return, for each row of `stack` (P, n) that equals an earlier one up to sign, that one.
-
-    Rows are compared in full only where their absolute projections on one
-    random direction agree, which takes O(n P) and cannot part equal rows, as
-    rounding each value before a comparison would.
-    """
-    direction = stream(0, "repeated-rows").standard_normal(stack.shape[1])
-    projected = np.abs(stack @ direction)
-    order = [int(place) for place in np.argsort(projected, kind="stable") if not ignored[place]]
-    tolerance = _SAME * stack.shape[1]
-    found: dict[int, int] = {}
-    start = 0
-    for stop in range(1, len(order) + 1):
-        if stop < len(order) and projected[order[stop]] - projected[order[stop - 1]] <= tolerance:
-            continue
-        firsts: list[int] = []
-        for place in sorted(order[start:stop]):
-            match = next((first for first in firsts if _same(stack[first], stack[place])), None)
-            if match is None:
-                firsts.append(place)
-            else:
-                found[place] = match
-        start = stop
-    return found
-
-
-def _same(one: FloatArray, two: FloatArray) -> bool:
-    sign = 1.0 if float(one @ two) > 0 else -1.0
-    return bool(np.abs(one - sign * two).max() <= _SAME)
 
 
 def _whole(values: list[int]) -> NDArray[np.int64]:

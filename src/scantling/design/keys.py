@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 from typing import Any
 
@@ -58,14 +58,23 @@ def _number(accepted: str, inside: Callable[[float], bool]) -> Key:
 
 
 def _switch(available: tuple[bool, ...] = ()) -> Key:
+    words = [str(value).lower() for value in available or (True, False)]
     return Key(
-        accepted="true or false", fits=lambda value: isinstance(value, bool), available=available
+        accepted=_one_of(words, "true or false"),
+        fits=lambda value: isinstance(value, bool),
+        available=available,
     )
 
 
+def _one_of(words: Sequence[str], several: str) -> str:
+    """What a refusal asks for: never a word that this version would refuse next."""
+    return several if len(words) > 1 else f"{words[0]}, the only one in this version,"
+
+
 def _choice(*choices: str, available: tuple[str, ...] = ()) -> Key:
+    words = available or choices
     return Key(
-        accepted="one of " + ", ".join(choices),
+        accepted=_one_of(words, "one of " + ", ".join(words)),
         fits=lambda value: isinstance(value, str) and value in choices,
         choices=choices,
         available=available,
@@ -84,8 +93,10 @@ LANGUAGE: dict[str, dict[str, Key]] = {
         "file": _text(),
         "time": _text(),
         "response": Key(
-            accepted="the name of a column, or a list of names",
-            fits=lambda value: _one_line(value) or (_names_fit(value) and len(value) > 0),
+            accepted="the name of a column, or a list of names that differ",
+            fits=lambda value: (
+                _one_line(value) or (_names_fit(value) and len(set(value)) == len(value) > 0)
+            ),
         ),
         "columns": Key(
             accepted="a list of column names or glob patterns, none of them twice",

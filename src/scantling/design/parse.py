@@ -4,11 +4,13 @@ from __future__ import annotations
 
 import hashlib
 import tomllib
+from collections.abc import Sequence
+from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
 from scantling.design.keys import LANGUAGE, REQUIRED, TITLE, UNAVAILABLE_TABLES, Key
-from scantling.design.message import file_label, nearest, printable, shown
+from scantling.design.message import file_label, listed, nearest, printable, shown
 from scantling.design.spec import (
     DataSpec,
     Design,
@@ -23,7 +25,7 @@ _LARGEST_FILE = 8 * 1024 * 1024
 _NOT_AVAILABLE = "is part of the design language but not available in this version; available:"
 
 
-def read_design(path: str | Path) -> Design:
+def read_design(path: str | Path, *, response: str | None = None) -> Design:
     """Return the design that a TOML file states, every key checked.
 
     Paths in the file are resolved against its folder; keys left out take the
@@ -34,15 +36,54 @@ def read_design(path: str | Path) -> Design:
     ----------
     path : str or Path
         The design file: TOML in UTF-8, of at most 8 MiB.
+    response : str, optional
+        Which response is meant; needed where the file lists several.
 
     Raises
     ------
     InputError
         If the file cannot be read as TOML, or a table, key or value is not
         accepted; one line with the file, the key, the value, what is accepted
-        and the nearest known key.
+        and the nearest known key. If it lists several responses and none is
+        picked, or `response` is none of them.
     NotAvailableError
         If a key asks for a part of the language this version does not carry out.
+    """
+    return pick_response(read_designs(path), response)
+
+
+def pick_response(designs: Sequence[Design], response: str | None) -> Design:
+    """Return the design of one response, from those of one file; None: of the only one.
+
+    Raises
+    ------
+    InputError
+        If there are several and none is picked, or `response` is none of them.
+    """
+    names = [design.data.response for design in designs]
+    label = file_label(designs[0].path)
+    if response is None:
+        if len(names) > 1:
+            raise InputError(
+                f"{label}: [data] response lists {len(names)}, {listed(names)}; one of them has"
+                " to be picked here"
+            )
+        return designs[0]
+    if response not in names:
+        word = "there are" if len(names) > 1 else "there is only"
+        raise InputError(
+            f"{label}: {shown(response)} is no response of this design; {word}"
+            f" {listed(names)}{nearest(response, names)}"
+        )
+    return designs[names.index(response)]
+
+
+def read_designs(path: str | Path) -> tuple[Design, ...]:
+    """Return one design for each response that a TOML file lists, in its order.
+
+    They differ in `data.response`, `data.other_responses` and the title, which
+    names the response where there are several. Parameters and errors as in
+    `read_design`.
     """
     path = Path(path)
     content = _read_bytes(path)
@@ -53,7 +94,7 @@ def read_design(path: str | Path) -> Design:
     title = printable(path.stem)
     if "title" in tree:
         title = _check_value(tree["title"], TITLE, "title", label)
-    return Design(
+    whole = Design(
         title=title,
         path=path,
         sha256=hashlib.sha256(content).hexdigest(),
@@ -63,6 +104,23 @@ def read_design(path: str | Path) -> Design:
         target=TargetSpec(**values["target"]),
         penalty=PenaltySpec(**values["penalty"]),
         simulation=SimulationSpec(**values["simulation"]),
+    )
+    return _one_each(whole)
+
+
+def _one_each(whole: Design) -> tuple[Design, ...]:
+    """Return the design of each response, from one that names them all."""
+    data = whole.data
+    names = (data.response, *data.other_responses)
+    if len(names) == 1:
+        return (whole,)
+    return tuple(
+        replace(
+            whole,
+            title=f"{whole.title}: {name}",
+            data=replace(data, response=name, other_responses=tuple(n for n in names if n != name)),
+        )
+        for name in names
     )
 
 
@@ -167,7 +225,8 @@ def _check_keys(tree: dict[str, Any], table: str, label: str) -> dict[str, Any]:
 
 def _check_value(value: Any, key: Key, name: str, label: str) -> Any:
     if not key.fits(value):
-        hint = nearest(value, key.choices) if isinstance(value, str) and key.choices else ""
+        near = key.available or key.choices
+        hint = nearest(value, near) if isinstance(value, str) and key.choices else ""
         raise InputError(
             f"{label}: {name} = {shown(value)}: not accepted; {key.accepted} is needed{hint}"
         )
@@ -181,22 +240,23 @@ def _check_value(value: Any, key: Key, name: str, label: str) -> Any:
 
 def _data_spec(values: dict[str, Any], path: Path, label: str) -> DataSpec:
     """Return [data], its parts checked against one another."""
-    response = values["response"]
-    if isinstance(response, list):
-        if len(response) > 1:
-            raise NotAvailableError(
-                f"{label}: [data] response = {shown(response)}: a list of several responses"
-                f" {_NOT_AVAILABLE} one response"
-            )
-        response = response[0]
-    if response == values.get("time"):
-        raise InputError(
-            f"{label}: [data] time = {shown(response)}: also the response; two columns are needed"
-        )
-    for role, name in (("response", response), ("time", values.get("time"))):
+    given = values["response"]
+    responses = given if isinstance(given, list) else [given]
+    time = values.get("time")
+    if time in responses:
+        several = "also a response" if len(responses) > 1 else "also the response"
+        raise InputError(f"{label}: [data] time = {shown(time)}: {several}; two columns are needed")
+    # One of several responses may be a column for the others: named outright, by no pattern.
+    single = responses[0] if len(responses) == 1 else None
+    for role, name in (("response", single), ("time", time)):
         if name is not None and name in values.get("columns", ()):
             raise InputError(
                 f"{label}: [data] columns names {shown(name)}, the {role}; name candidate columns"
                 " only (lags of the response are [expand] own_lags)"
             )
-    return DataSpec(**{**values, "file": path.parent / values["file"], "response": response})
+    changed = {
+        "file": path.parent / values["file"],
+        "response": responses[0],
+        "other_responses": tuple(responses[1:]),
+    }
+    return DataSpec(**{**values, **changed})

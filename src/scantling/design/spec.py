@@ -16,6 +16,8 @@ class DataSpec:
     """Column that orders the rows, unique and increasing; None: rows have no order."""
     response: str
     """Column to be explained."""
+    other_responses: tuple[str, ...] = ()
+    """Responses of the same design file, each vetted apart; no pattern matches them."""
     columns: tuple[str, ...] = ("*",)
     """Names or glob patterns of the raw columns."""
     missing: str = "refuse"

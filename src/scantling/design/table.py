@@ -3,8 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterable, Sequence
-from dataclasses import dataclass
-from fnmatch import fnmatchcase
+from dataclasses import dataclass, replace
 from hashlib import sha256
 
 import numpy as np
@@ -13,8 +12,8 @@ from numpy.typing import NDArray
 from scantling.core.record import FloatArray, read_only
 from scantling.design.cells import blank
 from scantling.design.clock import disorder
-from scantling.design.keys import has_control
-from scantling.design.message import file_label, listed, nearest, shown
+from scantling.design.header import check_names, check_roles, choose_columns
+from scantling.design.message import file_label, listed, shown
 from scantling.design.source import RawColumns, file_sha256, read_columns, read_header
 from scantling.design.spec import DataSpec, Design
 from scantling.errors import InputError
@@ -66,19 +65,73 @@ def read_table(design: Design) -> Table:
         infinite; constant or identical columns; a time that does not increase;
         fewer than 30 rows.
     """
-    data, label = design.data, file_label(design.data.file)
+    return read_tables((design,))[0]
+
+
+def read_tables(designs: Sequence[Design]) -> tuple[Table, ...]:
+    """Return the tables of the designs of one file, one for each response, the data read once.
+
+    Each is what `read_table` makes of it: under missing = "drop-rows" a gap in
+    one response costs the others no row. Tables with the same columns on the
+    same rows share one array of `values`. Errors as in `read_table`, and two
+    responses that are identical.
+    """
+    data, label = designs[0].data, file_label(designs[0].data.file)
     names = read_header(data.file)
     check_names(names, label)
-    check_roles(names, data, label)
-    chosen, outright = choose_columns(names, data, label)
-    response = names.index(data.response)
+    wanted, outright = [], []
+    for design in designs:
+        check_roles(names, design.data, label)
+        chosen, named = choose_columns(names, design.data, label)
+        wanted.append([*chosen, names.index(design.data.response)])
+        outright.append(named)
+    places = list(dict.fromkeys(place for some in wanted for place in some))
     raw = read_columns(
-        data.file,
-        [*chosen, response],
-        labels=() if data.time is None else (names.index(data.time),),
+        data.file, places, labels=() if data.time is None else (names.index(data.time),)
     )
     if not len(raw.numbers):
         raise InputError(f"{label}: a header and no rows; at least {FEWEST_ROWS} rows are needed")
+    _check_responses(raw, [design.data.response for design in designs], label)
+    digest = file_sha256(data.file)
+    tables: list[Table] = []
+    for design, some, named in zip(designs, wanted, outright, strict=True):
+        part = _part(raw, [places.index(place) for place in some])
+        table = _table(design, part, named, digest)
+        same = (t.values for t in tables if t.names == table.names)
+        shared = next((v for v in same if np.array_equal(v, table.values)), table.values)
+        tables.append(replace(table, values=shared))
+    return tuple(tables)
+
+
+def _part(raw: RawColumns, places: list[int]) -> RawColumns:
+    """Return some of the columns that were read, in the order of `places`."""
+    if places == list(range(len(raw.names))):
+        return raw
+    return replace(
+        raw,
+        names=tuple(raw.names[place] for place in places),
+        numbers=raw.numbers[:, places],
+        faults=tuple(raw.faults[place] for place in places),
+    )
+
+
+def _check_responses(raw: RawColumns, responses: list[str], label: str) -> None:
+    """Refuse two responses that are one column twice."""
+    places = [raw.names.index(name) for name in responses]
+    # A column of words is all nan here: it is refused for that, and is no copy of another.
+    places = [place for place in places if not np.isnan(raw.numbers[:, place]).all()]
+    for first, later in identical_columns(raw.numbers[:, places]):
+        one, two = (shown(raw.names[places[place]]) for place in (first, later))
+        raise InputError(
+            f"{label}: the responses {one} and {two} are identical; leave one out of"
+            " [data] response"
+        )
+
+
+def _table(design: Design, raw: RawColumns, outright: frozenset[str], digest: str) -> Table:
+    """Return the table of one design from its candidate columns and, last, its response."""
+    data, label = design.data, file_label(design.data.file)
+    chosen = raw.names[:-1]
     usable, skipped = _usable(raw, {*outright, data.response}, label)
     if not usable and not design.expand.own_lags:
         left = f" (without any number: {listed(skipped)})" if skipped else ""
@@ -98,101 +151,16 @@ def read_table(design: Design) -> Table:
         check_time(times, [raw.where(int(row)) for row in kept], data.time or "", label)
     return Table(
         names=tuple(used_names[:-1]),
-        values=read_only(used[:, :-1]),
+        values=read_only(np.ascontiguousarray(used[:, :-1])),
         response_name=data.response,
         response=read_only(used[:, -1].copy()),
         time_name=data.time,
         time=times,
         rows_dropped=len(raw.numbers) - len(kept),
         skipped=skipped,
-        sha256=file_sha256(data.file),
+        sha256=digest,
         file_name=label,
     )
-
-
-def check_names(names: Sequence[str], label: str) -> None:
-    """Refuse a header with an empty name, a name given twice, or one not on one line.
-
-    Raises
-    ------
-    InputError
-        With the column's position, counted from 1.
-    """
-    seen: dict[str, int] = {}
-    for place, name in enumerate(names, start=1):
-        if not name:
-            raise InputError(
-                f"{label}: column {place} has an empty name; every column needs a name"
-            )
-        if has_control(name):
-            raise InputError(
-                f"{label}: column {place} is named {shown(name)}; a name without line breaks and"
-                " control characters is needed"
-            )
-        if name in seen:
-            raise InputError(
-                f"{label}: the name {shown(name)} is given twice (columns {seen[name]} and"
-                f" {place}); names must differ"
-            )
-        seen[name] = place
-
-
-def check_roles(names: Sequence[str], data: DataSpec, label: str) -> None:
-    """Refuse a response or a time that is not a column of the file.
-
-    Raises
-    ------
-    InputError
-        With the key, the name and the nearest name of the file.
-    """
-    for key, name in (("response", data.response), ("time", data.time)):
-        if name is not None and name not in names:
-            raise InputError(
-                f"{label}: no column {shown(name)}, named by [data] {key}{nearest(name, names)}"
-            )
-
-
-def choose_columns(
-    names: Sequence[str], data: DataSpec, label: str
-) -> tuple[list[int], frozenset[str]]:
-    """Return the positions of the raw columns, in file order, and those named outright.
-
-    An entry of [data] columns that is a name of the file stands for that
-    column; another with *, ? or [ is a pattern (fnmatch, case-sensitive), which
-    never matches the time or the response.
-
-    Raises
-    ------
-    InputError
-        If an entry matches no column, with the nearest name.
-    """
-    roles = {data.response, data.time}
-    candidates = [name for name in names if name not in roles]
-    outright, matched = set(), set()
-    for entry in data.columns:
-        if entry in roles:
-            raise InputError(
-                f"{label}: [data] columns names {shown(entry)}, the response or the time; name"
-                " candidate columns only"
-            )
-        if entry in candidates:
-            outright.add(entry)
-        elif any(mark in entry for mark in "*?["):
-            found = {name for name in candidates if fnmatchcase(name, entry)}
-            # The default stands for "all others", of which there may be none.
-            if not found and entry != "*":
-                raise InputError(
-                    f"{label}: the pattern {shown(entry)} in [data] columns matches no column"
-                    + nearest(entry, candidates)
-                )
-            matched |= found
-        else:
-            raise InputError(
-                f"{label}: no column {shown(entry)}, named by [data] columns"
-                + nearest(entry, candidates)
-            )
-    wanted = outright | matched
-    return [place for place, name in enumerate(names) if name in wanted], frozenset(outright)
 
 
 def _usable(

@@ -8,12 +8,25 @@ from typing import Any
 import numpy as np
 
 from scantling.core.record import FloatArray, read_only
-from scantling.diagnostics.clustering import NEAR_INTEGRATION, Clustering
+from scantling.diagnostics.clustering import LEVEL, NEAR_INTEGRATION, Clustering
+from scantling.diagnostics.co_movement import CoMovement, column_co_movement
+from scantling.diagnostics.column_sides import ColumnSides, column_sides
 from scantling.diagnostics.column_tails import ColumnTails, column_tails, holm_rejections
-from scantling.diagnostics.dependence import (
-    TestResult,
+from scantling.diagnostics.dependence import TestResult
+from scantling.diagnostics.error_findings import (
+    Finding,
+    Worth,
+    error_findings,
+    heavier_word,
+    judged,
 )
-from scantling.diagnostics.error_findings import Finding, error_findings, judged
+from scantling.diagnostics.implied_tails import (
+    ImpliedTails,
+    Parents,
+    implied_score_tails,
+    reconciled,
+    widened,
+)
 from scantling.diagnostics.moments import (
     MINIMUM_ROWS,
     ORDERS,
@@ -22,7 +35,8 @@ from scantling.diagnostics.moments import (
     interval_answers,
 )
 from scantling.diagnostics.powers import PowerRule, power_rule
-from scantling.diagnostics.residuals import Residuals
+from scantling.diagnostics.residuals import Residuals, levelled_residuals
+from scantling.diagnostics.second_opinion import Opinion
 from scantling.diagnostics.signal_shape import SignalShape, signal_shape
 from scantling.diagnostics.structure import Structure, column_structure
 from scantling.diagnostics.tail_estimators import hill
@@ -34,7 +48,6 @@ from scantling.diagnostics.tail_index import (
 )
 from scantling.diagnostics.variance import (
     CO_MOVEMENT,
-    co_movement,
     co_movement_test,
     glejser_permutation,
     koenker,
@@ -56,6 +69,14 @@ class SeriesGroup:
     """Tail estimates of the P series."""
     moments: dict[int, np.ndarray]
     """Per order, the answer for each series: 1 exists, -1 missing, 0 unclear; shape (P,)."""
+    sides: ColumnSides | None = None
+    """Left and right tails; None below 500 rows."""
+    implied: ImpliedTails | None = None
+    """Of scores: their index as column and errors imply it; None where that is unknown."""
+    borrowed: np.ndarray | None = None
+    """Of scores: which have the errors' tail, the column being bounded or sparse; (P,), bool."""
+    doubted: np.ndarray | None = None
+    """Of scores: whose variance the score alone denies and its parents do not; (P,), bool."""
 
     def answer(self, order: int, series: int) -> str:
         """Answer for one series: exists | missing | unclear."""
@@ -72,6 +93,10 @@ class Diagnosis:
     """Why it could not be, or what was done to the series."""
     sides: tuple[TailIndex, ...]
     """Left and right tail of the residuals; empty below 500 rows."""
+    opinions: tuple[Opinion, ...]
+    """Two estimators of other kinds; empty where there is no index."""
+    worth: Worth | None
+    """Clustering of the largest residuals and effective rows; None without order or index."""
     error_moments: tuple[MomentAnswer, ...]
     """Orders 1, 2, 3, 4."""
     columns: SeriesGroup
@@ -86,8 +111,8 @@ class Diagnosis:
     """Tests of serial dependence; empty where rows have no order."""
     clustering: Clustering | None
     """None where rows have no order."""
-    co_movement: FloatArray
-    """Per column, sd of the score over what independence of sizes would give, shape (P,)."""
+    co_movement: CoMovement
+    """Which columns are large where the errors are."""
     signal: SignalShape
     """Evidence on a sparse against a dense signal."""
     powers: PowerRule | None
@@ -105,6 +130,11 @@ class Diagnosis:
     def moment(self, order: int) -> str:
         """Answer for the errors at one order."""
         return next(m.answer for m in self.error_moments if m.order == order)
+
+    @property
+    def heavier(self) -> str:
+        """The side of the errors that is clearly heavier, left or right; empty if neither."""
+        return heavier_word(self.errors, self.sides)
 
     @property
     def scores_without_variance(self) -> tuple[int, ...]:
@@ -135,7 +165,9 @@ def series_group(series: FloatArray, *, dependent: bool) -> SeriesGroup:
         if "discrete" in reason or np.unique(series[:, j]).size < FEW_VALUES:
             for order in ORDERS:
                 moments[order][j] = 1
-    return SeriesGroup(tails=tails, moments=moments)
+    return SeriesGroup(
+        tails=tails, moments=moments, sides=column_sides(series, dependent=dependent)
+    )
 
 
 def _scores(
@@ -144,6 +176,8 @@ def _scores(
     columns: ColumnTails,
     errors: TailIndex | None,
     error_moments: tuple[MomentAnswer, ...],
+    together: np.ndarray,
+    parents: Parents | None,
     *,
     dependent: bool,
 ) -> SeriesGroup:
@@ -151,14 +185,18 @@ def _scores(
 
     A column that takes few values or is active on few rows is bounded there, so its score has
     the errors' tail, undiluted: it takes the errors' estimates. (Estimated on all rows, the jump
-    between active and idle rows would pass for a heavy tail.)
+    between active and idle rows would pass for a heavy tail.) The others are held against what
+    column and errors imply.
     """
     group = series_group(X * e[:, None], dependent=dependent)
     bounded = columns.sparse.copy()
     bounded[[j for j, _ in columns.refused]] = True
-    if errors is None or not bounded.any():
+    if errors is None:
         return group
-    tails = group.tails
+    implied = implied_score_tails(X, columns, errors, together, parents)
+    judged_by_both = group.tails.assessed & ~bounded
+    tails = widened(group.tails, implied, judged_by_both)
+    moments = reconciled(group.moments, implied, judged_by_both)
     own = {
         "gamma": errors.gamma,
         "error": errors.gamma_error,
@@ -172,11 +210,17 @@ def _scores(
     for name, value in own.items():
         changed[name] = read_only(np.where(bounded, value, getattr(tails, name)))
     codes = {answer: code for code, answer in ANSWERS.items()}
-    moments = {order: answers.copy() for order, answers in group.moments.items()}
     for answer in error_moments:
         moments[int(answer.order)][bounded] = codes[answer.answer]
     refused = tuple((j, reason) for j, reason in tails.refused if not bounded[j])
-    return SeriesGroup(tails=replace(tails, refused=refused, **changed), moments=moments)
+    return replace(
+        group,
+        tails=replace(tails, refused=refused, **changed),
+        moments=moments,
+        implied=implied,
+        borrowed=bounded,
+        doubted=(group.moments[2] == -1) & (moments[2] == 0) & judged_by_both,
+    )
 
 
 def column_weights(columns: ColumnTails) -> tuple[str, ...]:
@@ -195,6 +239,9 @@ def diagnose(
     time_ordered: bool,
     seed: int,
     first_powers: np.ndarray | None = None,
+    parents: Parents | None = None,
+    columns: SeriesGroup | None = None,
+    structure: Structure | None = None,
 ) -> Diagnosis:
     """Run every diagnostic.
 
@@ -210,18 +257,39 @@ def diagnose(
         Of permutations and bootstraps.
     first_powers : array of bool, shape (P,), optional
         Which columns are raw ones, neither powers nor products; default: all.
+    parents : sequence of tuples of int, optional
+        For each column, those whose product it is; default: every column is a raw one.
+    columns : SeriesGroup, optional
+        Tails and moments of the columns, where they are known already.
+    structure : Structure, optional
+        Geometry of the columns, where it is known already.
     """
     e = np.asarray(residuals.values)
     own = error_findings(e, time_ordered=time_ordered, seed=seed)
     errors = own.tail
-    columns = series_group(X, dependent=time_ordered)
-    scores = _scores(X, e, columns.tails, errors, own.moments, dependent=time_ordered)
+    columns = columns or series_group(X, dependent=time_ordered)
     block = block_length(e.size) if own.clustered else None
-    variance = _variance_tests(X, residuals, block, seed)
+    level = levelled_residuals(X, residuals)
+    together = column_co_movement(
+        X, level, columns.tails.sparse | ~columns.tails.assessed, seed=seed, block=block
+    )
+    scores = _scores(
+        X,
+        e,
+        columns.tails,
+        errors,
+        own.moments,
+        np.asarray(together.p_value <= LEVEL),
+        parents,
+        dependent=time_ordered,
+    )
+    variance = _variance_tests(X, residuals, level, block, seed)
     return Diagnosis(
         errors=errors,
         errors_note=own.note,
         sides=own.sides,
+        opinions=own.opinions,
+        worth=own.worth,
         error_moments=own.moments,
         columns=columns,
         scores=scores,
@@ -229,7 +297,7 @@ def diagnose(
         variance=judged(variance, own.granted),
         dependence=own.dependence,
         clustering=own.clustering,
-        co_movement=read_only(co_movement(X, e)),
+        co_movement=together,
         signal=signal_shape(
             X,
             residuals.fitted + e,
@@ -238,7 +306,7 @@ def diagnose(
             seed=seed,
         ),
         powers=_power_rule(columns.tails, errors, variance, first_powers),
-        structure=column_structure(X),
+        structure=structure or column_structure(X),
         warnings=sample_warnings(
             e, errors, None if own.clustering is None else own.clustering.volatility
         ),
@@ -258,18 +326,18 @@ def _power_rule(
     middle = float(np.median(columns.gamma[raw]))
     together = next(test for test in variance if test.test == CO_MOVEMENT)
     return power_rule(
-        index_from_gamma(middle), errors.index, shared_volatility=together.p_value <= 0.05
+        index_from_gamma(middle), errors.index, shared_volatility=together.p_value <= LEVEL
     )
 
 
 def _variance_tests(
-    X: FloatArray, residuals: Residuals, block: int | None, seed: int
+    X: FloatArray, residuals: Residuals, level: FloatArray, block: int | None, seed: int
 ) -> tuple[TestResult, ...]:
     e = np.asarray(residuals.values)
     suspects = scale_suspects(X, residuals.fitted, residuals.selected)
     return (
         glejser_permutation(e, suspects, seed=seed, block=block),
-        co_movement_test(X, e, seed, block=block),
+        co_movement_test(X, level, seed, block=block),
         koenker(e, suspects),
         white(e, suspects),
     )

@@ -6,7 +6,7 @@ from dataclasses import dataclass
 
 from scantling.core.record import FloatArray
 from scantling.diagnostics.dependence import TestResult, absolute_ljung_box_permutation
-from scantling.diagnostics.volatility import Volatility, fit_garch
+from scantling.diagnostics.volatility import Volatility, choose_volatility
 
 LEVEL = 0.05
 NEAR_INTEGRATION = 0.97
@@ -20,13 +20,13 @@ class Clustering:
     test: TestResult
     """Autocorrelation of absolute values, by permutation."""
     volatility: Volatility | None
-    """GARCH(1,1), or None: constant."""
+    """GARCH(1,1) or GJR(1,1), or None: constant."""
     reason: str
     """Why no volatility was fitted; empty if it was."""
 
 
 def find_clustering(values: FloatArray, *, seed: int) -> Clustering:
-    """Test absolute values for autocorrelation at 5 % and fit GARCH(1,1) if it is found.
+    """Test absolute values for autocorrelation at 5 % and fit GARCH(1,1) or GJR(1,1) if it is found.
 
     Parameters
     ----------
@@ -38,7 +38,7 @@ def find_clustering(values: FloatArray, *, seed: int) -> Clustering:
     test = absolute_ljung_box_permutation(values, seed=seed)
     if test.p_value > LEVEL:
         return Clustering(test=test, volatility=None, reason="no clustering found")
-    fitted = fit_garch(values, seed=seed)
+    fitted = choose_volatility(values, seed=seed)
     if isinstance(fitted, Volatility):
         return Clustering(test=test, volatility=fitted, reason="")
     return Clustering(test=test, volatility=None, reason=fitted)

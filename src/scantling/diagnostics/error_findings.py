@@ -16,7 +16,14 @@ from scantling.diagnostics.dependence import (
     mcleod_li,
     robust_ljung_box,
 )
+from scantling.diagnostics.extremes import (
+    ExtremeClustering,
+    effective_rows,
+    extreme_clustering,
+    tail_effective_rows,
+)
 from scantling.diagnostics.moments import ORDERS, MomentAnswer, moment_answer
+from scantling.diagnostics.second_opinion import Opinion, second_opinions
 from scantling.diagnostics.tail_index import TailIndex, tail_index
 from scantling.errors import InputError
 
@@ -38,6 +45,18 @@ class Finding:
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
+class Worth:
+    """What values in time order are worth: extremes that come together count once."""
+
+    extremes: ExtremeClustering | None
+    """Clustering of the largest values; None where ties leave too few."""
+    rows: float
+    """Independent values whose mean would be as exact."""
+    tail_rows: float
+    """Independent values whose tail index would be as exact."""
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
 class ErrorFindings:
     """Tails, moments and dependence of one series."""
 
@@ -47,6 +66,8 @@ class ErrorFindings:
     """Why it could not be, or what was done to the series first."""
     sides: tuple[TailIndex, ...]
     """Left and right; empty below 500 values."""
+    opinions: tuple[Opinion, ...]
+    """Two estimators of other kinds; empty where there is no index."""
     moments: tuple[MomentAnswer, ...]
     """Orders 1, 2, 3, 4."""
     granted: frozenset[int]
@@ -55,6 +76,8 @@ class ErrorFindings:
     """Tests of dependence; empty where values have no order."""
     clustering: Clustering | None
     """None where values have no order."""
+    worth: Worth | None
+    """None where values have no order or no index."""
 
     @property
     def clustered(self) -> bool:
@@ -89,10 +112,33 @@ def error_findings(values: FloatArray, *, time_ordered: bool, seed: int) -> Erro
         tail=tail,
         note=note,
         sides=sides,
+        opinions=() if tail is None else second_opinions(values, tail),
         moments=moments,
         granted=granted,
         dependence=dependence,
         clustering=clustering,
+        worth=worth(values, seed=seed) if time_ordered and tail is not None else None,
+    )
+
+
+def worth(values: FloatArray, *, seed: int) -> Worth:
+    """Effective rows of a series in time order, for means, for its tail, and of its extremes.
+
+    Parameters
+    ----------
+    values : array, shape (n,), n >= 30
+        A series that has a tail index.
+    seed : int
+        Of the tie-breaking noise.
+    """
+    try:
+        extremes = extreme_clustering(values)
+    except InputError:
+        extremes = None  # ties at the threshold: nothing lies strictly beyond it
+    return Worth(
+        extremes=extremes,
+        rows=effective_rows(values),
+        tail_rows=tail_effective_rows(values, seed=seed),
     )
 
 
@@ -152,3 +198,11 @@ def heavier_side(both: TailIndex, sides: tuple[TailIndex, ...]) -> TailIndex:
     left, right = sides
     apart = abs(left.gamma - right.gamma) > 2 * np.hypot(left.gamma_error, right.gamma_error)
     return max(sides, key=lambda side: side.gamma) if apart else both
+
+
+def heavier_word(both: TailIndex | None, sides: tuple[TailIndex, ...]) -> str:
+    """left or right where that side decides; empty where the two are not told apart."""
+    if both is None:
+        return ""
+    side = heavier_side(both, sides).side
+    return "" if side == "both" else side

@@ -7,15 +7,9 @@ from dataclasses import dataclass
 from scantling.core.record import FloatArray
 from scantling.diagnostics.battery import sample_warnings
 from scantling.diagnostics.clustering import Clustering
-from scantling.diagnostics.error_findings import Finding, error_findings
-from scantling.diagnostics.extremes import (
-    ExtremeClustering,
-    effective_rows,
-    extreme_clustering,
-    tail_effective_rows,
-)
+from scantling.diagnostics.error_findings import Finding, Worth, error_findings, heavier_word
 from scantling.diagnostics.moments import MomentAnswer
-from scantling.diagnostics.second_opinion import Opinion, second_opinions
+from scantling.diagnostics.second_opinion import Opinion
 from scantling.diagnostics.tail_index import TailIndex
 from scantling.diagnostics.threshold_path import ThresholdPath, threshold_path
 
@@ -42,14 +36,15 @@ class SeriesDiagnosis:
     """Tests of dependence; empty where values have no order."""
     clustering: Clustering | None
     """None where values have no order."""
-    extremes: ExtremeClustering | None
-    """Clustering of the largest values; None where they have no order."""
-    effective_rows: float | None
-    """Independent values whose mean would be as exact; None where they have no order."""
-    tail_effective_rows: float | None
-    """Independent values whose tail index would be as exact; None likewise."""
+    worth: Worth | None
+    """Clustering of extremes and effective rows; None where values have no order or no index."""
     warnings: tuple[str, ...]
     """Where the sample looks like a law that defeats the estimators."""
+
+    @property
+    def heavier(self) -> str:
+        """The clearly heavier side, left or right; empty if neither."""
+        return heavier_word(self.tail, self.sides)
 
 
 def diagnose_series(values: FloatArray, *, time_ordered: bool, seed: int) -> SeriesDiagnosis:
@@ -67,19 +62,16 @@ def diagnose_series(values: FloatArray, *, time_ordered: bool, seed: int) -> Ser
     own = error_findings(values, time_ordered=time_ordered, seed=seed)
     tail, clustering = own.tail, own.clustering
     volatility = None if clustering is None else clustering.volatility
-    ordered = time_ordered and tail is not None
     return SeriesDiagnosis(
         rows=values.size,
         tail=tail,
         note=own.note,
         sides=own.sides,
-        opinions=() if tail is None else second_opinions(values, tail),
+        opinions=own.opinions,
         path=None if tail is None else threshold_path(values),
         moments=own.moments,
         dependence=own.dependence,
         clustering=clustering,
-        extremes=extreme_clustering(values) if ordered else None,
-        effective_rows=effective_rows(values) if ordered else None,
-        tail_effective_rows=tail_effective_rows(values, seed=seed) if ordered else None,
+        worth=own.worth,
         warnings=sample_warnings(values, tail, volatility),
     )

@@ -289,14 +289,15 @@ def co_movement_test(
     The statistic is the mean over columns of `rank_co_movement`: bounded, so
     no heavy column can dominate. One-sided: only sizes that rise together
     raise the needed penalty. Rows of all columns are permuted jointly against
-    u, which keeps the columns' dependence on each other.
+    u, which keeps the columns' dependence on each other. Out-of-fold residuals
+    grow with the columns they were fitted on: give `levelled_residuals`.
 
     Parameters
     ----------
     X : array-like, shape (n, P)
         Candidate columns, in time order if `block` is given.
     u : array-like, shape (n,)
-        Residuals of the pilot fit.
+        Residuals of the pilot fit, levelled.
     seed, draws, block
         As `glejser_permutation`; with persistent volatility give `block`.
 

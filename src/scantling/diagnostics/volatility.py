@@ -1,18 +1,18 @@
-"""GARCH(1,1) on the residuals, and the tail index its recurrence implies."""
+"""GARCH(1,1), with or without leverage, on the residuals; arch does the fitting."""
 
 from __future__ import annotations
 
 import math
 import warnings
-from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Any, Literal
 
 import numpy as np
 
-from scantling.core.checks import between, finite_vector
+from scantling.core.checks import finite_vector
 from scantling.core.record import FloatArray, read_only
 from scantling.core.streams import stream
+from scantling.diagnostics.kesten import kesten_index
 from scantling.errors import InputError
 
 FEWEST = 100
@@ -25,28 +25,25 @@ PATH_FLOOR = 0.05
 """The path is kept at or above this share of its median, so that rows can be
 divided by it (common practice, no source)."""
 
-LARGEST_INDEX = 1000.0
-"""An index above this is returned as infinity."""
-
-STEP = 0.01
-"""Step of the trapezoid rule in ln z; the integrands are analytic, so that its
-error falls like exp(-constant / STEP) and is below rounding here."""
-
 PATH_DRAWS = 50
 """Paths drawn, one for each drawn law behind a band."""
 
 Innovation = Literal["normal", "student-t"]
-LogMoment = Callable[[float], float]
+LAWS: dict[Innovation, str] = {"student-t": "t", "normal": "normal"}
+"""Innovations of the likelihood, by arch's names."""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Volatility:
-    """A fitted GARCH(1,1): sigma_t^2 = omega + alpha e_(t-1)^2 + beta sigma_(t-1)^2."""
+    """GARCH(1,1): sigma_t^2 = omega + alpha e_(t-1)^2 + beta sigma_(t-1)^2, or GJR(1,1).
+
+    Under GJR a negative error weighs alpha + leverage.
+    """
 
     omega: float
     """Constant of the variance recurrence, in squared units of the series."""
     alpha: float
-    """Weight of the last squared error, above 0."""
+    """Weight of the last squared error, at least 0."""
     beta: float
     """Weight of the last variance, 0 to 1."""
     innovation: Innovation
@@ -54,7 +51,7 @@ class Volatility:
     nu: float | None
     """Degrees of freedom of Student innovations; None for normal ones."""
     persistence: float
-    """alpha + beta, at most 1."""
+    """alpha + beta + leverage/2, at most 1."""
     tail_index: float
     """Index of the errors by the recurrence with the empirical standardised
     innovations; infinite where none reaches 1000."""
@@ -63,18 +60,28 @@ class Volatility:
     5 % of its median."""
     path_draws: FloatArray
     """Paths under parameters drawn given the sample, shape (50, n), same units and floor."""
-    log_likelihood: float
-    """Maximised log-likelihood of the series in its own units."""
+    log_likelihood: float | None
+    """Maximised log-likelihood of the series in its own units; None: stated, not fitted."""
+    leverage: float = 0.0
+    """Extra weight of the last squared error where it was negative; 0: GARCH."""
+    candidates: tuple[tuple[str, float], ...] = ()
+    """Volatilities tried, as 'gjr, student-t', with their Bayes criterion, best first."""
+
+    @property
+    def kind(self) -> str:
+        """'garch', or 'gjr' where there is leverage."""
+        return "gjr" if self.leverage else "garch"
 
 
 def fit_garch(
     u: Any,
     *,
     innovation: Innovation = "student-t",
+    leverage: bool = False,
     mean: Literal["zero", "constant"] = "zero",
     seed: int = 0,
 ) -> Volatility | str:
-    """Fit a GARCH(1,1) by maximum likelihood, or say why there is none.
+    """Fit a GARCH(1,1) or GJR(1,1) by maximum likelihood, or say why there is none.
 
     The series is centred at its mean and scaled to unit sd before arch fits
     it; results are in the series' own units. Deterministic.
@@ -85,6 +92,8 @@ def fit_garch(
         Residuals in time order.
     innovation : 'student-t' or 'normal'
         Law of the innovations.
+    leverage : bool
+        Whether negative errors may weigh more, or less.
     mean : 'zero' or 'constant'
         'constant' estimates the mean with the rest, as for raw returns.
     seed : int
@@ -101,181 +110,91 @@ def fit_garch(
     InputError
         If u is not finite or constant, or an option is unknown.
 
-    Source: Bollerslev (1986), Journal of Econometrics 31, 307-327.
+    Sources: Bollerslev (1986), Journal of Econometrics 31, 307-327; Glosten et
+    al. (1993), Journal of Finance 48, 1779-1801.
     """
-    series = finite_vector(u, "u")
-    laws = {"student-t": "t", "normal": "normal"}
-    if innovation not in laws:
+    if innovation not in LAWS:
         raise InputError(f"innovation: 'student-t' or 'normal' is needed; found {innovation!r}")
     if mean not in ("zero", "constant"):
         raise InputError(f"mean: 'zero' or 'constant' is needed; found {mean!r}")
-    top = float(np.abs(series).max())
-    if not top or np.ptp(series / top) <= 1e-12:
-        raise InputError("u: values that vary are needed; all are equal")
+    series, scale = _standardised(u)
     if series.size < FEWEST:
         return f"{series.size} values: a GARCH fit needs {FEWEST}"
-    centred = series / top - np.mean(series / top)
-    spread = float(centred.std())
-    fitted = _maximise(centred / spread, laws[innovation], mean, seed)
-    if isinstance(fitted, str):
-        return fitted
-    parameters = fitted.parameters
-    alpha, beta = parameters["alpha[1]"], parameters["beta[1]"]
-    if alpha <= NO_CLUSTERING:
-        return "no clustering fitted: alpha is 0"
-    floor = PATH_FLOOR * np.median(fitted.path)
-    path = np.maximum(fitted.path, floor)
-    scale = spread * top
-    return Volatility(
-        omega=parameters["omega"] * scale**2,
-        alpha=alpha,
-        beta=beta,
-        innovation=innovation,
-        nu=parameters.get("nu"),
-        persistence=alpha + beta,
-        tail_index=kesten_index(alpha, beta, moment_of=fitted.residuals / path),
-        path=read_only(path * scale),
-        path_draws=read_only(np.maximum(fitted.path_draws, floor) * scale),
-        log_likelihood=fitted.log_likelihood - series.size * math.log(scale),
-    )
+    fitted = _maximise(series, innovation, leverage, mean)
+    return fitted if isinstance(fitted, str) else _record(fitted, scale, seed)
 
 
-def kesten_index(
-    alpha: float,
-    beta: float,
-    *,
-    gamma: float = 0.0,
-    moment_of: Literal["normal"] | float | FloatArray = "normal",
-) -> float:
-    """Return the tail index kappa of e_t = sigma_t z_t under GARCH(1,1) or GJR.
-
-    The positive root of E[(alpha z^2 + gamma z^2 1(z < 0) + beta)^(kappa/2)] = 1
-    with E z^2 = 1. It exists if E ln(.) < 0 and the moments reach 1.
-
-    Parameters
-    ----------
-    alpha, beta : float
-        Weights of the last squared error and of the last variance, at least 0.
-    gamma : float
-        Extra weight of a negative error; alpha + gamma at least 0.
-    moment_of : 'normal', a number above 2, or an array
-        Law of z: standard normal; Student t with that many degrees of freedom
-        at unit variance (the index then stays below it); or the empirical law
-        of an array, which is rescaled to mean square 1.
+def choose_volatility(u: Any, *, seed: int = 0) -> Volatility | str:
+    """GARCH(1,1) or GJR(1,1), with normal or Student innovations: the best by Bayes criterion.
 
     Returns
     -------
-    float
-        The index; infinity above 1000 or where it does not exist because the
-        recurrence never expands; 0 where no stationary solution exists.
+    Volatility or str
+        As `fit_garch`; the reason is that of GARCH with Student innovations.
 
     Raises
     ------
     InputError
-        If a weight is negative or not finite, or moment_of is none of these.
+        If u is not finite or constant.
 
-    Sources: Kesten (1973), Acta Mathematica 131, 207-248; Goldie (1991),
-    Annals of Applied Probability 1, 126-166; Mikosch et al. (2000), Annals of
-    Statistics 28, 1427-1451.
+    Source: Schwarz (1978), Annals of Statistics 6, 461-464, for the criterion.
     """
-    alpha = between(alpha, "alpha", 0.0, 1e6, closed=True)
-    beta = between(beta, "beta", 0.0, 1e6, closed=True)
-    gamma = between(gamma, "gamma", -alpha, 1e6, closed=True)
-    ceiling = LARGEST_INDEX
-    if isinstance(moment_of, str):
-        if moment_of != "normal":
-            raise InputError(
-                "moment_of: 'normal', degrees of freedom above 2 or an array is needed;"
-                f" found {moment_of!r}"
-            )
-        log_moment = _log_moment_of_law(alpha, gamma, beta, None)
-    elif np.ndim(moment_of) == 0:
-        nu = between(moment_of, "moment_of", 2.0, math.inf)
-        if max(alpha, alpha + gamma) <= 0:
-            return nu if beta < 1 else 0.0
-        log_moment = _log_moment_of_law(alpha, gamma, beta, nu)
-        ceiling = min(ceiling, nu * (1 - 1e-12))
-    else:
-        log_moment = _log_moment_of_sample(alpha, gamma, beta, moment_of)
-    root = _positive_root(log_moment, ceiling)
-    return root if root < LARGEST_INDEX else math.inf
+    series, scale = _standardised(u)
+    if series.size < FEWEST:
+        return f"{series.size} values: a GARCH fit needs {FEWEST}"
+    tried: list[tuple[str, float, _Maximised]] = []
+    reason = ""
+    for innovation in LAWS:
+        for leverage in (False, True):
+            fitted = _maximise(series, innovation, leverage, "zero")
+            if isinstance(fitted, str):
+                reason = reason or fitted
+                continue
+            loss = 2 * series.size * math.log(scale) - 2 * fitted.log_likelihood
+            criterion = loss + len(fitted.parameters) * math.log(series.size)
+            kind = "gjr" if leverage else "garch"
+            tried.append((f"{kind}, {innovation}", criterion, fitted))
+    if not tried:
+        return reason
+    tried.sort(key=lambda each: each[1])
+    best = _record(tried[0][2], scale, seed)
+    return replace(best, candidates=tuple((name, criterion) for name, criterion, _ in tried))
 
 
-def _positive_root(log_moment: LogMoment, ceiling: float) -> float:
-    """Return the positive root of a convex function that is 0 at 0; ceiling if beyond it.
-
-    It is 0 if the function is not negative to the right of 0.
-    """
-    from scipy.optimize import brentq
-
-    high = min(2.0, ceiling)
-    while log_moment(high) <= 0:
-        if high >= ceiling:
-            return ceiling
-        high = min(2 * high, ceiling)
-    low = high / 2
-    while log_moment(low) >= 0:
-        low /= 2
-        if low < 1e-7:
-            return 0.0
-    return float(brentq(log_moment, low, high, xtol=1e-12, rtol=1e-14))
+def _standardised(u: Any) -> tuple[FloatArray, float]:
+    """The series centred and of sd 1, and its sd."""
+    series = finite_vector(u, "u")
+    top = float(np.abs(series).max())
+    if not top or np.ptp(series / top) <= 1e-12:
+        raise InputError("u: values that vary are needed; all are equal")
+    centred = series / top - np.mean(series / top)
+    spread = float(centred.std())
+    return centred / spread, spread * top
 
 
-def _log_moment_of_law(alpha: float, gamma: float, beta: float, nu: float | None) -> LogMoment:
-    """Return kappa -> ln E A^(kappa/2) for normal z (nu None) or unit-variance t_nu.
-
-    Trapezoid rule in s = ln|z| for each sign of z. Past the last node of a
-    Student law the integrand is exp((kappa - nu) s) times a constant, so its
-    nodes to infinity add up to a geometric series.
-    """
-    from scipy.special import logsumexp
-
-    s = np.arange(-45.0, 5.0 if nu is None else 45.0, STEP)
-    square = np.exp(2 * s)
-    if nu is None:
-        log_density = -square / 2 - math.log(2 * math.pi) / 2
-    else:
-        log_density = (
-            math.lgamma((nu + 1) / 2)
-            - math.lgamma(nu / 2)
-            - math.log(math.pi * (nu - 2)) / 2
-            - (nu + 1) / 2 * np.log1p(square / (nu - 2))
-        )
-    log_weight = log_density + s + math.log(STEP)
-    with np.errstate(divide="ignore"):
-        logs = [np.log(weight * square + beta) for weight in (alpha, alpha + gamma)]
-
-    def log_moment(kappa: float) -> float:
-        terms = []
-        for log_factor in logs:
-            exponent = log_weight + kappa / 2 * log_factor
-            if nu is not None:
-                # The rate at the last node is kappa - nu where A grows, -nu where it does not.
-                rate = exponent[-1] - exponent[-2]
-                exponent[-1] -= math.log(-math.expm1(min(rate, -1e-15)))
-            terms.append(exponent)
-        return float(logsumexp(np.concatenate(terms)))
-
-    return log_moment
-
-
-def _log_moment_of_sample(alpha: float, gamma: float, beta: float, sample: Any) -> LogMoment:
-    """Return kappa -> ln mean A^(kappa/2) over a sample, rescaled to mean square 1."""
-    from scipy.special import logsumexp
-
-    z = finite_vector(sample, "moment_of", minimum=2)
-    top = float(np.abs(z).max())
-    if not top:
-        raise InputError("moment_of: values that vary are needed; all are 0")
-    z = z / top
-    z = z / math.sqrt(float(np.mean(z**2)))
-    with np.errstate(divide="ignore"):
-        log_factor = np.log((alpha + gamma * (z < 0)) * z**2 + beta)
-
-    def log_moment(kappa: float) -> float:
-        return float(logsumexp(kappa / 2 * log_factor)) - math.log(z.size)
-
-    return log_moment
+def _record(fitted: _Maximised, scale: float, seed: int) -> Volatility:
+    """The fit in the units of the series, with drawn paths."""
+    parameters = fitted.parameters
+    alpha, beta = parameters["alpha[1]"], parameters["beta[1]"]
+    leverage = max(parameters.get("gamma[1]", 0.0), -alpha)  # the optimiser may overstep a hair
+    floor = PATH_FLOOR * np.median(fitted.path)
+    path = np.maximum(fitted.path, floor)
+    with warnings.catch_warnings():
+        warnings.simplefilter("ignore")  # a covariance or path that is none is seen there
+        draws = np.maximum(_path_draws(fitted, seed), floor)
+    return Volatility(
+        omega=parameters["omega"] * scale**2,
+        alpha=alpha,
+        beta=beta,
+        leverage=leverage,
+        innovation=fitted.innovation,
+        nu=parameters.get("nu"),
+        persistence=alpha + beta + leverage / 2,
+        tail_index=kesten_index(alpha, beta, gamma=leverage, moment_of=fitted.residuals / path),
+        path=read_only(path * scale),
+        path_draws=read_only(draws * scale),
+        log_likelihood=fitted.log_likelihood - fitted.path.size * math.log(scale),
+    )
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -290,17 +209,24 @@ class _Maximised:
     """Maximised."""
     residuals: FloatArray
     """Series less its mean, shape (n,)."""
-    path_draws: FloatArray
-    """Paths under drawn parameters, shape (PATH_DRAWS, n)."""
+    innovation: Innovation
+    """Law of the innovations."""
+    model: Any
+    """arch's model, for paths under other parameters."""
+    result: Any
+    """arch's result, for the covariance of the parameters."""
 
 
-def _maximise(series: FloatArray, law: str, mean: str, seed: int) -> _Maximised | str:
+def _maximise(
+    series: FloatArray, innovation: Innovation, leverage: bool, mean: str
+) -> _Maximised | str:
     """Return arch's fit, or why there is none."""
     from arch import arch_model
 
     model = arch_model(
-        series, mean=mean.capitalize(), vol="GARCH", p=1, q=1, dist=law, rescale=False
-    )
+        series, mean=mean.capitalize(), vol="GARCH", p=1, o=int(leverage), q=1,
+        dist=LAWS[innovation], rescale=False,
+    )  # fmt: skip
     with warnings.catch_warnings():
         warnings.simplefilter("ignore")  # what they say is read from the flag and the numbers
         try:
@@ -319,25 +245,33 @@ def _maximise(series: FloatArray, law: str, mean: str, seed: int) -> _Maximised 
         numbers = [*parameters.values(), log_likelihood, float(path.sum())]
         if not np.isfinite(numbers).all() or path.min() <= 0:
             return "the GARCH fit has values that are not finite"
-        return _Maximised(
-            parameters=parameters,
-            path=path,
-            log_likelihood=log_likelihood,
-            residuals=np.asarray(result.resid, dtype=np.float64),
-            path_draws=_path_draws(model, result, path, seed),
-        )
+    if parameters["alpha[1]"] + max(parameters.get("gamma[1]", 0.0), 0.0) <= NO_CLUSTERING:
+        return "no clustering fitted: alpha is 0"
+    return _Maximised(
+        parameters=parameters,
+        path=path,
+        log_likelihood=log_likelihood,
+        residuals=np.asarray(result.resid, dtype=np.float64),
+        innovation=innovation,
+        model=model,
+        result=result,
+    )
 
 
-def _path_draws(model: Any, result: Any, path: FloatArray, seed: int) -> FloatArray:
+def _path_draws(fitted: _Maximised, seed: int) -> FloatArray:
     """Volatility paths under parameters the sample cannot tell from the fitted ones.
 
     Parameters are drawn from the normal law about the estimate with arch's robust covariance,
     those outside the admissible region being drawn again; each path is arch's own recursion. A
     covariance that is not one leaves the fitted path in every draw.
     """
+    model, result, path = fitted.model, fitted.result, fitted.path
     names = list(result.params.index)
-    spots = [names.index(name) for name in ("omega", "alpha[1]", "beta[1]")]
+    wanted = [name for name in ("omega", "alpha[1]", "gamma[1]", "beta[1]") if name in names]
+    spots = [names.index(name) for name in wanted]
     centre = result.params.to_numpy(dtype=np.float64)
+    # What each adds to the persistence; a negative error weighs alpha + gamma.
+    shares = np.array([{"omega": 0.0, "gamma[1]": 0.5}.get(name, 1.0) for name in wanted])
     try:
         covariance = np.asarray(result.param_cov, dtype=np.float64)[np.ix_(spots, spots)]
         root = np.linalg.cholesky(covariance)
@@ -346,11 +280,12 @@ def _path_draws(model: Any, result: Any, path: FloatArray, seed: int) -> FloatAr
     rng = stream(seed, "volatility draws")
     out: list[FloatArray] = []
     for _ in range(20 * PATH_DRAWS):
-        omega, alpha, beta = centre[spots] + root @ rng.standard_normal(3)
-        if omega <= 0 or alpha < 0 or beta < 0 or alpha + beta > 1:
+        tried = centre[spots] + root @ rng.standard_normal(len(spots))
+        least = np.delete(tried, 2) if len(spots) == 4 else tried
+        if tried[0] <= 0 or least.min() < 0 or tried[1:3].sum() < 0 or tried @ shares > 1:
             continue
         drawn = centre.copy()
-        drawn[spots] = omega, alpha, beta
+        drawn[spots] = tried
         moved = np.asarray(model.fix(drawn).conditional_volatility, dtype=np.float64)
         if np.isfinite(moved).all() and moved.min() > 0:
             out.append(moved)

@@ -8,11 +8,28 @@ from dataclasses import dataclass, field, replace
 import numpy as np
 
 from scantling.core.record import FloatArray, read_only
-from scantling.diagnostics.volatility import Volatility, kesten_index
+from scantling.diagnostics.volatility import Volatility
+from scantling.law.catalogue import FAMILIES
+from scantling.law.innovation import Innovation, ShapeSpread, Size
+from scantling.law.normal import Normal
 from scantling.law.splice import Splice
+from scantling.law.student import Student
 
-FAMILIES = ("normal", "student-t", "spliced")
+__all__ = ["FAMILIES", "ErrorLaw", "Fit", "ShapeSpread", "normal_law", "student_law"]
+
 BURN_IN = 500
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Candidate:
+    """A family that was tried, judged on values it was not fitted to."""
+
+    family: str
+    """Its name."""
+    score: float
+    """Log-likelihood out of sample, summed over the values; larger is better."""
+    tail_score: float
+    """The same of the largest tenth in size, the rest counting as one event."""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -23,24 +40,16 @@ class Fit:
     """Anderson-Darling distance of the innovations from the law; None if stated, not fitted."""
     p_value: float | None
     """Of the distance, by parametric bootstrap with refitting; None where it does not apply."""
-    candidates: tuple[tuple[str, float], ...] = ()
-    """Families tried with their Bayes information criterion, best first."""
+    candidates: tuple[Candidate, ...] = ()
+    """Families tried, best out of sample first."""
+    runner_up: str = ""
+    """The family next in line; empty where no other was tried."""
+    margin: float | None = None
+    """Score of the law less that of the runner-up, in units of log-likelihood; None: unknown."""
+    margin_error: float | None = None
+    """Standard error of the margin."""
     note: str = ""
     """How the family came to be chosen, where it is not plainly the best."""
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class ShapeSpread:
-    """What the sample leaves open about the shape of the tails."""
-
-    gammas: FloatArray
-    """Values of 1/(tail index of the innovations), increasing."""
-    weights: FloatArray
-    """Their probabilities given the sample, summing to 1."""
-    scales: FloatArray
-    """Most likely scale at each of them."""
-    log_scale_error: float
-    """Standard error of the log scale at given shape."""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -50,48 +59,51 @@ class ErrorLaw:
     Innovations z are independent, with mean zero where the mean exists.
     """
 
-    family: str
-    """normal | student-t | spliced."""
-    scale: float
-    """normal: sd of z; student-t: scale; spliced: 1."""
-    df: float = math.inf
-    """Degrees of freedom of a student-t; inf otherwise."""
-    splice: Splice | None = field(default=None, repr=False)
-    """Body and tails of a spliced law."""
+    innovation: Innovation
+    """Law of z."""
     volatility: Volatility | None = field(default=None, repr=False)
-    """Fitted volatility; None: constant."""
+    """Fitted or stated volatility; None: constant. The path of a stated one is a single value,
+    its mean level."""
     fit: Fit = Fit(distance=None, p_value=None)
     """How well it fits; empty for a stated law."""
     spread: ShapeSpread | None = field(default=None, repr=False)
-    """Uncertainty of the shape, from which `parameter_draws` draws; None: stated exactly."""
+    """What the sample leaves open, from which `parameter_draws` draws; None: stated exactly."""
+
+    @property
+    def family(self) -> str:
+        """One of `FAMILIES`."""
+        return self.innovation.name
+
+    @property
+    def scale(self) -> float:
+        """Scale of the innovations by their family's own definition; 1 of a spliced law."""
+        return self.innovation.parameters.get("scale", 1.0)
+
+    @property
+    def df(self) -> float:
+        """Degrees of freedom of a Student t, skewed or not; inf otherwise."""
+        return self.innovation.parameters.get("df", math.inf)
+
+    @property
+    def splice(self) -> Splice | None:
+        """Body and tails of a spliced law."""
+        return getattr(self.innovation, "splice", None)
 
     @property
     def parameters(self) -> dict[str, float]:
-        """Parameters by name, volatility's included; inf only where the family has none."""
-        out: dict[str, float] = {}
-        if self.family == "spliced" and self.splice is not None:
-            out |= {
-                "gamma": self.splice.gamma,
-                "left_scale": self.splice.left_scale,
-                "right_scale": self.splice.right_scale,
-            }
-        else:
-            out["scale"] = self.scale
-            if self.family == "student-t":
-                out["df"] = self.df
-        if self.volatility is not None:
-            path = self.volatility
-            out |= {"omega": path.omega, "alpha": path.alpha, "beta": path.beta}
+        """Parameters by name, volatility's included."""
+        out = self.innovation.parameters
+        path = self.volatility
+        if path is not None:
+            out = out | {"omega": path.omega, "alpha": path.alpha, "beta": path.beta}
+            if path.leverage:
+                out["leverage"] = path.leverage
         return out
 
     @property
     def innovation_variance(self) -> float:
         """Variance of z; inf where it does not exist."""
-        if self.family == "spliced" and self.splice is not None:
-            return self.splice.mean_and_variance()[1]
-        if self.family == "student-t":
-            return self.scale**2 * self.df / (self.df - 2) if self.df > 2 else math.inf
-        return self.scale**2
+        return self.innovation.variance
 
     @property
     def sd(self) -> float:
@@ -106,57 +118,52 @@ class ErrorLaw:
         """Tail index of the errors, the volatility's share included.
 
         Under volatility the root of the Kesten equation for the law's own innovations; of a
-        spliced law, whose tails have no closed moments, that for the sample's, never above the
-        innovations' own.
+        spliced law that for the sample's, never above the innovations' own.
         """
-        if self.family == "spliced" and self.splice is not None:
-            own = 1 / self.splice.gamma if self.splice.gamma > 0 else math.inf
-            return own if self.volatility is None else min(own, self.volatility.tail_index)
-        path = self.volatility
-        if path is None:
-            return self.df
-        if self.family == "normal":
-            return kesten_index(path.alpha, path.beta)
-        return self.df if self.df <= 2 else kesten_index(path.alpha, path.beta, moment_of=self.df)
+        if self.volatility is None:
+            return self.innovation.tail_index
+        return self.innovation.recurrence_index(self.volatility)
 
-    def innovations(self, size: int | tuple[int, ...], rng: np.random.Generator) -> FloatArray:
+    def innovations(self, size: Size, rng: np.random.Generator) -> FloatArray:
         """Independent draws of z."""
-        if self.family == "student-t":
-            return np.asarray(self.scale * rng.standard_t(self.df, size))
-        if self.family == "spliced" and self.splice is not None:
-            mean, _ = self.splice.mean_and_variance()
-            drawn = self.splice.quantile(rng.random(size))
-            return np.asarray(drawn - (0.0 if math.isnan(mean) else mean))
-        return np.asarray(self.scale * rng.standard_normal(size))
+        return self.innovation.draw(size, rng)
 
-    def draw(self, size: int | tuple[int, ...], rng: np.random.Generator) -> FloatArray:
+    def draw(self, size: Size, rng: np.random.Generator) -> FloatArray:
         """Draw errors from the full law; along the first axis they follow one another in time.
 
         Under volatility the recursion starts at its mean level, 500 rows before the first.
         """
-        if self.volatility is None:
-            return self.innovations(size, rng)
         path = self.volatility
+        if path is None:
+            return self.innovations(size, rng)
         shape = (size,) if isinstance(size, int) else size
         z = self.innovations((shape[0] + BURN_IN, *shape[1:]), rng)
         variance = np.full(shape[1:], float((path.path**2).mean()))
         out = np.empty_like(z)
         for t in range(z.shape[0]):
             out[t] = np.sqrt(variance) * z[t]
-            variance = path.omega + path.alpha * out[t] ** 2 + path.beta * variance
+            weight = path.alpha
+            if path.leverage:
+                weight = weight + path.leverage * (out[t] < 0)
+            variance = path.omega + weight * out[t] ** 2 + path.beta * variance
         return out[BURN_IN:]
 
     def draw_given_path(self, rows: int, replicates: int, rng: np.random.Generator) -> FloatArray:
         """Errors at the present rows: the fitted path is kept, the innovations are fresh.
 
-        Returns an array of shape (rows, replicates), not centred.
+        Returns an array of shape (rows, replicates), not centred. Where volatility is stated
+        there is no path to keep, and each replicate has its own.
         """
-        z = self.innovations((rows, replicates), rng)
-        return z if self.volatility is None else z * self.volatility.path[:, None]
+        path = self.volatility
+        if path is None:
+            return self.innovations((rows, replicates), rng)
+        if path.path.size == 1:
+            return self.draw((rows, replicates), rng)
+        return self.innovations((rows, replicates), rng) * path.path[:, None]
 
     def relative_variance(self, rows: int) -> FloatArray:
-        """sigma_t^2 over its mean, shape (rows,); ones where volatility is constant."""
-        if self.volatility is None:
+        """sigma_t^2 over its mean, shape (rows,); ones where no path is known."""
+        if self.volatility is None or self.volatility.path.size == 1:
             return np.ones(rows)
         square = self.volatility.path**2
         return np.asarray(square / square.mean())
@@ -178,17 +185,8 @@ class ErrorLaw:
 
     def scaled(self, factor: float) -> ErrorLaw:
         """The law of `factor` times the innovations."""
-        splice, spread = self.splice, self.spread
-        if splice is not None:
-            splice = replace(
-                splice,
-                body=read_only(splice.body * factor),
-                left_scale=splice.left_scale * factor,
-                right_scale=splice.right_scale * factor,
-            )
-        elif spread is not None:
-            spread = replace(spread, scales=read_only(spread.scales * factor))
-        return replace(self, scale=self.scale * factor, splice=splice, spread=spread)
+        spread = None if self.spread is None else self.spread.scaled(factor)
+        return replace(self, innovation=self.innovation.scaled(factor), spread=spread)
 
     def parameter_draws(self, count: int, rng: np.random.Generator) -> tuple[ErrorLaw, ...]:
         """Draw laws the sample cannot tell from this one.
@@ -200,37 +198,27 @@ class ErrorLaw:
         if self.spread is None:
             return (self,) * count
         spread = self.spread
-        picks = rng.choice(spread.gammas.size, size=count, p=spread.weights)
+        picks = rng.choice(len(spread.laws), size=count, p=spread.weights)
         shifts = np.exp(spread.log_scale_error * rng.standard_normal(count))
-        paths = np.empty((0, 0)) if self.volatility is None else self.volatility.path_draws
+        path = self.volatility
+        paths = np.empty((0, 0)) if path is None else path.path_draws
         moves = rng.integers(max(1, len(paths)), size=count)
         laws = []
         for pick, shift, move in zip(picks, shifts, moves, strict=True):
-            gamma, scale = float(spread.gammas[pick]), float(spread.scales[pick]) * float(shift)
-            path = self.volatility
-            if path is not None:
+            moved = spread.laws[pick].moved(float(shift))
+            if path is not None and len(paths):
                 path = replace(path, path=read_only(paths[move]))
-            if self.splice is not None:
-                tails = replace(
-                    self.splice,
-                    gamma=gamma,
-                    left_scale=self.splice.left_scale * scale,
-                    right_scale=self.splice.right_scale * scale,
-                )
-                laws.append(replace(self, splice=tails, volatility=path))
-            else:
-                student = replace(self, family="student-t", df=1 / gamma, scale=scale)
-                laws.append(replace(student, volatility=path))
+            laws.append(replace(self, innovation=moved, volatility=path))
         return tuple(laws)
 
 
 def normal_law(sd: float) -> ErrorLaw:
     """Independent normal errors."""
-    return ErrorLaw(family="normal", scale=sd)
+    return ErrorLaw(innovation=Normal(scale=sd))
 
 
 def student_law(df: float, *, sd: float | None = None, scale: float = 1.0) -> ErrorLaw:
     """Independent Student t errors of the given scale, or, if df > 2, of the given sd."""
     if sd is not None:
         scale = sd * math.sqrt((df - 2) / df)
-    return ErrorLaw(family="student-t", scale=scale, df=df)
+    return ErrorLaw(innovation=Student(scale=scale, df=df))

@@ -2,16 +2,14 @@
 
 from __future__ import annotations
 
-import math
 from dataclasses import replace
 from typing import Any
 
 import numpy as np
 
 from scantling.core.checks import finite_vector
-from scantling.core.record import FloatArray, read_only
+from scantling.core.record import FloatArray
 from scantling.diagnostics.clustering import find_clustering
-from scantling.diagnostics.moments import Z90
 from scantling.diagnostics.tail_index import (
     LARGEST,
     MINIMUM,
@@ -21,102 +19,76 @@ from scantling.diagnostics.tail_index import (
 )
 from scantling.diagnostics.volatility import Volatility
 from scantling.errors import InputError
-from scantling.law.families import FAMILIES, ErrorLaw, Fit, ShapeSpread
-from scantling.law.goodness import bootstrap_fit_test, bootstrap_splice_test
+from scantling.law.catalogue import CATALOGUE, FAMILIES
+from scantling.law.choice import choose
+from scantling.law.families import ErrorLaw, Fit
+from scantling.law.goodness import bootstrap_fit_test
 from scantling.law.splice import enough_for_splice, fit_splice
-from scantling.law.student import fit_student, profile
+from scantling.law.spliced import Spliced, spliced_spread
 
 REJECT_LEVEL = 0.05
-TIE_UNITS = 2.0
-"""Criteria this close are a tie, and the heavier law is taken."""
-FINE_SCAN = np.concatenate([[0.002], np.arange(0.01, 0.951, 0.01)])
-
-
-def _normal_likelihood(values: FloatArray) -> float:
-    n = values.size
-    return -0.5 * n * (math.log(2 * math.pi * float((values**2).mean())) + 1)
-
-
-def student_spread(values: FloatArray) -> ShapeSpread:
-    """Weights over 1/df given the sample: its profile likelihood, flat prior on (0, 0.95].
-
-    The normal is the lower end. The scale's error is the one at known df,
-    sqrt((df + 3)/(2 df n)).
-    """
-    likelihood, scale = profile(values[None], FINE_SCAN)
-    weight = np.exp(likelihood[:, 0] - likelihood[:, 0].max())
-    weight /= weight.sum()
-    df = 1 / float(FINE_SCAN @ weight)
-    return ShapeSpread(
-        gammas=read_only(FINE_SCAN),
-        weights=read_only(weight),
-        scales=read_only(scale[:, 0]),
-        log_scale_error=math.sqrt((df + 3) / (2 * df * values.size)),
-    )
-
-
-def spliced_spread(tail: TailIndex, n: int) -> ShapeSpread:
-    """Weights over the shape of spliced tails: normal, with the tail index's interval as theirs."""
-    top, bottom = 1 / tail.low, 1 / tail.high
-    centre, error = (top + bottom) / 2, max((top - bottom) / 2 / Z90, 1e-3)
-    gammas = np.linspace(max(0.0, centre - 3 * error), max(0.02, centre + 3 * error), 61)
-    weight = np.exp(-0.5 * ((gammas - centre) / error) ** 2)
-    return ShapeSpread(
-        gammas=read_only(gammas),
-        weights=read_only(weight / weight.sum()),
-        scales=read_only(np.ones(gammas.size)),
-        log_scale_error=math.sqrt(2 * (1 + max(tail.gamma, 0)) / (0.1 * n)),
-    )
 
 
 def fit_innovations(
-    values: FloatArray, *, family: str | None, seed: int, tail: TailIndex | None = None
-) -> ErrorLaw:
+    values: FloatArray, *, family: str | None, seed: int, tail: TailIndex | None = None,
+    time_ordered: bool = False,
+) -> ErrorLaw:  # fmt: skip
     """Fit a family to independent innovations (centred, shape (n,)).
 
-    Without a family: the better of normal and Student t by the Bayes criterion (a tie goes to
-    the heavier), and, if the bootstrap test rejects it and each tail holds 25 values, the
-    spliced law.
+    Without a family: the one `choose` finds, and, if the bootstrap test rejects it and each tail
+    holds 25 values, the spliced law. The work is done in units of the root mean square.
     """
-    n = values.size
-    gammas, scales, likelihoods = fit_student(values[None])
-    gamma = float(gammas[0])
-    criteria = {
-        "normal": -2 * _normal_likelihood(values) + math.log(n),
-        "student-t": -2 * float(likelihoods[0]) + 2 * math.log(n),
-    }
-    ranked = tuple(sorted(criteria.items(), key=lambda pair: pair[1]))
-    chosen = family or ranked[0][0]
-    if not family and abs(ranked[0][1] - ranked[1][1]) <= TIE_UNITS:
-        chosen = "student-t"
-    spread = student_spread(values)
-    fit = Fit(distance=None, p_value=None, candidates=ranked)
-    if chosen != "spliced":
-        distance, p_value = bootstrap_fit_test(values, chosen, gamma, seed=seed)
-        fit = replace(fit, distance=distance, p_value=p_value)
-        rejected = p_value <= REJECT_LEVEL
-        tail, why = _tail_or_reason(values, tail, seed)
-        if family or not (rejected and tail):
-            note = f"the {chosen} law is rejected and {why}"
-            if chosen == "normal":
-                scale, df = float(np.sqrt((values**2).mean())), math.inf
-            else:
-                scale, df = float(scales[0]), 1 / gamma
-            return ErrorLaw(
-                family=chosen, scale=scale, df=df, spread=spread,
-                fit=replace(fit, note=note if rejected and not family else ""),
-            )  # fmt: skip
-        fit = replace(
-            fit, note=f"the {chosen} law is rejected (p = {p_value:.3f}), so tails are spliced"
+    unit = float(np.sqrt((values**2).mean()))
+    z = values / unit
+    if family == "spliced":
+        law = _spliced(z, tail or tail_index(z, seed=seed), seed)
+    elif family:
+        innovation = CATALOGUE[family].fit(z)
+        distance, p_value = bootstrap_fit_test(z, innovation, seed=seed)
+        law = ErrorLaw(
+            innovation=innovation,
+            spread=innovation.spread(z, seed=seed),
+            fit=Fit(distance=distance, p_value=p_value),
         )
-    if tail is None:
-        tail = tail_index(values, seed=seed)
-    splice = fit_splice(values, tail.gamma)
-    distance, p_value = bootstrap_splice_test(values, splice, seed=seed)
-    return ErrorLaw(
-        family="spliced", scale=1.0, splice=splice, spread=spliced_spread(tail, n),
-        fit=replace(fit, distance=distance, p_value=p_value),
+    else:
+        law = _chosen(z, tail, seed, time_ordered)
+    return law.scaled(unit)
+
+
+def _chosen(z: FloatArray, tail: TailIndex | None, seed: int, time_ordered: bool) -> ErrorLaw:
+    """The family chosen, or spliced tails where it is rejected and there are enough of them."""
+    choice = choose(z, time_ordered=time_ordered, seed=seed)
+    innovation = choice.laws[choice.family]
+    distance, p_value = bootstrap_fit_test(z, innovation, seed=seed)
+    other, margin, error = choice.margin(choice.family)
+    fit = Fit(
+        distance=distance, p_value=p_value, candidates=choice.candidates,
+        runner_up=other, margin=margin, margin_error=error,
     )  # fmt: skip
+    if p_value <= REJECT_LEVEL:
+        found, why = _tail_or_reason(z, tail, seed)
+        if found is not None:
+            spliced = _spliced(z, found, seed)
+            note = f"the {choice.family} law is rejected (p = {p_value:.3f}), so tails are spliced"
+            return replace(
+                spliced,
+                fit=replace(
+                    spliced.fit, candidates=fit.candidates, runner_up=choice.family, note=note
+                ),
+            )
+        fit = replace(fit, note=f"the {choice.family} law is rejected and {why}")
+    return ErrorLaw(innovation=innovation, spread=innovation.spread(z, seed=seed), fit=fit)
+
+
+def _spliced(z: FloatArray, tail: TailIndex, seed: int) -> ErrorLaw:
+    """The sample's body, with tails of the reported index."""
+    innovation = Spliced(splice=fit_splice(z, tail.gamma))
+    distance, p_value = bootstrap_fit_test(z, innovation, seed=seed)
+    return ErrorLaw(
+        innovation=innovation,
+        spread=spliced_spread(innovation, tail, z.size),
+        fit=Fit(distance=distance, p_value=p_value),
+    )
 
 
 def _tail_or_reason(
@@ -135,7 +107,7 @@ def _tail_or_reason(
 
 def error_law(
     values: FloatArray, *, volatility: Volatility | None, seed: int, family: str | None = None,
-    tail: TailIndex | None = None,
+    tail: TailIndex | None = None, time_ordered: bool = False,
 ) -> ErrorLaw:  # fmt: skip
     """Law of errors whose volatility, if any, is already fitted.
 
@@ -143,10 +115,12 @@ def error_law(
     keeps its meaning.
     """
     if volatility is None:
-        return fit_innovations(values - values.mean(), family=family, seed=seed, tail=tail)
+        return fit_innovations(
+            values - values.mean(), family=family, seed=seed, tail=tail, time_ordered=time_ordered
+        )
     z = values / volatility.path
     z = (z - z.mean()) / z.std()
-    law = fit_innovations(z, family=family, seed=seed)
+    law = fit_innovations(z, family=family, seed=seed, time_ordered=True)
     return replace(law, volatility=volatility)
 
 
@@ -159,11 +133,12 @@ def fit_law(
     ----------
     values : array-like, shape (n,), n >= 30
         Residuals, in time order if `time_ordered`.
-    family : {'normal', 'student-t', 'spliced'}, optional
-        Default: chosen by fit.
+    family : str, optional
+        One of normal, laplace, ged, student-t, skewed-t, stable, spliced; default: chosen by
+        likelihood and tails out of sample (`law.choice.choose`), then by goodness of fit.
     time_ordered : bool
-        Whether volatility clustering is looked for; GARCH(1,1) is fitted where the
-        permutation test on absolute values rejects at 5 %.
+        Whether volatility clustering is looked for; GARCH(1,1) or GJR(1,1) is fitted where
+        the permutation test on absolute values rejects at 5 %.
     seed : int
         Of the permutation and bootstrap tests.
 
@@ -187,4 +162,6 @@ def fit_law(
     if family == "spliced" and not enough_for_splice(array.size):
         raise InputError(f"family: spliced tails need 250 values; found {array.size}")
     volatility = find_clustering(array, seed=seed).volatility if time_ordered else None
-    return error_law(array, volatility=volatility, seed=seed, family=family)
+    return error_law(
+        array, volatility=volatility, seed=seed, family=family, time_ordered=time_ordered
+    )

@@ -7,17 +7,15 @@ Stute et al. (1993), Metrika 40; the distance rather than Kolmogorov's because i
 from __future__ import annotations
 
 import numpy as np
-from scipy.special import ndtr, stdtr
 
 from scantling.core.record import FloatArray
 from scantling.core.streams import stream
-from scantling.diagnostics.tail_estimators import weighted_hill
-from scantling.diagnostics.tail_index import one_side
-from scantling.law.splice import Splice, fit_splice
-from scantling.law.student import fit_student
+from scantling.law.innovation import Innovation
 
-BOOTSTRAP_DRAWS = 199
-SPLICE_DRAWS = 99
+CELLS = 50_000
+"""Values drawn at once, few enough to stay in a processor's cache."""
+MOST_CELLS = 400_000
+"""Values drawn in all, beyond which long samples get fewer draws, but not under 99."""
 
 
 def anderson_darling(uniforms: FloatArray) -> FloatArray:
@@ -29,17 +27,13 @@ def anderson_darling(uniforms: FloatArray) -> FloatArray:
     return np.asarray(-n - (odd * logs).sum(axis=-1) / n)
 
 
-def fitted_distance(samples: FloatArray, family: str) -> FloatArray:
-    """Distance of each row of (B, n) from the law fitted to that row, location 0."""
-    if family == "normal":
-        scale = np.sqrt((samples**2).mean(axis=1))
-        return anderson_darling(ndtr(samples / scale[:, None]))
-    gamma, scale, _ = fit_student(samples)
-    return anderson_darling(stdtr((1 / gamma)[:, None], samples / scale[:, None]))
+def distance_from(law: Innovation, sample: FloatArray) -> float:
+    """Anderson-Darling distance of a sample (n,) from the law fitted to it."""
+    return float(anderson_darling(law.uniforms(sample)))
 
 
 def bootstrap_fit_test(
-    sample: FloatArray, family: str, gamma: float, *, seed: int, draws: int = BOOTSTRAP_DRAWS
+    sample: FloatArray, law: Innovation, *, seed: int, draws: int | None = None
 ) -> tuple[float, float]:
     """Distance of the sample from its fitted law, and its bootstrap p-value.
 
@@ -47,55 +41,25 @@ def bootstrap_fit_test(
     ----------
     sample : array, shape (n,)
         Centred innovations.
-    family : {'normal', 'student-t'}
-    gamma : float
-        Fitted 1/df; ignored for the normal.
+    law : Innovation
+        Fitted to the sample.
     seed : int
-    draws : int
-        Samples drawn from the fitted law, centred and refitted as the sample was.
+    draws : int, optional
+        Samples drawn from the fitted law, centred and refitted as the sample was; default: the
+        family's own number.
 
     Returns
     -------
     distance, p_value : float
     """
     rng = stream(seed, "fit test")
-    distance = float(fitted_distance(sample[None], family)[0])
+    draws = draws or min(law.bootstraps, max(99, MOST_CELLS // sample.size))
+    distance = distance_from(law, sample)
     exceed = 0
-    per_pass = max(1, 2_000_000 // sample.size)
+    per_pass = max(1, CELLS // sample.size)
     for start in range(0, draws, per_pass):
-        size = (min(per_pass, draws - start), sample.size)
-        drawn = rng.standard_normal(size) if family == "normal" else rng.standard_t(1 / gamma, size)
+        drawn = law.draw((min(per_pass, draws - start), sample.size), rng)
         drawn -= drawn.mean(axis=1, keepdims=True)
-        exceed += int((fitted_distance(drawn, family) >= distance).sum())
-    return distance, (1 + exceed) / (draws + 1)
-
-
-def bootstrap_splice_test(
-    sample: FloatArray, splice: Splice, *, seed: int, draws: int = SPLICE_DRAWS
-) -> tuple[float, float]:
-    """Distance of the sample from its spliced law, and its bootstrap p-value.
-
-    Each drawn sample gets its own tail index, body and scales, as the sample did. The body being
-    empirical, what is tested is the tails.
-
-    Parameters
-    ----------
-    sample : array, shape (n,)
-    splice : Splice
-        Fitted to the sample.
-    seed : int
-    draws : int
-
-    Returns
-    -------
-    distance, p_value : float
-    """
-    rng = stream(seed, "spliced fit test")
-    distance = float(anderson_darling(splice.cdf(sample)))
-    exceed = 0
-    for _ in range(draws):
-        drawn = splice.quantile(rng.random(sample.size))
-        ordered = one_side(drawn, "both")
-        again = fit_splice(drawn, float(weighted_hill(ordered, drawn.size // 2)))
-        exceed += float(anderson_darling(again.cdf(drawn))) >= distance
+        for row, again in zip(drawn, law.refits(drawn), strict=True):
+            exceed += distance_from(again, row) >= distance
     return distance, (1 + exceed) / (draws + 1)

@@ -7,18 +7,29 @@ of iteratively reweighted least squares.
 
 from __future__ import annotations
 
+import math
+from dataclasses import dataclass, replace
+from typing import ClassVar, Self
+
 import numpy as np
-from scipy.special import gammaln
+from scipy.special import gammaln, stdtr
 
 from scantling.core.record import FloatArray
+from scantling.diagnostics.kesten import kesten_index
+from scantling.diagnostics.volatility import Volatility
+from scantling.law.climb import climb
+from scantling.law.innovation import Innovation, Parameter, ShapeSpread, Size, grid_spread
 
 SCAN = (
     0.002, 0.02, 0.05, 0.08, 0.11, 0.14, 0.17, 0.2, 0.235, 0.27, 0.31, 0.36, 0.42, 0.5,
     0.6, 0.72, 0.86, 1.0,
 )  # fmt: skip
 """Values of 1/df scanned; between them the likelihood is interpolated by a parabola."""
+FINE_SCAN = np.concatenate([[0.002], np.arange(0.01, 0.951, 0.01)])
+"""Values of 1/df that a law's uncertainty is spread over; the first stands for the normal."""
 VERTEX_STEPS = 12
 """Reweighting steps for the scale at the interpolated maximum."""
+MOST_DF = 1e6
 
 
 def log_constant(df: FloatArray) -> FloatArray:
@@ -96,3 +107,109 @@ def fit_student(samples: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray
     gamma = np.where(best == 0, grid[0], np.where(best == grid.size - 1, grid[-1], gamma))
     top, square_scale = reweighted(samples**2, 1 / gamma, scale[best, rows] ** 2, VERTEX_STEPS)
     return gamma, np.sqrt(square_scale), top
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Student(Innovation):
+    """Student t: density proportional to (1 + (x/s)^2/df)^(-(df + 1)/2)."""
+
+    scale: float = 1.0
+    """s; the sd is s sqrt(df/(df - 2)), where df is above 2."""
+    df: float
+    """Degrees of freedom, which are the tail index."""
+
+    name: ClassVar[str] = "student-t"
+    meaning: ClassVar[str] = "Both tails fall like |x|^-df, so moments below order df exist."
+    stated_by: ClassVar[tuple[Parameter, ...] | None] = (
+        Parameter(key="df", low=0.0, high=MOST_DF, example=5),
+    )
+
+    @property
+    def parameters(self) -> dict[str, float]:
+        """Scale and degrees of freedom."""
+        return {"scale": self.scale, "df": self.df}
+
+    @property
+    def variance(self) -> float:
+        """s^2 df/(df - 2); inf up to df 2."""
+        return self.scale**2 * self.df / (self.df - 2) if self.df > 2 else math.inf
+
+    @property
+    def tail_index(self) -> float:
+        """The degrees of freedom."""
+        return self.df
+
+    def draw(self, size: Size, rng: np.random.Generator) -> FloatArray:
+        """Independent draws."""
+        return np.asarray(self.scale * rng.standard_t(self.df, size))
+
+    def cdf(self, x: FloatArray) -> FloatArray:
+        """Distribution function."""
+        return np.asarray(stdtr(self.df, x / self.scale))
+
+    def log_density(self, x: FloatArray) -> FloatArray:
+        """Log density."""
+        constant = float(log_constant(np.array(self.df))) - math.log(self.scale)
+        return np.asarray(constant - (self.df + 1) / 2 * np.log1p((x / self.scale) ** 2 / self.df))
+
+    def moment(self, order: float) -> float:
+        """s^q df^(q/2) Gamma((q + 1)/2) Gamma((df - q)/2)/(sqrt(pi) Gamma(df/2)), q < df."""
+        if order >= self.df:
+            return math.inf
+        log = (
+            gammaln((order + 1) / 2) + gammaln((self.df - order) / 2) - gammaln(self.df / 2)
+            + order / 2 * math.log(self.df) - 0.5 * math.log(math.pi)
+        )  # fmt: skip
+        return self.scale**order * math.exp(float(log))
+
+    def recurrence_index(self, path: Volatility) -> float:
+        """Root of the Kesten equation, below df; df itself where there is no variance."""
+        if self.df <= 2:
+            return self.df
+        return kesten_index(path.alpha, path.beta, gamma=path.leverage, moment_of=self.df)
+
+    def scaled(self, factor: float) -> Self:
+        """The law of `factor` times the innovation."""
+        return replace(self, scale=self.scale * factor)
+
+    @classmethod
+    def fit_rows(cls, samples: FloatArray) -> list[Self]:
+        """Maximum likelihood of each row, df from 1 to 500."""
+        gammas, scales, _ = fit_student(samples)
+        return [
+            cls(scale=float(scale), df=1 / float(gamma))
+            for scale, gamma in zip(scales, gammas, strict=True)
+        ]
+
+    def refits(self, samples: FloatArray) -> list[Self]:
+        """Maximum likelihood by Newton steps from this law's own parameters."""
+        squares = samples**2
+
+        def likelihood(at: FloatArray) -> FloatArray:
+            return reweighted(squares, at[:, 1] ** -2, np.exp(2 * at[:, 0]), 0)[0]
+
+        low = np.array([math.log(self.scale) - 5, math.sqrt(SCAN[0])])
+        high = np.array([math.log(self.scale) + 5, 1.0])
+        own = np.array([math.log(self.scale), self.df**-0.5])
+        found, _ = climb(likelihood, np.tile(own, (samples.shape[0], 1)), low, high)
+        return [replace(self, scale=math.exp(at[0]), df=float(at[1]) ** -2) for at in found]
+
+    def spread(self, values: FloatArray, *, seed: int) -> ShapeSpread:
+        """Profile likelihood over 1/df."""
+        return student_spread(values)
+
+
+def student_spread(values: FloatArray) -> ShapeSpread:
+    """Weights over 1/df given the sample: its profile likelihood, flat prior on (0, 0.95].
+
+    The normal is the lower end. The scale's error is the one at known df,
+    sqrt((df + 3)/(2 df n)).
+    """
+    likelihood, scale = profile(values[None], FINE_SCAN)
+    laws: list[Innovation] = [
+        Student(scale=float(s), df=1 / float(gamma))
+        for s, gamma in zip(scale[:, 0], FINE_SCAN, strict=True)
+    ]
+    spread = grid_spread(laws, likelihood[:, 0], 0.0)
+    df = 1 / float(FINE_SCAN @ spread.weights)
+    return replace(spread, log_scale_error=math.sqrt((df + 3) / (2 * df * values.size)))

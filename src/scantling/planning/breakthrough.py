@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass
 
 import numpy as np
@@ -11,6 +12,7 @@ from scantling.core.streams import MEMORY_BOUND, Mapper, blocks, stream
 from scantling.law.families import ErrorLaw
 from scantling.planning.case import LAW_DRAWS, Case, column_grid
 from scantling.planning.limit import Limit, band, make_limit
+from scantling.simulation.loss_scores import ROBUST, loss_scores, score_slope
 from scantling.simulation.scores import (
     Passers,
     Ranked,
@@ -53,6 +55,26 @@ class ScoreSample:
     """Typical (median over draws) loading: shape (1,) equal, (P,) self-normalised."""
     typical_sd: float | None = None
     """Median over draws of the errors' root mean square; None: take the law's sd."""
+    slope: float = 1.0
+    """How much of a small effect reaches the loss's mean score; 1 for least squares."""
+    row_squares: FloatArray | None = None
+    """Mean square over draws of a robust loss's score at each row, shape (n,); None: squared."""
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class ScoreBlock:
+    """One block of draws under one law."""
+
+    found: Passers
+    """Ratios above the floor."""
+    loadings: FloatArray
+    """Loading of each draw: shape (1, R) equal, (P, R) self-normalised."""
+    sizes: FloatArray
+    """Root mean square of each draw of errors, shape (R,)."""
+    slope: float
+    """Of the loss's mean score in a small effect."""
+    row_squares: FloatArray
+    """Mean square of a robust loss's score at each row, shape (n,); empty for least squares."""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -104,27 +126,52 @@ def sample_scores(
     units = [(k, b, stop - start) for k in range(len(laws))
              for b, (start, stop) in enumerate(blocks(draws, BLOCK))]  # fmt: skip
 
-    def one(unit: tuple[int, int, int]) -> tuple[Passers, FloatArray, FloatArray]:
+    def one(unit: tuple[int, int, int]) -> ScoreBlock:
         k, block, size = unit
         rng = stream(case.seed, purpose, k, block)
-        errors = centre(laws[k].draw_given_path(case.rows, size, rng))
-        ratios, loadings = score_ratios(case.X, errors, case.rule, squares)
-        return passers(ratios, floor), loadings, np.sqrt((errors**2).mean(axis=0))
+        return score_block(case, centre(case.draw_errors(laws[k], size, rng)), floor, squares)
 
     done = mapper(one, units)
-    out = []
     per_law = len(blocks(draws, BLOCK))
-    for k in range(len(laws)):
-        mine = done[k * per_law : (k + 1) * per_law]
-        loadings = np.concatenate([part[1] for part in mine], axis=1)
-        out.append(
-            ScoreSample(
-                found=join([part[0] for part in mine]),
-                loadings=read_only(np.median(loadings, axis=1)),
-                typical_sd=float(np.median(np.concatenate([part[2] for part in mine]))),
-            )
-        )
-    return tuple(out)
+    return tuple(
+        pooled_blocks(done[k * per_law : (k + 1) * per_law], robust=case.loss in ROBUST)
+        for k in range(len(laws))
+    )
+
+
+def score_block(
+    case: Case, errors: FloatArray, floor: float, squares: FloatArray | None
+) -> ScoreBlock:
+    """The scores of all columns under centred draws of errors (n, R).
+
+    `squares` are those of the columns, formed once; only self-normalised loadings need them.
+    """
+    robust = case.loss in ROBUST
+    scores = loss_scores(errors, case.loss)
+    ratios, loadings = score_ratios(case.X, scores, case.rule, squares)
+    return ScoreBlock(
+        found=passers(ratios, floor),
+        loadings=loadings,
+        sizes=np.sqrt((errors**2).mean(axis=0)),
+        slope=score_slope(errors, case.loss) if robust else 1.0,
+        row_squares=(scores**2).mean(axis=1) if robust else np.empty(0),
+    )
+
+
+def pooled_blocks(parts: list[ScoreBlock], *, robust: bool) -> ScoreSample:
+    """All blocks of draws under one law."""
+    sizes = [part.loadings.shape[1] for part in parts]
+    loadings = np.concatenate([part.loadings for part in parts], axis=1)
+    squares = None
+    if robust:
+        squares = read_only(np.average([part.row_squares for part in parts], axis=0, weights=sizes))
+    return ScoreSample(
+        found=join([part.found for part in parts]),
+        loadings=read_only(np.median(loadings, axis=1)),
+        typical_sd=float(np.median(np.concatenate([part.sizes for part in parts]))),
+        slope=float(np.average([part.slope for part in parts], weights=sizes)),
+        row_squares=squares,
+    )
 
 
 def score_draws(case: Case) -> tuple[int, int]:
@@ -161,17 +208,34 @@ def simulation_variance(found: Passers, risk: float, grid: np.ndarray) -> FloatA
     return np.asarray(found.draws * np.interp(np.log(p), np.log(grid), errors) ** 2)
 
 
-def curve_points(curve: FloatArray, many: FloatArray, grid: np.ndarray) -> tuple[CurvePoint, ...]:
+def curve_points(
+    curve: FloatArray, many: FloatArray, grid: np.ndarray, at: np.ndarray | None = None
+) -> tuple[CurvePoint, ...]:
     """The risk curve (P,) on a grid of p, its band from curves under drawn laws (B, P).
 
-    A band contains its point.
+    A band contains its point. `at` says where the grid lies in the curves; default: at p - 1.
     """
+    place = grid - 1 if at is None else at
     return tuple(
         CurvePoint(p=int(p), risk=risk, low=min(low, risk), high=max(high, risk))
         for p, risk, (low, high) in zip(
-            grid, map(float, curve[grid - 1]), map(band, many[:, grid - 1].T), strict=True
+            grid, map(float, curve[place]), map(band, many[:, place].T), strict=True
         )
     )
+
+
+def drawn_curves(
+    case: Case, found: Passers, curves: FloatArray, grid: np.ndarray, draws_per_law: int
+) -> FloatArray:
+    """Risk curves (B, P) under drawn laws, as bands are read off them.
+
+    Steadied, and with the simulation error of the point itself, whose draws are `found`: it
+    belongs to the band.
+    """
+    spread = simulation_variance(found, case.target.risk, grid)
+    many = steadied(curves, spread / draws_per_law)
+    chance = stream(case.seed, "risk error").standard_normal((len(curves), 1))
+    return np.clip(many + chance * np.sqrt(spread / found.draws), 0, 1)
 
 
 def break_through(case: Case, mapper: Mapper, *, bands: bool = True) -> BreakThrough:
@@ -205,12 +269,8 @@ def break_through(case: Case, mapper: Mapper, *, bands: bool = True) -> BreakThr
     curve = risk_curves(fitted.found, risk)[0]
     many = curve[None]
     if drawn:
-        spread = simulation_variance(fitted.found, risk, grid)
         curves = np.array([risk_curves(sample.found, risk)[0] for sample in drawn])
-        many = steadied(curves, spread / draws_per_law)
-        # The point's own simulation error belongs to the band.
-        chance = stream(case.seed, "risk error").standard_normal((len(drawn), 1))
-        many = np.clip(many + chance * np.sqrt(spread / draws), 0, 1)
+        many = drawn_curves(case, fitted.found, curves, grid, draws_per_law)
     limits = [first_above(each, risk) for each in many]
     ratio = _penalty_ratio(case, fitted, twin)
     level = float(penalty_level(case.columns, risk))
@@ -241,7 +301,7 @@ def _penalty_ratio(case: Case, fitted: ScoreSample, twin: ScoreSample) -> float 
         # Loadings over the typical error, so that a law with rare huge errors is not taken for
         # a quiet one.
         needed = [
-            needed_penalty(s.found, p, risk) * float(np.median(s.loadings)) / (s.typical_sd or 1.0)
+            needed_penalty(s.found, p, risk) * float(np.median(s.loadings)) / _score_size(s)
             for s in (fitted, twin)
         ]
         return needed[0] / needed[1] if needed[1] > 0 else None
@@ -249,3 +309,10 @@ def _penalty_ratio(case: Case, fitted: ScoreSample, twin: ScoreSample) -> float 
     if quantiles[0] is None or quantiles[1] is None:
         return None
     return quantiles[0] / quantiles[1]
+
+
+def _score_size(sample: ScoreSample) -> float:
+    """Typical root mean square of the loss's score."""
+    if sample.row_squares is not None:
+        return math.sqrt(float(sample.row_squares.mean()))
+    return sample.typical_sd or 1.0

@@ -8,10 +8,10 @@ from dataclasses import dataclass, field
 from scantling.core.estimate import Estimate
 from scantling.planning.breakthrough import BreakThrough, CurvePoint
 from scantling.planning.ceiling import Ceiling
-from scantling.planning.limit import AT_LEAST, Limit, band, missing_limit
+from scantling.planning.effects import EffectEntry
+from scantling.planning.limit import AT_LEAST, Limit, band
+from scantling.planning.rows import RowsPlan
 from scantling.planning.signal import Signal
-
-ASSURED_NOTE = "the finite-sample inequality is not computed in this version"
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -63,9 +63,13 @@ class Budget:
     equivalent_rows: int | None
     """n / penalty ratio squared, never above n."""
     rows_needed: int | None
-    """Rows at which the smallest effect is detectable at `asked` columns."""
+    """Fewest rows from which `asked` columns are allowed by every limit, at all larger tried."""
     rows_note: str
     """Why `rows_needed` is None; empty otherwise."""
+    rows_plan: RowsPlan | None = None
+    """Rows needed by limit and allowed columns by rows; None where they were not computed."""
+    effects: tuple[EffectEntry, ...] = ()
+    """Allowed columns by smallest effect and relevant columns; empty where not computed."""
     detectable: float | None
     """Smallest detectable effect, median column, sd of the response."""
     detectable_worst: float | None
@@ -116,12 +120,12 @@ def combine(limits: dict[str, Limit], most: int) -> tuple[Allowed, str | None]:
 
 def assemble(
     *, rows: int, asked: int, noise: BreakThrough, signal: Signal, stability: Limit,
-    geometry: Limit, ceiling: Ceiling,
+    geometry: Limit, ceiling: Ceiling, assured: Limit, plan: RowsPlan | None = None,
+    effects: tuple[EffectEntry, ...] = (), refits: bool = True,
 ) -> Budget:  # fmt: skip
-    """Put the limits together."""
-    allowed, binding = combine(
-        {"noise": noise.noise, "signal": signal.limit, "stability": stability}, asked
-    )
+    """Put the limits together; without refits asked for, noise and signal are all there is."""
+    limits = {"noise": noise.noise, "signal": signal.limit}
+    allowed, binding = combine(limits | ({"stability": stability} if refits else {}), asked)
     last = noise.curve[-1]
     return Budget(
         asked=asked,
@@ -130,7 +134,7 @@ def assemble(
         signal=signal.limit,
         stability=stability,
         geometry=geometry,
-        assured=missing_limit(ASSURED_NOTE),
+        assured=assured,
         ceiling=ceiling,
         allowed=allowed,
         binding=binding,
@@ -139,8 +143,10 @@ def assemble(
         curve=noise.curve,
         penalty_ratio=noise.penalty_ratio,
         equivalent_rows=noise.equivalent_rows,
-        rows_needed=signal.rows_needed,
-        rows_note=signal.rows_note,
+        rows_needed=None if plan is None else plan.needed.rows,
+        rows_note="rows needed were not searched" if plan is None else plan.needed.note,
+        rows_plan=plan,
+        effects=effects,
         detectable=signal.detectable,
         detectable_worst=signal.detectable_worst,
         worst_columns=noise.worst_columns,

@@ -34,10 +34,21 @@ class Case:
     """What has to be achieved."""
     rule: str
     """plug-in | self-normalised."""
+    loss: str = "squared"
+    """squared | huber | absolute | square-root; its score takes the errors' place."""
     replicates: int
     """Draws of errors in each simulation."""
     seed: int
     """Of every random stream."""
+
+    mode: str = "conditional"
+    """conditional: the present columns and volatility path; generative: both drawn."""
+
+    def draw_errors(self, law: ErrorLaw, size: int, rng: np.random.Generator) -> FloatArray:
+        """Draws of errors for these columns, shape (n, size), not centred."""
+        if self.mode == "conditional":
+            return law.draw_given_path(self.rows, size, rng)
+        return law.draw((self.rows, size), rng)
 
     @property
     def rows(self) -> int:

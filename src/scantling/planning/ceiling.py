@@ -9,6 +9,7 @@ import numpy as np
 
 from scantling.diagnostics.battery import Diagnosis
 from scantling.diagnostics.tail_index import index_from_gamma
+from scantling.simulation.loss_scores import ROBUST
 
 Ends = tuple[float, float, float]
 """A tail index: point, low, high."""
@@ -50,7 +51,7 @@ def light_rate(rows: int, index: float) -> float:
     return float(rows ** (1 - 2 / index)) if math.isfinite(index) else float(rows)
 
 
-def ceiling(diagnosis: Diagnosis, rows: int, rule: str) -> Ceiling:
+def ceiling(diagnosis: Diagnosis, rows: int, rule: str, loss: str = "squared") -> Ceiling:
     """The rate for a diagnosed design: q of the scores is the median heavy column's."""
     heavy = np.array([w != "light" for w in diagnosis.weight])
     errors = diagnosis.errors
@@ -64,6 +65,7 @@ def ceiling(diagnosis: Diagnosis, rows: int, rule: str) -> Ceiling:
     return rate_by_regime(
         rows=rows,
         rule=rule,
+        loss=loss,
         heavy_share=float(heavy.mean()),
         errors=None if errors is None else (errors.index, errors.low, errors.high),
         scores=scores,
@@ -71,8 +73,9 @@ def ceiling(diagnosis: Diagnosis, rows: int, rule: str) -> Ceiling:
 
 
 def rate_by_regime(
-    *, rows: int, rule: str, heavy_share: float, errors: Ends | None, scores: Ends | None
-) -> Ceiling:
+    *, rows: int, rule: str, heavy_share: float, errors: Ends | None, scores: Ends | None,
+    loss: str = "squared",
+) -> Ceiling:  # fmt: skip
     """Rate by the regime that applies.
 
     Self-normalised loadings: exp(n^(1/3)), Belloni et al. (2012), Econometrica 80. Equal
@@ -88,7 +91,11 @@ def rate_by_regime(
         Share of columns that are not light.
     errors, scores : (index, low, high) or None
         Tail index with its interval; None if unknown.
+    loss : {'squared', 'huber', 'absolute', 'square-root'}
+        Robust losses have no rate here.
     """
+    if loss in ROBUST:
+        return _unknown(f"{loss} loss: no rate with a known constant is used")
     if rule == "self-normalised":
         columns = _whole(rows ** (1 / 3))
         return Ceiling(
@@ -96,7 +103,7 @@ def rate_by_regime(
             low=columns,
             high=columns,
             capped=columns >= MOST,
-            regime="squared loss, self-normalised loadings: exp(n^(1/3))",
+            regime=f"{loss} loss, self-normalised loadings: exp(n^(1/3))",
         )
     if heavy_share > 0:
         if scores is None:
@@ -113,7 +120,7 @@ def rate_by_regime(
         columns=point,
         low=low,
         high=None if high >= MOST else high,
-        regime=f"squared loss, equal loadings, {regime}",
+        regime=f"{loss} loss, equal loadings, {regime}",
         capped=point >= MOST,
     )
 

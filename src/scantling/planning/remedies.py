@@ -2,38 +2,38 @@
 
 from __future__ import annotations
 
+import itertools
 import math
-from collections.abc import Iterator
+from collections.abc import Iterable, Sequence
 from dataclasses import dataclass, replace
 
-import numpy as np
-
 from scantling.core.estimate import Estimate
-from scantling.core.record import FloatArray
-from scantling.core.streams import Mapper, stream
-from scantling.design.expand import expand
-from scantling.design.spec import Design, ExpandSpec
+from scantling.core.streams import MEMORY_BOUND, Mapper, blocks
+from scantling.design.spec import Design
 from scantling.design.table import Table
 from scantling.diagnostics.battery import Diagnosis
 from scantling.diagnostics.residuals import Residuals
-from scantling.errors import InputError
-from scantling.planning.breakthrough import BreakThrough, break_through
-from scantling.planning.budget import Allowed, combine, standing
-from scantling.planning.case import Case, draw_laws
-from scantling.planning.limit import Limit
-from scantling.planning.signal import signal
+from scantling.planning.breakthrough import BreakThrough, score_draws
+from scantling.planning.budget import BORDERLINE, OVER, WITHIN, Allowed, combine, standing
+from scantling.planning.case import Case
+from scantling.planning.changes import recipes
+from scantling.planning.limit import AT_LEAST, Limit
+from scantling.planning.recipe import Origin, Recipe, carry_out, joined
+from scantling.planning.recompute import Recomputed, recompute, with_fewer_laws
+from scantling.planning.rows import SEARCH_DRAWS, RowsEntry
 from scantling.planning.stress import stress
-from scantling.simulation.scores import (
-    column_shares,
-    exceeding_counts,
-    join,
-    penalty_level,
-)
 
 REFITTED = 3
 """Remedies for which selection is simulated too: the best by noise and signal."""
+BYTES = 24
+"""Of memory for each value of a changed design's columns while it is computed."""
+REFITTED_LOSSES = ("squared", "square-root")
+"""Losses whose selection is simulated."""
 STRESS_POINTS = 4
-DROP_SHARES = (0.01, 0.02, 0.05, 0.1, 0.15, 0.2, 0.25, 0.3, 0.35, 0.4, 0.5)
+PAIRED = 4
+"""Best single changes that pairs are made of."""
+MOST_PAIRED = 6
+"""The same, those that tie with the last included."""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -60,210 +60,218 @@ class Remedy:
     """Columns of the present design that it drops by name, worst first."""
     price: str
     """What the change costs, in words."""
+    parts: tuple[str, ...] = ()
+    """The two changes that a pair joins; empty for a single change."""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
-class Change:
-    """A changed case, not yet computed."""
+class Tried:
+    """A recipe, carried out and computed."""
 
-    name: str
-    """The change, in words."""
-    case: Case
-    """The changed design, ready for simulation."""
-    price: str
-    """What it costs, in words."""
-    dropped: tuple[int, ...] = ()
-    """Columns dropped by name, worst first."""
+    recipe: Recipe
+    """The change."""
+    columns: int
+    """Columns of the changed design."""
+    found: Recomputed
+    """What noise and signal allow it."""
+    stability: Limit | None = None
+    """What selection allows; None if it was not simulated."""
 
+    @property
+    def open(self) -> Allowed:
+        """Columns that noise and signal allow."""
+        return combine(self.found.limits, self.columns)[0]
 
-def changes(
-    design: Design, table: Table, residuals: Residuals, diagnosis: Diagnosis, case: Case,
-    noise: BreakThrough,
-) -> Iterator[Change]:  # fmt: skip
-    """Every change that applies to the design, carried out on the data."""
-    if case.rule == "plug-in":
-        yield Change(
-            name="self-normalised loadings",
-            case=replace(case, rule="self-normalised"),
-            price="a larger penalty where a large x meets a large error, so less power there",
-        )
-    yield from _expansions(design, table, case)
-    yield from _fewer_columns(diagnosis, case, noise)
-    if case.law.volatility is not None:
-        yield _weighted(case, residuals)
+    @property
+    def limits(self) -> dict[str, Limit]:
+        """All that were computed."""
+        refits = {} if self.stability is None else {"stability": self.stability}
+        return self.found.limits | refits
 
+    @property
+    def allowed(self) -> Allowed:
+        """Columns that all limits computed allow."""
+        return combine(self.limits, self.columns)[0]
 
-def _expansions(design: Design, table: Table, case: Case) -> Iterator[Change]:
-    spec = design.expand
-    other: list[tuple[str, ExpandSpec, str]] = []
-    if spec.transform != "normal-scores":
-        other.append(
-            (
-                "normal scores of columns",
-                replace(spec, transform="normal-scores"),
-                "effects are read per normal score of a column, not per unit",
-            )
-        )
-    for powers in range(spec.powers - 1, 0, -1):
-        name = "no powers" if powers == 1 else f"powers up to {powers}"
-        other.append((name, replace(spec, powers=powers), "higher powers are not searched"))
-    if spec.products:
-        other.append(("no products", replace(spec, products=False), "no interactions are searched"))
-    for name, changed, price in other:
-        try:
-            columns = expand(replace(design, expand=changed), table)
-        except InputError:
-            continue  # the change leaves no usable design; there is nothing to compute
-        if columns.values.shape == case.X.shape and np.allclose(columns.values, case.X):
-            continue  # as with powers of dummies: the design stays as it is
-        yield Change(name=name, case=replace(case, X=columns.values), price=price)
-
-
-def _fewer_columns(diagnosis: Diagnosis, case: Case, noise: BreakThrough) -> Iterator[Change]:
-    broken = diagnosis.scores_without_variance
-    if broken and 2 * len(broken) <= case.columns:
-        kept = np.setdiff1d(np.arange(case.columns), broken)
-        yield Change(
-            name=f"drop the {_columns(len(broken))} whose scores lack a variance",
-            case=_with_columns(case, kept),
-            price="these columns are not searched",
-            dropped=broken,
-        )
-    if noise.noise.reached:
-        dropped = worst_to_drop(case, noise)
-        if dropped.size:
-            kept = np.setdiff1d(np.arange(case.columns), dropped)
-            yield Change(
-                name=f"drop the {dropped.size:,} worst columns"
-                if dropped.size > 1
-                else "drop the worst column",
-                case=_with_columns(case, kept),
-                price="the columns that break through most are not searched",
-                dropped=tuple(int(j) for j in dropped),
-            )
-
-
-def _columns(count: int) -> str:
-    return "column" if count == 1 else f"{count:,} columns"
-
-
-def _with_columns(case: Case, kept: np.ndarray) -> Case:
-    """The case on some of its columns, with fresh draws: the old ones picked the columns."""
-    seed = int(stream(case.seed, "fresh draws").integers(2**62))
-    return replace(case, X=np.ascontiguousarray(case.X[:, kept]), seed=seed)
-
-
-def worst_to_drop(case: Case, noise: BreakThrough) -> np.ndarray:
-    """Fewest of the worst columns whose removal brings the risk down to the accepted one.
-
-    Ranked by their break-throughs over all drawn laws; up to half of the columns, at a few
-    shares; the largest share examined if none suffices.
-    """
-    found = join([sample.found for sample in noise.drawn]) if noise.drawn else noise.fitted.found
-    risk = case.target.risk
-    level = float(penalty_level(case.columns, risk))
-    order = np.argsort(-column_shares(found, level), kind="stable")
-    count = 0
-    for share in DROP_SHARES:
-        count = max(1, math.ceil(share * case.columns))
-        if count >= case.columns:
-            return np.empty(0, dtype=int)
-        left = ~np.isin(found.column, order[:count])
-        remaining = replace(
-            found, column=found.column[left], draw=found.draw[left], ratio=found.ratio[left]
-        )
-        lower = float(penalty_level(case.columns - count, risk))
-        if (exceeding_counts(remaining, lower) > 0).mean() <= risk:
-            break
-    return np.asarray(order[:count])
-
-
-def _weighted(case: Case, residuals: Residuals) -> Change:
-    volatility = case.law.volatility
-    assert volatility is not None
-    relative = np.asarray(volatility.path) / math.sqrt(float((volatility.path**2).mean()))
-    X = standardise(case.X / relative[:, None])
-    # About its mean: a constant over sigma_t is not variation to be explained.
-    response = (residuals.fitted - residuals.fitted.mean() + residuals.values) / relative
-    law = case.law.without_volatility()
-    weighted_errors = residuals.values / relative
-    return Change(
-        name="weight rows by fitted volatility",
-        case=replace(
-            case,
-            X=X,
-            law=law,
-            law_draws=draw_laws(law, case.seed),
-            response_sd=float(response.std()),
-            residual_sd=float(weighted_errors.std()),
-        ),
-        price="the volatility model is believed; effects are those of weighted rows",
-    )
-
-
-def standardise(X: FloatArray) -> FloatArray:
-    """Columns with mean 0 and mean square 1; those that became constant are left out."""
-    centred = X - X.mean(axis=0)
-    scale = np.sqrt((centred**2).mean(axis=0))
-    kept = scale > 1e-10
-    return np.asarray(centred[:, kept] / scale[kept])
+    def rank(self) -> tuple[float, ...]:
+        """Best first: columns allowed, as far as they are settled; fewer changes; lower risk."""
+        allowed = self.allowed
+        return (
+            -(allowed.columns or 0), -(allowed.low or 0), len(self.recipe.names),
+            self.found.risk.value,
+        )  # fmt: skip
 
 
 def remedies(
     design: Design, table: Table, residuals: Residuals, diagnosis: Diagnosis, case: Case,
-    noise: BreakThrough, stability: Limit, mapper: Mapper,
+    noise: BreakThrough, stability: Limit, mapper: Mapper, rows: Sequence[RowsEntry] = (),
 ) -> tuple[Remedy, ...]:  # fmt: skip
-    """All remedies, best first: those whose selection was simulated, by allowed columns.
+    """All single changes, and the best pair of them where it does better than either alone.
 
-    Noise and signal are recomputed for all; selection for the best three, and where selection
-    is what fails for more of them, until three pass.
+    Best first: those whose selection was simulated, by allowed columns. Noise and signal are
+    recomputed for all; selection for the best three, and where selection is what fails for more
+    of them, until three pass. `rows` are what other numbers of rows would allow.
     """
-    computed = [
-        (change, *_limits(change.case, mapper))
-        for change in changes(design, table, residuals, diagnosis, case, noise)
-    ]
-
-    def rank(item: tuple[Change, dict[str, Limit], BreakThrough]) -> tuple[float, float]:
-        allowed, _ = combine(item[1], item[0].case.columns)
-        return -(allowed.columns or 0), item[2].curve[-1].risk
-
-    out: list[Remedy] = []
-    for place, (change, limits, again) in enumerate(sorted(computed, key=rank)):
-        passing = sum(remedy.refitted and bool(remedy.allowed.columns) for remedy in out)
-        wanted = place < REFITTED or (stability.reached and passing < REFITTED)
-        refitted = wanted and math.isfinite(change.case.law.sd)
-        if refitted:
-            again_fitted = stress(change.case, mapper, twins=False, points=STRESS_POINTS)
-            limits = limits | {"stability": again_fitted.stability}
-        out.append(_remedy(change, limits, again, refitted))
-    return tuple(
-        sorted(
-            out,
-            key=lambda r: (not r.refitted, -(r.allowed.columns or 0), r.risk_at_design.value),
-        )
-    )
+    origin = Origin(
+        design=design, table=table, residuals=residuals, diagnosis=diagnosis, case=case,
+        noise=noise,
+    )  # fmt: skip
+    ordered = sorted(computed(recipes(origin), origin, mapper), key=Tried.rank)
+    singles = refitted(ordered, origin, stability, mapper)
+    pair = best_pair(sorted(singles, key=Tried.rank), origin, mapper)
+    out = [_remedy(each) for each in sorted([*singles, *pair], key=Tried.rank)]
+    longer = more_rows_remedy(rows, case)
+    if longer is not None:
+        out.append(longer)
+    # Stable: those alike in both keep the finer order they have.
+    return tuple(sorted(out, key=lambda r: (not r.refitted, -(r.allowed.columns or 0))))
 
 
-def _remedy(
-    change: Change, limits: dict[str, Limit], noise: BreakThrough, refitted: bool
-) -> Remedy:
-    allowed, binding = combine(limits, change.case.columns)
-    last = noise.curve[-1]
+def computed(
+    wanted: Iterable[Recipe], origin: Origin, mapper: Mapper, *, bands: bool = True
+) -> list[Tried]:
+    """Noise and signal of every recipe that changes the design.
+
+    Recipes that agree on the errors are simulated together, as many as memory allows.
+    """
+    draws, _ = score_draws(origin.case)
+    most = max(1, MEMORY_BOUND // 2 // (BYTES * origin.case.rows * origin.case.columns))
+    out: list[Tried] = []
+    for _, group in itertools.groupby(sorted(wanted, key=_errors), key=_errors):
+        alike = list(group)
+        for start, stop in blocks(len(alike), most):
+            tried = [(recipe, carry_out(recipe, origin)) for recipe in alike[start:stop]]
+            made = [(recipe, with_fewer_laws(case)) for recipe, case in tried if case is not None]
+            found = recompute([case for _, case in made], draws, mapper, bands=bands)
+            out += [
+                Tried(recipe=recipe, columns=case.columns, found=each)
+                for (recipe, case), each in zip(made, found, strict=True)
+            ]
+    return out
+
+
+def _errors(recipe: Recipe) -> tuple[bool, bool]:
+    return recipe.errors
+
+
+def refitted(ordered: list[Tried], origin: Origin, stability: Limit, mapper: Mapper) -> list[Tried]:
+    """The same, selection simulated for the best; for more where `stability` fails itself."""
+    out: list[Tried] = []
+    for each in ordered:
+        done = [tried for tried in out if tried.stability is not None]
+        passing = sum(bool(tried.allowed.columns) for tried in done)
+        if len(done) < REFITTED or (stability.reached and passing < REFITTED):
+            each = with_refits(each, origin, mapper)
+        out.append(each)
+    return out
+
+
+def with_refits(tried: Tried, origin: Origin, mapper: Mapper) -> Tried:
+    """The same with its stability limit, where selection can be simulated."""
+    loss = tried.recipe.loss or origin.case.loss
+    if loss not in REFITTED_LOSSES or not math.isfinite(origin.case.law.sd):
+        return tried
+    case = carry_out(tried.recipe, origin)
+    assert case is not None
+    done = stress(with_fewer_laws(case), mapper, twins=False, points=STRESS_POINTS)
+    return replace(tried, stability=done.stability)
+
+
+def best_pair(singles: Sequence[Tried], origin: Origin, mapper: Mapper) -> list[Tried]:
+    """The best pair of the best single changes, if it does better than either alone.
+
+    All pairs that might are compared by point values; the best is computed in full.
+    """
+    if len(singles) < 2:
+        return []
+    last = singles[min(PAIRED, len(singles)) - 1].rank()
+    chosen = [each for each in singles if each.rank() <= last][:MOST_PAIRED]
+    alone = {each.recipe.names[0]: each for each in chosen}
+
+    def parts(recipe: Recipe) -> tuple[Tried, Tried]:
+        return alone[recipe.names[0]], alone[recipe.names[1]]
+
+    pairs = [joined(one.recipe, two.recipe) for one, two in itertools.combinations(chosen, 2)]
+    hopeful = [pair for pair in pairs if pair is not None and not any(map(_settled, parts(pair)))]
+    rough = computed(hopeful, origin, mapper, bands=False)
+    rough = [each for each in rough if all(might_beat(each, part) for part in parts(each.recipe))]
+    if not rough:
+        return []
+    best = min(rough, key=Tried.rank)
+    full = with_refits(computed([best.recipe], origin, mapper)[0], origin, mapper)
+    return [full] if all(beats(full, part) for part in parts(full.recipe)) else []
+
+
+def _settled(tried: Tried) -> bool:
+    """Whether a change alone allows all columns of its design for sure, so no pair can add any."""
+    return standing(tried.allowed, tried.columns) == WITHIN
+
+
+def might_beat(pair: Tried, part: Tried) -> bool:
+    """Whether a pair may do better than a part of it: by noise and signal, refits to come."""
+    ours, theirs = pair.open, part.allowed
+    return (ours.columns or 0) >= (theirs.columns or 0)
+
+
+def beats(pair: Tried, part: Tried) -> bool:
+    """Whether a pair allows more columns than one of its parts, or as many more surely.
+
+    More surely: within budget where the part is not, or at a risk clearly lower (the upper end
+    of its band below the part's point). Like is compared with like: without refits of both,
+    noise and signal alone.
+    """
+    both = pair.stability is not None and part.stability is not None
+    ours, theirs = (pair.allowed, part.allowed) if both else (pair.open, part.open)
+    if (ours.columns or 0) != (theirs.columns or 0):
+        return (ours.columns or 0) > (theirs.columns or 0)
+    sure = standing(ours, pair.columns) == WITHIN
+    if sure and standing(theirs, part.columns) != WITHIN:
+        return True
+    return pair.found.risk.high < part.found.risk.value
+
+
+def _remedy(tried: Tried) -> Remedy:
+    recipe = tried.recipe
+    allowed, binding = combine(tried.limits, tried.columns)
     return Remedy(
-        name=change.name,
-        columns=change.case.columns,
-        answer=standing(allowed, change.case.columns),
+        name=recipe.name,
+        columns=tried.columns,
+        answer=standing(allowed, tried.columns),
         allowed=allowed,
         binding=binding,
-        risk_at_design=Estimate(value=last.risk, low=last.low, high=last.high),
-        draws=noise.fitted.found.draws,
-        refitted=refitted,
-        dropped=change.dropped,
-        price=change.price,
+        risk_at_design=tried.found.risk,
+        draws=tried.found.draws,
+        refitted=tried.stability is not None,
+        dropped=recipe.dropped,
+        price=recipe.price,
+        parts=recipe.names if len(recipe.names) > 1 else (),
     )
 
 
-def _limits(case: Case, mapper: Mapper) -> tuple[dict[str, Limit], BreakThrough]:
-    noise = break_through(case, mapper)
-    found = signal(case, noise.fitted, noise.drawn)
-    return {"noise": noise.noise, "signal": found.limit}, noise
+def more_rows_remedy(table: Sequence[RowsEntry], case: Case) -> Remedy | None:
+    """More rows as a remedy: the fewest of the table that allow all columns, else the best.
+
+    The table holds point values, so the answer is never `within budget`; None if it has no
+    larger number of rows.
+    """
+    larger = sorted((each for each in table if each.rows > case.rows), key=lambda e: e.rows)
+    if not larger:
+        return None
+    asked = case.columns
+    best = max(larger, key=lambda e: (min(e.allowed or 0, asked), -e.rows))
+    enough = best.allowed is not None and best.allowed >= asked
+    note = AT_LEAST if enough else "" if best.allowed is not None else "the law has no variance"
+    limits = {"noise": best.noise, "signal": best.signal, "stability": best.stability}
+    return Remedy(
+        name=f"{best.rows / case.rows:.3g} times the rows ({best.rows:,})",
+        columns=asked,
+        answer=BORDERLINE if enough or best.allowed is None else OVER,
+        allowed=Allowed(columns=best.allowed, low=None, high=None, note=note),
+        binding=next((n for n, v in limits.items() if not enough and v == best.allowed), None),
+        risk_at_design=Estimate(value=best.risk, low=best.risk, high=best.risk),
+        draws=SEARCH_DRAWS,
+        refitted=best.stability is not None,
+        dropped=(),
+        price="a longer sample of the same kind; columns are drawn from their fitted law, not the"
+        " present ones, and figures are point values",
+    )

@@ -48,23 +48,33 @@ def score_deviation(X: FloatArray, law: ErrorLaw, typical_sd: float | None = Non
     return np.asarray(sd * np.sqrt(np.einsum("ij,ij,i->j", X, X, square / square.mean()) / len(X)))
 
 
+def sample_deviation(case: Case, law: ErrorLaw, sample: ScoreSample) -> FloatArray:
+    """sd of S_j for the loss's score under the law, shape (P,)."""
+    if sample.row_squares is None:
+        return score_deviation(case.X, law, sample.typical_sd)
+    return np.asarray(
+        np.sqrt(np.einsum("ij,ij,i->j", case.X, case.X, sample.row_squares) / case.rows)
+    )
+
+
 def detectable_effects(
     case: Case, sample: ScoreSample, deviation: FloatArray, p: int, table: Ranked | None = None
 ) -> FloatArray:
-    """b_j(p) = (lambda*(p) v_j + Phi^-1(power) tau_j) / (sqrt(n) sd(y)), shape (P,).
+    """b_j(p) = (lambda*(p) v_j + Phi^-1(power) tau_j) / (sqrt(n) sd(y) slope), shape (P,).
 
     `table` is the sample's passers, ranked once where many p are asked for.
     """
     needed = needed_penalty(table or sample.found, p, case.target.risk)
     power = float(norm.ppf(case.target.power))
     return np.asarray(
-        (needed * sample.loadings + power * deviation) / (math.sqrt(case.rows) * case.response_sd)
+        (needed * sample.loadings + power * deviation)
+        / (math.sqrt(case.rows) * case.response_sd * sample.slope)
     )
 
 
 def signal_limit_of(case: Case, law: ErrorLaw, sample: ScoreSample) -> float:
     """Largest p whose median detectable effect is small enough; inf if all are, 0 if none."""
-    deviation = score_deviation(case.X, law, sample.typical_sd)
+    deviation = sample_deviation(case, law, sample)
     if not np.isfinite(deviation).all():
         return 0.0
     table = ranked(sample.found)
@@ -90,7 +100,7 @@ def signal(case: Case, fitted: ScoreSample, drawn: tuple[ScoreSample, ...]) -> S
     Rows needed keep the penalty level and loadings of the present sample; only the signal
     limit is covered.
     """
-    deviation = score_deviation(case.X, case.law, fitted.typical_sd)
+    deviation = sample_deviation(case, case.law, fitted)
     if not np.isfinite(deviation).all():
         reason = "the fitted error law has no variance"
         return Signal(

@@ -3,13 +3,14 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 
 import numpy as np
 
 from scantling.core.estimate import Estimate
 from scantling.core.record import FloatArray
-from scantling.core.streams import Mapper, stream
+from scantling.core.streams import Mapper, blocks, stream
 from scantling.law.families import ErrorLaw
 from scantling.planning.case import Case, column_grid
 from scantling.planning.limit import Limit, make_limit
@@ -95,19 +96,24 @@ def support_set(case: Case, number: int) -> SupportSet:
 def refit(
     case: Case, chosen: SupportSet, p: int, law: ErrorLaw, size: int, rng: np.random.Generator
 ) -> SelectionSummary:
-    """Refit the lasso to `size` fresh responses on the first p columns of a support set.
+    """Refit the lasso to `size` fresh responses on the first p columns of a support set."""
+    return refits(case, chosen, p, ((law, rng),), size)[0]
+
+
+def refits(
+    case: Case, chosen: SupportSet, p: int, laws: Sequence[tuple[ErrorLaw, np.random.Generator]],
+    size: int,
+) -> list[SelectionSummary]:  # fmt: skip
+    """Refit to `size` fresh responses under each law, on the first p columns of a support set.
 
     Errors are scaled to the residual sd; the penalty is the rule's, with loadings from the
-    draw itself.
+    draw itself. Laws are refitted together, as what is done once for the columns costs most.
     """
     relevant = min(chosen.signs.size, p)
     X = case.X[:, chosen.order[:p]]
     effect = case.target.smallest_effect * case.response_sd
     mean = X[:, :relevant] @ (effect * chosen.signs[:relevant])
-    errors = centre(law.draw_given_path(case.rows, size, rng))
-    # The typical draw is as loud as the residuals. The law's own sd would not do: near two
-    # moments it is ruled by errors that hardly any sample has.
-    errors *= case.residual_sd / np.median(np.sqrt((errors**2).mean(axis=0)))
+    errors = np.concatenate([_scaled_errors(case, law, size, rng) for law, rng in laws], axis=1)
     level = float(penalty_level(p, case.target.risk)) / math.sqrt(case.rows)
     if case.rule == "self-normalised":
         weights = level * np.sqrt((X**2).T @ errors**2 / case.rows)
@@ -116,22 +122,40 @@ def refit(
     coefficients, _ = solve_batch(X, mean[:, None] + errors, weights, tol=TOLERANCE)
     truth = np.zeros(p, dtype=bool)
     truth[:relevant] = True
-    return summarise_selection((coefficients != 0).T, truth)
+    selected = (coefficients != 0).T
+    return [
+        summarise_selection(selected[start:stop], truth)
+        for start, stop in blocks(len(selected), size)
+    ]
 
 
-def grid_of(case: Case, points: int = GRID_POINTS) -> list[int]:
+def _scaled_errors(case: Case, law: ErrorLaw, size: int, rng: np.random.Generator) -> FloatArray:
+    """Centred errors whose typical draw is as loud as the residuals.
+
+    The law's own sd would not do: near two moments it is ruled by errors that hardly any sample
+    has.
+    """
+    errors = centre(case.draw_errors(law, size, rng))
+    return np.asarray(errors * (case.residual_sd / np.median(np.sqrt((errors**2).mean(axis=0)))))
+
+
+def grid_of(columns: int, relevant: int, points: int = GRID_POINTS) -> list[int]:
     """Numbers of columns the refits are run at, neighbours at least a fifth apart.
 
     From one more than the relevant ones: of these alone, always selected, the stability index
     says nothing.
     """
-    fewest = min(case.columns, case.target.relevant + 1)
-    steps = max(1, int(math.log(case.columns / fewest) / math.log(1.2)))
-    return [int(p) for p in column_grid(case.columns, fewest=fewest, points=min(points, steps + 1))]
+    fewest = min(columns, relevant + 1)
+    steps = max(1, int(math.log(columns / fewest) / math.log(1.2)))
+    return [int(p) for p in column_grid(columns, fewest=fewest, points=min(points, steps + 1))]
+
+
+CaseOf = Callable[[int], Case]
+"""The case that a support set is refitted on: the same for all, or one with columns of its own."""
 
 
 def run_law(
-    case: Case, law: ErrorLaw, name: str, grid: list[int], mapper: Mapper
+    case: Case, law: ErrorLaw, name: str, grid: list[int], mapper: Mapper, case_of: CaseOf | None
 ) -> tuple[StressRun, ...]:
     """Refits on the grid under one law, the replicates shared among the support sets."""
     size = max(2, case.replicates // SUPPORTS)
@@ -141,7 +165,8 @@ def run_law(
         p, number = unit
         # The same errors at every p: differences along the grid are then the columns' doing.
         rng = stream(case.seed, f"refits, {name}", number)
-        return refit(case, support_set(case, number), p, law, size, rng)
+        own = case if case_of is None else case_of(number)
+        return refit(own, support_set(own, number), p, law, size, rng)
 
     done = mapper(one, units)
     return tuple(
@@ -155,7 +180,7 @@ def _run(case: Case, p: int, name: str, summary: SelectionSummary) -> StressRun:
         rows=case.rows,
         columns=p,
         law=name,
-        mode="conditional",
+        mode=case.mode,
         replicates=summary.replicates,
         stability=_estimate(summary, "stability"),
         power=_estimate(summary, "power"),
@@ -224,34 +249,46 @@ def law_effects(case: Case, p: int, mapper: Mapper) -> FloatArray:
     (the usual random-effects predictor).
     """
 
-    def one(k: int) -> FloatArray:
-        rng = stream(case.seed, "refits, drawn laws", k)
-        chosen = support_set(case, k % SUPPORTS)
-        summary = refit(case, chosen, p, case.law_draws[k], REFITS_PER_LAW, rng)
-        return np.array(_criteria(summary))
+    groups = np.arange(len(case.law_draws)) % SUPPORTS
 
-    values = np.array(mapper(one, range(len(case.law_draws))))
-    groups = np.arange(len(values)) % SUPPORTS
+    def one(group: int) -> list[list[float]]:
+        laws = [
+            (case.law_draws[k], stream(case.seed, "refits, drawn laws", int(k)))
+            for k in np.flatnonzero(groups == group)
+        ]
+        found = refits(case, support_set(case, group), p, laws, REFITS_PER_LAW)
+        return [_criteria(summary) for summary in found]
+
+    values = np.empty((len(groups), len(CRITERIA)))
+    for group, found in enumerate(mapper(one, range(SUPPORTS))):
+        values[groups == group] = found
     for group in range(SUPPORTS):
         values[groups == group] -= values[groups == group].mean(axis=0)
     values[:, 2] *= -1  # as margins: a larger false share is worse
     total = values.var(axis=0, ddof=SUPPORTS)
-    return np.asarray(values * _law_share(case, p, total))
+    return np.asarray(values * _law_share(case, p, total, mapper))
 
 
-def _law_share(case: Case, p: int, total: FloatArray) -> FloatArray:
+def _law_share(case: Case, p: int, total: FloatArray, mapper: Mapper) -> FloatArray:
     """Share of the criteria's variance that the laws explain, each in [0, 1]."""
-    chance = []
-    for k in range(2 * SUPPORTS):
-        rng = stream(case.seed, "refits, fitted law again", k)
-        summary = refit(case, support_set(case, k % SUPPORTS), p, case.law, REFITS_PER_LAW, rng)
-        chance.append(_criteria(summary))
-    pairs = np.array(chance).reshape(2, SUPPORTS, 3)
-    within = ((pairs[0] - pairs[1]) ** 2 / 2).mean(axis=0)
+
+    def one(group: int) -> list[list[float]]:
+        twice = [
+            (case.law, stream(case.seed, "refits, fitted law again", k))
+            for k in (group, group + SUPPORTS)
+        ]
+        found = refits(case, support_set(case, group), p, twice, REFITS_PER_LAW)
+        return [_criteria(summary) for summary in found]
+
+    pairs = np.array(mapper(one, range(SUPPORTS)))
+    within = ((pairs[:, 0] - pairs[:, 1]) ** 2 / 2).mean(axis=0)
     return np.asarray(np.clip(1 - within / np.maximum(total, 1e-12), 0, 1))
 
 
-def stress(case: Case, mapper: Mapper, *, twins: bool = True, points: int = GRID_POINTS) -> Stress:
+def stress(
+    case: Case, mapper: Mapper, *, twins: bool = True, points: int = GRID_POINTS,
+    case_of: CaseOf | None = None,
+) -> Stress:  # fmt: skip
     """Stability limit under the fitted law, geometry limit under its Gaussian twin.
 
     Parameters
@@ -264,19 +301,22 @@ def stress(case: Case, mapper: Mapper, *, twins: bool = True, points: int = GRID
         without them the geometry limit is the stability limit's own.
     points : int
         Numbers of columns examined.
+    case_of : callable, optional
+        Generative mode: the case, with drawn columns, of each support set.
     """
-    grid = grid_of(case, points)
-    fitted = run_law(case, case.law, "fitted", grid, mapper)
+    grid = grid_of(case.columns, case.target.relevant, points)
+    fitted = run_law(case, case.law, "fitted", grid, mapper, case_of)
     stability = _limit(case, grid, fitted, mapper, drawn=True)
     runs, geometry = fitted, stability
     if twins:
-        twin = run_law(case, case.twin, "twin", grid, mapper)
+        twin = run_law(case, case.twin, "twin", grid, mapper, case_of)
         geometry = _limit(case, grid, twin, mapper, drawn=False)
         runs += twin
         if case.law.volatility is not None:
             runs += run_law(
-                case, case.law.normal_innovations(), "normal-volatility", grid[-1:], mapper
-            )
+                case, case.law.normal_innovations(), "normal-volatility", grid[-1:], mapper,
+                case_of,
+            )  # fmt: skip
     missed = margins(case, fitted[-1]) < 0
     return Stress(
         runs=runs,
@@ -301,4 +341,4 @@ def _limit(
     draws = [
         limit_on_grid(grid, margin + u + z * error) for u, z in zip(effects, noise, strict=True)
     ]
-    return make_limit(point, draws, grid[-1], mode="conditional")
+    return make_limit(point, draws, grid[-1], mode=case.mode)

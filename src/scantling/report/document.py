@@ -3,46 +3,21 @@
 from __future__ import annotations
 
 import json
-import math
 from typing import TYPE_CHECKING, Any
 
-import numpy as np
-
 from scantling.core.estimate import Estimate
-from scantling.diagnostics.battery import SeriesGroup
-from scantling.diagnostics.error_findings import Finding
-from scantling.diagnostics.moments import ORDERS
-from scantling.diagnostics.tail_index import TailIndex, index_from_gamma
+from scantling.law.families import Fit
 from scantling.planning.budget import Allowed
 from scantling.planning.limit import Limit
 from scantling.planning.remedies import Remedy
 from scantling.planning.stress import StressRun
+from scantling.report.diagnosis_document import diagnosis_part
+from scantling.report.values import UNBOUNDED, noted, number
 
 if TYPE_CHECKING:
     from scantling.report.record import Diagnosed, HasLaw, Receipt, Report
 
 SCHEMA = "scantling-report/1"
-DIGITS = 10
-"""Significant digits kept; far below any simulation error, above rounding noise."""
-ABOVE = "above 50"
-UNBOUNDED = "no upper end"
-
-
-def number(value: float | int | None) -> float | int | None:
-    """A JSON number; None for what is unknown or infinite."""
-    if value is None or isinstance(value, int):
-        return value
-    value = float(value)
-    if not math.isfinite(value):
-        return None
-    rounded = float(f"{value:.{DIGITS}g}")
-    return rounded if math.isfinite(rounded) else value
-
-
-def noted(key: str, value: float | int | None, note: str) -> dict[str, Any]:
-    """The key with its number, and beside a null the note that explains it."""
-    shown = number(value)
-    return {key: shown} if shown is not None else {key: None, f"{key}_note": note}
 
 
 def estimate(value: Estimate) -> dict[str, Any]:
@@ -65,7 +40,7 @@ def document(report: Report) -> dict[str, Any]:
         "law": law_part(report),
         "budget": _budget(report),
         "stress": [] if report.stress is None else [_run(run) for run in report.stress.runs],
-        "remedies": [_remedy(remedy, report.read.names) for remedy in report.remedies],
+        "remedies": [remedy_part(remedy, report.read.names) for remedy in report.remedies],
         "verdict": {
             "answer": report.verdict.answer,
             "cover": report.verdict.cover,
@@ -115,134 +90,6 @@ def design_part(report: Diagnosed) -> dict[str, Any]:
     }
 
 
-def tail_part(tail: TailIndex) -> dict[str, Any]:
-    """One tail index."""
-    return {
-        **noted("index", tail.index, ABOVE),
-        **noted("low", tail.low, ABOVE),
-        **noted("high", tail.high, UNBOUNDED),
-        "finite": tail.finite,
-        "threshold_count": tail.threshold_count,
-        "side": tail.side,
-        "p_value": number(tail.p_value),
-        **({"note": tail.note} if tail.note else {}),
-    }
-
-
-def unknown_tail(note: str) -> dict[str, Any]:
-    """The keys of a tail index that could not be assessed, and why."""
-    return {
-        "index": None, "index_note": note, "low": None, "low_note": note, "high": None,
-        "high_note": note, "finite": None, "finite_note": note, "threshold_count": None,
-        "threshold_count_note": note, "side": "both",
-    }  # fmt: skip
-
-
-def diagnosis_part(report: Diagnosed) -> dict[str, Any]:
-    """What the data say."""
-    found = report.diagnosis
-    names = report.read.names
-    errors = tail_part(found.errors) if found.errors else unknown_tail(found.errors_note)
-    structure = found.structure
-    return {
-        "errors": {
-            "tail": errors,
-            "moments": {str(m.order): m.answer for m in found.error_moments},
-            "moment_reasons": {str(m.order): m.reason for m in found.error_moments},
-            "sides": [tail_part(side) for side in found.sides],
-        },
-        "columns": _group(found.columns, names, found.weight),
-        "scores": _group(found.scores, names, None),
-        "variance": [finding_part(f) for f in found.variance],
-        "dependence": [finding_part(f) for f in found.dependence],
-        "structure": {
-            "factors": structure.factors,
-            **noted("condition", structure.condition, structure.condition_note or ""),
-            "effective_rank": number(structure.effective_rank),
-            "leading_share": number(structure.leading_share),
-            "largest_correlation": number(structure.largest_correlation),
-        },
-        "signal": {
-            "answer": found.signal.answer,
-            "reason": found.signal.reason,
-            "sparse_explained": number(found.signal.sparse_explained),
-            "ridge_explained": number(found.signal.ridge_explained),
-            "factor_explained": number(found.signal.factor_explained),
-        },
-        **(
-            {"powers": None, "powers_note": "a tail index is unknown"}
-            if found.powers is None
-            else {
-                "powers": {
-                    "keeping_variance": found.powers.keeping_variance,
-                    "keeping_fourth": found.powers.keeping_fourth,
-                    "shared_volatility": found.powers.shared_volatility,
-                }
-            }
-        ),
-        "co_movement": {
-            "median": number(float(np.median(found.co_movement))),
-            "largest": number(float(found.co_movement.max())),
-            "largest_column": names[int(found.co_movement.argmax())],
-        },
-    }
-
-
-def finding_part(finding: Finding) -> dict[str, Any]:
-    """One test."""
-    result = finding.result
-    return {
-        "test": result.test,
-        "statistic": number(result.statistic),
-        "p_value": number(result.p_value),
-        "valid": finding.valid,
-        "method": result.method,
-        "needs_moment": result.needs_moment,
-        **({"lacks": finding.lacks} if finding.lacks else {}),
-    }
-
-
-def _group(group: SeriesGroup, names: tuple[str, ...], weight: tuple[str, ...] | None) -> dict:
-    tails = group.tails
-    refused = dict(tails.refused)
-    middle = tails.median_column()
-
-    def tail(j: int) -> dict[str, Any]:
-        if j in refused:
-            return unknown_tail(refused[j])
-        low, high = tails.interval(j)
-        return {
-            **noted("index", index_from_gamma(float(tails.gamma[j])), ABOVE),
-            **noted("low", low, ABOVE),
-            **noted("high", high, UNBOUNDED),
-            "finite": bool(tails.p_value[j] <= 0.05),
-            "threshold_count": tails.threshold_count,
-            "side": "both",
-        }
-
-    def moments(j: int) -> dict[str, str]:
-        return {str(order): group.answer(order, j) for order in ORDERS}
-
-    note = "no column has a tail index"
-    return {
-        "tail": unknown_tail(note) if middle is None else tail(middle),
-        "moments": dict.fromkeys(map(str, ORDERS), "unclear")
-        if middle is None
-        else moments(middle),
-        "median_column": None if middle is None else names[middle],
-        **({"median_column_note": note} if middle is None else {}),
-        "by_column": [
-            {
-                "column": name,
-                "tail": tail(j),
-                "moments": moments(j),
-                **({"weight": weight[j]} if weight else {}),
-            }
-            for j, name in enumerate(names)
-        ],
-    }
-
-
 def law_part(report: HasLaw) -> dict[str, Any]:
     """The error law and its fit."""
     law = report.law
@@ -251,10 +98,11 @@ def law_part(report: HasLaw) -> dict[str, Any]:
     if path is not None:
         volatility = {
             "volatility": {
-                "kind": "garch",
+                "kind": path.kind,
                 "omega": number(path.omega),
                 "alpha": number(path.alpha),
                 "beta": number(path.beta),
+                "leverage": number(path.leverage),
                 "persistence": number(path.persistence),
                 **noted("tail_index", path.tail_index, "no finite index implied"),
             }
@@ -269,10 +117,30 @@ def law_part(report: HasLaw) -> dict[str, Any]:
             **noted("distance", law.fit.distance, note),
             **noted("p_value", law.fit.p_value, note),
             "candidates": [
-                {"family": family, "bic": number(value)} for family, value in law.fit.candidates
+                {
+                    "family": each.family,
+                    "score": number(each.score),
+                    "tail_score": number(each.tail_score),
+                }
+                for each in law.fit.candidates
             ],
             "note": law.fit.note,
         },
+        **_runner_up(law.fit),
+    }
+
+
+def _runner_up(fit: Fit) -> dict[str, Any]:
+    """The family next in line and by how much, in log-likelihood out of sample."""
+    if not fit.runner_up:
+        return {"runner_up": None, "runner_up_note": "no other family was tried"}
+    note = "the law was taken because the runner-up is rejected"
+    return {
+        "runner_up": {
+            "family": fit.runner_up,
+            **noted("margin", fit.margin, note),
+            **noted("margin_error", fit.margin_error, note),
+        }
     }
 
 
@@ -348,20 +216,23 @@ def _run(run: StressRun) -> dict[str, Any]:
     }
 
 
-def _remedy(remedy: Remedy, names: tuple[str, ...]) -> dict[str, Any]:
+def remedy_part(remedy: Remedy, names: tuple[str, ...]) -> dict[str, Any]:
+    """One remedy; `names` are those of the present columns."""
     allowed = remedy.allowed
     notes = [remedy.price]
     if not remedy.refitted:
         notes.append("noise and signal only; selection not simulated")
+    note = allowed.note if allowed.columns is None else "a point value"
     return {
         "remedy": remedy.name,
         "columns": remedy.columns,
         "allowed_columns": allowed.columns,
         **({"allowed_columns_note": allowed.note} if allowed.note else {}),
-        **noted("low", allowed.low, allowed.note),
-        **noted("high", allowed.high, _beyond(allowed)),
+        **noted("low", allowed.low, note),
+        **noted("high", allowed.high, note if allowed.low is None else _beyond(allowed)),
         "risk_at_design": estimate(remedy.risk_at_design),
         "answer": remedy.answer,
+        **({"parts": list(remedy.parts)} if remedy.parts else {}),
         **({"dropped": [names[j] for j in remedy.dropped]} if remedy.dropped else {}),
         "note": "; ".join(notes),
     }

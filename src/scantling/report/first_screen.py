@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 import textwrap
 
 from scantling.planning.remedies import Remedy
@@ -108,10 +109,8 @@ def _remedies(report: Report, width: int, room: int) -> list[str]:
         if report.verdict.answer != WITHIN:
             tried = len(report.remedies)
             text = f"none of the {tried} computed helps" if tried else "none computed applies"
-            needed = report.budget.rows_needed
-            if report.budget.signal.reached and needed is not None and needed > report.budget.rows:
-                text += f"; {count(needed)} rows would detect the effects"
-        return labelled("Remedies", text, width)[:1]
+            text = "; ".join(filter(None, [text, instead(report)]))
+        return labelled("Remedies", text, width)[: min(2, max(room, 1))]
     lines = []
     for place, remedy in enumerate(found):
         label = "Remedies" if place == 0 else ""
@@ -120,6 +119,18 @@ def _remedies(report: Report, width: int, room: int) -> list[str]:
         text = name + end
         lines.append(f"{label:<{LABEL}}{text}")
     return lines
+
+
+def instead(report: Report) -> str:
+    """Which rows or effects would do where effect size binds and no remedy helps; else empty."""
+    budget = report.budget
+    if not budget.signal.reached or budget.detectable is None:
+        return ""
+    larger = f"effects of {math.ceil(100 * budget.detectable) / 100:.2f} sd show as it is"
+    needed = budget.rows_needed
+    if needed is None or needed <= budget.rows:
+        return larger
+    return f"{count(needed)} rows would detect the effects; {larger}"
 
 
 def helps(report: Report, remedy: Remedy) -> bool:

@@ -3,10 +3,10 @@
 from __future__ import annotations
 
 from scantling.planning.remedies import Remedy
-from scantling.planning.verdict import chance
+from scantling.planning.verdict import WITHIN, chance
 from scantling.report.chart import risk_chart
 from scantling.report.document import cautions as all_cautions
-from scantling.report.first_screen import reason_is_cut
+from scantling.report.first_screen import helps, instead, reason_is_cut
 from scantling.report.record import Report
 from scantling.report.sections import heading, listing
 from scantling.report.wording import (
@@ -116,23 +116,40 @@ def remedies(report: Report, width: int) -> list[str]:
     lines = heading("Remedies, each recomputed")
     if not report.remedies:
         return lines + paragraph("None computed applies.", width)
+    lines += paragraph(_lead(report), width)
     for place, remedy in enumerate(report.remedies):
         risk = chance(remedy.risk_at_design.value, remedy.draws)
         kept = f"{count(remedy.allowed.columns)} of {many(remedy.columns, 'column')}"
         lines += paragraph(
             f"{place + 1}. {remedy.name}: {kept} ({_band_words(remedy)}), break-through risk"
-            f" {risk}. {'' if remedy.refitted else 'Noise and signal only. '}Price:"
-            f" {remedy.price}{_dropped(report, remedy)}.",
+            f" {risk}. {'' if remedy.refitted else 'Noise and signal only. '}"
+            f"{_dropped(report, remedy)}Price: {remedy.price}.",
             width,
         )
+    pair = ""
+    if len(report.remedies) > 1 and not any(remedy.parts for remedy in report.remedies):
+        pair = "No pair of the best does better than one of its changes alone. "
     return lines + paragraph(
-        "The present errors are kept; a design changed so and vetted afresh fits its own.", width
+        f"{pair}The present errors are kept; a design changed so and vetted afresh fits its own.",
+        width,
     )
+
+
+def _lead(report: Report) -> str:
+    """What the first screen says of remedies, before they are listed."""
+    if report.verdict.answer == WITHIN:
+        return "None is needed, as the design is within budget; what each would make of it:"
+    tried = len(report.remedies)
+    helpful = sum(helps(report, remedy) for remedy in report.remedies)
+    if helpful:
+        return f"{helpful} of the {tried} computed help{'s' if helpful == 1 else ''}:"
+    words = "The one computed does not help" if tried == 1 else f"None of the {tried} helps"
+    return "; ".join(filter(None, [words, instead(report)])) + "."
 
 
 def _dropped(report: Report, remedy: Remedy) -> str:
     names = tuple(report.read.names[j] for j in remedy.dropped)
-    return f" ({listing(names, 3)})" if names else ""
+    return f"Dropped: {listing(names, 3)}. " if names else ""
 
 
 def _band_words(remedy: Remedy) -> str:

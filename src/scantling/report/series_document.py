@@ -5,19 +5,17 @@ from __future__ import annotations
 import json
 from typing import Any
 
-from scantling.report.document import (
-    UNBOUNDED,
-    design_part,
+from scantling.report.diagnosis_document import (
     diagnosis_part,
     finding_part,
-    law_part,
-    noted,
-    number,
-    receipt_part,
+    opinion_part,
     tail_part,
     unknown_tail,
+    worth_part,
 )
+from scantling.report.document import design_part, law_part, receipt_part
 from scantling.report.record import DesignDiagnosis, SeriesReport
+from scantling.report.values import number
 
 SCHEMA = "scantling-diagnosis/1"
 
@@ -45,16 +43,7 @@ def series_json(report: SeriesReport) -> str:
         "time_ordered": report.time_ordered,
         "tail": tail_part(found.tail) if found.tail else unknown_tail(found.note),
         "sides": [tail_part(side) for side in found.sides],
-        "opinions": [
-            {
-                "estimator": o.estimator,
-                **noted("index", o.index, "above 50"),
-                **noted("low", o.low, "above 50"),
-                **noted("high", o.high, UNBOUNDED),
-                "agrees": o.agrees,
-            }
-            for o in found.opinions
-        ],
+        "opinions": [opinion_part(opinion) for opinion in found.opinions],
         "moments": {str(m.order): m.answer for m in found.moments},
         "moment_reasons": {str(m.order): m.reason for m in found.moments},
         "dependence": [finding_part(finding) for finding in found.dependence],
@@ -63,10 +52,7 @@ def series_json(report: SeriesReport) -> str:
             for rank, seen, median, high in report.extremes
         ],
     }
-    if found.extremes is not None:
-        series["extremal_index"] = number(found.extremes.index)
-        series["effective_rows"] = number(found.effective_rows)
-        series["tail_effective_rows"] = number(found.tail_effective_rows)
+    series |= worth_part(found.worth)
     return _text(
         {
             "schema": SCHEMA,

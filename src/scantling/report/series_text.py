@@ -6,14 +6,20 @@ from collections.abc import Sequence
 
 from scantling.diagnostics.moments import ORDERS
 from scantling.diagnostics.series import SeriesDiagnosis
-from scantling.report import sections
+from scantling.report import dependence_section, sections, tails_section
 from scantling.report.chart import extremes_table, path_chart
+from scantling.report.dependence_section import (
+    findings_table,
+    lacks_lines,
+    volatility_words,
+    worth_lines,
+)
 from scantling.report.record import DesignDiagnosis, SeriesReport
-from scantling.report.sections import findings_table, heading, receipt_lines, tail_words
+from scantling.report.sections import heading, receipt_lines
+from scantling.report.tails_section import opinion_lines, side_lines, tail_words
 from scantling.report.wording import (
     ALWAYS,
     index,
-    index_interval,
     labelled,
     p_value,
     paragraph,
@@ -45,9 +51,9 @@ def render_design_diagnosis(report: DesignDiagnosis, width: int = 80) -> str:
     lines = [f"scantling diagnose: {shortened(report.design.title, width - 20)}"]
     for section in (
         sections.design,
-        sections.tails,
-        sections.moments,
-        sections.variance,
+        tails_section.tails,
+        tails_section.moments,
+        dependence_section.variance,
         sections.structure,
         sections.signal,
         sections.law,
@@ -80,15 +86,8 @@ def _tails(report: SeriesReport, width: int) -> list[str]:
     lines += paragraph(f"Both tails: {tail_words(found.tail)}.", width)
     if found.note:
         lines += paragraph(f"Before that: {found.note}.", width)
-    for side in found.sides:
-        lines += paragraph(f"{side.side.capitalize()} tail: {tail_words(side)}.", width)
-    for opinion in found.opinions:
-        verdict = "agrees" if opinion.agrees else "disagrees: trust neither beyond their overlap"
-        lines += paragraph(
-            f"{opinion.estimator}: index {index(opinion.index)} (90 %"
-            f" {index_interval(opinion.low, opinion.high)}), {verdict}.",
-            width,
-        )
+    lines += side_lines(found.sides, found.heavier, width)
+    lines += opinion_lines(found.opinions, width)
     if found.path is not None:
         path = found.path
         lines += paragraph(
@@ -118,30 +117,16 @@ def _dependence(report: SeriesReport, width: int) -> list[str]:
     if not report.time_ordered or found.clustering is None:
         return lines + paragraph("Values have no order, so dependence is not tested.", width)
     lines += findings_table(found.dependence)
+    lines += lacks_lines(found.dependence, width)
     path = found.clustering.volatility
+    chance = p_value(found.clustering.test.p_value)
     if path is None:
-        lines += paragraph(f"Volatility is taken as constant: {found.clustering.reason}.", width)
+        words = f"Volatility is taken as constant: {found.clustering.reason} ({chance})."
     else:
-        lines += paragraph(
-            f"Volatility clusters: GARCH(1,1) with alpha {path.alpha:.3f}, beta {path.beta:.3f}"
-            f" (sum {path.persistence:.3f}).",
-            width,
-        )
-    extremes = found.extremes
-    if extremes is not None:
-        lines += paragraph(
-            f"Extremes come in clusters of {1 / extremes.index:.1f} on average: the"
-            f" {extremes.exceedances:,} largest values count as {extremes.clusters:.0f} separate"
-            f" events (extremal index {extremes.index:.2f}, 90 % {extremes.low:.2f} to"
-            f" {extremes.high:.2f}).",
-            width,
-        )
-    if found.effective_rows is not None and found.tail_effective_rows is not None:
-        lines += paragraph(
-            f"For means these {found.rows:,} values are worth {found.effective_rows:,.0f}"
-            f" independent ones, for the tail index {found.tail_effective_rows:,.0f}.",
-            width,
-        )
+        words = f"Volatility clusters ({chance}): {volatility_words(path)}."
+    lines += paragraph(words, width)
+    if found.worth is not None:
+        lines += worth_lines(found.worth, found.rows, "values", width)
     return lines
 
 

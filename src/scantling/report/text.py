@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from scantling.report import limits_section, sections
+from scantling.report import dependence_section, limits_section, sections, tails_section
 from scantling.report.first_screen import first_screen
 from scantling.report.record import Report
 
@@ -23,10 +23,10 @@ def render(report: Report, width: int = 80) -> str:
     for section in (
         limits_section.reasons,
         sections.design,
-        sections.tails,
-        sections.worst_columns,
-        sections.moments,
-        sections.variance,
+        tails_section.tails,
+        tails_section.worst_columns,
+        tails_section.moments,
+        dependence_section.variance,
         sections.structure,
         sections.signal,
         sections.law,

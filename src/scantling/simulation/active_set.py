@@ -148,7 +148,7 @@ def _solve_active(gram: FloatArray, active: BoolArray, wanted: FloatArray) -> Fl
         for r in range(len(gram)):
             on = np.flatnonzero(active[r])
             if on.size:
-                system = gram[r][on[:, None], on]
+                system = gram[r].take(on, 0).take(on, 1)
                 system.flat[:: on.size + 1] += RIDGE
                 move[r, on] = _solve_one(system, wanted[r, on])
         return move
@@ -161,8 +161,13 @@ def _solve_active(gram: FloatArray, active: BoolArray, wanted: FloatArray) -> Fl
 
 def _solve_one(system: FloatArray, wanted: FloatArray) -> FloatArray:
     """Solve one positive definite system; rounding may have made it slightly indefinite."""
-    _, solution, fault = dposv(system, wanted)
-    return np.asarray(solution if fault == 0 else np.linalg.solve(system, wanted), dtype=np.float64)
+    # The transpose is the same matrix in the order LAPACK wants; only half of it is spoilt.
+    diagonal = system.diagonal().copy()
+    _, solution, fault = dposv(system.T, wanted, lower=True, overwrite_a=True)
+    if fault == 0:
+        return np.asarray(solution, dtype=np.float64)
+    whole = np.tril(system, -1)
+    return np.linalg.solve(whole + whole.T + np.diag(diagonal), wanted)
 
 
 def _line_search(

@@ -18,10 +18,11 @@ from typing import Any
 
 import numpy as np
 
-from scantling.core.checks import between, finite_matrix
+from scantling.core.checks import between
 from scantling.core.record import FloatArray
 from scantling.core.streams import blocks
 from scantling.errors import InputError
+from scantling.simulation.arguments import NotConvergedError, columns_and_responses
 from scantling.simulation.working_set import Problem, WorkingSets
 
 BLOCK_CELLS = 4_000_000
@@ -32,23 +33,6 @@ ENTER_AT_ONCE = 16
 
 ROUNDS = 120
 """Most rounds of solving and checking; common problems need two."""
-
-
-class NotConvergedError(InputError):
-    """The duality gap asked for was not reached.
-
-    Attributes
-    ----------
-    gap : float
-        The largest gap attained, over ||y||^2 / (2n).
-    response : int
-        The response (0-based) that has it.
-    """
-
-    def __init__(self, message: str, *, gap: float, response: int) -> None:
-        super().__init__(message)
-        self.gap = gap
-        self.response = response
 
 
 def lasso_batch(X: Any, Y: Any, penalty: Any, *, tol: float = 1e-6) -> FloatArray:
@@ -82,16 +66,9 @@ def lasso_batch(X: Any, Y: Any, penalty: Any, *, tol: float = 1e-6) -> FloatArra
     NotConvergedError
         (an InputError) If the gap is not reached; it carries the gap.
     """
-    columns = finite_matrix(X, "X")
-    responses = finite_matrix(_as_table(Y), "Y")
-    if len(responses) != len(columns):
-        raise InputError(
-            f"Y: as many rows as X are needed ({len(columns)}); found {len(responses)}"
-        )
+    columns, responses = columns_and_responses(X, Y)
     tol = between(tol, "tol", 0.0, 1.0)
     penalties = _penalties(penalty, responses.shape[1])
-    for name, values in (("X", columns), ("Y", responses)):
-        _squarable(values, name)
     coefficients = np.zeros((columns.shape[1], responses.shape[1]))
     gaps = np.zeros(responses.shape[1])
     free = penalties == 0
@@ -152,28 +129,40 @@ def solve_batch(
     for first, last in blocks(replicates, max(BLOCK_CELLS // p, 16)):
         problem = Problem(X, Y[:, first:last], table[:, first:last])
         given = None if start is None else start[:, first:last]
-        _solve_block(problem, tol, given, coefficients[:, first:last], gaps[first:last])
+        sets = WorkingSets(problem, given)
+        settle(sets, tol, coefficients[:, first:last], gaps[first:last])
     return coefficients, gaps
 
 
-def _solve_block(
-    problem: Problem,
+def settle(
+    sets: WorkingSets,
     tol: float,
-    start: FloatArray | None,
     coefficients: FloatArray,
     gaps: FloatArray,
+    *,
+    solve_first: bool = False,
+    ahead: FloatArray | None = None,
 ) -> None:
-    """Fill the coefficients and gaps of one block of responses."""
-    sets = WorkingSets(problem, start)
-    open_rows = np.flatnonzero(problem.power > 0)
+    """Solve every response of a block and fill its coefficients and gaps.
+
+    With `solve_first` the sets are solved before they are first checked: right where
+    they hold the answer at a nearby penalty and the gradients there. `ahead` is the
+    strength at which columns enter a finished set, for the next penalty.
+    """
+    power = sets.problem.power
+    open_rows = np.flatnonzero(power > 0)
     if not open_rows.size:
         return
-    slack = np.full(len(problem.power), max(min(1e-9, 0.01 * tol), 1e-15))
-    stalled = np.zeros(len(problem.power), dtype=np.int64)
-    best = np.full(len(problem.power), np.inf)
+    slack = np.full(len(power), max(min(1e-9, 0.01 * tol), 1e-15))
+    stalled = np.zeros(len(power), dtype=np.int64)
+    best = np.full(len(power), np.inf)
+    if solve_first:
+        sets.solve(open_rows, slack, rescue=stalled > 1)
     for _ in range(ROUNDS):
         exact = bool((stalled[open_rows] > 0).any())
-        objective, gap, grew = sets.check(open_rows, slack, size=ENTER_AT_ONCE, exact=exact)
+        objective, gap, grew = sets.check(
+            open_rows, slack, size=ENTER_AT_ONCE, exact=exact, tol=tol, ahead=ahead
+        )
         # Rounding can hold a response up; it is given up after a few such rounds.
         stalled[open_rows] += ~grew | (objective >= best[open_rows])
         slack[open_rows[~grew]] *= 0.01
@@ -188,12 +177,6 @@ def _solve_block(
     _, gap, _ = sets.check(open_rows, slack, size=0, exact=True)
     gaps[open_rows] = gap
     sets.release(open_rows, coefficients)
-
-
-def _as_table(values: Any) -> Any:
-    """Return a 1-D input as one column."""
-    array = np.asarray(values)
-    return array[:, None] if array.ndim == 1 else array
 
 
 def _penalties(penalty: Any, replicates: int) -> FloatArray:
@@ -211,15 +194,6 @@ def _penalties(penalty: Any, replicates: int) -> FloatArray:
     if bad.size:
         raise InputError(f"penalty: finite numbers of 0 or more are needed; found {bad[0]}")
     return np.broadcast_to(array, (replicates,))
-
-
-def _squarable(values: FloatArray, name: str) -> None:
-    """Refuse values whose squares, or the products of two of them, leave the range of a float."""
-    largest = float(max(values.max(), -values.min()))
-    if largest != 0 and not 1e-100 < largest < 1e100:
-        raise InputError(
-            f"{name}: magnitudes between 1e-100 and 1e100 are needed; the largest is {largest:.3g}"
-        )
 
 
 def _least_squares(X: FloatArray, Y: FloatArray) -> tuple[FloatArray, FloatArray]:

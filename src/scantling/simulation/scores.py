@@ -226,3 +226,28 @@ def column_shares(found: Passers, level: float) -> FloatArray:
     """Each column's share of the break-throughs at the level, shape (P,); zeros if none."""
     counts = np.bincount(found.column[found.ratio > level], minlength=found.columns)
     return np.asarray(counts / max(1, counts.sum()))
+
+
+def risks_on_grid(
+    found: Passers, risk: float, grid: np.ndarray, weights: FloatArray | None = None
+) -> FloatArray:
+    """Break-through risk at the plug-in level at some numbers of columns, shape (B, G).
+
+    For very many columns, of which a curve at every p would take too long. `grid` (G,) is
+    increasing; `weights` as in `risk_curves`.
+    """
+    weight = np.ones((1, found.draws)) if weights is None else weights
+    levels = penalty_level(np.asarray(grid, dtype=np.float64), risk)
+    # Each ratio counts at the grid's first `alive` numbers; from the largest p down they add up.
+    alive = np.searchsorted(levels, found.ratio)
+    order = np.argsort(-alive, kind="stable")
+    ends = np.searchsorted(-alive[order], -np.arange(len(grid), 0, -1), side="right")
+    counts = np.zeros(found.draws)
+    out = np.empty((len(weight), len(grid)))
+    start = 0
+    for place, stop in zip(range(len(grid) - 1, -1, -1), ends, strict=True):
+        counts += np.bincount(found.draw[order[start:stop]], minlength=found.draws)
+        broken = 1 - none_taken(counts, found.columns, int(grid[place]))
+        out[:, place] = weight @ broken / found.draws
+        start = int(stop)
+    return out

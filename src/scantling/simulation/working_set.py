@@ -10,10 +10,11 @@ from __future__ import annotations
 
 import numpy as np
 from numpy.typing import NDArray
+from scipy.sparse import csr_array
 
 from scantling.core.record import FloatArray
 from scantling.core.streams import blocks
-from scantling.simulation.active_set import BoolArray, solve_together, sweep_together
+from scantling.simulation.active_set import PACKED_ABOVE, BoolArray, solve_together, sweep_together
 
 IndexArray = NDArray[np.int64]
 
@@ -22,6 +23,9 @@ GRAM_CELLS = 8_000_000
 
 UNION_COLUMNS = 1500
 """Most columns for which one Gram matrix is shared by several responses."""
+
+SPARSE_SHARE = 0.15
+"""Share of coefficients off zero below which a sparse product is the faster one."""
 
 BATCH_CELLS = 500_000
 """Cells of the stacked small Gram matrices solved together (4 MB, to stay in cache)."""
@@ -43,9 +47,21 @@ class Problem:
         Mean square of the responses.
     scores : array, shape (p, R)
         X'Y/n.
+    gram : array, shape (p, p), or None
+        X'X/n, where it is given; the columns then have unit mean square.
+    units : array, shape (p,), or None
+        What the columns were divided by; the coefficients given out are divided by it too.
     """
 
-    def __init__(self, X: FloatArray, Y: FloatArray, weights: FloatArray) -> None:
+    def __init__(
+        self,
+        X: FloatArray,
+        Y: FloatArray,
+        weights: FloatArray,
+        gram: FloatArray | None = None,
+        units: FloatArray | None = None,
+    ) -> None:
+        self.gram, self.units = gram, units
         self.X, self.Y, self.weights = X, Y, weights
         self.n, self.p = X.shape
         self.scale: FloatArray = np.sqrt(np.einsum("ij,ij->j", X, X) / self.n)
@@ -72,18 +88,29 @@ class WorkingSets:
             self.keys = rows * problem.p + columns
             self.values = start[columns, rows]
             self.slopes = np.zeros(len(rows))
+        self.parked: list[tuple[IndexArray, FloatArray, FloatArray]] = []
         self.kept: IndexArray = np.zeros(0, dtype=np.int64)
         self.products: FloatArray = np.zeros((problem.p, 0))
+        if problem.gram is not None:
+            self.kept, self.products = np.arange(problem.p), problem.gram
 
     def check(
-        self, rows: IndexArray, slack: FloatArray, *, size: int, exact: bool
+        self,
+        rows: IndexArray,
+        slack: FloatArray,
+        *,
+        size: int,
+        exact: bool,
+        tol: float = 0.0,
+        ahead: FloatArray | None = None,
     ) -> tuple[FloatArray, FloatArray, BoolArray]:
         """Return objectives and duality gaps of `rows`; let the worst violating columns in.
 
         At most `size` columns, or a quarter of those present, enter a set; those that
         violate by less than the slack, times the root mean squares of column and
         response, do not. With `exact` gradients come from residuals, not from kept
-        products. The last item says which sets grew.
+        products. The last item says which sets grew. Where the gap is within `tol` the
+        columns whose gradient exceeds `ahead`, shaped as the weights, enter too.
         """
         problem = self.problem
         owner, column = np.divmod(self.keys, problem.p)
@@ -93,7 +120,8 @@ class WorkingSets:
         cell = np.searchsorted(union, column), place[owner]
         b = np.zeros((len(union), len(rows)))
         b[cell] = self.values
-        at, who, slope, inside = self._pass(rows, union, b, exact)
+        floor = problem.weights if ahead is None else ahead
+        at, who, slope, inside = self._pass(rows, union, b, exact, floor)
         self.slopes = inside[cell]
         weight = problem.weight_of(at, rows[who])
         strength = np.abs(slope) / weight
@@ -103,6 +131,8 @@ class WorkingSets:
         allowed = slack[rows[who]] * np.sqrt(problem.power[rows[who]]) * problem.scale[at]
         keys = rows[who] * problem.p + at
         enters = np.abs(slope) - weight > allowed
+        if ahead is not None:
+            enters |= (gap <= tol)[who]
         enters[enters] = ~np.isin(keys[enters], self.keys)
         grew = self._add(keys[enters], slope[enters], strength[enters], size)
         return objective, gap, grew[rows]
@@ -130,9 +160,9 @@ class WorkingSets:
         return rest + cost.sum(axis=0), np.abs(gap) / (power / 2)
 
     def _pass(
-        self, rows: IndexArray, union: IndexArray, b: FloatArray, exact: bool
+        self, rows: IndexArray, union: IndexArray, b: FloatArray, exact: bool, floor: FloatArray
     ) -> tuple[IndexArray, IndexArray, FloatArray, FloatArray]:
-        """Go over all columns: where |gradient| exceeds the weight, and the gradient on `union`.
+        """Go over all columns: where |gradient| exceeds the floor, and the gradient on `union`.
 
         Returns column, position in `rows` and gradient of the excesses, and the
         gradient on the union, shape (len(union), len(rows)).
@@ -140,13 +170,17 @@ class WorkingSets:
         problem = self.problem
         everything = len(rows) == len(problem.power)
         pick: slice | IndexArray = slice(None) if everything else rows
-        weights = problem.weights[:, pick]
+        weights = floor[:, pick]
         residual: FloatArray | None = None
-        products: FloatArray | None = None
+        fitted: FloatArray | None = None
         if len(union):
             if not exact and self._keep(union, len(rows)):
-                products = self.products[:, np.searchsorted(self.kept, union)]
-                inside = problem.scores[np.ix_(union, rows)] - products[union] @ b
+                few = np.count_nonzero(b) < SPARSE_SHARE * b.size
+                if problem.gram is not None and few:
+                    fitted = (csr_array(b.T) @ problem.gram[union]).T
+                else:
+                    fitted = self.products[:, np.searchsorted(self.kept, union)] @ b
+                inside = problem.scores[np.ix_(union, rows)] - fitted[union]
             else:
                 residual = problem.Y[:, pick] - problem.X[:, union] @ b
                 inside = problem.X[:, union].T @ residual / problem.n
@@ -157,8 +191,8 @@ class WorkingSets:
             if residual is not None:
                 gradient = problem.X[:, first:last].T @ residual
                 gradient /= problem.n
-            elif products is not None:
-                gradient = problem.scores[first:last, pick] - products[first:last] @ b
+            elif fitted is not None:
+                gradient = problem.scores[first:last, pick] - fitted[first:last]
             else:
                 gradient = problem.scores[first:last, pick]
             above = np.abs(gradient) > (weights if len(weights) == 1 else weights[first:last])
@@ -171,6 +205,8 @@ class WorkingSets:
     def _keep(self, union: IndexArray, replicates: int) -> bool:
         """Make X'X_W/n available for the union if that is cheaper than residuals and fits."""
         problem = self.problem
+        if problem.gram is not None:
+            return True
         fresh = np.setdiff1d(union, self.kept, assume_unique=True)
         total = len(self.kept) + len(fresh)
         cost = len(fresh) * problem.n + len(union) * replicates
@@ -206,13 +242,27 @@ class WorkingSets:
         return counts > 0
 
     def release(self, rows: IndexArray, coefficients: FloatArray) -> None:
-        """Write the coefficients of finished responses and forget their sets."""
+        """Write the coefficients of finished responses and put their sets aside."""
         finished = np.zeros(len(self.problem.power), dtype=np.bool_)
         finished[rows] = True
         owner, column = np.divmod(self.keys, self.problem.p)
         out = finished[owner]
-        coefficients[column[out], owner[out]] = self.values[out]
+        unit = 1.0 if self.problem.units is None else self.problem.units[column[out]]
+        coefficients[column[out], owner[out]] = self.values[out] / unit
+        self.parked.append((self.keys[out], self.values[out], self.slopes[out]))
         self._retain(~out)
+
+    def resume(self, weights: FloatArray) -> None:
+        """Take up every set again, with the weights of the next penalty."""
+        self.problem.weights = weights
+        if not self.parked:
+            return
+        keys, self.values, self.slopes = (
+            np.concatenate(part) for part in zip(*self.parked, strict=True)
+        )
+        order = np.argsort(keys, kind="stable")
+        self.keys, self.values, self.slopes = keys[order], self.values[order], self.slopes[order]
+        self.parked = []
 
     def solve(self, rows: IndexArray, slack: FloatArray, *, rescue: BoolArray) -> None:
         """Solve every response of `rows` on its set; columns that end at zero leave it.
@@ -243,8 +293,8 @@ class WorkingSets:
         if not rows.size:
             return
         slots = _ranges(first, count)
-        union = np.unique(column[slots])
-        if len(union) > UNION_COLUMNS and len(rows) > 1:
+        union = self.kept if self.problem.gram is not None else np.unique(column[slots])
+        if len(union) > UNION_COLUMNS and len(rows) > 1 and self.problem.gram is None:
             for half in (slice(None, len(rows) // 2), slice(len(rows) // 2, None)):
                 self._solve_part(rows[half], first[half], count[half], column, slack, rescue)
             return
@@ -262,6 +312,8 @@ class WorkingSets:
     def _gram(self, union: IndexArray, replicates: int) -> FloatArray:
         """Return the Gram matrix of the columns in `union`, scaled to unit diagonal."""
         problem = self.problem
+        if problem.gram is not None:
+            return problem.gram
         if self._keep(union, replicates):
             gram = self.products[np.ix_(union, np.searchsorted(self.kept, union))]
         else:
@@ -291,8 +343,14 @@ class WorkingSets:
         slot = np.where(real, first[:, None] + offset, first[:, None])
         columns = column[slot]
         local = np.searchsorted(union, columns)
-        stack = gram[local[:, :, None], local[:, None, :]]
-        stack *= real[:, :, None] & real[:, None, :]
+        if k > PACKED_ABOVE:
+            stack = np.empty((len(rows), k, k))
+            for r, place in enumerate(local):
+                stack[r] = gram.take(place, 0).take(place, 1)
+        else:
+            stack = gram[local[:, :, None], local[:, None, :]]
+        if not real.all():
+            stack *= real[:, :, None] & real[:, None, :]
         stack[:, offset, offset] = 1.0
         scale = problem.scale[columns]
         slopes = np.where(real, self.slopes[slot] / scale, 0.0)

@@ -56,8 +56,12 @@ def test_a_clean_table_is_ready_to_vet(tmp_path: Path) -> None:
     assert {name: set(keys) for name, keys in tree.items()} == {
         name: set(keys) for name, keys in LANGUAGE.items()
     }
-    for line in text.splitlines():
-        assert " = " not in line or "  # " in line or line.startswith(("title", "#"))
+    lines = text.splitlines()
+    for before, line in zip(["", *lines], lines, strict=False):
+        # Every key is explained, beside it or above it.
+        explained = "  # " in line or before.startswith("# ")
+        assert " = " not in line or explained or line.startswith(("title", "#"))
+        assert len(line) <= 80, line
 
 
 @pytest.mark.parametrize(
@@ -151,7 +155,23 @@ def test_what_has_to_be_mended_is_named_and_worked_around(tmp_path: Path) -> Non
         "# To mend: over half of the values missing or infinite, left out: 'hollow'.",
         'missing = "drop-rows"',
     ):
-        assert fragment in text
+        assert fragment.removeprefix("# ") in text.replace("\n# ", " ")
+    assert max(map(len, text.splitlines())) <= 80
+
+
+@pytest.mark.parametrize("length", [3, 30, 70, 200])
+def test_only_what_cannot_be_broken_is_wider_than_a_page(tmp_path: Path, length: int) -> None:
+    """Comments wrap; a value of the file, or a single word of a comment, stays whole."""
+    names = [f"{'n' * length}{j}" for j in range(3)]
+    columns: dict[str, list[str]] = {name: numbers(j) for j, name in enumerate(names)}
+    columns |= {f"{'w' * length}{j}": ["word"] * ROWS for j in range(8)}
+    text, table = read_back(tmp_path, write(tmp_path, columns, f"{'f' * length}.csv"))
+    assert table.names == tuple(names[1:])
+    for line in text.splitlines():
+        if len(line) > 80:
+            words = line.removeprefix("# ").split()
+            value = "=" in words and "#" not in line
+            assert value or len(words) == 1, line
 
 
 def test_faults_of_the_header_and_too_few_rows_are_named(tmp_path: Path) -> None:

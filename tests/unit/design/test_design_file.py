@@ -9,7 +9,9 @@ import pytest
 from hypothesis import HealthCheck, given, settings
 from hypothesis import strategies as st
 
-from scantling.design.parse import read_design
+from scantling.design.keys import LANGUAGE
+from scantling.design.message import nearest
+from scantling.design.parse import read_design, read_designs
 from scantling.errors import InputError, NotAvailableError
 
 MINIMAL = '[data]\nfile = "panel.csv"\nresponse = "y"\n'
@@ -106,6 +108,46 @@ def test_every_key_reaches_its_field(tmp_path: Path) -> None:
     assert (design.simulation.replicates, design.simulation.seed) == (50, 2**63 - 1)
 
 
+SEVERAL = '[data]\nfile = "panel.csv"\ntime = "day"\nresponse = ["y", "z", "w"]\n'
+
+
+def test_several_responses_are_one_design_each(tmp_path: Path) -> None:
+    path = write(tmp_path, 'title = "Spreads"\n' + SEVERAL + 'columns = ["z", "x*"]\n')
+    designs = read_designs(path)
+    assert [design.data.response for design in designs] == ["y", "z", "w"]
+    assert [design.data.other_responses for design in designs] == [
+        ("z", "w"),
+        ("y", "w"),
+        ("y", "z"),
+    ]
+    assert [design.title for design in designs] == ["Spreads: y", "Spreads: z", "Spreads: w"]
+    # Nothing else differs.
+    assert len({(d.path, d.sha256, d.expand, d.target, d.data.columns) for d in designs}) == 1
+    assert read_design(path, response="z") == designs[1]
+    single = write(tmp_path, MINIMAL)
+    assert read_designs(single) == (read_design(single),) == (read_design(single, response="y"),)
+
+
+@pytest.mark.parametrize(
+    ("text", "response", "message"),
+    [
+        (SEVERAL, None, "[data] response lists 3, 'y', 'z', 'w'; one of them has to be picked"),
+        (SEVERAL, "x", "'x' is no response of this design; there are 'y', 'z', 'w'"),
+        (MINIMAL, "yy", "'yy' is no response of this design; there is only 'y'; nearest: 'y'"),
+        (SEVERAL.replace('"w"', '"y"'), "y", "a list of names that differ is needed"),
+        (SEVERAL.replace('"w"', "3"), "y", "a list of names that differ is needed"),
+        (SEVERAL.replace('"w"', '"day"'), "y", "[data] time = 'day': also a response; two"),
+        (SEVERAL + 'columns = ["day"]\n', "y", "[data] columns names 'day', the time"),
+    ],
+)
+def test_refused_lists_of_responses(
+    tmp_path: Path, text: str, response: str | None, message: str
+) -> None:
+    with pytest.raises(InputError) as caught:
+        read_design(write(tmp_path, text), response=response)
+    assert message in str(caught.value)
+
+
 def test_absolute_path_byte_order_mark_and_list_of_one_response(tmp_path: Path) -> None:
     text = '\ufeff[data]\nfile = "/data/p.csv"\nresponse = ["y"]\n'
     design = read_design(write(tmp_path, text))
@@ -124,7 +166,10 @@ def test_absolute_path_byte_order_mark_and_list_of_one_response(tmp_path: Path) 
         ("[exand]\nlags = 1", ["[exand]: unknown table", "nearest: 'expand'"]),
         (
             "[purpose]\nkind = 'regresion'",
-            ["[purpose] kind = 'regresion': not accepted", "one of regression, ", "'regression'"],
+            [
+                "[purpose] kind = 'regresion': not accepted; regression, the only one in this"
+                " version, is needed; nearest: 'regression'"
+            ],
         ),
         (
             "[penalty]\nrule = 'plugin'",
@@ -218,11 +263,6 @@ def test_ranges_hold_at_both_ends(
             for rule in ("cross-validated", "bic")
         ],
         (f"{MINIMAL}[penalty]\nadaptive = true", "[penalty] adaptive = true", "false"),
-        (
-            '[data]\nfile = "a.csv"\nresponse = ["y", "z"]',
-            "[data] response = ['y', 'z']: a list of several responses",
-            "one response",
-        ),
         ("[stated]\nrows = 500\n", "[stated]", "a [data] table"),
     ],
 )
@@ -237,6 +277,49 @@ def test_parts_of_the_language_not_available(
     assert message.endswith(
         f"is part of the design language but not available in this version; available: {available}"
     )
+
+
+def test_no_word_is_asked_for_that_would_be_refused_next(tmp_path: Path) -> None:
+    """Neither as accepted nor as the nearest."""
+    for table, keys in LANGUAGE.items():
+        for name, key in keys.items():
+            if not key.choices:
+                continue
+            unheard = f"{key.choices[-1]}x"
+            message = refusal(
+                write(
+                    tmp_path,
+                    f'{MINIMAL}[{table}]\n{name} = "{unheard}"\n'
+                    if table != "data"
+                    else f'{MINIMAL}{name} = "{unheard}"\n',
+                )
+            )
+            asked = message.partition("not accepted")[2]
+            for word in set(key.choices) - set(key.available or key.choices):
+                assert word not in asked, message
+            assert all(word in asked for word in key.available or key.choices)
+    for name, key in LANGUAGE["penalty"].items():
+        if key.available == (False,):
+            message = refusal(write(tmp_path, f"{MINIMAL}[penalty]\n{name} = 1\n"))
+            assert "false, the only one in this version, is needed" in message
+
+
+@pytest.mark.parametrize(
+    ("asked", "known", "found"),
+    [
+        ("relevent", ["relevant", "risk", "power"], "; nearest: 'relevant'"),
+        ("x9", ["x1", "y"], "; nearest: 'x1'"),
+        ("day", ["date", "rate_usd"], "; nearest: 'date'"),
+        ("Spread", ["spread", "d"], "; nearest: 'spread'"),
+        ("inflation", ["spread_change", "bunker_cost", "day"], ""),
+        ("huber", ["squared"], ""),
+        ("kind", ["powers", "rule"], ""),
+        ("y", ["spread_change", "day"], ""),
+        ("y", [], ""),
+    ],
+)
+def test_only_a_name_like_it_is_called_nearest(asked: str, known: list[str], found: str) -> None:
+    assert nearest(asked, known) == found
 
 
 @pytest.mark.parametrize(

@@ -78,7 +78,10 @@ def test_a_diagnosis_without_time(mixed: tuple) -> None:
         assert finding.lacks == ("" if granted else "4th moment")
     # t(3) has no fourth moment: tests that need it are not to be trusted.
     assert any(not finding.valid for finding in found.variance)
-    assert found.co_movement.shape == (5,)
+    assert found.co_movement.ratio.shape == (5,)
+    assert [o.estimator[:4] for o in found.opinions] == ["Hill", "gene"]
+    assert found.worth is None
+    assert found.heavier == ""
     assert found.warnings == ()
 
 
@@ -120,6 +123,8 @@ def test_scores_of_bounded_columns_have_the_errors_tail(mixed: tuple) -> None:
     assert found.scores.tails.refused == ()
     product = tail_index(X[:, 0] * (e - e.mean()))
     assert found.scores.tails.gamma[0] == pytest.approx(product.gamma, rel=1e-9)
+    assert found.scores.borrowed is not None
+    assert found.scores.borrowed.tolist() == [False, False, True, True, False]
     assert found.scores.tails.gamma[0] > found.scores.tails.gamma[1]
 
 
@@ -147,6 +152,25 @@ def test_scores_without_variance_are_named() -> None:
     light = rng.standard_normal(3000)
     clean = diagnose(columns[:, 1:], residuals(light), time_ordered=False, seed=1)
     assert clean.scores_without_variance == ()
+
+
+def test_a_power_whose_parents_leave_room_for_a_variance_is_unclear() -> None:
+    """The square of a t(6) column times a t(4) error: index 3, which looks like 1.9. The same
+    square taken for a raw column has index 1.9 itself, and the variance is denied."""
+    rng = np.random.default_rng(8)
+    x, e = rng.standard_t(6, 1000), rng.standard_t(4, 1000)
+    X = standard(np.column_stack([x, x**2]))
+    told = diagnose(X, residuals(e), time_ordered=False, seed=1, parents=((0,), (0, 0)))
+    untold = diagnose(X, residuals(e), time_ordered=False, seed=1)
+    implied = told.scores.implied
+    assert implied is not None
+    assert implied.gamma[1] == pytest.approx(2 * told.columns.tails.gamma[0])
+    assert told.scores.tails.gamma_low[1] <= 1 / 3
+    assert untold.scores.tails.gamma_low[1] > told.scores.tails.gamma_low[1]
+    assert told.scores.doubted is not None
+    alone = series_group(X[:, 1:] * (e - e.mean())[:, None], dependent=False).answer(2, 0)
+    assert (alone, told.scores.answer(2, 1)) == ("missing", "unclear")
+    assert told.scores.doubted.tolist() == [False, True]
 
 
 def test_short_samples_have_no_sides_and_no_clear_moments(mixed: tuple) -> None:
@@ -184,6 +208,9 @@ def test_clustering_is_found_in_time_order_and_its_index_vetoes() -> None:
     assert path.persistence == pytest.approx(0.95, abs=0.06)
     assert found.dependence[0].result.method == "permutation"
     assert len(found.dependence) == 5
+    assert found.worth is not None and found.worth.extremes is not None
+    assert found.worth.extremes.index < 0.9
+    assert 1 <= found.worth.tail_rows <= found.worth.rows <= 1500
     assert found.moment(4) != "exists" or path.tail_index > 4
     shuffled = np.random.default_rng(5).permutation(e)
     calm = diagnose(X, residuals(shuffled), time_ordered=True, seed=1)

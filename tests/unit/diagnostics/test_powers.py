@@ -9,7 +9,7 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
-from scantling.diagnostics.powers import highest_power, power_score_index
+from scantling.diagnostics.powers import highest_power, power_rule, power_score_index
 from scantling.errors import InputError
 
 INDICES = st.one_of(st.floats(0.1, 60), st.just(math.inf))
@@ -113,3 +113,22 @@ def test_bad_order_or_most_is_refused() -> None:
         highest_power(4, 4, 0, shared_volatility=True)
     with pytest.raises(InputError, match="most: 1 or more"):
         highest_power(4, 4, 2, shared_volatility=True, most=0)
+
+
+@pytest.mark.parametrize(
+    ("column", "error", "shared", "variance", "fourth"),
+    [
+        (9, 5, False, 4, 2),  # 9/4 > 2 and 9/2 > 4, but 9/3 < 4
+        (9, 5, True, 2, 0),  # 1/(1/9 + 1/5) = 3.21; the square 2.37 > 2, the cube 1.875
+        (9, 1.5, False, 0, 0),
+        (math.inf, math.inf, True, 6, 6),
+        (8, 9, False, 3, 1),  # 8/4 = 2 is not above 2
+    ],
+)
+def test_the_rule_at_orders_two_and_four(
+    column: float, error: float, shared: bool, variance: int, fourth: int
+) -> None:
+    rule = power_rule(column, error, shared_volatility=shared)
+    assert (rule.keeping_variance, rule.keeping_fourth) == (variance, fourth)
+    assert (rule.column_index, rule.error_index) == (column, error)
+    assert rule.shared_volatility is shared

@@ -6,7 +6,14 @@ import numpy as np
 import pytest
 
 from scantling.diagnostics import residuals
-from scantling.diagnostics.residuals import FOLDS, fit_pilot, fold_labels
+from scantling.diagnostics.residuals import (
+    FOLDS,
+    fit_pilot,
+    fitted_level,
+    fold_labels,
+    levelled_residuals,
+    student_regression,
+)
 from scantling.errors import InputError
 
 
@@ -156,3 +163,32 @@ def test_a_perfect_fit_and_collinear_columns_are_answered() -> None:
     assert found.explained == pytest.approx(1, abs=1e-9)
     noisy = fit_pilot(doubled, y, time_ordered=True, seed=1)
     assert np.isfinite(noisy.values).all()
+
+
+def test_levelled_residuals_are_those_of_all_rows_over_the_root_of_what_leverage_leaves() -> None:
+    X, y, _ = design(1)
+    found = fit_pilot(X, y, time_ordered=False, seed=1)
+    chosen = X[:, list(found.selected)]
+    coefficients, _ = student_regression(chosen, found.fitted + found.values)
+    plain = found.fitted + found.values - coefficients[0] - chosen @ coefficients[1:]
+    rows = np.column_stack([np.ones(300), chosen])
+    hat = rows @ np.linalg.solve(rows.T @ rows, rows.T)
+    expected = plain / np.sqrt(1 - np.diag(hat))
+    assert levelled_residuals(X, found) == pytest.approx(expected - expected.mean(), abs=1e-9)
+
+
+def test_a_pilot_that_does_not_help_leaves_residuals_as_they_are() -> None:
+    rng = np.random.default_rng(2)
+    X, y = rng.standard_normal((200, 20)), rng.standard_t(3, 200)
+    found = fit_pilot((X - X.mean(axis=0)) / X.std(axis=0), y, time_ordered=False, seed=1)
+    assert found.explained == 0
+    assert np.array_equal(levelled_residuals(X, found), found.values)
+
+
+def test_a_row_that_a_column_has_for_itself_has_no_residual() -> None:
+    """Leverage 1 there: 0 over 0 without a floor."""
+    column = np.zeros((50, 1))
+    column[7] = 1
+    found = fitted_level(column, np.random.default_rng(3).standard_normal(50))
+    assert np.isfinite(found).all()
+    assert abs(found[7] - found.mean()) < 0.2

@@ -83,6 +83,53 @@ def test_fit_repeats_exactly_and_leaves_the_global_state(clustered: np.ndarray) 
     assert np.array_equal(np.random.get_state()[1], before)  # noqa: NPY002
 
 
+def leaning(seed: int, n: int) -> np.ndarray:
+    """GJR(1,1) with normal shocks, alpha .03, leverage .15, beta .85, unit variance."""
+    rng = np.random.default_rng(seed)
+    variance, series = 1.0, np.empty(n)
+    for t in range(n):
+        series[t] = math.sqrt(variance) * rng.standard_normal()
+        weight = 0.03 + 0.15 * (series[t] < 0)
+        variance = 0.045 + weight * series[t] ** 2 + 0.85 * variance
+    return series
+
+
+def test_leverage_is_found_where_it_is() -> None:
+    """Bayes criterion over four: GJR-normal where that is the law, GARCH-t where that is."""
+    fit = volatility.choose_volatility(leaning(2, 3000))
+    assert isinstance(fit, volatility.Volatility)
+    assert (fit.kind, fit.innovation, fit.nu) == ("gjr", "normal", None)
+    # Tolerances of about three standard errors at n = 3000.
+    assert (fit.alpha, fit.leverage, fit.beta) == pytest.approx((0.03, 0.15, 0.85), abs=0.06)
+    assert fit.persistence == pytest.approx(fit.alpha + fit.leverage / 2 + fit.beta)
+    assert [name for name, _ in fit.candidates][0] == "gjr, normal"
+    criteria = [value for _, value in fit.candidates]
+    assert criteria == sorted(criteria)
+    assert len(criteria) == 4
+    plain = volatility.choose_volatility(garch(1, 3000, 0.10, 0.85, 6.0))
+    assert isinstance(plain, volatility.Volatility)
+    assert (plain.kind, plain.innovation, plain.leverage) == ("garch", "student-t", 0.0)
+
+
+def test_paths_under_leverage_follow_the_recurrence() -> None:
+    series = leaning(3, 1500)
+    fit = volatility.fit_garch(series, innovation="normal", leverage=True)
+    assert isinstance(fit, volatility.Volatility)
+    e = series - series.mean()
+    weight = fit.alpha + fit.leverage * (e[:-1] < 0)
+    expected = np.sqrt(fit.omega + weight * e[:-1] ** 2 + fit.beta * fit.path[:-1] ** 2)
+    np.testing.assert_allclose(fit.path[1:], expected, rtol=1e-9)
+    assert fit.path_draws.shape == (50, 1500)
+    spread = fit.path_draws.std(axis=0) / fit.path
+    assert 0.005 < np.median(spread) < 0.2
+
+
+def test_choice_gives_a_reason_where_nothing_clusters() -> None:
+    assert volatility.choose_volatility(np.arange(99.0)) == "99 values: a GARCH fit needs 100"
+    with pytest.raises(InputError, match=r"^u: values that vary"):
+        volatility.choose_volatility(np.ones(200))
+
+
 def test_index_of_the_fit_is_near_the_true_one() -> None:
     """GARCH-n(.15,.80): true index 5.758, 5-95 % range 4.7 to 7.2 at n = 5000, simulated."""
     fits = [volatility.fit_garch(garch(s, 5000, 0.15, 0.80), innovation="normal") for s in range(5)]

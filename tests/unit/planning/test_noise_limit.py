@@ -25,7 +25,7 @@ from scantling.planning.breakthrough import (
     steadied,
 )
 from scantling.planning.case import Case, column_grid
-from scantling.planning.remedies import standardise
+from scantling.planning.recipe import standardise
 from scantling.simulation.scores import (
     centre,
     first_above,

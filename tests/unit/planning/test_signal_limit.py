@@ -14,7 +14,7 @@ from scantling.diagnostics.volatility import Volatility
 from scantling.law.families import normal_law, student_law
 from scantling.planning.breakthrough import ScoreSample
 from scantling.planning.case import Case
-from scantling.planning.remedies import standardise
+from scantling.planning.recipe import standardise
 from scantling.planning.signal import (
     detectable_effects,
     score_deviation,

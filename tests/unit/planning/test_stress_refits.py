@@ -18,7 +18,7 @@ from scantling.law.families import normal_law, student_law
 from scantling.law.fit import fit_law
 from scantling.planning import stress as module
 from scantling.planning.case import Case, draw_laws
-from scantling.planning.remedies import standardise
+from scantling.planning.recipe import standardise
 from scantling.planning.stress import (
     SUPPORTS,
     grid_of,

@@ -10,13 +10,14 @@ from typing import Any
 import pytest
 
 from scantling.core.estimate import Estimate
-from scantling.planning.budget import Budget, combine, standing
+from scantling.planning.budget import Allowed, Budget, combine, standing
 from scantling.planning.ceiling import Ceiling
 from scantling.planning.limit import make_limit, missing_limit
 from scantling.planning.remedies import Remedy
 from scantling.planning.verdict import ANSWERS, Verdict
-from scantling.report.first_screen import first_screen, helps, outcome, reason_is_cut
-from scantling.report.limits_section import reasons
+from scantling.report.document import remedy_part
+from scantling.report.first_screen import first_screen, helps, instead, outcome, reason_is_cut
+from scantling.report.limits_section import reasons, remedies
 
 SHORT = "Noise binds: at 100 columns a noise column passes."
 LONG = "Noise binds: " + "a reason that takes more than its three lines of the page " * 6
@@ -67,6 +68,8 @@ class Made:
     """The figures."""
     stress: Any = None
     """Refits."""
+    read: Any = None
+    """Names of the columns."""
     remedies: tuple[Remedy, ...] = ()
     """What would help."""
 
@@ -149,6 +152,61 @@ def test_only_remedies_whose_selection_was_simulated_are_shown():
     worse = remedy_of(40.0, 10, 60)
     assert not helps(made, worse)
     assert helps(made, remedy_of(40.0, 21, 60))
+
+
+def test_where_none_helps_rows_and_effects_that_would_do_are_said():
+    unsure = remedy_of(math.inf, refitted=False)
+    weak = budget_of(signal=limit(40.0), detectable=0.2201)
+    words = "none of the 1 computed helps; 1,900 rows would detect the effects; effects of 0.23 sd"
+    made = report(budget=weak, remedies=(unsure,))
+    assert line(made, "Remedies") == words + " show as it is"
+    assert len(first_screen(made, 80)) <= 12
+    # Rows that are not known, or are there already, are not said.
+    for needed in (None, 800):
+        weak = budget_of(signal=limit(40.0), rows_needed=needed)
+        assert instead(report(budget=weak)) == "effects of 0.22 sd show as it is"
+    # Nor anything where effect size is not what binds.
+    assert instead(report()) == ""
+
+
+def section(made):
+    made = replace(made, read=SimpleNamespace(names=tuple(f"x{j}" for j in range(100))))
+    return " ".join(text.strip() for text in remedies(made, 80))
+
+
+def test_the_section_agrees_with_the_first_screen():
+    sure = remedy_of(math.inf, name="a")
+    unsure = remedy_of(60.0, name="b", refitted=False, dropped=(3, 5))
+    assert "1 of the 2 computed helps:" in section(report(remedies=(sure, unsure)))
+    within = section(report("within budget", remedies=(sure,)))
+    assert "None is needed, as the design is within budget; what each would make of it:" in within
+    weak = report(budget=budget_of(signal=limit(40.0)), remedies=(unsure,))
+    assert f"The one computed does not help; {instead(weak)}." in section(weak)
+    assert "None of the 2 helps." in section(report(remedies=(unsure, unsure)))
+    assert "None computed applies." in section(report())
+
+
+def test_the_section_names_what_is_dropped_and_says_if_no_pair_does_better():
+    alone = (remedy_of(60.0, name="a", dropped=(3, 5, 7, 9)), remedy_of(50.0, name="b"))
+    text = section(report(remedies=alone))
+    assert "Dropped: x3, x5, x7 and 1 more. Price: a price." in text
+    assert "No pair of the best does better than one of its changes alone." in text
+    pair = remedy_of(70.0, name="a and b", parts=("a", "b"))
+    assert "No pair" not in section(report(remedies=(pair, *alone)))
+    assert "No pair" not in section(report(remedies=alone[:1]))
+
+
+def test_more_rows_have_no_band():
+    allowed = Allowed(columns=100, low=None, high=None, note="at least")
+    rows = remedy_of(math.inf, name="2 times the rows (2,000)")
+    rows = replace(rows, allowed=allowed, answer="borderline")
+    made = report(remedies=(rows,))
+    assert line(made, "Remedies") == "1. 2 times the rows (2,000): borderline, 100 of 100"
+    assert "100 of 100 columns (no band)" in section(made)
+    (shown,) = [remedy_part(rows, ())]
+    assert (shown["low"], shown["low_note"], shown["high_note"]) == (None, *["a point value"] * 2)
+    assert "parts" not in shown
+    assert remedy_part(replace(rows, parts=("a", "b")), ())["parts"] == ["a", "b"]
 
 
 def test_a_long_remedys_name_is_cut_and_not_its_outcome():

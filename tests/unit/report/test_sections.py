@@ -14,8 +14,9 @@ from scantling.diagnostics.dependence import TestResult as Result
 from scantling.diagnostics.error_findings import Finding
 from scantling.diagnostics.residuals import Residuals
 from scantling.diagnostics.tail_index import tail_index
+from scantling.report.dependence_section import findings_table
 from scantling.report.document import cautions
-from scantling.report.sections import findings_table, tail_words
+from scantling.report.tails_section import tail_words
 from scantling.report.wording import two
 
 

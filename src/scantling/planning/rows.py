@@ -1,0 +1,293 @@
+"""How many rows a design needs, and what other rows, effects and supports would allow.
+
+Columns are drawn (generative mode), with the same random streams at every number of rows, so
+that what differs between them is the rows' doing.
+"""
+
+from __future__ import annotations
+
+import itertools
+import math
+from collections.abc import Callable
+from dataclasses import dataclass, replace
+
+import numpy as np
+
+from scantling.core.streams import Mapper
+from scantling.planning.breakthrough import ScoreSample
+from scantling.planning.case import Case
+from scantling.planning.plan import Plan, plan_effect, plan_scores, plan_signal_limit
+from scantling.planning.stress import CaseOf, grid_of, limit_on_grid, margins, run_law
+from scantling.simulation.scores import first_above, penalty_level, risk_at, risk_curves
+
+FEWEST_ROWS = 30
+SEARCH_DRAWS = 200
+PRECISION = 1.05
+"""Rows needed are found to a factor of it; the number given is one that passed."""
+TIMES_ROWS = (0.5, 1, 2, 4)
+"""Rows of the table, times the present ones."""
+TABLE_POINTS = 4
+"""Numbers of columns that refits of a table are run at."""
+LIMITS = ("noise", "signal", "stability")
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Effort:
+    """How much is drawn in a search."""
+
+    cells: int
+    """Values drawn for columns at one number of rows, unless the fewest tables need more."""
+    tables: int
+    """Fewest tables at one number of rows."""
+    largest: int
+    """Rows times columns beyond which no larger number of rows is tried."""
+    times: int
+    """Largest number of rows tried, times the present ones."""
+    refits: int
+    """Refits at one number of rows and columns."""
+    refit_tables: int
+    """Tables they are shared among."""
+
+
+THOROUGH = Effort(
+    cells=8_000_000, tables=2, largest=24_000_000, times=64, refits=100, refit_tables=5
+)
+BRIEF = Effort(cells=500_000, tables=1, largest=1_500_000, times=16, refits=60, refit_tables=2)
+"""Beside a whole vetting, which has ten seconds."""
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Needed:
+    """Fewest rows from which one limit, or all, hold at every larger number tried."""
+
+    rows: int | None
+    """None if there are none in the range searched."""
+    note: str = ""
+    """Why there are none; empty otherwise."""
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class RowsEntry:
+    """What so many rows would allow; point values."""
+
+    rows: int
+    """n."""
+    noise: int | None
+    """Noise limit; the columns asked for if it is not reached."""
+    signal: int | None
+    """Signal limit, likewise; None where the law has no variance."""
+    stability: int | None
+    """Stability limit, likewise; None where refits were not run."""
+    allowed: int | None
+    """Smallest of the three."""
+    risk: float
+    """Break-through risk at the columns asked for."""
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class RowsPlan:
+    """Rows needed for the columns asked for, and the table by rows."""
+
+    needed: Needed
+    """For all limits together."""
+    by_limit: tuple[tuple[str, Needed], ...]
+    """noise, signal, stability, each by itself."""
+    searched_to: int
+    """Largest number of rows tried."""
+    table: tuple[RowsEntry, ...]
+    """By rows, increasing."""
+    falls: bool
+    """Whether the noise limit falls somewhere as rows grow."""
+
+
+class RowSearch:
+    """Scores and refits of one plan at any number of rows, each computed once.
+
+    Parameters
+    ----------
+    plan : Plan
+    mapper : callable
+    refits : bool
+        Whether selection is simulated.
+    effort : Effort
+    """
+
+    def __init__(self, plan: Plan, mapper: Mapper, *, refits: bool, effort: Effort) -> None:
+        self.plan = plan
+        self.mapper = mapper
+        self.refits = refits and math.isfinite(plan.law.sd)
+        self.effort = effort
+        self._scores: dict[int, ScoreSample] = {}
+        self._stable: dict[int, bool] = {}
+
+    def scores(self, rows: int) -> ScoreSample:
+        """Score ratios of the plan's columns at so many rows."""
+        if rows not in self._scores:
+            self._scores[rows] = plan_scores(
+                self.plan.at(rows), self.mapper, draws=SEARCH_DRAWS, twin=False,
+                tables=(self.effort.cells, self.effort.tables),
+            )[0]  # fmt: skip
+        return self._scores[rows]
+
+    def risk(self, rows: int) -> float:
+        """Break-through risk at the columns asked for."""
+        p, risk = self.plan.columns, self.plan.target.risk
+        return risk_at(self.scores(rows).found, p, float(penalty_level(p, risk)))[0]
+
+    def holds(self, limit: str, rows: int) -> bool:
+        """Whether the columns asked for are allowed by one limit."""
+        if limit == "noise":
+            return self.risk(rows) <= self.plan.target.risk
+        if limit == "signal":
+            effect = plan_effect(self.plan.at(rows), self.scores(rows), self.plan.columns)
+            return effect <= self.plan.target.smallest_effect
+        if rows not in self._stable:
+            margin = stress_margins(
+                self.plan.at(rows), self.mapper, [self.plan.columns], self.effort
+            )
+            self._stable[rows] = bool(margin.min() >= 0)
+        return self._stable[rows]
+
+    def entry(self, rows: int) -> RowsEntry:
+        """All limits at so many rows."""
+        plan, sample = self.plan.at(rows), self.scores(rows)
+        curve = risk_curves(sample.found, plan.target.risk)[0]
+        found: dict[str, float | None] = {
+            "noise": first_above(curve, plan.target.risk), "signal": None, "stability": None,
+        }  # fmt: skip
+        if math.isfinite(plan.law.sd):
+            found["signal"] = plan_signal_limit(plan, sample)
+        if self.refits:
+            grid = table_grid(plan)
+            found["stability"] = limit_on_grid(
+                grid, stress_margins(plan, self.mapper, grid, self.effort)
+            )
+        whole = {
+            name: None if value is None else int(min(value, plan.columns))
+            for name, value in found.items()
+        }
+        wanted = LIMITS if self.refits else LIMITS[:2]
+        values = [whole[name] for name in wanted]
+        known = [value for value in values if value is not None]
+        return RowsEntry(
+            rows=rows,
+            noise=whole["noise"],
+            signal=whole["signal"],
+            stability=whole["stability"],
+            allowed=min(known) if len(known) == len(values) else None,
+            risk=float(curve[-1]),
+        )
+
+
+def table_grid(plan: Plan) -> list[int]:
+    """Numbers of columns the refits of a table are run at."""
+    return grid_of(plan.columns, plan.target.relevant, TABLE_POINTS)
+
+
+def stress_margins(plan: Plan, mapper: Mapper, grid: list[int], effort: Effort) -> np.ndarray:
+    """How far each criterion is met at each number of columns, shape (grid, 3)."""
+    case_of = plan_cases(plan, grid[-1], effort.refit_tables)
+    case = replace(case_of(0), replicates=effort.refits)
+    runs = run_law(case, plan.law, "search", grid, mapper, case_of)
+    return np.array([margins(case, run) for run in runs])
+
+
+def plan_cases(plan: Plan, columns: int, tables: int) -> CaseOf:
+    """The drawn case of each support set, made once; so many tables are shared among them."""
+    made: dict[int, Case] = {}
+
+    def case_of(number: int) -> Case:
+        table = number % tables
+        if table not in made:
+            made[table] = plan.case(columns, table)
+        return made[table]
+
+    return case_of
+
+
+def fewest_rows(holds: Callable[[int], bool], steps: list[int]) -> int | None:
+    """Fewest rows from which `holds` at every larger step; None if it fails at the last.
+
+    From the largest step down to the first that fails; between that and the next the place is
+    narrowed down to PRECISION.
+    """
+    passing: int | None = None
+    for rows in reversed(steps):
+        if not holds(rows):
+            break
+        passing = rows
+    if passing is None or passing == steps[0]:
+        return passing
+    failing = steps[steps.index(passing) - 1]
+    while passing > PRECISION * failing and passing - failing > 1:
+        middle = round(math.sqrt(passing * failing))
+        if middle in (passing, failing):
+            break
+        if holds(middle):
+            passing = middle
+        else:
+            failing = middle
+    return passing
+
+
+def row_steps(plan: Plan, effort: Effort) -> list[int]:
+    """Numbers of rows tried: doubling from 4 L(p)^2, the present ones among them."""
+    level = float(penalty_level(plan.columns, plan.target.risk))
+    start = max(FEWEST_ROWS, math.ceil(4 * level**2))
+    most = min(
+        effort.times * plan.rows,
+        max(effort.largest // plan.columns, round(max(TIMES_ROWS) * plan.rows)),
+    )
+    steps = {round(plan.rows * 2.0**k) for k in range(-12, 7)}
+    return sorted(rows for rows in {start, *steps} if start <= rows <= max(most, start))
+
+
+def rows_plan(plan: Plan, mapper: Mapper, *, refits: bool, effort: Effort = THOROUGH) -> RowsPlan:
+    """Rows needed, each limit and jointly, and the table by rows."""
+    search = RowSearch(plan, mapper, refits=refits, effort=effort)
+    steps = row_steps(plan, effort)
+    by_limit: dict[str, Needed] = {}
+    for name in LIMITS:
+        by_limit[name] = _needed(search, name, steps, by_limit)
+    wanted = LIMITS if search.refits else LIMITS[:2]
+    missing = [name for name in wanted if by_limit[name].rows is None]
+    joint = Needed(rows=None, note="; ".join(f"{n}: {by_limit[n].note}" for n in missing))
+    if not missing:
+        joint = Needed(rows=max(by_limit[name].rows or 0 for name in wanted))
+    fewest = max(FEWEST_ROWS, plan.target.relevant + 2)
+    rows = sorted({max(fewest, round(times * plan.rows)) for times in TIMES_ROWS})
+    table = tuple(search.entry(n) for n in rows)
+    noise = [entry.noise or 0 for entry in table]
+    return RowsPlan(
+        needed=joint,
+        by_limit=tuple(by_limit.items()),
+        searched_to=steps[-1],
+        table=table,
+        falls=any(later < 0.9 * earlier for earlier, later in itertools.pairwise(noise)),
+    )
+
+
+def _needed(search: RowSearch, name: str, steps: list[int], found: dict[str, Needed]) -> Needed:
+    """Fewest rows for one limit."""
+    if name != "noise" and not math.isfinite(search.plan.law.sd):
+        return Needed(rows=None, note="the error law has no variance")
+    if name == "stability":
+        if not search.refits:
+            return Needed(rows=None, note="selection was not simulated")
+        # Refits cost most: only from where the effects are detectable, with which power comes.
+        signal = found["signal"].rows
+        if signal is None:
+            return Needed(rows=None, note=found["signal"].note)
+        first = next((rows for rows in steps if rows >= signal and search.holds(name, rows)), None)
+        if first is None:
+            return Needed(rows=None, note=_none_in_range(search.plan, steps))
+        before = [rows for rows in steps if rows < first]
+        return Needed(rows=fewest_rows(
+            lambda rows: search.holds(name, rows), [*before[-1:], first]
+        ))  # fmt: skip
+    rows = fewest_rows(lambda n: search.holds(name, n), steps)
+    return Needed(rows=rows, note="" if rows else _none_in_range(search.plan, steps))
+
+
+def _none_in_range(plan: Plan, steps: list[int]) -> str:
+    return f"more rows do not lift the limit up to {steps[-1] / plan.rows:.3g} times the present"
