@@ -161,7 +161,10 @@ def _judged(
     tell("remedies")
     helpful: tuple[Remedy, ...] = ()
     if diagnosis.moment(2) != "missing":
-        helpful = remedies(design, table, residuals, diagnosis, case, noise, limits[0], mapper)
+        longer = () if ahead.rows is None else ahead.rows.table
+        helpful = remedies(
+            design, table, residuals, diagnosis, case, noise, limits[0], mapper, longer
+        )
     return Report(
         design=design,
         read=_as_read(table, found.columns, residuals),
@@ -250,7 +253,7 @@ def diagnose_column(
         diagnosis=found,
         law=law,
         extremes=extremes,
-        receipt=_receipt_of(
+        receipt=receipt_of(
             seed, 0, ((source.file_name, source.sha256),), command or "scantling diagnose", started
         ),
     )
@@ -305,7 +308,7 @@ def _as_read(table: Table, columns: Columns, residuals: Residuals) -> DesignAsRe
 
 
 def _receipt(design: Design, table: Table, command: str | None, started: float) -> Receipt:
-    return _receipt_of(
+    return receipt_of(
         design.simulation.seed,
         design.simulation.replicates,
         ((design.path.name, design.sha256), (table.file_name, table.sha256)),
@@ -314,9 +317,10 @@ def _receipt(design: Design, table: Table, command: str | None, started: float) 
     )
 
 
-def _receipt_of(
+def receipt_of(
     seed: int, replicates: int, inputs: tuple[tuple[str, str], ...], command: str, started: float
 ) -> Receipt:
+    """What repeats a run that began at a monotonic time."""
     return Receipt(
         version=version("scantling"),
         seed=seed,

@@ -106,7 +106,7 @@ class Processes:
         if stopped:
             from joblib.externals.loky import get_reusable_executor
 
-            get_reusable_executor().shutdown(wait=False, kill_workers=True)
+            get_reusable_executor(reuse=True).shutdown(wait=False, kill_workers=True)
         else:
             self._starting.join()
 
@@ -155,7 +155,8 @@ class Processes:
         ):
             found = Parallel(
                 n_jobs=self._workers, return_as="generator_unordered", batch_size=1,
-                pre_dispatch="all",
+                # No more than the workers take at once: loky faults when stopped with a backlog.
+                pre_dispatch="2 * n_jobs",
             )(delayed(compute)(*task) for task in tasks)  # fmt: skip
         return iter(found)
 

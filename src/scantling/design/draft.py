@@ -122,7 +122,9 @@ def _data_rows(findings: _Findings, file: str) -> list[str]:
         lines += _line("time", _quoted(findings.time), "unique and increasing; optional")
     else:
         lines += _line("# time", '"..."', "unique and increasing; without it rows have no order")
-    lines += _line("response", _quoted(findings.response), "a guess, to be changed, or a list of several")
+    lines += _line(
+        "response", _quoted(findings.response), "a guess, to be changed, or a list of several"
+    )
     about = "names or glob patterns of the candidate columns"
     if findings.all_others:
         lines += _line("columns", '["*"]', f'{about}; "*": all other numeric ones')

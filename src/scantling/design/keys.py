@@ -140,7 +140,7 @@ LANGUAGE: dict[str, dict[str, Key]] = {
             "bic",
             available=("plug-in", "self-normalised"),
         ),
-        "loss": _choice("squared", "huber", "absolute", "square-root", available=("squared",)),
+        "loss": _choice("squared", "huber", "absolute", "square-root"),
         "adaptive": _switch(available=(False,)),
     },
     "simulation": {
@@ -150,8 +150,33 @@ LANGUAGE: dict[str, dict[str, Key]] = {
 }
 """Tables of a design with data, in the order of the file; DESIGN section 5."""
 
-UNAVAILABLE_TABLES = ("stated",)
-"""Tables of the language that this version does not carry out."""
+Language = dict[str, dict[str, Key]]
+
+
+def _law_fits(value: Any) -> bool:
+    """A law on one line, or a table with its family; the law itself is read later."""
+    if isinstance(value, dict):
+        return isinstance(value.get("family"), str) and all(
+            type(each) in (int, float) for key, each in value.items() if key != "family"
+        )
+    return _one_line(value)
+
+
+_LAW = Key(
+    accepted='a law such as "student-t:df=3", or a table such as {family = "student-t", df = 3}',
+    fits=_law_fits,
+)
+STATED_LANGUAGE: Language = {
+    "stated": {
+        "rows": _whole(30, None),
+        "columns": _whole(1, None),
+        "correlation": _number("of at least 0 and below 1", lambda value: 0 <= value < 1),
+        "error": _LAW,
+        "column": _LAW,
+    },
+    **{name: LANGUAGE[name] for name in ("purpose", "target", "penalty", "simulation")},
+}
+"""Tables of a design without data."""
 
 REQUIRED = {"data": ("file", "response")}
 """Keys without a default."""

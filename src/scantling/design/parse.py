@@ -4,12 +4,12 @@ from __future__ import annotations
 
 import hashlib
 import tomllib
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
-from scantling.design.keys import LANGUAGE, REQUIRED, TITLE, UNAVAILABLE_TABLES, Key
+from scantling.design.keys import LANGUAGE, REQUIRED, TITLE, Key, Language
 from scantling.design.message import file_label, listed, nearest, printable, shown
 from scantling.design.spec import (
     DataSpec,
@@ -86,14 +86,19 @@ def read_designs(path: str | Path) -> tuple[Design, ...]:
     `read_design`.
     """
     path = Path(path)
-    content = _read_bytes(path)
+    content = read_bytes(path)
     label = file_label(path)
-    tree = _parse_toml(content, label)
-    _check_tables(tree, label)
-    values = {table: _check_keys(tree, table, label) for table in LANGUAGE}
+    tree = parse_toml(content, label)
+    if "stated" in tree:
+        raise InputError(
+            f"{label}: [stated]: a design without data is for `scantling budget`; here a [data]"
+            " table is needed"
+        )
+    check_tables(tree, label)
+    values = {table: check_keys(tree, table, label) for table in LANGUAGE}
     title = printable(path.stem)
     if "title" in tree:
-        title = _check_value(tree["title"], TITLE, "title", label)
+        title = check_value(tree["title"], TITLE, "title", label)
     whole = Design(
         title=title,
         path=path,
@@ -124,7 +129,7 @@ def _one_each(whole: Design) -> tuple[Design, ...]:
     )
 
 
-def _read_bytes(path: Path) -> bytes:
+def read_bytes(path: Path) -> bytes:
     """Return the bytes of a regular file that is not too large to be a design."""
     name = printable(str(path))
     try:
@@ -145,7 +150,8 @@ def _read_bytes(path: Path) -> bytes:
         raise InputError(f"{name}: cannot be read ({fault.strerror or fault})") from fault
 
 
-def _parse_toml(content: bytes, label: str) -> dict[str, Any]:
+def parse_toml(content: bytes, label: str) -> dict[str, Any]:
+    """Return the tables of a design file."""
     try:
         # The byte order mark some editors write is not TOML, and harmless.
         text = content.decode("utf-8-sig")
@@ -166,64 +172,67 @@ def _parse_toml(content: bytes, label: str) -> dict[str, Any]:
         ) from fault
 
 
-def _check_tables(tree: dict[str, Any], label: str) -> None:
-    """Refuse unknown tables, tables of the wrong type and those not available."""
-    known = ["title", *LANGUAGE, *UNAVAILABLE_TABLES]
+def check_tables(
+    tree: dict[str, Any], label: str, language: Language = LANGUAGE,
+    required: Mapping[str, tuple[str, ...]] = REQUIRED,
+) -> None:  # fmt: skip
+    """Refuse unknown tables, tables of the wrong type and missing keys."""
+    known = ["title", *language]
     for name, value in tree.items():
         if name in known:
             continue
         if not isinstance(value, dict):
-            homes = {key: table for table, keys in LANGUAGE.items() for key in keys}
+            homes = {key: table for table, keys in language.items() for key in keys}
             found = f"; {name} belongs in [{homes[name]}]" if name in homes else ""
             raise InputError(
                 f"{label}: {printable(name)} = {shown(value)}: unknown key outside the tables;"
-                f" known: title, and the tables {', '.join(LANGUAGE)}"
+                f" known: title, and the tables {', '.join(language)}"
                 + (found or nearest(name, [*known, *homes]))
             )
         raise InputError(
-            f"{label}: [{printable(name)}]: unknown table; known: {', '.join(LANGUAGE)}"
+            f"{label}: [{printable(name)}]: unknown table; known: {', '.join(language)}"
             + nearest(name, known)
         )
-    for name in UNAVAILABLE_TABLES:
-        if name in tree:
-            raise NotAvailableError(f"{label}: [{name}] {_NOT_AVAILABLE} a [data] table")
-    for name in LANGUAGE:
+    for name in language:
         if name in tree and not isinstance(tree[name], dict):
             raise InputError(
                 f"{label}: {name} = {shown(tree[name])}: a table [{name}] is needed, once"
             )
-    for name, keys in REQUIRED.items():
+    for name, keys in required.items():
         for key in keys:
             if key not in tree.get(name, {}):
                 raise InputError(
-                    f"{label}: [{name}] {key} is missing; {LANGUAGE[name][key].accepted} is needed"
-                    + _misspelt(tree.get(name, {}), name, key)
+                    f"{label}: [{name}] {key} is missing; {language[name][key].accepted} is needed"
+                    + _misspelt(tree.get(name, {}), language[name], key)
                 )
 
 
-def _misspelt(table: dict[str, Any], name: str, missing: str) -> str:
+def _misspelt(table: dict[str, Any], known: Mapping[str, Key], missing: str) -> str:
     """Return a hint when an unknown key of the table may be the missing one."""
-    unknown = [key for key in table if key not in LANGUAGE[name]]
+    unknown = [key for key in table if key not in known]
     return nearest(missing, unknown).replace("nearest", "nearest found") if unknown else ""
 
 
-def _check_keys(tree: dict[str, Any], table: str, label: str) -> dict[str, Any]:
+def check_keys(
+    tree: dict[str, Any], table: str, label: str, language: Language = LANGUAGE
+) -> dict[str, Any]:
     """Return the values of one table, each checked and converted."""
     values = {}
     for key, value in tree.get(table, {}).items():
-        known = LANGUAGE[table]
+        known = language[table]
         if key not in known:
-            elsewhere = [name for name, keys in LANGUAGE.items() if key in keys]
+            elsewhere = [name for name, keys in language.items() if key in keys]
             hint = f"; {key} belongs in [{elsewhere[0]}]" if elsewhere else nearest(key, known)
             raise InputError(
                 f"{label}: [{table}] {printable(key)} = {shown(value)}: unknown key;"
                 f" known: {', '.join(known)}{hint}"
             )
-        values[key] = _check_value(value, known[key], f"[{table}] {key}", label)
+        values[key] = check_value(value, known[key], f"[{table}] {key}", label)
     return values
 
 
-def _check_value(value: Any, key: Key, name: str, label: str) -> Any:
+def check_value(value: Any, key: Key, name: str, label: str) -> Any:
+    """Return one value, converted; refuse what is not accepted or not available."""
     if not key.fits(value):
         near = key.available or key.choices
         hint = nearest(value, near) if isinstance(value, str) and key.choices else ""

@@ -26,7 +26,7 @@ class Clustering:
 
 
 def find_clustering(values: FloatArray, *, seed: int) -> Clustering:
-    """Test absolute values for autocorrelation at 5 % and fit GARCH(1,1) or GJR(1,1) if it is found.
+    """Test absolute values for autocorrelation at 5 % and fit GARCH or GJR(1,1) if it is found.
 
     Parameters
     ----------

@@ -79,7 +79,7 @@ def choose(values: FloatArray, *, time_ordered: bool, seed: int) -> Choice:
     for rows in left_out:
         train, test = np.delete(values, rows), values[rows]
         for name in names:
-            law = CATALOGUE[name].fit(train)
+            law = laws[name].refits(train[None])[0]
             scores[name][rows] = law.log_density(test)
             tails[name][rows] = _tail_score(law, test, scores[name][rows], edge)
     candidates = [

@@ -73,9 +73,10 @@ def fit_copula(
     """Fit the dependence of normal scores (m, B), in time order if `ordered`.
 
     Factors are counted by the eigenvalue ratio and loaded by principal components. On what
-    they leave the common scale is measured, and pairs clear of 0 in all m(m-1)/2 comparisons are joined into clusters, as in
-    Fan et al. (2013), J. Royal Statistical Society B 75; the correlation of each is shrunk to
-    the identity as in Ledoit et al. (2004), J. Multivariate Analysis 88.
+    they leave the common scale is measured, and pairs clear of 0 in all B(B-1)/2 comparisons
+    are joined into clusters, in the way of Fan et al. (2013), J. Royal Statistical Society B
+    75; the correlation of each cluster is shrunk to the identity as in Ledoit et al. (2004), J.
+    Multivariate Analysis 88.
 
     Parameters
     ----------

@@ -60,7 +60,8 @@ def draw_setting(
         relative = np.log(path) - np.log(law.volatility.path).mean()
     normals, fresh = normals[BURN_IN:], fresh[BURN_IN:]
     if copula.scale.errors:
-        fresh = _linked(copula, law, log_scale[:, None], normals[:, None], rng)[:, 0]
+        normals = _linked(copula, log_scale, normals)
+        fresh = _at_scores(law, normals, rng)
     return Setting(
         rows=rows,
         lags=lags,
@@ -85,7 +86,7 @@ def draw_errors(
         return np.asarray(law.draw(shape, rng))
     if link:
         log_scale = setting.log_scale[setting.lags :, None]
-        out = _linked(copula, law, log_scale, rng.standard_normal(shape), rng)
+        out = _at_scores(law, _linked(copula, log_scale, rng.standard_normal(shape)), rng)
     else:
         out = law.innovations(shape, rng)
     out *= setting.path[setting.lags :, None]
@@ -131,19 +132,20 @@ def draw_scores(
     return _persistent(rng, (series.size, total), copula.autocorrelation[series], out)
 
 
-def _linked(
-    copula: Copula, law: ErrorLaw, log_scale: FloatArray, normals: FloatArray,
-    rng: np.random.Generator,
-) -> FloatArray:  # fmt: skip
-    """Innovations (rows, draws) of the law given, large where the shared log scale is.
-
-    Their normal scores are T(exp(log scale) z); the law's quantiles are those of a large
-    sample, so that one of extreme score is extreme in size, which ranks in one draw would lose.
-    """
+def _linked(copula: Copula, log_scale: FloatArray, normals: FloatArray) -> FloatArray:
+    """Normal scores of errors that are large where the shared log scale is."""
     mix = replace(copula.scale, shared=copula.scale.errors, own=0.0)
     sizes = np.exp(log_mix(log_scale, mix.shared, mix.heavy))
-    scores = squeezed(sizes * normals, squeeze(mix))
-    count = max(FEWEST_POOLED, normals.size)
+    return squeezed(sizes * normals, squeeze(mix))
+
+
+def _at_scores(law: ErrorLaw, scores: FloatArray, rng: np.random.Generator) -> FloatArray:
+    """Innovations at normal scores of any shape.
+
+    The law's quantiles are those of a large sample, so that an innovation of extreme score is
+    extreme in size, which ranks within one draw would lose.
+    """
+    count = max(FEWEST_POOLED, scores.size)
     pool = np.sort(law.innovations(count, rng))
     spot = np.clip(ndtr(scores) * count - 0.5, 0.0, count - 1.0)
     cell = np.minimum(spot.astype(np.intp), count - 2)

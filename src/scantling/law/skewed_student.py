@@ -87,8 +87,8 @@ class SkewedStudent(Innovation):
 
     @property
     def at_edge(self) -> bool:
-        """At skew 0.7, to which values with a hard lower or upper end tend."""
-        return abs(self.skew) >= HIGH[2] - 1e-6
+        """At skew 0.7, to which values with a hard end tend, or at the fewest df fitted, 2.2."""
+        return abs(self.skew) >= HIGH[2] - 1e-6 or self.df <= HIGH[1] ** -2 + 1e-3
 
     def draw(self, size: Size, rng: np.random.Generator) -> FloatArray:
         """Independent draws: a half is picked by its share, (1 + skew)/2 for the right one."""

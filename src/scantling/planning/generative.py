@@ -9,7 +9,7 @@ from __future__ import annotations
 import math
 from collections.abc import Iterator
 from dataclasses import dataclass
-from typing import Protocol
+from typing import NamedTuple, Protocol
 
 import numpy as np
 
@@ -26,9 +26,20 @@ CELLS = 16_000_000
 FEWEST_TABLES = 8
 MANY_COLUMNS = 20_000
 """Independent columns in one table that stand for several tables."""
-TABLES = (CELLS, FEWEST_TABLES)
-"""The two together: how freely tables are drawn."""
 
+
+class Tables(NamedTuple):
+    """How freely tables are drawn."""
+
+    cells: int = CELLS
+    """Most values drawn for columns, unless the fewest tables need more."""
+    fewest: int = FEWEST_TABLES
+    """Tables that the draws are shared among at least."""
+    most: int = 1_000_000
+    """And at most: a table of few columns has its cost too."""
+
+
+TABLES = Tables()
 
 BLOCK_CELLS = 2_000_000
 """Values of a block of columns: 16 MB, so that a block's products stay in the cache's reach."""
@@ -99,27 +110,25 @@ class ScorePiece:
     """Mean square of the loss's score."""
 
 
-def tables_for(
-    source: ColumnSource, columns: int, tables: tuple[int, int] = TABLES
-) -> tuple[int, int]:
+def tables_for(source: ColumnSource, columns: int, tables: Tables = TABLES) -> Tables:
     """Fewer tables where independent columns are so many that one table has them all."""
-    enough = math.ceil(MANY_COLUMNS / columns) if source.independent else tables[1]
-    return tables[0], min(tables[1], enough)
+    if not source.independent:
+        return tables
+    return tables._replace(fewest=min(tables.fewest, math.ceil(MANY_COLUMNS / columns)))
 
 
 def tables_of(
-    rows: int, columns: int, draws: int, tables: tuple[int, int] = TABLES
+    rows: int, columns: int, draws: int, tables: Tables = TABLES
 ) -> list[tuple[int, int]]:
     """Which draws share a table: (start, stop) of each; fresh tables where affordable."""
-    cells, fewest = tables
-    affordable = cells // (rows * columns)
-    shared = math.ceil(draws / min(draws, max(fewest, affordable)))
+    affordable = min(tables.cells // (rows * columns), tables.most)
+    shared = math.ceil(draws / min(draws, max(tables.fewest, affordable)))
     return blocks(draws, shared)
 
 
 def generative_scores(
     source: ColumnSource, laws: tuple[ErrorLaw, ...], *, rows: int, columns: int, draws: int,
-    rule: str, loss: str, floor: float, seed: int, mapper: Mapper, tables: tuple[int, int] = TABLES,
+    rule: str, loss: str, floor: float, seed: int, mapper: Mapper, tables: Tables = TABLES,
 ) -> tuple[ScoreSample, ...]:  # fmt: skip
     """Scores under errors of each law, on the same drawn columns.
 
@@ -134,8 +143,7 @@ def generative_scores(
         Ratios at or below it are not kept.
     seed : int
     mapper : callable
-    tables : (int, int)
-        Most values drawn for columns, unless the fewest tables, the second number, need more.
+    tables : Tables
 
     Returns
     -------

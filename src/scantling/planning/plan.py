@@ -22,6 +22,7 @@ from scantling.planning.generative import (
     MODE,
     TABLES,
     ColumnSource,
+    Tables,
     generative_scores,
     table_of,
     tables_for,
@@ -101,7 +102,7 @@ class Plan:
 
 
 def plan_scores(
-    plan: Plan, mapper: Mapper, *, draws: int, twin: bool = True, tables: tuple[int, int] = TABLES
+    plan: Plan, mapper: Mapper, *, draws: int, twin: bool = True, tables: Tables = TABLES
 ) -> tuple[ScoreSample, ...]:
     """Scores under the plan's law and, if asked for, its Gaussian twin."""
     laws = (plan.law, twin_of(plan.law)) if twin else (plan.law,)
@@ -113,7 +114,7 @@ def plan_scores(
 
 
 def plan_noise(
-    plan: Plan, found: Passers, *, tables: tuple[int, int] = TABLES
+    plan: Plan, found: Passers, *, tables: Tables = TABLES
 ) -> tuple[Limit, tuple[CurvePoint, ...]]:
     """Noise limit and risk curve; bands by resampling tables, each with the draws sharing it."""
     risk = plan.target.risk
@@ -134,7 +135,7 @@ def plan_noise(
     return make_limit(limit, limits, found.columns, mode=MODE), points
 
 
-def table_weights(plan: Plan, draws: int, tables: tuple[int, int] = TABLES) -> FloatArray:
+def table_weights(plan: Plan, draws: int, tables: Tables = TABLES) -> FloatArray:
     """Bootstrap weights of the draws, whole tables at a time: shape (LAW_DRAWS, draws)."""
     parts = tables_of(plan.rows, plan.columns, draws, tables_for(plan.source, plan.columns, tables))
     if len(parts) == 1:  # so many independent columns that only the errors vary

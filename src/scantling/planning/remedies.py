@@ -252,13 +252,17 @@ def more_rows_remedy(table: Sequence[RowsEntry], case: Case) -> Remedy | None:
     """More rows as a remedy: the fewest of the table that allow all columns, else the best.
 
     The table holds point values, so the answer is never `within budget`; None if it has no
-    larger number of rows.
+    larger number of rows, or none that allows more than its own entry at the present rows (not
+    the design's budget: that is of the present columns, and these are drawn).
     """
     larger = sorted((each for each in table if each.rows > case.rows), key=lambda e: e.rows)
     if not larger:
         return None
     asked = case.columns
     best = max(larger, key=lambda e: (min(e.allowed or 0, asked), -e.rows))
+    now = max((each.allowed or 0 for each in table if each.rows == case.rows), default=0)
+    if best.allowed is not None and best.allowed <= now:
+        return None
     enough = best.allowed is not None and best.allowed >= asked
     note = AT_LEAST if enough else "" if best.allowed is not None else "the law has no variance"
     limits = {"noise": best.noise, "signal": best.signal, "stability": best.stability}

@@ -16,6 +16,7 @@ import numpy as np
 from scantling.core.streams import Mapper
 from scantling.planning.breakthrough import ScoreSample
 from scantling.planning.case import Case
+from scantling.planning.generative import Tables
 from scantling.planning.plan import Plan, plan_effect, plan_scores, plan_signal_limit
 from scantling.planning.stress import CaseOf, grid_of, limit_on_grid, margins, run_law
 from scantling.simulation.scores import first_above, penalty_level, risk_at, risk_curves
@@ -35,10 +36,8 @@ LIMITS = ("noise", "signal", "stability")
 class Effort:
     """How much is drawn in a search."""
 
-    cells: int
-    """Values drawn for columns at one number of rows, unless the fewest tables need more."""
-    tables: int
-    """Fewest tables at one number of rows."""
+    tables: Tables
+    """Tables drawn at one number of rows."""
     largest: int
     """Rows times columns beyond which no larger number of rows is tried."""
     times: int
@@ -50,9 +49,9 @@ class Effort:
 
 
 THOROUGH = Effort(
-    cells=8_000_000, tables=2, largest=24_000_000, times=64, refits=100, refit_tables=5
+    tables=Tables(8_000_000, 2), largest=24_000_000, times=64, refits=100, refit_tables=5
 )
-BRIEF = Effort(cells=500_000, tables=1, largest=1_500_000, times=16, refits=60, refit_tables=2)
+BRIEF = Effort(tables=Tables(500_000, 1, 6), largest=1_500_000, times=16, refits=60, refit_tables=2)
 """Beside a whole vetting, which has ten seconds."""
 
 
@@ -125,7 +124,7 @@ class RowSearch:
         if rows not in self._scores:
             self._scores[rows] = plan_scores(
                 self.plan.at(rows), self.mapper, draws=SEARCH_DRAWS, twin=False,
-                tables=(self.effort.cells, self.effort.tables),
+                tables=self.effort.tables,
             )[0]  # fmt: skip
         return self._scores[rows]
 

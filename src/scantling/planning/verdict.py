@@ -2,11 +2,13 @@
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass
 
 from scantling.diagnostics.battery import Diagnosis
 from scantling.planning.budget import BORDERLINE, OVER, WITHIN, Budget, standing
 from scantling.planning.case import Case
+from scantling.planning.plan import Plan
 from scantling.planning.stress import Stress
 
 NONE = "no budget"
@@ -50,7 +52,21 @@ def verdict(case: Case, diagnosis: Diagnosis, budget: Budget, stress: Stress | N
     where another is missing); borderline between; never within if a limit is missing; no budget
     if order 2 is missing for the errors or for the scores of more than half of the columns.
     """
-    lack = variance_missing(diagnosis)
+    return _judged(variance_missing(diagnosis), case, diagnosis, budget, stress)
+
+
+def stated_verdict(plan: Plan, budget: Budget, stress: Stress | None) -> Verdict:
+    """The same for a plan; no budget if its law has no variance."""
+    lack = ""
+    if not math.isfinite(plan.law.sd):
+        lack = "the stated error law has no variance, so least-squares selection has no footing"
+    return _judged(lack, plan, None, budget, stress)
+
+
+def _judged(
+    lack: str, case: Case | Plan, diagnosis: Diagnosis | None, budget: Budget,
+    stress: Stress | None,
+) -> Verdict:  # fmt: skip
     if lack:
         return Verdict(answer=NONE, cover="none", reasons=(_sentence(lack),))
     answer = standing(budget.allowed, budget.asked)
@@ -71,7 +87,9 @@ def _sentence(text: str) -> str:
     return text[0].upper() + text[1:] + "."
 
 
-def _reasons(case: Case, diagnosis: Diagnosis, budget: Budget, stress: Stress | None) -> list[str]:
+def _reasons(
+    case: Case | Plan, diagnosis: Diagnosis | None, budget: Budget, stress: Stress | None
+) -> list[str]:
     limits = {
         "noise": (budget.noise, lambda: _noise_reason(case, budget)),
         "signal": (budget.signal, lambda: _signal_reason(case, budget)),
@@ -87,6 +105,8 @@ def _reasons(case: Case, diagnosis: Diagnosis, budget: Budget, stress: Stress | 
             reasons.append(words())
     if not reasons:
         reasons.append(_nothing_binds(budget))
+    if diagnosis is None:
+        return reasons
     if diagnosis.signal.answer == "dense":
         reasons.append("the signal looks dense, so a budget of columns may be the wrong question")
     if diagnosis.signal.answer == "no signal":
@@ -130,7 +150,7 @@ def chance(value: float, draws: int) -> str:
     return f"{value:.3f}" if value < 0.1 else f"{value:.2f}"
 
 
-def _noise_reason(case: Case, budget: Budget) -> str:
+def _noise_reason(case: Case | Plan, budget: Budget) -> str:
     risk = chance(budget.risk_at_design.value, budget.draws)
     if risk == f"{case.target.risk:.3f}":
         risk = f"{budget.risk_at_design.value:.4f}"
@@ -148,7 +168,7 @@ def _noise_reason(case: Case, budget: Budget) -> str:
     )
 
 
-def _signal_reason(case: Case, budget: Budget) -> str:
+def _signal_reason(case: Case | Plan, budget: Budget) -> str:
     detectable = budget.detectable
     shown = "unknown" if detectable is None else f"{detectable:.3f}"
     return (
@@ -157,7 +177,7 @@ def _signal_reason(case: Case, budget: Budget) -> str:
     )
 
 
-def _stability_reason(case: Case, budget: Budget, stress: Stress | None) -> str:
+def _stability_reason(case: Case | Plan, budget: Budget, stress: Stress | None) -> str:
     if stress is None:
         return "selection is unstable"
     last = next(run for run in reversed(stress.runs) if run.law == "fitted")
@@ -175,7 +195,7 @@ def _stability_reason(case: Case, budget: Budget, stress: Stress | None) -> str:
     )
 
 
-def _sources(case: Case) -> str:
+def _sources(case: Case | Plan) -> str:
     """What sets the fitted errors apart from independent normal ones."""
     if case.law.volatility is None:
         return "tails"

@@ -12,6 +12,8 @@ from scantling.report.sections import heading, listing
 from scantling.report.wording import p_value, paragraph, shortened, table
 
 WORST = 5
+SINGLY = 0.95
+"""Extremal index above which clusters would be of 1.0 or 1.1."""
 
 
 def findings_table(findings: tuple[Finding, ...]) -> list[str]:
@@ -93,11 +95,15 @@ def worth_lines(worth: Worth, rows: int, noun: str, width: int) -> list[str]:
     lines = []
     extremes = worth.extremes
     if extremes is not None:
+        together = (
+            "Extremes come singly"
+            if extremes.index > SINGLY
+            else f"Extremes come in clusters of {1 / extremes.index:.1f} on average"
+        )
         lines += paragraph(
-            f"Extremes come in clusters of {1 / extremes.index:.1f} on average: the"
-            f" {extremes.exceedances:,} largest errors count as {extremes.clusters:.0f} separate"
-            f" events (extremal index {extremes.index:.2f}, 90 % {extremes.low:.2f} to"
-            f" {extremes.high:.2f}; 1: they come singly).",
+            f"{together}: the {extremes.exceedances:,} largest errors count as"
+            f" {extremes.clusters:.0f} separate events (extremal index {extremes.index:.2f}, 90 %"
+            f" {extremes.low:.2f} to {extremes.high:.2f}).",
             width,
         )
     return lines + paragraph(

@@ -7,7 +7,7 @@ import textwrap
 
 from scantling.planning.remedies import Remedy
 from scantling.planning.verdict import BORDERLINE, NONE, WITHIN
-from scantling.report.record import Report
+from scantling.report.record import Budgeted
 from scantling.report.wording import (
     LABEL,
     band,
@@ -23,9 +23,9 @@ REASON_LINES = 3
 SHOWN_REMEDIES = 3
 
 
-def first_screen(report: Report, width: int) -> list[str]:
+def first_screen(report: Budgeted, width: int) -> list[str]:
     """At most twelve lines: verdict, reason, columns, limits, rows, remedies."""
-    title = shortened(report.design.title, width - len("scantling: "))
+    title = shortened(report.title, width - len("scantling: "))
     lines = [f"scantling: {title}"]
     lines += labelled("Verdict", _verdict(report), width)
     lines += _reason(report, width)
@@ -35,7 +35,7 @@ def first_screen(report: Report, width: int) -> list[str]:
     return lines + _remedies(report, width, 12 - len(lines))
 
 
-def _reason(report: Report, width: int) -> list[str]:
+def _reason(report: Budgeted, width: int) -> list[str]:
     text = report.verdict.reasons[0]
     lines = labelled("Because", text, width)
     if len(lines) <= REASON_LINES:
@@ -44,19 +44,19 @@ def _reason(report: Report, width: int) -> list[str]:
     return labelled("Because", body, width)[:REASON_LINES]
 
 
-def _verdict(report: Report) -> str:
+def _verdict(report: Budgeted) -> str:
     """The answer; what covers it is said where there is something to cover."""
     answer = report.verdict.answer
     covered = answer in (WITHIN, BORDERLINE)
     return answer.upper() + (f" (cover: {report.verdict.cover})" if covered else "")
 
 
-def reason_is_cut(report: Report, width: int) -> bool:
+def reason_is_cut(report: Budgeted, width: int) -> bool:
     """Whether the first screen shows the first reason only in part."""
     return len(labelled("Because", report.verdict.reasons[0], width)) > REASON_LINES
 
 
-def _columns(report: Report) -> str:
+def _columns(report: Budgeted) -> str:
     budget = report.budget
     asked = f"{budget.asked:,} asked for; "
     if report.verdict.answer == NONE:
@@ -73,7 +73,7 @@ def _columns(report: Report) -> str:
     return asked + f"{columns(allowed)} allowed (90 % band {band(allowed, budget.asked)})"
 
 
-def _limits(report: Report) -> str:
+def _limits(report: Budgeted) -> str:
     budget = report.budget
     named = {"noise": budget.noise, "signal": budget.signal, "stability": budget.stability}
     together: dict[str, list[str]] = {}
@@ -88,7 +88,7 @@ def _limits(report: Report) -> str:
     return "; ".join([*parts, f"ceiling {rate(budget.ceiling)}"])
 
 
-def _rows(report: Report) -> str:
+def _rows(report: Budgeted) -> str:
     budget = report.budget
     used = f"{budget.rows:,} used"
     if report.verdict.answer == NONE:
@@ -97,11 +97,11 @@ def _rows(report: Report) -> str:
         lost = budget.rows - budget.equivalent_rows
         used += f"; tails cost as much as losing {lost:,} of them"
     if budget.rows_needed is not None:
-        return f"{used}; effects need {count(budget.rows_needed)}"
-    return f"{used}; rows needed unknown" + (f": {budget.rows_note}" if budget.rows_note else "")
+        return f"{used}; needed for all {budget.asked:,}: {count(budget.rows_needed)}"
+    return f"{used}; needed: {budget.rows_note or 'unknown'}"
 
 
-def _remedies(report: Report, width: int, room: int) -> list[str]:
+def _remedies(report: Budgeted, width: int, room: int) -> list[str]:
     helpful = [remedy for remedy in report.remedies if helps(report, remedy)]
     found = helpful[: min(SHOWN_REMEDIES, max(room, 1))]
     if not found:
@@ -121,19 +121,17 @@ def _remedies(report: Report, width: int, room: int) -> list[str]:
     return lines
 
 
-def instead(report: Report) -> str:
-    """Which rows or effects would do where effect size binds and no remedy helps; else empty."""
-    budget = report.budget
-    if not budget.signal.reached or budget.detectable is None:
-        return ""
-    larger = f"effects of {math.ceil(100 * budget.detectable) / 100:.2f} sd show as it is"
-    needed = budget.rows_needed
-    if needed is None or needed <= budget.rows:
-        return larger
-    return f"{count(needed)} rows would detect the effects; {larger}"
+def instead(report: Budgeted) -> str:
+    """Which rows, or which effects where effect size binds, would do without a remedy."""
+    budget, words = report.budget, []
+    if budget.rows_needed is not None and budget.rows_needed > budget.rows:
+        words.append(f"{count(budget.rows_needed)} rows would carry it")
+    if budget.signal.reached and budget.detectable is not None:
+        words.append(f"effects of {math.ceil(100 * budget.detectable) / 100:.2f} sd show as it is")
+    return "; ".join(words)
 
 
-def helps(report: Report, remedy: Remedy) -> bool:
+def helps(report: Budgeted, remedy: Remedy) -> bool:
     """Whether a remedy allows more columns than the design does, or settles more of them."""
     if report.verdict.answer == WITHIN or not remedy.refitted:
         return False

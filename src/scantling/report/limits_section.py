@@ -7,7 +7,7 @@ from scantling.planning.verdict import WITHIN, chance
 from scantling.report.chart import risk_chart
 from scantling.report.document import cautions as all_cautions
 from scantling.report.first_screen import helps, instead, reason_is_cut
-from scantling.report.record import Report
+from scantling.report.record import Budgeted, Report
 from scantling.report.sections import heading, listing
 from scantling.report.wording import (
     band,
@@ -28,7 +28,7 @@ LAW_WORDS = {
 }
 
 
-def limits(report: Report, width: int) -> list[str]:
+def limits(report: Budgeted, width: int) -> list[str]:
     """All limits with their bands, the risk curve, and what the tails cost."""
     budget = report.budget
     asked = many(budget.asked, "column")
@@ -42,8 +42,18 @@ def limits(report: Report, width: int) -> list[str]:
     if ends.low is not None:
         spread = f"{large(ends.low)} {'upwards' if ends.high is None else 'to ' + large(ends.high)}"
     rows.append(["ceiling", rate(ends), spread, "theory, a rate"])
+    proved = budget.assured
+    if proved.columns is not None:
+        ends_of = band(proved, budget.asked)
+        rows.append(["assured", columns(proved), ends_of, "proof, given the law"])
     lines += table(rows)
     lines += paragraph(f"Ceiling: {ends.regime}.", width)
+    if proved.columns is not None:
+        lines += paragraph(
+            "Assured is what is proved at a penalty that still shows the smallest effect, not what"
+            " is so: 0 is common.",
+            width,
+        )
     for name in ("noise", "signal", "stability"):
         limit = getattr(budget, name)
         if limit.columns is None:
@@ -52,10 +62,10 @@ def limits(report: Report, width: int) -> list[str]:
     lines += paragraph(
         f"Break-through risk at {asked}: {chance(risk.value, draws)} (90 % band"
         f" {chance(risk.low, draws)} to {chance(risk.high, draws)}; accepted"
-        f" {report.design.target.risk:g}).",
+        f" {report.target.risk:g}).",
         width,
     )
-    lines += ["", *risk_chart(budget.curve, report.design.target.risk, width), ""]
+    lines += ["", *risk_chart(budget.curve, report.target.risk, width), ""]
     if budget.penalty_ratio is not None:
         cost = f"the work of {count(budget.equivalent_rows)} under normal errors"
         if budget.equivalent_rows == budget.rows:
@@ -71,15 +81,10 @@ def limits(report: Report, width: int) -> list[str]:
             f" tenth.",
             width,
         )
-    needed = count(budget.rows_needed) if budget.rows_needed else f"unknown, {budget.rows_note}"
-    return lines + paragraph(
-        f"Rows needed for the smallest effect at {asked}: {needed}. This covers"
-        " the signal limit only, at the present penalty.",
-        width,
-    )
+    return lines
 
 
-def selection(report: Report, width: int) -> list[str]:
+def selection(report: Budgeted, width: int) -> list[str]:
     """Refits under fresh errors."""
     lines = heading("Selection under fresh errors")
     if report.stress is None:
@@ -97,7 +102,7 @@ def selection(report: Report, width: int) -> list[str]:
             ]
         )
     lines += table(rows)
-    target = report.design.target
+    target = report.target
     relevant = min(target.relevant, report.budget.asked)
     failing = ", ".join(name.replace("_", " ") for name in report.stress.failing)
     met = f"{failing} missed" if failing else "all are met"
@@ -138,12 +143,12 @@ def remedies(report: Report, width: int) -> list[str]:
 def _lead(report: Report) -> str:
     """What the first screen says of remedies, before they are listed."""
     if report.verdict.answer == WITHIN:
-        return "None is needed, as the design is within budget; what each would make of it:"
+        return "No change is needed, as the design is within budget; what each would make of it:"
     tried = len(report.remedies)
     helpful = sum(helps(report, remedy) for remedy in report.remedies)
     if helpful:
         return f"{helpful} of the {tried} computed help{'s' if helpful == 1 else ''}:"
-    words = "The one computed does not help" if tried == 1 else f"None of the {tried} helps"
+    words = "The one computed does not help" if tried == 1 else f"Of {tried} computed not one helps"
     return "; ".join(filter(None, [words, instead(report)])) + "."
 
 
@@ -157,7 +162,7 @@ def _band_words(remedy: Remedy) -> str:
     return ends if remedy.allowed.low is None else f"90 % band {ends}"
 
 
-def reasons(report: Report, width: int) -> list[str]:
+def reasons(report: Budgeted, width: int) -> list[str]:
     """All reasons, the binding one first, where the first screen does not show them all."""
     if len(report.verdict.reasons) == 1 and not reason_is_cut(report, width):
         return []

@@ -6,11 +6,12 @@ from dataclasses import dataclass
 from typing import Protocol
 
 from scantling.design.series_file import SeriesFile
-from scantling.design.spec import Design
+from scantling.design.spec import Design, TargetSpec
 from scantling.diagnostics.battery import Diagnosis
 from scantling.diagnostics.series import SeriesDiagnosis
 from scantling.law.families import ErrorLaw
 from scantling.planning.budget import Budget
+from scantling.planning.plan import Plan
 from scantling.planning.remedies import Remedy
 from scantling.planning.stress import Stress
 from scantling.planning.verdict import Verdict
@@ -134,6 +135,70 @@ class SeriesReport:
     """What is needed to run it again."""
 
 
+class Budgeted(Protocol):
+    """What the first screen and the sections on limits, selection and rows need."""
+
+    @property
+    def title(self) -> str:
+        """Shown first."""
+
+    @property
+    def target(self) -> TargetSpec:
+        """What has to be achieved."""
+
+    @property
+    def budget(self) -> Budget:
+        """All limits."""
+
+    @property
+    def stress(self) -> Stress | None:
+        """Refits."""
+
+    @property
+    def remedies(self) -> tuple[Remedy, ...]:
+        """What would help."""
+
+    @property
+    def verdict(self) -> Verdict:
+        """The judgement."""
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class PlanReport:
+    """The budget of a design on paper."""
+
+    title: str
+    """Shown first."""
+    plan: Plan
+    """What was stated."""
+    facts: tuple[str, ...]
+    """The statement in sentences, for the reader."""
+    budget: Budget
+    """All limits, and what they allow."""
+    stress: Stress | None
+    """None where selection was not simulated."""
+    verdict: Verdict
+    """What the report says first."""
+    receipt: Receipt
+    """What repeats the run."""
+
+    @property
+    def target(self) -> TargetSpec:
+        """What the design has to achieve."""
+        return self.plan.target
+
+    @property
+    def remedies(self) -> tuple[Remedy, ...]:
+        """None are computed for columns on paper."""
+        return ()
+
+    def to_json(self) -> str:
+        """The JSON twin: schema scantling-budget/1."""
+        from scantling.report.budget_document import plan_json
+
+        return plan_json(self)
+
+
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Report:
     """One design, vetted."""
@@ -156,6 +221,16 @@ class Report:
     """What the report says first."""
     receipt: Receipt
     """What repeats the run."""
+
+    @property
+    def title(self) -> str:
+        """Of the design."""
+        return self.design.title
+
+    @property
+    def target(self) -> TargetSpec:
+        """What the design has to achieve."""
+        return self.design.target
 
     def to_json(self) -> str:
         """The JSON twin of the text report: schema scantling-report/1, keys stable."""

@@ -106,16 +106,16 @@ def signal(report: Diagnosed, width: int) -> list[str]:
     lines += paragraph(f"{SHAPES[shape.answer]}: {shape.reason}.", width)
     if rule is not None:
         together = (
-            "and the two large on the same rows, at worst"
+            "as large on the same rows, the worst case,"
             if rule.shared_volatility
-            else "and the two not shown to be large on the same rows,"
+            else "as unconnected"
         )
         lines += paragraph(
-            f"Powers: with index {index(rule.column_index)} for the median raw column,"
-            f" {index(rule.error_index)} for the errors, {together} the score of a column's power"
-            f" has a variance {_power(rule.keeping_variance)} and a fourth moment"
-            f" {_power(rule.keeping_fourth)}; a point estimate, by the rule that a power divides"
-            " the index.",
+            f"Powers: a power divides a column's index; the median raw column (index"
+            f" {index(rule.column_index)}) and the errors ({index(rule.error_index)}) taken"
+            f" {together} leave scores a variance {_power(rule.keeping_variance)} and a fourth"
+            f" moment {_power(rule.keeping_fourth)}. This is by point estimates: each column's own"
+            " answer is above and in the JSON.",
             width,
         )
     return lines

@@ -86,14 +86,14 @@ def tails(report: Diagnosed, width: int) -> list[str]:
     lines += _group_words("Columns", found.columns, report.read.names, width)
     weights = {w: found.weight.count(w) for w in ("heavy", "sparse", "light")}
     lines += paragraph(
-        f"Of {many(len(found.weight), 'column')} {weights['heavy']:,} are shown to have heavy"
-        f" tails ({TOGETHER}), {weights['sparse']:,} are sparse (under 5 % of rows active), where"
-        f" a single error decides, and {weights['light']:,} are neither.",
+        f"Shown to have heavy tails: {weights['heavy']:,} of {many(len(found.weight), 'column')}"
+        f" ({TOGETHER}); sparse, so that single errors decide (under 5 % of rows active):"
+        f" {weights['sparse']:,}; neither: {weights['light']:,}.",
         width,
     )
-    lines += _side_counts("columns", found.columns, width)
+    lines += _side_counts("column", found.columns, width)
     lines += _group_words("Scores (column times error)", found.scores, report.read.names, width)
-    lines += _side_counts("scores", found.scores, width)
+    lines += _side_counts("score", found.scores, width)
     refused = found.columns.tails.refused
     if refused:
         names = tuple(f"{report.read.names[j]} ({why})" for j, why in refused)
@@ -131,10 +131,10 @@ def _side_counts(noun: str, group: SeriesGroup, width: int) -> list[str]:
         plain = ~group.borrowed
     left, right = (int(np.sum(plain & (group.sides.heavier == sign))) for sign in (-1, 1))
     if not left + right:
-        return paragraph(f"None of the {noun} is clearly heavier on one side ({TOGETHER}).", width)
+        return paragraph(f"No {noun} is clearly heavier on one side ({TOGETHER}).", width)
     return paragraph(
-        f"By side, {left:,} of the {noun} are clearly heavier on the left and {right:,} on the"
-        f" right ({TOGETHER}).",
+        f"Of the {noun}s {left:,} clearly heavier on the left, {right:,} on the right"
+        f" ({TOGETHER}).",
         width,
     )
 

@@ -15,6 +15,10 @@ ALWAYS = (
     " model-risk procedures, rules and licensed judgement that apply where it is used.",
     "Limits hold for the fitted error law, these columns and the effects assumed in [target].",
 )
+PLAN_CAUTIONS = (
+    ALWAYS[0],
+    "Limits hold for the stated laws of errors and columns; nothing was checked against data.",
+)
 LABEL = 12
 """Width of the labels on the first screen."""
 

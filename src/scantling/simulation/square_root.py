@@ -16,6 +16,7 @@ from __future__ import annotations
 from typing import Any
 
 import numpy as np
+from scipy.linalg import solve_triangular
 
 from scantling.core.checks import between
 from scantling.core.record import FloatArray
@@ -70,17 +71,25 @@ def square_root_batch(X: Any, Y: Any, penalty: Any, *, tol: float = 1e-6) -> Flo
 
 
 def solve_square_root(
-    X: FloatArray, Y: FloatArray, weights: FloatArray, *, tol: float
+    X: FloatArray,
+    Y: FloatArray,
+    weights: FloatArray,
+    *,
+    tol: float,
+    start: FloatArray | None = None,
 ) -> tuple[FloatArray, FloatArray]:
-    """Return coefficients (p, R) and gaps (R,) over rms(y); the trusted kernel."""
+    """Return coefficients (p, R) and gaps (R,) over rms(y); the trusted kernel.
+
+    `start` holds coefficients at a nearby penalty; mostly zero.
+    """
     p, replicates = X.shape[1], Y.shape[1]
     power = (Y**2).mean(axis=0)
     coefficients, gaps = np.zeros((p, replicates)), np.zeros(replicates)
     rows = np.flatnonzero(power > 0)
     upper, lower = np.full(replicates, np.inf), np.zeros(replicates)
     high, low = power[rows], np.zeros(len(rows))
-    s = high.copy()
-    start = np.zeros((p, len(rows)))
+    start = np.zeros((p, len(rows))) if start is None else start[:, rows]
+    s = np.maximum(((Y[:, rows] - X @ start) ** 2).mean(axis=0), 1e-12 * high)
     for turn in range(ROUNDS):
         inner = INNER_TOL if turn < 6 else 1e-3 * INNER_TOL
         own, y = weights[:, rows], Y[:, rows]
@@ -116,19 +125,29 @@ def _same_columns(
     for r in range(Y.shape[1]):
         on = np.flatnonzero(B[:, r])
         signed = weights[on, r] * np.sign(B[on, r])
-        left, size, right = np.linalg.svd(X[:, on] / np.sqrt(n), full_matrices=False)
-        keep = size > size.max(initial=0.0) * 1e-12
-        left, size, right = left[:, keep], size[keep], right[keep]
-        fit = left.T @ (Y[:, r] / np.sqrt(n))
-        push = (right @ signed) / size
+        y = Y[:, r] / np.sqrt(n)
+        basis, inverse = _orthogonal(X[:, on] / np.sqrt(n))
+        fit, push = basis.T @ y, inverse.T @ signed
         rate = float(push @ push)
-        rest = float(((Y[:, r] / np.sqrt(n) - left @ fit) ** 2).sum())
+        rest = float(((y - basis @ fit) ** 2).sum())
         if rest <= 1e-24 * float(Y[:, r] @ Y[:, r]) / n:
-            exact[on, r] = right.T @ (fit / size)
+            exact[on, r] = inverse @ fit
         elif rate < 1:
             guess[r] = rest / (1 - rate)
-            exact[on, r] = right.T @ ((fit - np.sqrt(guess[r]) * push) / size)
+            exact[on, r] = inverse @ (fit - np.sqrt(guess[r]) * push)
     return exact, guess
+
+
+def _orthogonal(Z: FloatArray) -> tuple[FloatArray, FloatArray]:
+    """Return Q with orthonormal columns and T with Z T = Q, of Z's rank."""
+    if Z.shape[1] <= Z.shape[0]:
+        basis, upper = np.linalg.qr(Z)
+        size = np.abs(upper.diagonal())
+        if size.min(initial=np.inf) > 1e-8 * size.max(initial=0.0):
+            return basis, np.asarray(solve_triangular(upper, np.eye(len(size))))
+    left, size, right = np.linalg.svd(Z, full_matrices=False)
+    keep = size > size.max(initial=0.0) * 1e-12
+    return left[:, keep], right[keep].T / size[keep]
 
 
 def _values(

@@ -102,7 +102,7 @@ def test_leverage_is_found_where_it_is() -> None:
     # Tolerances of about three standard errors at n = 3000.
     assert (fit.alpha, fit.leverage, fit.beta) == pytest.approx((0.03, 0.15, 0.85), abs=0.06)
     assert fit.persistence == pytest.approx(fit.alpha + fit.leverage / 2 + fit.beta)
-    assert [name for name, _ in fit.candidates][0] == "gjr, normal"
+    assert fit.candidates[0][0] == "gjr, normal"
     criteria = [value for _, value in fit.candidates]
     assert criteria == sorted(criteria)
     assert len(criteria) == 4

@@ -210,6 +210,21 @@ def test_a_stated_volatility_is_run_over_the_errors_at_hand() -> None:
     assert fit_column_law(X, errors, law, time_ordered=True).exponent.mean() > 0.7
 
 
+def test_own_lags_hold_errors_linked_to_the_columns_too() -> None:
+    rng = np.random.default_rng(21)
+    mix = np.sqrt(4 / rng.chisquare(4, (602, 1)))
+    errors = mix * rng.standard_normal((602, 1))
+    others = mix * rng.standard_normal((602, 30))
+    X = lagged(np.column_stack([errors, others]), 2)
+    fitted = fit_column_law(
+        X, errors[2:, 0], student_law(4), time_ordered=True, lag_groups=lag_origins(62, 2)
+    )
+    assert fitted.copula.scale.errors > 0.25
+    D, E = draw_joint(fitted, student_law(4), 600, 2, rng)
+    assert same(D[5:, 0], E[4:-1, 0]) > 0.98
+    assert same(D[5:, 0], E[4:-1, 1]) < 0.2
+
+
 def test_errors_are_untouched_where_nothing_is_shared() -> None:
     rng = np.random.default_rng(9)
     X = unit(rng.standard_normal((200, 20)))

@@ -202,6 +202,8 @@ def test_more_rows_that_do_not_allow_all_are_the_best_of_them():
     assert last.name == "4 times the rows (2,000)" and not last.refitted
     assert more_rows_remedy([entry(250, 5), entry(500, 20)], CASE) is None
     assert more_rows_remedy([], CASE) is None
+    # Where more rows do not help, as with scores of three moments, they are no remedy.
+    assert more_rows_remedy([entry(500, 20), entry(1000, 20), entry(2000, 15)], CASE) is None
     unknown = RowsEntry(rows=1000, noise=9, signal=None, stability=None, allowed=None, risk=0.1)
     found = more_rows_remedy([unknown], CASE)
     assert (found.allowed.columns, found.answer) == (None, "borderline")

@@ -61,7 +61,9 @@ class Made:
     """As much of a report as the first screen reads."""
 
     design: Any
-    """Its title."""
+    """As asked for."""
+    title: str = "Cargo"
+    """Shown first."""
     verdict: Verdict
     """What is said first."""
     budget: Budget
@@ -146,8 +148,9 @@ def test_only_remedies_whose_selection_was_simulated_are_shown():
     assert helps(made, sure)
     assert not helps(made, unsure)
     assert line(made, "Remedies") == "1. a: within, all 100"
-    assert line(report(remedies=(unsure,)), "Remedies") == "none of the 1 computed helps"
-    assert line(report(), "Remedies") == "none computed applies"
+    rows = "; 1,900 rows would carry it"
+    assert line(report(remedies=(unsure,)), "Remedies") == "none of the 1 computed helps" + rows
+    assert line(report(), "Remedies") == "none computed applies" + rows
     assert line(report("within budget", remedies=(sure,)), "Remedies") == "none needed"
     worse = remedy_of(40.0, 10, 60)
     assert not helps(made, worse)
@@ -157,7 +160,7 @@ def test_only_remedies_whose_selection_was_simulated_are_shown():
 def test_where_none_helps_rows_and_effects_that_would_do_are_said():
     unsure = remedy_of(math.inf, refitted=False)
     weak = budget_of(signal=limit(40.0), detectable=0.2201)
-    words = "none of the 1 computed helps; 1,900 rows would detect the effects; effects of 0.23 sd"
+    words = "none of the 1 computed helps; 1,900 rows would carry it; effects of 0.23 sd"
     made = report(budget=weak, remedies=(unsure,))
     assert line(made, "Remedies") == words + " show as it is"
     assert len(first_screen(made, 80)) <= 12
@@ -165,8 +168,9 @@ def test_where_none_helps_rows_and_effects_that_would_do_are_said():
     for needed in (None, 800):
         weak = budget_of(signal=limit(40.0), rows_needed=needed)
         assert instead(report(budget=weak)) == "effects of 0.22 sd show as it is"
-    # Nor anything where effect size is not what binds.
-    assert instead(report()) == ""
+    # Nor effects where their size is not what binds.
+    assert instead(report()) == "1,900 rows would carry it"
+    assert instead(report(budget=budget_of(noise=limit(40.0), rows_needed=None))) == ""
 
 
 def section(made):
@@ -179,10 +183,13 @@ def test_the_section_agrees_with_the_first_screen():
     unsure = remedy_of(60.0, name="b", refitted=False, dropped=(3, 5))
     assert "1 of the 2 computed helps:" in section(report(remedies=(sure, unsure)))
     within = section(report("within budget", remedies=(sure,)))
-    assert "None is needed, as the design is within budget; what each would make of it:" in within
+    assert (
+        "No change is needed, as the design is within budget; what each would make of it:" in within
+    )
     weak = report(budget=budget_of(signal=limit(40.0)), remedies=(unsure,))
     assert f"The one computed does not help; {instead(weak)}." in section(weak)
-    assert "None of the 2 helps." in section(report(remedies=(unsure, unsure)))
+    text = section(report(remedies=(unsure, unsure)))
+    assert "Of 2 computed not one helps; 1,900 rows would carry it." in text
     assert "None computed applies." in section(report())
 
 

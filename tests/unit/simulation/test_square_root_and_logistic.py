@@ -6,6 +6,7 @@ import numpy as np
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
+from scipy.optimize import linprog
 from scipy.special import expit, ndtri
 from sklearn.linear_model import Lasso, LogisticRegression
 
@@ -111,10 +112,14 @@ def test_square_root_at_the_highest_penalty_and_just_below():
     assert ((below != 0).sum(axis=0) == 1).all()
 
 
-def test_a_perfect_fit_is_refused_or_reaches_its_gap():
+def test_below_some_penalty_the_answer_is_the_perfect_fit_of_least_norm():
+    # There the loss is zero, and what is left is min ||b||_1 with Xb = y, a linear programme.
     X, Y = design(20, 60, 2, seed=4)
-    with pytest.raises(NotConvergedError, match="a larger penalty"):
-        square_root_batch(X, Y, 1e-6, tol=1e-9)
+    B = square_root_batch(X, Y, 1e-3, tol=1e-9)
+    np.testing.assert_allclose(X @ B, Y, atol=1e-8)
+    for r in range(2):
+        exact = linprog(np.ones(120), A_eq=np.hstack([X, -X]), b_eq=Y[:, r], bounds=(0, None))
+        assert np.abs(B[:, r]).sum() == pytest.approx(exact.fun, rel=1e-7)
 
 
 @settings(max_examples=60, deadline=None, derandomize=True)

@@ -1,0 +1,188 @@
+"""From budget records to JSON: the part of the report, and the document of a plan."""
+
+from __future__ import annotations
+
+import json
+from typing import TYPE_CHECKING, Any
+
+from scantling.core.estimate import Estimate
+from scantling.planning.budget import Allowed, Budget
+from scantling.planning.limit import Limit
+from scantling.planning.rows import RowsEntry
+from scantling.planning.stress import StressRun
+from scantling.report.values import UNBOUNDED, noted, number
+
+if TYPE_CHECKING:
+    from scantling.report.record import PlanReport, Receipt
+
+SCHEMA = "scantling-budget/1"
+
+
+def estimate(value: Estimate) -> dict[str, Any]:
+    """value, low, high."""
+    return {k: number(getattr(value, k)) for k in ("value", "low", "high")}
+
+
+def beyond(limit: Limit | Allowed) -> str:
+    """Why there is no upper end: the limit is unknown, or beyond the columns examined."""
+    return limit.note if limit.columns is None else "not reached"
+
+
+def _limit(limit: Limit) -> dict[str, Any]:
+    out: dict[str, Any] = {"columns": limit.columns}
+    if limit.note:
+        out["columns_note"] = limit.note
+    out |= noted("low", limit.low, limit.note)
+    out |= noted("high", limit.high, beyond(limit))
+    return out | {"mode": limit.mode}
+
+
+def budget_part(budget: Budget) -> dict[str, Any]:
+    """All limits and what follows from them."""
+    rate = budget.ceiling
+    allowed = budget.allowed
+    unknown = budget.signal.note or "unknown"
+    return {
+        "noise": _limit(budget.noise),
+        "signal": _limit(budget.signal),
+        "stability": _limit(budget.stability),
+        "geometry": _limit(budget.geometry),
+        "assured": _limit(budget.assured),
+        "ceiling": {
+            **noted("columns", rate.columns, rate.regime),
+            **({"columns_note": "at least"} if rate.capped else {}),
+            **noted("low", rate.low, rate.regime),
+            **noted("high", rate.high, UNBOUNDED),
+            "mode": "rate",
+            "regime": rate.regime,
+        },
+        "allowed": {
+            "columns": allowed.columns,
+            **({"columns_note": allowed.note} if allowed.note else {}),
+            **noted("low", allowed.low, allowed.note),
+            **noted("high", allowed.high, beyond(allowed)),
+        },
+        **(
+            {"binding": budget.binding}
+            if budget.binding
+            else {"binding": None, "binding_note": allowed.note}
+        ),
+        "risk_at_design": estimate(budget.risk_at_design),
+        "curve": [
+            {"p": c.p, "risk": number(c.risk), "low": number(c.low), "high": number(c.high)}
+            for c in budget.curve
+        ],
+        **noted("penalty_ratio", budget.penalty_ratio, "no quantile of the largest score found"),
+        **noted("equivalent_rows", budget.equivalent_rows, "the penalty ratio is unknown"),
+        **noted("rows_needed", budget.rows_needed, budget.rows_note or "unknown"),
+        **_rows(budget),
+        "effects": [
+            {
+                "smallest_effect": number(entry.smallest_effect),
+                "relevant": entry.relevant,
+                "allowed_columns": entry.allowed,
+                **(
+                    {"binding": entry.binding}
+                    if entry.binding
+                    else {"binding": None, "binding_note": "at least"}
+                ),
+            }
+            for entry in budget.effects
+        ],
+        **noted("detectable_effect", budget.detectable, unknown),
+        **noted("detectable_effect_worst_tenth", budget.detectable_worst, unknown),
+    }
+
+
+def _rows(budget: Budget) -> dict[str, Any]:
+    """Rows needed by limit, and the table by rows."""
+    plan = budget.rows_plan
+    if plan is None:
+        note = budget.rows_note or "not searched"
+        return {"rows_needed_by": None, "rows_needed_by_note": note, "by_rows": []}
+    return {
+        "rows_needed_by": {
+            name: noted("rows", needed.rows, needed.note or "unknown")
+            for name, needed in plan.by_limit
+        },
+        "rows_searched_to": plan.searched_to,
+        "by_rows": [_entry(entry) for entry in plan.table],
+    }
+
+
+def _entry(entry: RowsEntry) -> dict[str, Any]:
+    note = "not simulated, or the law has no variance"
+    return {
+        "rows": entry.rows,
+        **noted("noise", entry.noise, note),
+        **noted("signal", entry.signal, note),
+        **noted("stability", entry.stability, note),
+        **noted("allowed_columns", entry.allowed, note),
+        "risk": number(entry.risk),
+        "mode": "generative",
+    }
+
+
+def run_part(run: StressRun) -> dict[str, Any]:
+    """One set of refits."""
+    return {
+        "rows": run.rows,
+        "columns": run.columns,
+        "law": run.law,
+        "mode": run.mode,
+        "replicates": run.replicates,
+        "stability": estimate(run.stability),
+        "power": estimate(run.power),
+        "false_share": estimate(run.false_share),
+        "exact": number(run.exact),
+        "mean_size": number(run.mean_size),
+    }
+
+
+def receipt_part(receipt: Receipt) -> dict[str, Any]:
+    """The receipt's keys."""
+    return {
+        "version": receipt.version,
+        "seed": receipt.seed,
+        "inputs": dict(receipt.inputs),
+        "libraries": dict(receipt.libraries),
+        "command": receipt.command,
+        "wall_clock": {"seconds": receipt.seconds, "finished": receipt.finished},
+    }
+
+
+def plan_json(report: PlanReport) -> str:
+    """The document of a budget on paper, as text."""
+    plan = report.plan
+    document = {
+        "schema": SCHEMA,
+        "title": report.title,
+        "design": {
+            "rows": plan.rows,
+            "columns": plan.columns,
+            "loss": plan.loss,
+            "rule": plan.rule,
+            "facts": list(report.facts),
+            "target": {
+                key: number(getattr(plan.target, key))
+                for key in (
+                    "relevant", "smallest_effect", "risk", "power", "stability", "false_share",
+                )
+            },
+            "replicates": plan.replicates,
+        },
+        "law": {
+            "family": plan.law.family,
+            "parameters": {k: number(v) for k, v in plan.law.parameters.items()},
+            **noted("tail_index", plan.law.tail_index, "no finite index"),
+        },
+        "budget": budget_part(report.budget),
+        "stress": [] if report.stress is None else [run_part(run) for run in report.stress.runs],
+        "verdict": {
+            "answer": report.verdict.answer,
+            "cover": report.verdict.cover,
+            "reasons": list(report.verdict.reasons),
+        },
+        "receipt": receipt_part(report.receipt),
+    }  # fmt: skip
+    return json.dumps(document, indent=2, ensure_ascii=False, allow_nan=False) + "\n"
