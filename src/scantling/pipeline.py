@@ -153,7 +153,7 @@ def _judged(
         signal=signal(case, noise.fitted, noise.drawn),
         stability=limits[0],
         geometry=limits[1],
-        ceiling=ceiling(diagnosis, case.rows, case.rule, case.loss),
+        ceiling=ceiling(diagnosis, case.rows, case.loadings, case.loss),
         assured=ahead.assured,
         plan=ahead.rows,
         effects=ahead.effects,
@@ -270,6 +270,8 @@ def make_case(design: Design, columns: Columns, residuals: Residuals, law: Error
         target=design.target,
         rule=design.penalty.rule,
         loss=design.penalty.loss,
+        adaptive=design.penalty.adaptive,
+        time_ordered=columns.time_ordered,
         replicates=design.simulation.replicates,
         seed=design.simulation.seed,
     )

@@ -260,8 +260,8 @@ def _reading(groups: list[tuple[str, Sheet]]) -> list[str]:
     ]
     gain, gain_error = everything.ratio("tool", "bootstrap")
     clear = everything.over | everything.within
-    wrong = float(everything.wrong.sum() / clear.sum())
-    undecided = float(everything.undecided.sum() / clear.sum())
+    wrong = float(everything.wrong.sum() / max(1, clear.sum()))
+    undecided = float(everything.undecided.sum() / max(1, clear.sum()))
     covered = float(everything.covered.mean())
     lines = [
         f"- Mean absolute error of the predicted risk {everything.misses('tool').mean():.4f},"

@@ -140,6 +140,9 @@ class Journal:
                 block = block[self._file.write(block) :]
             self._end = self._file.tell()
         except OSError as fault:
+            # What was written of the block before the fault counts, up to its last whole entry.
+            self._file.seek(0)
+            self._end = _entries(self._file)[1]
             raise ResourceError(f"{self.path}: cannot be written ({fault.strerror})") from fault
 
     def close(self) -> None:

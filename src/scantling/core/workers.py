@@ -233,12 +233,18 @@ class Cluster:
 def grouped(units: Numbered, workers: int, each: float) -> list[Numbered]:
     """Units in tasks of about TASK seconds, yet at least four for each worker.
 
-    The last come first: where units grow, the largest must not begin when all else is done.
+    The last come first, the first of them alone: where units grow, the largest must neither begin
+    when all else is done nor share a task.
     """
-    most = max(1, len(units) // (4 * max(1, workers)))
-    size = max(1, min(most, int(TASK / each) if each > 0 else most))
+    alone = 2 * max(1, workers)
     backwards = units[::-1]
-    return [backwards[start : start + size] for start in range(0, len(units), size)]
+    rest = max(0, len(units) - alone)
+    most = max(1, rest // alone)
+    size = max(1, min(most, int(TASK / each) if each > 0 else most))
+    return [
+        *([unit] for unit in backwards[:alone]),
+        *(backwards[start : start + size] for start in range(alone, len(units), size)),
+    ]
 
 
 def compute(shipped: Shipped, units: Numbered) -> Numbered:

@@ -18,6 +18,7 @@ from scantling.core.record import FloatArray, read_only
 from scantling.core.streams import stream
 from scantling.diagnostics.dependence import TIE, permuted
 from scantling.diagnostics.structure import column_blocks
+from scantling.diagnostics.variance import co_movement
 
 CAPPED_SHARE = 0.01
 """Share of the largest sizes that are set to the size they exceed, in column and errors alike:
@@ -29,6 +30,9 @@ INTERVAL = 0.90
 DRAWS = 199
 GROUPS = 20
 """Stretches of rows that the jackknife leaves out in turn."""
+WIDEST = math.log(1000)
+"""Largest step of the interval in ln ratio: a column whose active rows all lie in one stretch
+says nothing of how sure its ratio is."""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -89,7 +93,7 @@ def column_co_movement(
     """
     width = X.shape[1]
     size = capped_squares(e[:, None], np.zeros(1, dtype=bool))[:, 0]
-    out = {name: np.empty(width) for name in ("ratio", "low", "high", "measured", "p_value")}
+    out = {name: np.empty(width) for name in ("ratio", "low", "high", "p_value")}
     excess = np.empty(width)
     largest = np.full(DRAWS, -np.inf)
     edges = np.arange(GROUPS + 1) * e.size // GROUPS
@@ -103,9 +107,9 @@ def column_co_movement(
         mean = size @ squares / e.size
         ratio = np.sqrt(mean)
         spread = step * _jackknife_error(X[:, here], e, uncapped[here], edges)
+        spread = np.minimum(spread, WIDEST)
         out["ratio"][here] = ratio
         out["low"][here], out["high"][here] = ratio * np.exp(-spread), ratio * np.exp(spread)
-        out["measured"][here] = np.sqrt((X[:, here] ** 2 * (e**2)[:, None]).mean(axis=0) / e.var())
         drawn = shuffled @ squares / e.size
         reached = (drawn >= mean * (1 - TIE)).sum(axis=0)
         out["p_value"][here] = (1 + reached) / (DRAWS + 1)
@@ -116,6 +120,7 @@ def column_co_movement(
     beyond = (largest[:, None] >= excess[None, :] - TIE).sum(axis=0)
     return CoMovement(
         **{name: read_only(values) for name, values in out.items()},
+        measured=read_only(co_movement(X, e)),
         family_p_value=read_only((1 + beyond) / (DRAWS + 1)),
     )
 
@@ -140,4 +145,5 @@ def capped_squares(columns: FloatArray, uncapped: np.ndarray) -> FloatArray:
     cap = np.partition(size, len(size) - 1 - rank, axis=0)[len(size) - 1 - rank]
     free = uncapped | (cap <= 0)
     squares = np.minimum(size, np.where(free, np.inf, cap)) ** 2
-    return np.asarray(squares / squares.mean(axis=0))
+    mean = squares.mean(axis=0)
+    return np.asarray(squares / np.where(mean > 0, mean, 1.0))

@@ -122,7 +122,7 @@ def sample_scores(
     mapper: Mapper,
 ) -> tuple[ScoreSample, ...]:
     """Simulate the scores of all columns under each law, on the present rows."""
-    squares = case.X**2 if case.rule == "self-normalised" else None
+    squares = case.X**2 if case.loadings == "self-normalised" else None
     units = [(k, b, stop - start) for k in range(len(laws))
              for b, (start, stop) in enumerate(blocks(draws, BLOCK))]  # fmt: skip
 
@@ -148,7 +148,7 @@ def score_block(
     """
     robust = case.loss in ROBUST
     scores = loss_scores(errors, case.loss)
-    ratios, loadings = score_ratios(case.X, scores, case.rule, squares)
+    ratios, loadings = score_ratios(case.X, scores, case.loadings, squares)
     return ScoreBlock(
         found=passers(ratios, floor),
         loadings=loadings,
@@ -297,7 +297,7 @@ def needed_penalty(found: Passers | Ranked, p: int, risk: float) -> float:
 
 def _penalty_ratio(case: Case, fitted: ScoreSample, twin: ScoreSample) -> float | None:
     p, risk = case.columns, case.target.risk
-    if case.rule == "self-normalised":
+    if case.loadings == "self-normalised":
         # Loadings over the typical error, so that a law with rare huge errors is not taken for
         # a quiet one.
         needed = [

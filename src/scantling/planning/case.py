@@ -16,6 +16,12 @@ LAW_DRAWS = 50
 """Draws of the law's parameters behind every band."""
 
 
+def loadings_of(rule: str) -> str:
+    """plug-in (equal) | self-normalised: a rule that looks for its penalty has no level of its own,
+    so noise is measured against the plug-in one."""
+    return "self-normalised" if rule == "self-normalised" else "plug-in"
+
+
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Case:
     """One design as the simulations see it; a remedy is another case."""
@@ -33,7 +39,7 @@ class Case:
     target: TargetSpec
     """What has to be achieved."""
     rule: str
-    """plug-in | self-normalised."""
+    """Penalty rule of the refits, one of `simulation.rules.RULES`."""
     loss: str = "squared"
     """squared | huber | absolute | square-root; its score takes the errors' place."""
     replicates: int
@@ -43,6 +49,16 @@ class Case:
 
     mode: str = "conditional"
     """conditional: the present columns and volatility path; generative: both drawn."""
+
+    adaptive: bool = False
+    """Whether a second, reweighted lasso follows in the refits."""
+    time_ordered: bool = False
+    """Whether rows follow one another in time: folds of cross-validation are then blocks."""
+
+    @property
+    def loadings(self) -> str:
+        """Loadings of the penalty level that noise is measured against."""
+        return loadings_of(self.rule)
 
     def draw_errors(self, law: ErrorLaw, size: int, rng: np.random.Generator) -> FloatArray:
         """Draws of errors for these columns, shape (n, size), not centred."""

@@ -32,6 +32,11 @@ class FittedColumns:
         """Never taken for granted."""
         return False
 
+    @property
+    def divisible(self) -> bool:
+        """No: lags of one series are drawn together."""
+        return False
+
     def _setting(self, rows: int, seed: int, table: int) -> Setting:
         return self.law.setting(self.errors_law, rows, stream(seed, "column setting", table))
 

@@ -55,6 +55,10 @@ class ColumnSource(Protocol):
         """Whether columns are independent and alike, so that many in one table do the work of
         several tables."""
 
+    @property
+    def divisible(self) -> bool:
+        """Whether blocks of a table's columns may be drawn one by one."""
+
     def errors(self, law: ErrorLaw, rows: int, draws: int, seed: int, table: int) -> FloatArray:
         """Draws of errors that share a table of columns, shape (rows, draws)."""
 
@@ -75,6 +79,11 @@ class StatedColumns:
     def independent(self) -> bool:
         """Unless they are correlated."""
         return self.correlation == 0
+
+    @property
+    def divisible(self) -> bool:
+        """Always: what they share is the factor."""
+        return True
 
     def errors(self, law: ErrorLaw, rows: int, draws: int, seed: int, table: int) -> FloatArray:
         """Independent of the columns."""
@@ -151,7 +160,7 @@ def generative_scores(
         Their loadings have shape (1,): columns are alike.
     """
     parts = tables_of(rows, columns, draws, tables)
-    pieces = blocks(columns, max(1, BLOCK_CELLS // rows))
+    pieces = pieces_of(source, rows, columns)
     units = [(table, *piece) for table in range(len(parts)) for piece in pieces]
 
     def one(unit: tuple[int, int, int]) -> tuple[ScorePiece, ...]:
@@ -178,6 +187,11 @@ def generative_scores(
         )
         for k in range(len(laws))
     )
+
+
+def pieces_of(source: ColumnSource, rows: int, columns: int) -> list[tuple[int, int]]:
+    """Blocks of columns (start, stop) that a table is drawn in."""
+    return blocks(columns, max(1, BLOCK_CELLS // rows) if source.divisible else columns)
 
 
 def _pieces(
@@ -272,7 +286,7 @@ def table_of(source: ColumnSource, *, rows: int, columns: int, seed: int, table:
     """One whole table, standardised on the sample: shape (rows, columns)."""
     pieces: Iterator[FloatArray] = (
         source.columns(rows, a, b, seed, table)
-        for a, b in blocks(columns, max(1, BLOCK_CELLS // rows))
+        for a, b in pieces_of(source, rows, columns)
     )
     X = np.concatenate(list(pieces)).T
     X = X - X.mean(axis=0)

@@ -14,12 +14,13 @@ from scantling.errors import InputError
 from scantling.law.families import ErrorLaw
 from scantling.law.notation import parse_law
 from scantling.planning.budget import Budget
+from scantling.planning.case import loadings_of
 from scantling.planning.ceiling import Ceiling, rate_by_regime
 from scantling.planning.generative import StatedColumns
 from scantling.planning.plan import Plan
 from scantling.planning.stated import budget_of
 from scantling.simulation.loss_scores import LOSSES
-from scantling.simulation.scores import RULES
+from scantling.simulation.rules import RULES
 
 MOST_EXPLAINED = 0.9
 """Relevant columns are never taken to explain more of the response by themselves."""
@@ -59,7 +60,8 @@ def budget(
         Of the columns; default: that of the errors, as lags of the response would have.
     correlation : float
         Between every two columns, 0 to below 1.
-    rule : {'plug-in', 'self-normalised'}
+    rule : {'plug-in', 'self-normalised', 'bic', 'extended-bic', 'cross-validated', \
+'cross-validated-sparse'}
     loss : {'squared', 'huber', 'absolute', 'square-root'}
     relevant : int
         Columns expected to matter.
@@ -169,7 +171,7 @@ def stated_ceiling(plan: Plan) -> Ceiling:
     errors, drawn = plan.law.tail_index, plan.source.law.tail_index
     return rate_by_regime(
         rows=plan.rows,
-        rule=plan.rule,
+        rule=loadings_of(plan.rule),
         loss=plan.loss,
         heavy_share=float(math.isfinite(drawn)),
         errors=(errors,) * 3,

@@ -17,7 +17,7 @@ from scantling.core.streams import Mapper, stream
 from scantling.design.spec import TargetSpec
 from scantling.law.families import ErrorLaw
 from scantling.planning.breakthrough import CurvePoint, ScoreSample, curve_points, needed_penalty
-from scantling.planning.case import LAW_DRAWS, Case, column_grid
+from scantling.planning.case import LAW_DRAWS, Case, column_grid, loadings_of
 from scantling.planning.generative import (
     MODE,
     TABLES,
@@ -67,7 +67,7 @@ class Plan:
     target: TargetSpec
     """What has to be achieved."""
     rule: str
-    """plug-in | self-normalised."""
+    """Penalty rule of the refits."""
     loss: str
     """squared | huber | absolute | square-root."""
     response_sd: float
@@ -107,7 +107,7 @@ def plan_scores(
     """Scores under the plan's law and, if asked for, its Gaussian twin."""
     laws = (plan.law, twin_of(plan.law)) if twin else (plan.law,)
     return generative_scores(
-        plan.source, laws, rows=plan.rows, columns=plan.columns, draws=draws, rule=plan.rule,
+        plan.source, laws, rows=plan.rows, columns=plan.columns, draws=draws, rule=loadings_of(plan.rule),
         loss=plan.loss, floor=plan.floor, seed=plan.seed, mapper=mapper,
         tables=tables_for(plan.source, plan.columns, tables),
     )  # fmt: skip

@@ -63,7 +63,7 @@ class Prepared:
     def of(cls, case: Case, floor: float, precision: Any) -> Prepared:
         """The case in a precision."""
         X = np.asarray(case.X, dtype=precision)
-        squares = X**2 if case.rule == "self-normalised" else None
+        squares = X**2 if case.loadings == "self-normalised" else None
         return cls(case=replace(case, X=X), squares=squares, floor=floor)
 
     @property

@@ -27,7 +27,7 @@ REFITTED = 3
 """Remedies for which selection is simulated too: the best by noise and signal."""
 BYTES = 24
 """Of memory for each value of a changed design's columns while it is computed."""
-REFITTED_LOSSES = ("squared", "square-root")
+REFITTED_LOSSES = ("squared", "square-root", "huber")
 """Losses whose selection is simulated."""
 STRESS_POINTS = 4
 PAIRED = 4

@@ -10,7 +10,7 @@ from scantling.errors import InputError
 from scantling.planning.assured import assured
 from scantling.planning.breakthrough import BreakThrough, ScoreSample, needed_penalty
 from scantling.planning.budget import Budget, assemble
-from scantling.planning.case import LAW_DRAWS
+from scantling.planning.case import LAW_DRAWS, loadings_of
 from scantling.planning.ceiling import Ceiling
 from scantling.planning.effects import EffectEntry, effects_table
 from scantling.planning.generative import BLOCK_CELLS, CELLS, MODE
@@ -118,7 +118,7 @@ def budget_of(
 
 def _ratio(plan: Plan, fitted: ScoreSample, twin: ScoreSample) -> float | None:
     p, risk = plan.columns, plan.target.risk
-    if plan.rule == "self-normalised":
+    if loadings_of(plan.rule) == "self-normalised":
         needed = [
             needed_penalty(s.found, p, risk) * float(s.loadings[0]) / score_size(plan, s)
             for s in (fitted, twin)

@@ -15,6 +15,8 @@ from scantling.law.families import ErrorLaw
 from scantling.planning.case import Case, column_grid
 from scantling.planning.limit import Limit, make_limit
 from scantling.simulation.lasso import solve_batch
+from scantling.simulation.loadings import BoolArray
+from scantling.simulation.rules import LEVEL_RULES, select_batch
 from scantling.simulation.scores import centre, penalty_level
 from scantling.simulation.selection import (
     SelectionSummary,
@@ -114,19 +116,29 @@ def refits(
     effect = case.target.smallest_effect * case.response_sd
     mean = X[:, :relevant] @ (effect * chosen.signs[:relevant])
     errors = np.concatenate([_scaled_errors(case, law, size, rng) for law, rng in laws], axis=1)
-    level = float(penalty_level(p, case.target.risk)) / math.sqrt(case.rows)
-    if case.rule == "self-normalised":
-        weights = level * np.sqrt((X**2).T @ errors**2 / case.rows)
-    else:
-        weights = level * np.sqrt((errors**2).mean(axis=0))
-    coefficients, _ = solve_batch(X, mean[:, None] + errors, weights, tol=TOLERANCE)
     truth = np.zeros(p, dtype=bool)
     truth[:relevant] = True
-    selected = (coefficients != 0).T
+    selected = _selected(case, X, mean[:, None] + errors, errors)
     return [
         summarise_selection(selected[start:stop], truth)
         for start, stop in blocks(len(selected), size)
     ]
+
+
+def _selected(case: Case, X: FloatArray, Y: FloatArray, errors: FloatArray) -> BoolArray:
+    """Columns the design's own rule and loss select for each response, shape (R, p)."""
+    if case.rule not in LEVEL_RULES or case.loss != "squared" or case.adaptive:
+        found = select_batch(
+            X, Y, rule=case.rule, loss=case.loss, errors=errors, risk=case.target.risk,
+            adaptive=case.adaptive, time_ordered=case.time_ordered, seed=case.seed, tol=TOLERANCE,
+        )  # fmt: skip
+        return np.asarray(found.selected.T)
+    level = float(penalty_level(X.shape[1], case.target.risk)) / math.sqrt(case.rows)
+    if case.rule == "self-normalised":
+        weights = level * np.sqrt((X**2).T @ errors**2 / case.rows)
+    else:
+        weights = level * np.sqrt((errors**2).mean(axis=0))
+    return np.asarray(solve_batch(X, Y, weights, tol=TOLERANCE)[0] != 0).T
 
 
 def _scaled_errors(case: Case, law: ErrorLaw, size: int, rng: np.random.Generator) -> FloatArray:

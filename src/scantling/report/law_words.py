@@ -14,6 +14,8 @@ NAMES = {
 }  # fmt: skip
 SURE = 1.645
 """Standard errors from which on the law is called clearly better than the next."""
+CLEAR = 2.0
+"""Units of log-likelihood a clear lead has besides: nested laws differ little and steadily."""
 REJECTED = 0.05
 
 
@@ -50,7 +52,7 @@ def _next_in_line(family: str, fit: Fit) -> list[str]:
             f"Next is {other}, which does better by {measured}, too little to give up"
             f" {NAMES[family]}."
         ]
-    if size > SURE * fit.margin_error:
+    if size > max(CLEAR, SURE * fit.margin_error):
         return [f"It beats the next, {other}, clearly: by {measured}."]
     return [f"The sample hardly tells it from the next, {other}: it leads by {measured}."]
 

@@ -30,6 +30,9 @@ from scantling.simulation.huber import grown, solve_huber
 SHRINK = 0.25
 """Factor from one threshold to the next."""
 
+WARM = 0.1
+"""Factor of the first threshold where there is a start."""
+
 STEPS = 9
 """Most thresholds; below the last rounding decides. What is left is degenerate (tied rows,
 dependent columns) and goes to the simplex method."""
@@ -80,9 +83,18 @@ def absolute_batch(
 
 
 def solve_absolute(
-    X: FloatArray, Y: FloatArray, weights: FloatArray, *, tol: float, intercept: bool
+    X: FloatArray,
+    Y: FloatArray,
+    weights: FloatArray,
+    *,
+    tol: float,
+    intercept: bool,
+    start: tuple[FloatArray, FloatArray] | None = None,
 ) -> tuple[FloatArray, FloatArray, FloatArray]:
-    """Return coefficients (p, R), intercepts (R,) and gaps (R,); the trusted kernel."""
+    """Return coefficients (p, R), intercepts (R,) and gaps (R,); the trusted kernel.
+
+    `start` holds coefficients and intercepts at a nearby penalty.
+    """
     p, replicates = X.shape[1], Y.shape[1]
     weights = np.broadcast_to(weights, (p, replicates))
     A = np.median(Y, axis=0) if intercept else np.zeros(replicates)
@@ -92,6 +104,8 @@ def solve_absolute(
     gaps[rows] = np.inf
     smooth = np.zeros((p, len(rows))), A[rows]
     tau = 0.5 * unit[rows]
+    if start is not None:
+        smooth, tau = (start[0][:, rows], start[1][rows]), WARM * tau
     for _ in range(STEPS):
         if not rows.size:
             break

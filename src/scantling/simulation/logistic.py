@@ -148,9 +148,7 @@ def _fit_one(
         slope, tilt = Z.T @ error / n, float(error.mean())
         weighted = Z * curve[:, None]
         mass, cross = float(curve.mean()), weighted.sum(axis=0) / n
-        violation = np.where(
-            b != 0, np.abs(slope - weights * np.sign(b)), np.abs(slope) - weights
-        )
+        violation = np.where(b != 0, np.abs(slope - weights * np.sign(b)), np.abs(slope) - weights)
         if abs(tilt) <= slack and not (violation > slack).any():
             break
         system = weighted.T @ Z / n - np.outer(cross, cross) / mass

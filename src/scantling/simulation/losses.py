@@ -63,7 +63,8 @@ def walk_loss(
             B, A, _ = solve_huber(X, Y, weights, tau, tol=tol, intercept=True, start=start)
             start = B, A
         elif loss == "absolute":
-            B, A, _ = solve_absolute(X, Y, weights, tol=tol, intercept=True)
+            B, A, _ = solve_absolute(X, Y, weights, tol=tol, intercept=True, start=start)
+            start = B, A
         else:
             B, A, _ = solve_logistic(X, Y, weights, tol=tol)
         yield B, A
@@ -97,19 +98,27 @@ def deviance(mean_loss: FloatArray, rows: int, loss: str) -> FloatArray:
 
 
 def null_scores(X: FloatArray, Y: FloatArray, loss: str, tau: FloatArray) -> FloatArray:
-    """Return the scores at the best constant, shape (p, R): no column enters above the largest.
-
-    For Huber's loss the constant is taken at the median, which is close enough to start a grid.
-    """
-    if loss in ("huber", "absolute"):
-        rest = Y - np.median(Y, axis=0)
-        rest = np.sign(rest) if loss == "absolute" else np.clip(rest, -tau, tau)
+    """Return the scores at the best constant, shape (p, R): no column enters above the largest."""
+    if loss == "absolute":
+        rest = np.sign(Y - np.median(Y, axis=0))
         rest = rest - rest.mean(axis=0)
+    elif loss == "huber":
+        rest = np.clip(Y - huber_location(Y, tau), -tau, tau)
     else:
         rest = Y - Y.mean(axis=0)
         if loss == "square-root":
             rest = rest / np.maximum(np.sqrt((rest**2).mean(axis=0)), 1e-300)
     return np.asarray(X.T @ (rest / len(X)))
+
+
+def huber_location(Y: FloatArray, tau: FloatArray) -> FloatArray:
+    """Return the constant with the least Huber loss for each response, by bisection."""
+    low, high = Y.min(axis=0), Y.max(axis=0)
+    for _ in range(60):
+        middle = 0.5 * (low + high)
+        above = np.clip(Y - middle, -tau, tau).mean(axis=0) > 0
+        low, high = np.where(above, middle, low), np.where(above, high, middle)
+    return np.asarray(0.5 * (low + high))
 
 
 def error_scores(errors: FloatArray, loss: str, tau: FloatArray) -> FloatArray:

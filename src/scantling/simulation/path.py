@@ -69,9 +69,7 @@ def lasso_path_batch(X: Any, Y: Any, penalties: Any, *, tol: float = 1e-6) -> Fl
             f" fit in {MEMORY_BOUND // 2**21} MB; fewer of either are needed"
         )
     out = np.zeros(shape)
-    for step, first, _, _, gaps in walk_path(
-        columns, responses, grid, tol=tol, out=out
-    ):
+    for step, first, _, _, gaps in walk_path(columns, responses, grid, tol=tol, out=out):
         worst = int(np.argmax(gaps))
         if not gaps[worst] <= tol:
             raise NotConvergedError(
@@ -132,9 +130,7 @@ def walk_path(
         sets = WorkingSets(problem, None)
         for step in range(len(level)):
             gaps = np.zeros(last - first)
-            coefficients = (
-                np.zeros((p, last - first)) if out is None else out[step, :, first:last]
-            )
+            coefficients = np.zeros((p, last - first)) if out is None else out[step, :, first:last]
             sets.resume(level[step] * own)
             # The gradient moves about as fast as the penalty: the strong rule.
             after = level[min(step + 1, len(level) - 1)]
@@ -156,7 +152,6 @@ def _grid(penalties: Any, replicates: int) -> FloatArray:
     rises = np.argwhere(np.diff(grid, axis=0) > 0)
     if rises.size:
         raise InputError(
-            "penalties: none may be larger than the one before;"
-            f" number {rises[0][0] + 2} is"
+            f"penalties: none may be larger than the one before; number {rises[0][0] + 2} is"
         )
     return np.broadcast_to(grid, (len(grid), replicates))

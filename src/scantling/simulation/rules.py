@@ -34,7 +34,7 @@ from scantling.core.streams import blocks, stream
 from scantling.errors import InputError
 from scantling.simulation.arguments import columns_and_responses, per_response
 from scantling.simulation.lasso import BLOCK_CELLS
-from scantling.simulation.loadings import BoolArray, adaptive_loadings
+from scantling.simulation.loadings import BoolArray, adaptive_loadings, refit_batch
 from scantling.simulation.losses import (
     LOSSES,
     deviance,
@@ -53,8 +53,10 @@ GRID_POINTS = 50
 GRID_RATIO = 0.05
 """Penalties of the grid, and the last over the first."""
 
-PATIENCE = 10
-"""A grid is left once no response has improved for so many points (common practice)."""
+PATIENCE = 20
+"""A response is done once it has not improved for so many points (common practice, no source).
+
+Wide enough for the hump of the extended criterion between nothing and the relevant columns."""
 
 HUBER_WIDTH = 1.345 / 0.6745
 """Default threshold over the median absolute error; Huber (1964), Annals of Mathematical
@@ -131,7 +133,8 @@ def select_batch(
         Threshold of Huber's loss; 1.99 median absolute errors (deviations of the
         response where no errors are given) by default.
     adaptive : bool
-        Whether a second fit follows, with loadings from the first; squared loss.
+        Whether a second fit follows, with loadings from least squares on the columns
+        the first selects; squared loss.
     folds : int
         Folds of cross-validation, 2 to n.
     time_ordered : bool
@@ -163,7 +166,7 @@ def select_batch(
     settings = Settings(
         rule=rule, loss=loss, risk=risk, folds=fold_of_rows(n, folds, time_ordered, seed), tol=tol
     )
-    scale = columns.std(axis=0)[:, None]
+    middle, scale = columns.mean(axis=0), columns.std(axis=0)[:, None]
     scale[scale == 0] = 1.0
     parts = []
     for first, last in blocks(replicates, max(BLOCK_CELLS // p, 16)):
@@ -171,7 +174,9 @@ def select_batch(
         part = columns, responses[:, some], None if noise is None else noise[:, some]
         found = _select(*part, settings, thresholds[some], scale)
         if adaptive:
-            factor = adaptive_loadings(found.coefficients * scale, found.penalties)
+            # Least squares on the first selection: the lasso's own coefficients are too small.
+            first_fit = refit_batch(columns - middle, part[1] - part[1].mean(0), found.selected)
+            factor = adaptive_loadings(first_fit * scale, found.penalties)
             found = _select(*part, settings, thresholds[some], scale, factor)
         parts.append(found)
     return Selections(
@@ -266,7 +271,7 @@ def _by_criterion(
         value = deviance(mean, n, settings.loss) + k * np.log(n)
         if settings.rule == "extended-bic":
             value += 2.0 * (gammaln(p + 1) - gammaln(k + 1) - gammaln(p - k + 1))
-        better = (value < best) & (k <= n // 2)
+        better = (value < best) & (k <= n // 2) & (since < PATIENCE)
         best[better], since[better] = value[better], 0
         B[:, better], A[better], penalties[better] = b[:, better], a[better], penalty[better]
         since[~better] += 1
@@ -302,6 +307,7 @@ def _cross_validate(
             ]
         )
         mean = (rows * fold).sum(axis=0) / rows.sum()
+        mean[since >= PATIENCE] = np.inf
         means.append(mean)
         spreads.append(fold.std(axis=0, ddof=1) / np.sqrt(len(names)))
         better = mean < best

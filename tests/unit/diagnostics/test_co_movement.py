@@ -123,3 +123,13 @@ def test_how_many_columns_are_worked_on_at_once_does_not_matter(
     parts = found(X, e)
     for name in ("ratio", "p_value", "family_p_value"):
         assert getattr(parts, name) == pytest.approx(getattr(whole, name), rel=1e-12)
+
+
+def test_a_column_active_in_one_stretch_has_the_widest_interval() -> None:
+    rng = np.random.default_rng(8)
+    pair = np.zeros(200)
+    pair[[3, 4]] = 1, -1
+    X = standard(np.column_stack([pair, rng.standard_normal(200)]))
+    ours = found(X, rng.standard_t(3, 200), free=(0,))
+    assert ours.high[0] / ours.ratio[0] == pytest.approx(1000)
+    assert all(np.isfinite(getattr(ours, name)).all() for name in ("ratio", "low", "high"))

@@ -57,9 +57,7 @@ def test_every_point_agrees_with_lars_and_coordinate_descent(n, p, ratio, df):
             single = LassoLars(alpha=grid[step, r], fit_intercept=False).fit(X, Y[:, r])
             np.testing.assert_allclose(ours[step, :, r], single.coef_, atol=1e-6)
             single = Lasso(alpha=grid[step, r], fit_intercept=False, tol=1e-14, max_iter=10**6)
-            np.testing.assert_allclose(
-                ours[step, :, r], single.fit(X, Y[:, r]).coef_, atol=1e-6
-            )
+            np.testing.assert_allclose(ours[step, :, r], single.fit(X, Y[:, r]).coef_, atol=1e-6)
 
 
 def test_points_agree_with_one_penalty_at_a_time_on_badly_scaled_columns():

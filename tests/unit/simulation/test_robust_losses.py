@@ -259,9 +259,7 @@ def test_answers_move_with_the_response():
     X, Y = design(60, 40, 3, seed=8)
     penalty, tau = huber_penalty(X, Y, 1.0, 0.3), 1.0
     B, A = huber_batch(X, Y, penalty, tau=tau, tol=1e-12)
-    moved, level = huber_batch(
-        X, 7.0 - 100.0 * Y, 100.0 * penalty, tau=100.0 * tau, tol=1e-12
-    )
+    moved, level = huber_batch(X, 7.0 - 100.0 * Y, 100.0 * penalty, tau=100.0 * tau, tol=1e-12)
     np.testing.assert_allclose(moved, -100.0 * B, atol=1e-5)
     np.testing.assert_allclose(level, 7.0 - 100.0 * A, atol=1e-5)
     share = sign_penalty(X, Y, 0.3)
@@ -323,9 +321,7 @@ def test_line_search_finds_the_lowest_point():
         r, u = y - Z @ b, Z @ move
 
         def value(t, b=b, move=move, Z=Z, y=y, w=w, tau=tau):
-            return huber_objective(
-                Z, y[:, None], w[:, None], tau, (b + t * move)[:, None], 0.0
-            )[0]
+            return huber_objective(Z, y[:, None], w[:, None], tau, (b + t * move)[:, None], 0.0)[0]
 
         if value(1e-7) > value(0.0):
             move, u = -move, -u
