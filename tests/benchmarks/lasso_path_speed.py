@@ -39,14 +39,13 @@ def by_path(X: FloatArray, Y: FloatArray, grid: FloatArray, tol: float) -> Float
     """scikit-learn's coordinate descent along each grid."""
     columns, gram = np.asfortranarray(X), X.T @ X
     scores = np.ascontiguousarray((X.T @ Y).T)
-    out = np.empty((len(grid), X.shape[1], Y.shape[1]))
+    out = np.empty((Y.shape[1], X.shape[1], len(grid)))
     for r, y in enumerate(np.ascontiguousarray(Y.T)):
-        _, coefficients, _ = enet_path(
+        _, out[r], _ = enet_path(
             columns, y, l1_ratio=1.0, alphas=grid[:, r], precompute=gram, Xy=scores[r],
             copy_X=False, check_input=False, tol=tol / 2, max_iter=100_000,
         )  # fmt: skip
-        out[:, :, r] = coefficients.T
-    return out
+    return out.transpose(2, 1, 0)
 
 
 def by_lars(X: FloatArray, Y: FloatArray, grid: FloatArray, tol: float) -> FloatArray:

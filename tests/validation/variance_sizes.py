@@ -3,9 +3,10 @@
     python tests/validation/variance_sizes.py --out reports/validation/variance_sizes.md
 
 Three standard normal columns; errors of three laws, two of them without a fourth moment; tests
-see what the tool gives them: residuals of the pilot's regression on the columns, out of fold, and
-for co-movement those on all rows, over sqrt(1 - leverage). Permutation tests draw 199 here, for
-speed, where the tool draws 999 (199 for co-movement): their sizes are exact either way.
+see what the tool gives them: residuals of the pilot's regression on the columns, out of fold; for
+co-movement those on all rows, over sqrt(1 - leverage); for Koenker's and White's tests those of
+least squares on all rows. Permutation tests draw 199 here, for speed, where the tool draws 999
+(199 for co-movement): their sizes are exact either way.
 """
 
 from __future__ import annotations
@@ -30,7 +31,13 @@ from scantling.diagnostics.dependence import (
     mcleod_li,
     robust_ljung_box,
 )
-from scantling.diagnostics.residuals import FOLDS, fitted_level, fold_labels, student_regression
+from scantling.diagnostics.residuals import (
+    FOLDS,
+    fitted_level,
+    fold_labels,
+    least_squares_left,
+    student_regression,
+)
 from scantling.diagnostics.tail_index import block_length
 from scantling.diagnostics.variance import co_movement_test, glejser_permutation, koenker, white
 
@@ -60,6 +67,8 @@ RIVALS = ("co-movement, out of fold", "co-movement, on the errors themselves")
 NAMES = (CO_MOVEMENT, *TESTS, *RIVALS)
 NEED_FOURTH = ("Ljung-Box, robust", "Koenker", "White", "ARCH-LM", "McLeod-Li")
 """Never relied on where the diagnosis finds no fourth moment, as under both t laws."""
+ON_SQUARES = {"Koenker", "White"}
+"""Given least-squares residuals of all rows."""
 OF_ROWS = {"absolute Ljung-Box, permutation", "Ljung-Box, robust", "Ljung-Box", "ARCH-LM",
            "McLeod-Li"}  # fmt: skip
 OF_LEVELS = {"Ljung-Box, robust", "Ljung-Box"}
@@ -121,7 +130,8 @@ def rejections(law: str, case: str, n: int, replications: int, seed: int) -> dic
         # Where clustering is found, rows are permuted in blocks.
         block = block_length(n) if case.startswith("GARCH") else None
         for name, test in TESTS.items():
-            counts[name] += test(u, Z, number, block).p_value <= 0.05
+            given = least_squares_left(Z, e) if name in ON_SQUARES else u
+            counts[name] += test(given, Z, number, block).p_value <= 0.05
         seen = (fitted_level(Z, e), u, e - e.mean())
         for name, errors in zip((CO_MOVEMENT, *RIVALS), seen, strict=True):
             found = co_movement_test(Z, errors, number, draws=DRAWS, block=block)
@@ -197,7 +207,8 @@ def main() -> None:
         " where the test's own null holds, so that the share is a size. Permutation tests with"
         f" {DRAWS} draws. Errors have unit variance; GARCH shocks are of the same law; residuals"
         " are those of the pilot's t-weighted regression on a constant and three normal columns:"
-        " out of fold, but for co-movement on all rows, over sqrt(1 - leverage).",
+        " out of fold, but for co-movement on all rows, over sqrt(1 - leverage), and for Koenker's"
+        " and White's tests those of least squares on all rows.",
         "",
     ]
     lines += reading(found)

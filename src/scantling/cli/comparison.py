@@ -139,9 +139,9 @@ class _Missing:
 
 def _allowance(found: dict[str, Any]) -> float:
     low, high = found.get("low"), found.get("high")
-    if not (_is_number(low) and _is_number(high)):
-        return 0.0
-    return ERRORS * abs(high - low) / WIDTH
+    if isinstance(low, int | float) and isinstance(high, int | float):
+        return ERRORS * abs(high - low) / WIDTH
+    return 0.0
 
 
 def _is_number(value: Any) -> bool:

@@ -35,7 +35,7 @@ from scantling.diagnostics.moments import (
     interval_answers,
 )
 from scantling.diagnostics.powers import PowerRule, power_rule
-from scantling.diagnostics.residuals import Residuals, levelled_residuals
+from scantling.diagnostics.residuals import Residuals, levelled_residuals, textbook_residuals
 from scantling.diagnostics.second_opinion import Opinion
 from scantling.diagnostics.signal_shape import SignalShape, signal_shape
 from scantling.diagnostics.structure import Structure, column_structure
@@ -333,13 +333,13 @@ def _power_rule(
 def _variance_tests(
     X: FloatArray, residuals: Residuals, level: FloatArray, block: int | None, seed: int
 ) -> tuple[TestResult, ...]:
-    e = np.asarray(residuals.values)
+    e, squares = np.asarray(residuals.values), textbook_residuals(X, residuals)
     suspects = scale_suspects(X, residuals.fitted, residuals.selected)
     return (
         glejser_permutation(e, suspects, seed=seed, block=block),
         co_movement_test(X, level, seed, block=block),
-        koenker(e, suspects),
-        white(e, suspects),
+        koenker(squares, suspects),
+        white(squares, suspects),
     )
 
 

@@ -19,6 +19,7 @@ from scantling.diagnostics.tail_index import (
 )
 from scantling.diagnostics.volatility import Volatility
 from scantling.errors import InputError
+from scantling.law.averaging import open_spread
 from scantling.law.catalogue import CATALOGUE, FAMILIES
 from scantling.law.choice import choose
 from scantling.law.families import ErrorLaw, Fit
@@ -77,7 +78,7 @@ def _chosen(z: FloatArray, tail: TailIndex | None, seed: int, time_ordered: bool
                 ),
             )
         fit = replace(fit, note=f"the {choice.family} law is rejected and {why}")
-    return ErrorLaw(innovation=innovation, spread=innovation.spread(z, seed=seed), fit=fit)
+    return ErrorLaw(innovation=innovation, spread=open_spread(z, choice, seed=seed), fit=fit)
 
 
 def _spliced(z: FloatArray, tail: TailIndex, seed: int) -> ErrorLaw:

@@ -42,6 +42,8 @@ class ShapeSpread:
     """Their probabilities given the sample, summing to 1."""
     log_scale_error: float
     """Standard error of the log scale at given shape."""
+    log_evidence: float = 0.0
+    """Log-likelihood averaged over the shapes before the sample is seen; it compares families."""
 
     @property
     def gammas(self) -> FloatArray:
@@ -196,13 +198,37 @@ class Innovation(ABC):
         return self.fit_rows(samples)
 
 
+def averaged_spread(spreads: list[ShapeSpread], weights: FloatArray) -> ShapeSpread:
+    """Spreads of several families as one, each with its probability; weights sum to 1."""
+    return ShapeSpread(
+        laws=tuple(law for spread in spreads for law in spread.laws),
+        weights=read_only(
+            np.concatenate([w * s.weights for w, s in zip(weights, spreads, strict=True)])
+        ),
+        log_scale_error=float(
+            np.average([spread.log_scale_error for spread in spreads], weights=weights)
+        ),
+    )
+
+
+def single_spread(law: Innovation, values: FloatArray) -> ShapeSpread:
+    """A law whose shape is known: only its scale is open, to about 1/sqrt(2n)."""
+    return ShapeSpread(
+        laws=(law,), weights=read_only(np.ones(1)), log_scale_error=1 / math.sqrt(2 * values.size),
+        log_evidence=float(law.log_density(values).sum()),
+    )  # fmt: skip
+
+
 def grid_spread(
-    laws: list[Innovation], likelihoods: FloatArray, log_scale_error: float
-) -> ShapeSpread:
-    """Laws weighted by their likelihood, flat prior over the grid they stand on."""
-    weight = np.exp(likelihoods - likelihoods.max())
+    laws: list[Innovation], likelihoods: FloatArray, log_scale_error: float,
+    prior: FloatArray | None = None,
+) -> ShapeSpread:  # fmt: skip
+    """Laws weighted by their likelihood and a prior over the grid they stand on (flat if none)."""
+    before = np.ones(len(laws)) if prior is None else prior
+    weight = np.exp(likelihoods - likelihoods.max()) * (before / before.sum())
     return ShapeSpread(
         laws=tuple(laws),
         weights=read_only(weight / weight.sum()),
         log_scale_error=log_scale_error,
+        log_evidence=float(likelihoods.max() + math.log(weight.sum())),
     )

@@ -15,7 +15,7 @@ from scipy.special import gammaln, stdtr
 from scantling.core.record import FloatArray
 from scantling.law.climb import climb
 from scantling.law.innovation import Innovation, Parameter, ShapeSpread, Size, grid_spread
-from scantling.law.student import MOST_DF, fit_student, log_constant
+from scantling.law.student import MOST_DF, PRIOR, fit_student, log_constant
 
 LOW = np.array([-40.0, math.sqrt(0.002), -0.7])
 HIGH = np.array([40.0, math.sqrt(0.45), 0.7])
@@ -137,7 +137,8 @@ class SkewedStudent(Innovation):
         ]
 
     def spread(self, values: FloatArray, *, seed: int) -> ShapeSpread:
-        """Likelihood over 1/df and skew, each at its own most likely scale; flat prior.
+        """Likelihood over 1/df and skew, each at its own most likely scale; prior on 1/df as of
+        the Student t, flat on the skew.
 
         Skew runs over two of its standard errors, about sqrt(1/(3 n)) near 0, either side.
         """
@@ -158,4 +159,9 @@ class SkewedStudent(Innovation):
             for (log_scale,), root, skew in zip(found, roots, skews, strict=True)
         ]
         error = math.sqrt((self.df + 3) / (2 * self.df * values.size))
-        return grid_spread(laws, best, error)
+        centre, width = PRIOR
+        prior = np.exp(-0.5 * ((roots**2 - centre) / width) ** 2)
+        spread = grid_spread(laws, best, error, prior)
+        # The skews looked at are part of those possible before the sample is seen.
+        part = math.log(2 * reach / (HIGH[2] - LOW[2]))
+        return replace(spread, log_evidence=spread.log_evidence + part)

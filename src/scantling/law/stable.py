@@ -158,6 +158,7 @@ class Stable(Innovation):
             laws=tuple(again),
             weights=read_only(np.full(SPREAD_DRAWS, 1 / SPREAD_DRAWS)),
             log_scale_error=0.0,
+            log_evidence=float(self.log_density(values).sum()),
         )
 
 

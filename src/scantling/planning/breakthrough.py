@@ -115,13 +115,16 @@ class BreakThrough:
 
 def sample_scores(
     case: Case,
-    laws: tuple[ErrorLaw, ...],
+    laws: tuple[ErrorLaw | None, ...],
     draws: int,
     floor: float,
     purpose: str,
     mapper: Mapper,
 ) -> tuple[ScoreSample, ...]:
-    """Simulate the scores of all columns under each law, on the present rows."""
+    """Simulate the scores of all columns under each law, on the present rows.
+
+    None stands for all laws the sample leaves open together.
+    """
     squares = case.X**2 if case.loadings == "self-normalised" else None
     units = [(k, b, stop - start) for k in range(len(laws))
              for b, (start, stop) in enumerate(blocks(draws, BLOCK))]  # fmt: skip
@@ -129,7 +132,9 @@ def sample_scores(
     def one(unit: tuple[int, int, int]) -> ScoreBlock:
         k, block, size = unit
         rng = stream(case.seed, purpose, k, block)
-        return score_block(case, centre(case.draw_errors(laws[k], size, rng)), floor, squares)
+        law = laws[k]
+        drawn = case.open_errors(size, rng) if law is None else case.draw_errors(law, size, rng)
+        return score_block(case, centre(drawn), floor, squares)
 
     done = mapper(one, units)
     per_law = len(blocks(draws, BLOCK))
@@ -256,7 +261,7 @@ def break_through(case: Case, mapper: Mapper, *, bands: bool = True) -> BreakThr
     fitted, twin = (
         sample_scores(case, (law,), draws, low_floor, purpose, mapper)[0]
         for law, purpose in (
-            (case.law, "scores, fitted law"),
+            (None, "scores, fitted law"),
             (case.twin, "scores, twin"),
         )
     )

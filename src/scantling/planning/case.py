@@ -66,6 +66,22 @@ class Case:
             return law.draw_given_path(self.rows, size, rng)
         return law.draw((self.rows, size), rng)
 
+    def open_errors(self, size: int, rng: np.random.Generator) -> FloatArray:
+        """Draws of errors shared evenly among the laws the sample leaves open, shape (n, size).
+
+        A risk averaged over them is nearer the truth than that of the fitted law alone; a law
+        stated exactly leaves nothing open.
+        """
+        if self.law.spread is None or not self.law_draws:
+            return self.draw_errors(self.law, size, rng)
+        count = len(self.law_draws)
+        # Whichever the size, laws are taken evenly from all of them.
+        shares = np.bincount(np.arange(size) * count // size, minlength=count)
+        return np.concatenate(
+            [self.draw_errors(law, int(m), rng)
+             for law, m in zip(self.law_draws, shares, strict=True) if m], axis=1
+        )  # fmt: skip
+
     @property
     def rows(self) -> int:
         """n."""

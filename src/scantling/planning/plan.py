@@ -107,8 +107,8 @@ def plan_scores(
     """Scores under the plan's law and, if asked for, its Gaussian twin."""
     laws = (plan.law, twin_of(plan.law)) if twin else (plan.law,)
     return generative_scores(
-        plan.source, laws, rows=plan.rows, columns=plan.columns, draws=draws, rule=loadings_of(plan.rule),
-        loss=plan.loss, floor=plan.floor, seed=plan.seed, mapper=mapper,
+        plan.source, laws, rows=plan.rows, columns=plan.columns, draws=draws,
+        rule=loadings_of(plan.rule), loss=plan.loss, floor=plan.floor, seed=plan.seed, mapper=mapper,
         tables=tables_for(plan.source, plan.columns, tables),
     )  # fmt: skip
 

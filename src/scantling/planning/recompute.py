@@ -108,7 +108,7 @@ def recompute(
     def fitted_block(block: int) -> list[ScoreBlock]:
         start, stop = parts[block]
         rng = stream(first.seed, "scores, fitted law", 0, block)
-        errors = centre(first.draw_errors(first.law, stop - start, rng))
+        errors = centre(first.open_errors(stop - start, rng))
         return [each.scores(errors) for each in exact]
 
     by_block = mapper(fitted_block, range(len(parts)))

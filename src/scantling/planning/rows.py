@@ -250,19 +250,18 @@ def rows_plan(plan: Plan, mapper: Mapper, *, refits: bool, effort: Effort = THOR
         by_limit[name] = _needed(search, name, steps, by_limit)
     wanted = LIMITS if search.refits else LIMITS[:2]
     missing = [name for name in wanted if by_limit[name].rows is None]
-    joint = Needed(rows=None, note="; ".join(f"{n}: {by_limit[n].note}" for n in missing))
+    joint = Needed(rows=None, note="; ".join(by_limit[name].note for name in missing))
     if not missing:
         joint = Needed(rows=max(by_limit[name].rows or 0 for name in wanted))
     fewest = max(FEWEST_ROWS, plan.target.relevant + 2)
     rows = sorted({max(fewest, round(times * plan.rows)) for times in TIMES_ROWS})
     table = tuple(search.entry(n) for n in rows)
-    noise = [entry.noise or 0 for entry in table]
     return RowsPlan(
         needed=joint,
         by_limit=tuple(by_limit.items()),
         searched_to=steps[-1],
         table=table,
-        falls=any(later < 0.9 * earlier for earlier, later in itertools.pairwise(noise)),
+        falls=any(_falls(earlier, later) for earlier, later in itertools.pairwise(table)),
     )
 
 
@@ -279,14 +278,15 @@ def _needed(search: RowSearch, name: str, steps: list[int], found: dict[str, Nee
             return Needed(rows=None, note=found["signal"].note)
         first = next((rows for rows in steps if rows >= signal and search.holds(name, rows)), None)
         if first is None:
-            return Needed(rows=None, note=_none_in_range(search.plan, steps))
+            return Needed(rows=None, note=_none_in_range(search.plan, steps, name))
         before = [rows for rows in steps if rows < first]
         return Needed(rows=fewest_rows(
             lambda rows: search.holds(name, rows), [*before[-1:], first]
         ))  # fmt: skip
     rows = fewest_rows(lambda n: search.holds(name, n), steps)
-    return Needed(rows=rows, note="" if rows else _none_in_range(search.plan, steps))
+    return Needed(rows=rows, note="" if rows else _none_in_range(search.plan, steps, name))
 
 
-def _none_in_range(plan: Plan, steps: list[int]) -> str:
-    return f"more rows do not lift the limit up to {steps[-1] / plan.rows:.3g} times the present"
+def _none_in_range(plan: Plan, steps: list[int], name: str) -> str:
+    times = steps[-1] / plan.rows
+    return f"more rows do not lift the {name} limit (tried up to {times:.3g} times)"

@@ -1,4 +1,4 @@
-"""Signal limit: how many columns leave the smallest effect detectable, and rows needed."""
+"""Signal limit: how many columns leave the smallest effect detectable."""
 
 from __future__ import annotations
 
@@ -13,10 +13,7 @@ from scantling.law.families import ErrorLaw
 from scantling.planning.breakthrough import ScoreSample, needed_penalty
 from scantling.planning.case import Case, column_grid
 from scantling.planning.limit import Limit, last_below, make_limit, missing_limit
-from scantling.simulation.scores import Ranked, penalty_level, ranked
-
-MOST_TIMES_ROWS = 64
-"""Rows needed are searched up to so many times the present rows."""
+from scantling.simulation.scores import Ranked, ranked
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -29,10 +26,6 @@ class Signal:
     """Smallest detectable effect at the present p, median column, in sd of the response."""
     detectable_worst: float | None
     """The same for the worst tenth of columns."""
-    rows_needed: int | None
-    """Rows at which the smallest effect is detectable at the present p."""
-    rows_note: str
-    """Why rows_needed is None; empty otherwise."""
 
 
 def score_deviation(X: FloatArray, law: ErrorLaw, typical_sd: float | None = None) -> FloatArray:
@@ -95,34 +88,21 @@ def signal_limit_of(case: Case, law: ErrorLaw, sample: ScoreSample) -> float:
 
 
 def signal(case: Case, fitted: ScoreSample, drawn: tuple[ScoreSample, ...]) -> Signal:
-    """Signal limit with its band, detectable effects at the present p, and rows needed.
-
-    Rows needed keep the penalty level and loadings of the present sample; only the signal
-    limit is covered.
-    """
+    """Signal limit with its band, and detectable effects at the present p."""
     deviation = sample_deviation(case, case.law, fitted)
     if not np.isfinite(deviation).all():
         reason = "the fitted error law has no variance"
         return Signal(
-            limit=missing_limit(reason), detectable=None, detectable_worst=None,
-            rows_needed=None, rows_note=reason,
-        )  # fmt: skip
+            limit=missing_limit(reason), detectable=None, detectable_worst=None
+        )
     point = signal_limit_of(case, case.law, fitted)
     draws = [
         signal_limit_of(case, law, sample)
         for law, sample in zip(case.law_draws, drawn, strict=False)
     ] or [point]
     effects = detectable_effects(case, fitted, deviation, case.columns)
-    median = float(np.median(effects))
-    level = float(penalty_level(case.columns, case.target.risk))
-    rows = math.ceil(max(case.rows * (median / case.target.smallest_effect) ** 2, 4 * level**2))
-    note = ""
-    if rows > MOST_TIMES_ROWS * case.rows:
-        note = f"not within {MOST_TIMES_ROWS} times the present rows, at the present penalty"
     return Signal(
         limit=make_limit(point, draws, case.columns, mode="conditional"),
-        detectable=median,
+        detectable=float(np.median(effects)),
         detectable_worst=float(np.quantile(effects, 0.9)),
-        rows_needed=None if note else rows,
-        rows_note=note,
     )

@@ -133,15 +133,15 @@ def _ratio(plan: Plan, fitted: ScoreSample, twin: ScoreSample) -> float | None:
 def _signal(plan: Plan, sample: ScoreSample) -> Signal:
     if not math.isfinite(plan.law.sd):
         return Signal(
-            limit=missing_limit(NO_VARIANCE, mode=MODE), detectable=None, detectable_worst=None,
-            rows_needed=None, rows_note=NO_VARIANCE,
-        )  # fmt: skip
+            limit=missing_limit(NO_VARIANCE, mode=MODE), detectable=None, detectable_worst=None
+        )
     point = plan_signal_limit(plan, sample)
     effect = plan_effect(plan, sample, plan.columns)
     return Signal(
         limit=make_limit(point, [point] * LAW_DRAWS, plan.columns, mode=MODE),
-        detectable=effect, detectable_worst=effect, rows_needed=None, rows_note="",
-    )  # fmt: skip
+        detectable=effect,
+        detectable_worst=effect,
+    )
 
 
 def _refitted(plan: Plan, mapper: Mapper, refits: bool) -> tuple[Limit, Limit, Stress | None]:

@@ -127,7 +127,7 @@ def solve_absolute(
         go = gaps[rows] > tol
         rows, tau = rows[go], SHRINK * tau[go]
         smooth = smooth[0][:, go], smooth[1][go]
-    for r in rows:
+    for r in rows.tolist():
         _by_programme(X, Y[:, r] / unit[r], weights[:, r], tol, intercept, r, B, A, gaps, unit[r])
     return B, A, gaps
 

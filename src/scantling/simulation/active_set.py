@@ -148,7 +148,7 @@ def _solve_active(gram: FloatArray, active: BoolArray, wanted: FloatArray) -> Fl
         for r in range(len(gram)):
             on = np.flatnonzero(active[r])
             if on.size:
-                system = gram[r].take(on, 0).take(on, 1)
+                system = gram[r].ravel().take(on[:, None] * gram.shape[1] + on)
                 system.flat[:: on.size + 1] += RIDGE
                 move[r, on] = _solve_one(system, wanted[r, on])
         return move
@@ -167,7 +167,7 @@ def _solve_one(system: FloatArray, wanted: FloatArray) -> FloatArray:
     if fault == 0:
         return np.asarray(solution, dtype=np.float64)
     whole = np.tril(system, -1)
-    return np.linalg.solve(whole + whole.T + np.diag(diagonal), wanted)
+    return np.asarray(np.linalg.solve(whole + whole.T + np.diag(diagonal), wanted))
 
 
 def _line_search(

@@ -117,7 +117,7 @@ def solve_huber(
         rows, slope = rows[rest], slope[:, rest]
         if not rows.size or turn == ROUNDS - 1:
             break
-        for place, r in enumerate(rows):
+        for place, r in enumerate(rows.tolist()):
             before = len(sets[r])
             sets[r] = grown(sets[r], np.abs(slope[:, place]) - weights[:, r], slack[r])
             if turn and len(sets[r]) == before:

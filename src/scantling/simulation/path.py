@@ -68,7 +68,8 @@ def lasso_path_batch(X: Any, Y: Any, penalties: Any, *, tol: float = 1e-6) -> Fl
             f"penalties: {shape[0]} penalties by {shape[1]} columns by {shape[2]} responses do not"
             f" fit in {MEMORY_BOUND // 2**21} MB; fewer of either are needed"
         )
-    out = np.zeros(shape)
+    # Laid out by response, which is how the solver writes; the caller sees (L, p, R).
+    out = np.zeros((shape[0], shape[2], shape[1])).transpose(0, 2, 1)
     for step, first, _, _, gaps in walk_path(columns, responses, grid, tol=tol, out=out):
         worst = int(np.argmax(gaps))
         if not gaps[worst] <= tol:

@@ -14,7 +14,7 @@ from scipy.sparse import csr_array
 
 from scantling.core.record import FloatArray
 from scantling.core.streams import blocks
-from scantling.simulation.active_set import PACKED_ABOVE, BoolArray, solve_together, sweep_together
+from scantling.simulation.active_set import BoolArray, solve_together, sweep_together
 
 IndexArray = NDArray[np.int64]
 
@@ -25,7 +25,7 @@ UNION_COLUMNS = 1500
 """Most columns for which one Gram matrix is shared by several responses."""
 
 SPARSE_SHARE = 0.15
-"""Share of coefficients off zero below which a sparse product is the faster one."""
+"""Share of columns in the working sets below which a sparse product is the faster one."""
 
 BATCH_CELLS = 500_000
 """Cells of the stacked small Gram matrices solved together (4 MB, to stay in cache)."""
@@ -47,6 +47,8 @@ class Problem:
         Mean square of the responses.
     scores : array, shape (p, R)
         X'Y/n.
+    scores_by_row : array, shape (R, p)
+        Their transpose, laid out by response, where the Gram matrix is given.
     gram : array, shape (p, p), or None
         X'X/n, where it is given; the columns then have unit mean square.
     units : array, shape (p,), or None
@@ -67,6 +69,7 @@ class Problem:
         self.scale: FloatArray = np.sqrt(np.einsum("ij,ij->j", X, X) / self.n)
         self.power: FloatArray = np.einsum("ij,ij->j", Y, Y) / self.n
         self.scores: FloatArray = X.T @ (Y / self.n)
+        self.scores_by_row = self.scores if gram is None else np.ascontiguousarray(self.scores.T)
 
     def weight_of(self, columns: IndexArray, rows: IndexArray) -> FloatArray:
         """Return the weights of (column, response) pairs."""
@@ -114,20 +117,24 @@ class WorkingSets:
         """
         problem = self.problem
         owner, column = np.divmod(self.keys, problem.p)
-        union = np.unique(column)
         place = np.zeros(len(problem.power), dtype=np.int64)
         place[rows] = np.arange(len(rows))
-        cell = np.searchsorted(union, column), place[owner]
-        b = np.zeros((len(union), len(rows)))
-        b[cell] = self.values
         floor = problem.weights if ahead is None else ahead
-        at, who, slope, inside = self._pass(rows, union, b, exact, floor)
-        self.slopes = inside[cell]
+        few = len(self.keys) < SPARSE_SHARE * problem.p * len(rows)
+        if problem.gram is not None and few and not exact:
+            at, who, slope, self.slopes = self._pass_gram(rows, place[owner], column, floor)
+        else:
+            union = np.unique(column)
+            b = np.zeros((len(union), len(rows)))
+            cell = np.searchsorted(union, column), place[owner]
+            b[cell] = self.values
+            at, who, slope, inside = self._pass(rows, union, b, exact, floor)
+            self.slopes = inside[cell]
         weight = problem.weight_of(at, rows[who])
         strength = np.abs(slope) / weight
         worst = np.ones(len(rows))
         np.maximum.at(worst, who, strength)
-        objective, gap = self._gap(rows, union, b, inside, 1.0 / worst)
+        objective, gap = self._gap(rows, place[owner], owner, column, 1.0 / worst)
         allowed = slack[rows[who]] * np.sqrt(problem.power[rows[who]]) * problem.scale[at]
         keys = rows[who] * problem.p + at
         enters = np.abs(slope) - weight > allowed
@@ -140,24 +147,54 @@ class WorkingSets:
     def _gap(
         self,
         rows: IndexArray,
-        union: IndexArray,
-        b: FloatArray,
-        inside: FloatArray,
+        place: IndexArray,
+        owner: IndexArray,
+        column: IndexArray,
         shrink: FloatArray,
     ) -> tuple[FloatArray, FloatArray]:
         """Return objectives and gaps of `rows`, the gaps over mean(y^2)/2.
 
-        `inside` is the gradient on the union, `shrink` the factor s that makes the
-        residual dual feasible. With g the gradient, ||y - Xb||^2/n = ||y||^2/n - b'(c + g).
+        `shrink` is the factor s that makes the residual dual feasible. With g the
+        gradient, ||y - Xb||^2/n = ||y||^2/n - b'(c + g).
+        """
+        problem, b, slopes = self.problem, self.values, self.slopes
+        power = problem.power[rows]
+        each = problem.weight_of(column, owner) * np.abs(b)
+
+        def total(terms: FloatArray) -> FloatArray:
+            return np.bincount(place, weights=terms, minlength=len(rows))
+
+        cost = total(each)
+        rest = np.maximum(power - total(b * (problem.scores[column, owner] + slopes)), 0.0) / 2
+        gap = (1.0 - shrink) ** 2 * rest + total(each - shrink[place] * b * slopes)
+        return rest + cost, np.abs(gap) / (power / 2)
+
+    def _pass_gram(
+        self, rows: IndexArray, place: IndexArray, column: IndexArray, floor: FloatArray
+    ) -> tuple[IndexArray, IndexArray, FloatArray, FloatArray]:
+        """Do what `_pass` does, by sparse products with the whole Gram matrix.
+
+        The last item holds the gradients at the keys.
         """
         problem = self.problem
-        power = problem.power[rows]
-        weights = problem.weights[union if len(problem.weights) > 1 else [0]][:, rows]
-        cost = weights * np.abs(b)
-        fitted = (b * (problem.scores[np.ix_(union, rows)] + inside)).sum(axis=0)
-        rest = np.maximum(power - fitted, 0.0) / 2
-        gap = (1.0 - shrink) ** 2 * rest + (cost - shrink * b * inside).sum(axis=0)
-        return rest + cost.sum(axis=0), np.abs(gap) / (power / 2)
+        assert problem.gram is not None
+        begin = np.searchsorted(place, np.arange(len(rows) + 1))
+        inside = np.empty(len(column))
+        found: list[tuple[IndexArray, IndexArray, FloatArray]] = []
+        for first, last in blocks(len(rows), max(PASS_CELLS // problem.p, 1)):
+            keys = slice(begin[first], begin[last])
+            pointer = begin[first : last + 1] - begin[first]
+            some = rows[first:last]
+            shape = last - first, problem.p
+            b = csr_array((self.values[keys], column[keys], pointer), shape=shape)
+            gradient = b @ problem.gram
+            np.subtract(problem.scores_by_row[some], gradient, out=gradient)
+            inside[keys] = gradient[place[keys] - first, column[keys]]
+            flat = np.flatnonzero(np.abs(gradient) > floor[:, some].T)
+            who, at = np.divmod(flat, problem.p)
+            found.append((at, who + first, gradient.ravel()[flat]))
+        at, who, slope = (np.concatenate(part) for part in zip(*found, strict=True))
+        return at, who, slope, inside
 
     def _pass(
         self, rows: IndexArray, union: IndexArray, b: FloatArray, exact: bool, floor: FloatArray
@@ -175,11 +212,7 @@ class WorkingSets:
         fitted: FloatArray | None = None
         if len(union):
             if not exact and self._keep(union, len(rows)):
-                few = np.count_nonzero(b) < SPARSE_SHARE * b.size
-                if problem.gram is not None and few:
-                    fitted = (csr_array(b.T) @ problem.gram[union]).T
-                else:
-                    fitted = self.products[:, np.searchsorted(self.kept, union)] @ b
+                fitted = self.products[:, np.searchsorted(self.kept, union)] @ b
                 inside = problem.scores[np.ix_(union, rows)] - fitted[union]
             else:
                 residual = problem.Y[:, pick] - problem.X[:, union] @ b
@@ -343,12 +376,7 @@ class WorkingSets:
         slot = np.where(real, first[:, None] + offset, first[:, None])
         columns = column[slot]
         local = np.searchsorted(union, columns)
-        if k > PACKED_ABOVE:
-            stack = np.empty((len(rows), k, k))
-            for r, place in enumerate(local):
-                stack[r] = gram.take(place, 0).take(place, 1)
-        else:
-            stack = gram[local[:, :, None], local[:, None, :]]
+        stack = gram.ravel().take(local[:, :, None] * len(gram) + local[:, None, :])
         if not real.all():
             stack *= real[:, :, None] & real[:, None, :]
         stack[:, offset, offset] = 1.0

@@ -13,6 +13,7 @@ from scantling.diagnostics.residuals import (
     fold_labels,
     levelled_residuals,
     student_regression,
+    textbook_residuals,
 )
 from scantling.errors import InputError
 
@@ -183,6 +184,7 @@ def test_a_pilot_that_does_not_help_leaves_residuals_as_they_are() -> None:
     found = fit_pilot((X - X.mean(axis=0)) / X.std(axis=0), y, time_ordered=False, seed=1)
     assert found.explained == 0
     assert np.array_equal(levelled_residuals(X, found), found.values)
+    assert np.array_equal(textbook_residuals(X, found), found.values)
 
 
 def test_a_row_that_a_column_has_for_itself_has_no_residual() -> None:
@@ -192,3 +194,14 @@ def test_a_row_that_a_column_has_for_itself_has_no_residual() -> None:
     found = fitted_level(column, np.random.default_rng(3).standard_normal(50))
     assert np.isfinite(found).all()
     assert abs(found[7] - found.mean()) < 0.2
+
+
+def test_textbook_residuals_are_those_of_least_squares_on_all_rows() -> None:
+    X, y, _ = design(4)
+    found = fit_pilot(X, y, time_ordered=False, seed=1)
+    left = textbook_residuals(X, found)
+    chosen = X[:, list(found.selected)]
+    # Orthogonal to the columns and the constant, and no further from the response than any fit.
+    assert np.abs(chosen.T @ left).max() < 1e-9 * 300
+    assert abs(left.sum()) < 1e-9
+    assert (left**2).sum() < (found.values**2).sum()

@@ -11,6 +11,7 @@ from scantling.planning.breakthrough import BreakThrough, CurvePoint, ScoreSampl
 from scantling.planning.budget import Allowed, assemble, combine, standing
 from scantling.planning.ceiling import rate_by_regime
 from scantling.planning.limit import make_limit, missing_limit
+from scantling.planning.rows import Needed, RowsPlan
 from scantling.planning.signal import Signal
 from scantling.simulation.scores import passers
 
@@ -100,7 +101,7 @@ def test_a_missing_limit_leaves_nothing_allowed_and_nothing_binding():
     assert binding is None
 
 
-def test_assemble_puts_each_figure_in_its_place():
+def assembled(**given):
     sample = ScoreSample(found=passers(np.zeros((2, 2)), 1.0), loadings=np.ones(1))
     noise = BreakThrough(
         noise=limit(30.0, [30.0] * 50),
@@ -111,16 +112,26 @@ def test_assemble_puts_each_figure_in_its_place():
         penalty_ratio=1.25, equivalent_rows=128, worst_columns=(4,), worst_shares=(1.0,),
         fitted=sample, drawn=(),
     )  # fmt: skip
-    found = assemble(
+    given = {"stability": OPEN} | given
+    return assemble(
         rows=200, asked=100, noise=noise,
         signal=Signal(
-            limit=limit(60.0, [20.0] * 50), detectable=0.2, detectable_worst=0.3,
-            rows_needed=350, rows_note="",
+            limit=limit(60.0, [20.0] * 50), detectable=0.2, detectable_worst=0.3
         ),
-        stability=OPEN, geometry=limit(90.0, [90.0] * 50),
+        geometry=limit(90.0, [90.0] * 50),
         ceiling=rate_by_regime(
             rows=200, rule="plug-in", heavy_share=1.0, errors=None, scores=(4.0, 4.0, 4.0)
         ),
+        assured=limit(7.0, [3.0] * 50), **given,
+    )  # fmt: skip
+
+
+def test_assemble_puts_each_figure_in_its_place():
+    found = assembled(
+        plan=RowsPlan(
+            needed=Needed(rows=350), by_limit=(("noise", Needed(rows=350)),), searched_to=800,
+            table=(), falls=False,
+        )
     )  # fmt: skip
     assert (found.asked, found.rows) == (100, 200)
     assert (found.allowed.columns, found.allowed.low, found.allowed.high) == (30, 20, 30)
@@ -131,5 +142,21 @@ def test_assemble_puts_each_figure_in_its_place():
     assert found.geometry.columns == 90  # it never enters what is allowed
     assert found.draws == 2  # of the sample behind the risk
     assert found.ceiling.columns == 200
-    assert found.assured.columns is None
-    assert found.assured.note
+    assert (found.assured.columns, found.assured.low) == (7, 3)
+    assert found.rows_note == ""
+
+
+def test_rows_needed_are_none_where_no_plan_was_made_or_it_found_none():
+    assert assembled().rows_needed is None
+    assert assembled().rows_note == "rows needed were not searched"
+    note = "signal: more rows do not lift the limit up to 64 times the present"
+    without = RowsPlan(
+        needed=Needed(rows=None, note=note), by_limit=(), searched_to=800, table=(), falls=False
+    )
+    assert (assembled(plan=without).rows_needed, assembled(plan=without).rows_note) == (None, note)
+
+
+def test_without_refits_a_missing_stability_limit_is_no_obstacle():
+    missing = missing_limit("selection was not simulated")
+    assert assembled(stability=missing, refits=False).allowed.columns == 30
+    assert assembled(stability=missing).allowed.columns is None

@@ -10,34 +10,33 @@ import pytest
 from scipy.stats import norm
 
 import scantling
-from scantling.core.streams import serial_map, stream
 from scantling.errors import InputError
-from scantling.law.families import normal_law, student_law
-from scantling.planning import paper
-from scantling.planning.paper import budget, simulate, together
+from scantling.law.families import student_law
+from scantling.planning import paper, stated
+from scantling.planning.assured import assured
+from scantling.planning.paper import budget as whole_budget
+from scantling.planning.paper import stated_plan, target_of
+from scantling.planning.plan import plan_noise
+from scantling.planning.stated import draws_of
 from scantling.simulation.scores import passers
 
 SMALL = {"rows": 40, "columns": 30, "law": "student-t:df=3", "replicates": 100}
 
 
-@pytest.mark.parametrize(
-    ("law", "at_50", "at_1000"),
-    [
-        # Plain simulation, 20 000 and 4000 draws of 50 rows with fresh columns of the same law.
-        ("student-t:df=3", 0.0486, 0.103),
-        ("student-t:df=4", 0.0200, 0.0213),
-        ("normal", 0.0069, 0.0005),
-    ],
-)
-def test_risk_at_fifty_rows_against_plain_simulation(law, at_50, at_1000):
-    wide = budget(rows=50, columns=1000, law=law, replicates=2000)
-    assert wide.curve[-1].p == 1000
-    assert wide.risk_at_design.value == pytest.approx(at_1000, abs=0.015)
-    narrow = budget(rows=50, columns=50, law=law, replicates=2000)
-    assert narrow.risk_at_design.value == pytest.approx(at_50, abs=0.015)
-    # Fifty of a thousand alike columns are fifty columns.
-    near = min(wide.curve, key=lambda point: abs(point.p - 50))
-    assert near.risk == pytest.approx(at_50, abs=0.015)
+def budget(**given):
+    """Noise and signal alone, which take a fraction of a second."""
+    return whole_budget(**{"refits": False, "tables": False} | given)
+
+
+def plan_for(rows=40, columns=30, law="student-t:df=3", replicates=100, **given):
+    parts = {"column_law": None, "correlation": 0.0, "rule": "plug-in", "loss": "squared"}
+    target = target_of(
+        relevant=10, smallest_effect=0.15, risk=0.05, power=0.8, stability=0.75, false_share=0.2
+    )
+    return stated_plan(
+        rows=rows, columns=columns, law=law, replicates=replicates, target=target,
+        explained=None, seed=1, **parts | given,
+    )  # fmt: skip
 
 
 def test_heavy_columns_and_not_errors_alone_make_the_risk():
@@ -51,17 +50,54 @@ def test_heavy_columns_and_not_errors_alone_make_the_risk():
     assert safe.risk_at_design.value < 0.01
 
 
-def test_a_budget_on_paper_is_of_noise_and_signal():
+def test_without_refits_a_budget_is_of_noise_and_signal():
     found = budget(rows=400, columns=60, law="student-t:df=5", smallest_effect=0.3)
     assert (found.asked, found.rows) == (60, 400)
     for limit in (found.noise, found.signal, found.stability, found.geometry, found.assured):
         assert limit.mode == "generative"
-    for limit in (found.stability, found.geometry, found.assured):
+    for limit in (found.stability, found.geometry):
         assert limit.columns is None
-        assert limit.note
+        assert limit.note == "selection was not simulated"
     assert found.allowed.columns == min(found.noise.columns, found.signal.columns)
+    assert (found.rows_needed, found.rows_plan, found.effects) == (None, None, ())
     # n^(q/2-1) = 400^1.5 = 8000, q = 5 of the scores of like columns.
     assert found.ceiling.columns == 8000
+
+
+def test_a_whole_budget_has_every_limit_and_both_tables():
+    found = whole_budget(
+        rows=120, columns=12, law="normal", relevant=2, smallest_effect=0.4, replicates=60
+    )
+    limits = (found.noise, found.signal, found.stability, found.geometry, found.assured)
+    assert all(limit.columns is not None and limit.mode == "generative" for limit in limits)
+    assert [entry.rows for entry in found.rows_plan.table] == [60, 120, 240, 480]
+    assert found.rows_needed == found.rows_plan.needed.rows
+    assert len({(e.smallest_effect, e.relevant) for e in found.effects}) == len(found.effects) == 9
+    assert {e.smallest_effect for e in found.effects} == {0.2667, 0.4, 0.6}
+    assert {e.relevant for e in found.effects} == {1, 2, 4}
+    # A normal law is its own twin.
+    assert found.geometry.columns == pytest.approx(found.stability.columns, abs=6)
+
+
+def test_assured_columns_are_those_of_a_drawn_table():
+    given = {"rows": 600, "columns": 40, "law": "laplace", "column_law": "normal"}
+    plan = plan_for(**given)
+    alone = assured(
+        plan.case(40).X, plan.law, (), target=plan.target, response_sd=plan.response_sd,
+        loss="squared", mode="generative",
+    )  # fmt: skip
+    assert budget(**given).assured == alone
+    many = budget(**given | {"columns": 20_000}, smallest_effect=0.6, replicates=50)
+    assert many.assured.columns == 20_000
+    assert not many.assured.reached
+    for change, words in (
+        ({"law": "student-t:df=1.5"}, "variance"),
+        ({"loss": "huber"}, "huber"),
+        ({"law": "normal:alpha=0.1,beta=0.8"}, "volatility"),
+    ):
+        none = budget(**given | change).assured
+        assert none.columns is None
+        assert words in none.note
 
 
 def test_the_detectable_effect_of_normal_errors_by_hand():
@@ -73,20 +109,33 @@ def test_the_detectable_effect_of_normal_errors_by_hand():
     expected = 0.8 * (level + norm.ppf(0.9)) / math.sqrt(500)
     assert found.detectable == pytest.approx(expected, rel=0.01)
     assert found.signal.columns == 100
-    assert found.rows_needed == pytest.approx(500 * (expected / 0.2) ** 2, rel=0.02)
-    tighter = budget(rows=500, columns=100, law="normal", smallest_effect=0.19)
+    tighter = budget(rows=500, columns=100, law="normal", smallest_effect=0.19, explained=0.0)
     small = budget(rows=500, columns=100, law="normal", smallest_effect=0.01)
     assert tighter.signal.reached
-    loading = tighter.detectable * math.sqrt(500) - norm.ppf(0.8)
+    # The loading and the score's sd are both the draw's typical rms.
+    rms = tighter.detectable * math.sqrt(500) / (level + norm.ppf(0.8))
+    assert rms == pytest.approx(1, abs=0.02)
     p = tighter.signal.columns
 
     def effect(p):
-        return (1.1 * norm.isf(0.05 / (2 * p)) * loading / level + norm.ppf(0.8)) / math.sqrt(500)
+        return rms * (1.1 * norm.isf(0.05 / (2 * p)) + norm.ppf(0.8)) / math.sqrt(500)
 
     assert effect(p) <= 0.19 < effect(p + 1)
     assert small.signal.columns == 0
-    assert small.rows_needed is None
-    assert "64 times" in small.rows_note
+
+
+def test_relevant_columns_explain_what_so_many_independent_ones_do():
+    found = budget(**SMALL | {"law": "normal"}, relevant=5, smallest_effect=0.3)
+    # 5 * .3^2 = .45 of the variance.
+    stated_share = budget(
+        **SMALL | {"law": "normal"}, relevant=5, smallest_effect=0.3, explained=0.45
+    )
+    assert found == stated_share
+    # sd(y) = sd(e) / sqrt(1 - share), share at most .9.
+    assert plan_for().response_sd == pytest.approx(1 / math.sqrt(1 - 0.225), rel=1e-12)
+    none = budget(**SMALL, explained=0.0).detectable
+    huge = budget(**SMALL, relevant=100, smallest_effect=1.0).detectable
+    assert huge / none == pytest.approx(math.sqrt(1 - 0.9), rel=1e-12)
 
 
 def test_a_large_accepted_risk_is_still_exact():
@@ -127,24 +176,28 @@ def test_bands_hold_simulation_error_and_shrink_with_it():
     assert many.high - many.low == pytest.approx(3.29 * error, rel=0.4)
 
 
-def test_draws_share_columns_only_where_fresh_ones_cost_too_much():
-    assert together(50, 1000, 400) == 1
-    assert together(500, 1000, 400) == 5  # 80 tables of half a million values
-    assert together(1000, 5000, 400) == 50  # eight tables at least
+def test_more_draws_are_taken_than_asked_where_they_cost_little():
+    # 16 million values: 13 333 draws of 30 by 40, of which ten times the replicates are taken.
+    assert draws_of(plan_for(columns=30)) == 1000
+    assert draws_of(plan_for(rows=100, columns=400)) == 400
+    assert draws_of(plan_for(rows=500, columns=1000)) == 100
+    assert budget(**SMALL).draws == 1000
 
 
 def test_draws_that_share_columns_are_resampled_together():
-    # Four of eight tables break through in each of their ten draws.
+    # Of 4000 independent columns five tables stand for eight; of 30 by 200 each draw has its own.
+    shared, alone = plan_for(4000, 4000), plan_for(30, 200)
     ratios = np.zeros((6, 80))
-    ratios[:, :40] = 9.0
+    ratios[:, :48] = 9.0  # three of the five tables break through in each of their draws
     found = passers(ratios, 1.0)
-    _, shared = paper._noise(found, 10, 0.05, 1)
-    _, alone = paper._noise(found, 1, 0.05, 1)
-    assert shared[-1].risk == alone[-1].risk == 0.5
-    # 90 % of the mean of 8 fair coins lies in 2/8..6/8; of 80, within 1.645 * .056 of a half.
-    assert shared[-1].high - shared[-1].low == pytest.approx(0.5, abs=0.13)
-    assert alone[-1].high - alone[-1].low == pytest.approx(3.29 * math.sqrt(0.25 / 80), rel=0.35)
-    assert all(0 <= point.low <= point.high <= 1 for point in shared)
+    _, by_table = plan_noise(shared, found)
+    _, by_draw = plan_noise(alone, found)
+    assert by_table[-1].risk == by_draw[-1].risk == pytest.approx(0.6)
+    # 5 % and 95 % of the mean of five coins of .6 are 1/5 and 1; of 80, .6 -+ 1.645 * .0548.
+    assert by_table[-1].high - by_table[-1].low == pytest.approx(0.7, abs=0.15)
+    assert by_draw[-1].high - by_draw[-1].low == pytest.approx(0.18, rel=0.35)
+    for points in (by_table, by_draw):
+        assert all(0 <= point.low <= point.risk <= point.high <= 1 for point in points)
 
 
 def test_workers_do_not_matter_and_the_seed_does():
@@ -153,21 +206,6 @@ def test_workers_do_not_matter_and_the_seed_does():
     assert one == budget(**SMALL | {"law": student_law(3, sd=1.0)})
     assert one != budget(**SMALL, seed=2)
     assert scantling.budget(**SMALL) == one
-
-
-def test_the_same_columns_meet_every_law():
-    law = student_law(3, sd=1.0)
-    one, two = simulate(30, 5, (law, normal_law(1.0)), law, "plug-in", 60, 1, serial_map, 0.0)
-    alone = simulate(30, 5, (normal_law(1.0),), law, "plug-in", 60, 1, serial_map, 0.0)[0]
-    np.testing.assert_array_equal(two[0].ratio, alone[0].ratio)
-    assert one[0].draws == 60
-    X = law.draw((30, 5), stream(1, "stated columns", 0))
-    X = X - X.mean(axis=0)
-    e = law.draw((30, 1), stream(1, "stated errors", 0))[:, 0]
-    e = e - e.mean()
-    ratios = np.abs(e @ X) / np.sqrt((X**2).mean(axis=0) * 30 * (e**2).mean())
-    np.testing.assert_allclose(one[0].ratio[one[0].draw == 0], ratios, rtol=1e-10)
-    assert not np.array_equal(one[0].ratio, two[0].ratio)
 
 
 @pytest.mark.parametrize(
@@ -180,7 +218,9 @@ def test_the_same_columns_meet_every_law():
         ("power", 0), ("power", 1), ("power", -0.1),
         ("explained", -0.01), ("explained", 1.0),
         ("smallest_effect", 0), ("smallest_effect", 6), ("smallest_effect", math.inf),
-        ("rule", "bic"), ("rule", None),
+        ("rule", "lasso"), ("rule", None), ("loss", "cubic"), ("loss", None),
+        ("relevant", 0), ("relevant", 2.0), ("correlation", -0.1), ("correlation", 1.0),
+        ("stability", 1.1), ("stability", -0.1), ("false_share", 1.0), ("false_share", -0.1),
         ("law", "cauchy"), ("law", "student-t"), ("law", "student-t:df=-1"), ("law", 3),
         ("law", None), ("column_law", "normal:sd=2"), ("column_law", 1.5),
         ("seed", -1), ("seed", 1.5), ("seed", None),
@@ -203,30 +243,22 @@ def test_numbers_as_numpy_or_text_are_read_as_numbers():
 
 @pytest.mark.parametrize(
     ("rows", "columns", "replicates"),
-    [(100_000, 10_000, 50), (30, 3_000_000, 50), (30, 200_000, 100_000)],
+    [(1000, 3_000_000, 400), (30, 3_000_000, 400), (30, 200_000, 100_000)],
 )
 def test_what_would_exceed_the_memory_bound_is_refused_before_it_is_drawn(
     rows, columns, replicates, monkeypatch
 ):
-    monkeypatch.setattr(paper, "simulate", lambda *args: pytest.fail("drawn"))
+    monkeypatch.setattr(stated, "plan_scores", lambda *args, **more: pytest.fail("drawn"))
     with pytest.raises(InputError, match=r"columns: .* GiB; the bound is 2 GiB"):
         budget(rows=rows, columns=columns, law="normal", replicates=replicates)
 
 
-def test_large_tables_are_not_held_by_many_workers_at_once(monkeypatch):
-    held = []
-    pool = paper.worker_pool
-
-    def record(workers):
-        held.append(workers)
-        return pool(1)
-
-    monkeypatch.setattr(paper, "worker_pool", record)
-    budget(**SMALL, workers=2)
-    monkeypatch.setattr(paper, "MEMORY_BOUND", 100_000)
-    budget(**SMALL, workers=4)
-    # 32 bytes a cell and 8 a ratio: 62 400 of 100 000.
-    assert held == [2, 1]
+def test_a_million_columns_are_not_refused(monkeypatch):
+    # 200 draws of 1000 rows: what the tool promises to carry.
+    stated.refuse_too_large(plan_for(1000, 1_000_000, replicates=200))
+    monkeypatch.setattr(stated, "MEMORY_BOUND", 2**29)
+    with pytest.raises(InputError, match=r"1,000,000 columns of 1,000 rows and 200 replicates"):
+        stated.refuse_too_large(plan_for(1000, 1_000_000, replicates=200))
 
 
 def test_records_are_frozen():

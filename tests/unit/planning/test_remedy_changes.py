@@ -412,7 +412,7 @@ def test_more_are_refitted_where_selection_is_what_fails(work, ranked, monkeypat
         return found
 
     # Nothing passes: all are tried, but only if it is selection that fails.
-    most = len(singles(ranked)) - 1  # refits are of least squares
+    most = len(singles(ranked))
     assert len(refitted_names(run(FAILING, lambda k: 0))) == most > REFITTED
     assert len(refitted_names(run(OPEN, lambda k: 0))) == REFITTED
     # Three that pass are enough.

@@ -1,4 +1,4 @@
-"""Signal limit: detectable effects by hand, the limit by a scan over p, rows needed."""
+"""Signal limit: detectable effects by hand, the limit by a scan over p."""
 
 from __future__ import annotations
 
@@ -155,8 +155,7 @@ def test_a_law_without_variance_has_no_signal_limit():
     found = signal(case_of(law=student_law(1.8)), sample_of(), ())
     assert found.limit.columns is None
     assert "no variance" in found.limit.note
-    assert (found.detectable, found.detectable_worst, found.rows_needed) == (None, None, None)
-    assert "no variance" in found.rows_note
+    assert (found.detectable, found.detectable_worst) == (None, None)
 
 
 def test_a_drawn_law_without_variance_allows_nothing():
@@ -174,27 +173,6 @@ def test_median_and_worst_tenth_are_reported_at_all_columns():
     effects = [by_hand(60, v=v) for v in loadings]
     assert found.detectable == pytest.approx(np.median(effects), rel=1e-12)
     assert found.detectable_worst == pytest.approx(np.quantile(effects, 0.9), rel=1e-12)
-
-
-@pytest.mark.parametrize("effect", [0.05, 0.15, 0.3, 1.5])
-def test_rows_needed_is_the_fewest_at_which_the_effect_shows(effect):
-    found = signal(case_of(target=TargetSpec(smallest_effect=effect)), sample_of(), ())
-    least = math.ceil(4 * (1.1 * norm.isf(0.05 / 120)) ** 2)
-    rows = found.rows_needed
-    assert rows is not None
-    assert rows >= least
-    assert by_hand(60, n=rows) <= effect + 1e-12
-    assert rows == least or by_hand(60, n=rows - 1) > effect
-    assert found.rows_note == ""
-
-
-def test_rows_needed_stops_at_sixty_four_times_the_present():
-    at_100 = by_hand(60)
-    just = signal(case_of(target=TargetSpec(smallest_effect=at_100 / 7.99)), sample_of(), ())
-    assert just.rows_needed == math.ceil(100 * 7.99**2)
-    beyond = signal(case_of(target=TargetSpec(smallest_effect=at_100 / 8.01)), sample_of(), ())
-    assert beyond.rows_needed is None
-    assert beyond.rows_note == "not within 64 times the present rows, at the present penalty"
 
 
 def test_heavier_scores_raise_the_detectable_effect():

@@ -21,10 +21,8 @@ from scantling.planning.case import Case, draw_laws
 from scantling.planning.recipe import standardise
 from scantling.planning.stress import (
     SUPPORTS,
-    grid_of,
     law_effects,
     limit_on_grid,
-    run_law,
     stress,
     support_set,
 )
@@ -41,6 +39,14 @@ def case_of(X=None, **changes):
         target=target, rule="plug-in", replicates=100, seed=3,
     )  # fmt: skip
     return replace(case, **changes)
+
+
+def run_law(case, law, name, grid, mapper=serial_map, every=None):
+    return module.run_law(case, law, name, grid, mapper, every)
+
+
+def grid_of(case, **points):
+    return module.grid_of(case.columns, case.target.relevant, **points)
 
 
 def margins_of(*worst):

@@ -92,7 +92,7 @@ def test_cautions_of_this_design(lost, dropped, time, relevant, expected):
         design=SimpleNamespace(
             data=SimpleNamespace(time=time), target=SimpleNamespace(relevant=relevant)
         ),
-        budget=SimpleNamespace(assured=SimpleNamespace(note="a reason")),
+        budget=SimpleNamespace(assured=SimpleNamespace(columns=None, note="a reason")),
         diagnosis=SimpleNamespace(warnings=("A warning.",)),
     )
     first, *rest = cautions(made)

@@ -9,7 +9,7 @@ from hypothesis import strategies as st
 from sklearn.linear_model import Lasso, LassoLars, lars_path
 
 from scantling.errors import InputError
-from scantling.simulation import path, working_set
+from scantling.simulation import active_set, path, working_set
 from scantling.simulation.lasso import NotConvergedError, lasso_batch, solve_batch
 from scantling.simulation.path import lasso_path_batch, walk_path
 
@@ -113,7 +113,8 @@ def test_every_way_through_gives_the_same_path(monkeypatch):
         (path, "BLOCK_CELLS", 90 * 3),
         (working_set, "SPARSE_SHARE", 0.0),
         (working_set, "SPARSE_SHARE", 1.0),
-        (working_set, "PACKED_ABOVE", 2),
+        (active_set, "PACKED_ABOVE", 2),
+        (working_set, "PASS_CELLS", 1),
     ]:
         with monkeypatch.context() as patch:
             patch.setattr(module, name, value)
@@ -135,7 +136,7 @@ def test_an_unreached_gap_is_refused(monkeypatch):
         gaps[:] = [0.0, 0.5, 0.1]
 
     monkeypatch.setattr(path, "settle", stuck)
-    with pytest.raises(NotConvergedError, match="response 2 at penalty 1 .* 0.5") as caught:
+    with pytest.raises(NotConvergedError, match=r"response 2 at penalty 1 .* 0.5") as caught:
         lasso_path_batch(X, Y, falling(top, 0.1, 4))
     assert (caught.value.gap, caught.value.response) == (0.5, 1)
 

@@ -31,7 +31,7 @@ def test_adaptive_loadings_by_hand():
     initial = np.array([[0.0, 4.0], [0.5, -0.01], [-2.0, 1.0]])
     found = adaptive_loadings(initial, [0.5, 1.0], floor=0.1)
     np.testing.assert_allclose(found, [[10.0, 0.25], [1.0, 10.0], [0.25, 1.0]], rtol=1e-15)
-    with pytest.raises(InputError, match="^reference, floor: positive"):
+    with pytest.raises(InputError, match=r"^reference, floor: positive"):
         adaptive_loadings(initial, 0.0)
 
 

@@ -74,7 +74,7 @@ def shifted_rows_lasso(X, y, w, tau, intercept):
 
 def linear_programme(X, y, w, intercept):
     """(1/n) sum |y - a - Xb| + w'|b| as min c'x, x >= 0: b+, b-, r+, r-, a+, a-."""
-    n, p = X.shape
+    n = len(X)
     one = np.full((n, 1), float(intercept))
     A = np.hstack([X, -X, np.eye(n), -np.eye(n), one, -one])
     c = np.concatenate([w, w, np.full(2 * n, 1 / n), [0.0, 0.0]])
@@ -304,7 +304,7 @@ def test_gap_reported_bounds_the_distance_to_the_minimum(monkeypatch):
     b, a, gaps = solve_huber(X, Y, penalty[None], tau, tol=1e-9, intercept=True)
     above = (huber_objective(X, Y, penalty, 1.0, b, a) - best) / unit
     assert (above > 1e-4).all() and (above <= gaps).all()
-    with pytest.raises(NotConvergedError, match="^penalty: response .* duality gap") as caught:
+    with pytest.raises(NotConvergedError, match=r"^penalty: response .* duality gap") as caught:
         huber_batch(X, Y, penalty, tau=1.0, tol=1e-9)
     assert caught.value.gap == pytest.approx(gaps.max())
     monkeypatch.setattr(absolute, "STEPS", 1)

@@ -168,7 +168,8 @@ def test_how_responses_are_split_does_not_matter(monkeypatch):
 
 @pytest.mark.parametrize("loss", LOSSES)
 @pytest.mark.parametrize("rule", RULES)
-def test_every_rule_with_every_loss_finds_strong_columns(rule, loss):
+def test_every_rule_with_every_loss_finds_strong_columns(rule, loss, monkeypatch):
+    monkeypatch.setattr(rules, "GRID_POINTS", 12)
     X, Y, errors = problem(n=150, p=20, replicates=3, seed=5, df=6)
     Y = 2.0 * Y - 1.5 * errors
     if loss == "logistic":

@@ -227,7 +227,7 @@ def test_optimality_conditions_of_the_logistic_lasso(kind, n, p, share, seed):
 def test_unreached_gaps_are_refused(monkeypatch):
     X, Y = binary(60, 90, 3, seed=9)
     monkeypatch.setattr(logistic, "ROUNDS", 1)
-    with pytest.raises(NotConvergedError, match="^penalty: response .* duality gap") as caught:
+    with pytest.raises(NotConvergedError, match=r"^penalty: response .* duality gap") as caught:
         logistic_batch(X, Y, 0.02)
     assert 1e-3 < caught.value.gap < 1
     X, Y = design(40, 60, 3, seed=10)
@@ -251,8 +251,8 @@ def test_responses_that_are_not_binary_are_refused(Y, message):
 
 
 def test_penalties_are_checked():
-    with pytest.raises(InputError, match="^penalty: positive"):
+    with pytest.raises(InputError, match=r"^penalty: positive"):
         square_root_batch(np.eye(3), [1.0, 2.0, 3.0], 0.0)
-    with pytest.raises(InputError, match="^penalty: positive"):
+    with pytest.raises(InputError, match=r"^penalty: positive"):
         logistic_batch(np.eye(3), [0.0, 1.0, 1.0], -1.0)
     assert not square_root_batch(np.eye(3), np.zeros(3), 0.1).any()
