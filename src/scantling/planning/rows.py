@@ -265,6 +265,12 @@ def rows_plan(plan: Plan, mapper: Mapper, *, refits: bool, effort: Effort = THOR
     )
 
 
+def _falls(earlier: RowsEntry, later: RowsEntry) -> bool:
+    """Whether more rows carry fewer columns, beyond simulation error."""
+    error = math.sqrt(2 * later.risk * (1 - later.risk) / SEARCH_DRAWS)
+    return (later.noise or 0) < (earlier.noise or 0) and later.risk - earlier.risk > 3 * error
+
+
 def _needed(search: RowSearch, name: str, steps: list[int], found: dict[str, Needed]) -> Needed:
     """Fewest rows for one limit."""
     if name != "noise" and not math.isfinite(search.plan.law.sd):

@@ -13,9 +13,10 @@ from scantling.planning.budget import Budget, assemble
 from scantling.planning.case import LAW_DRAWS, loadings_of
 from scantling.planning.ceiling import Ceiling
 from scantling.planning.effects import EffectEntry, effects_table
-from scantling.planning.generative import BLOCK_CELLS, CELLS, MODE
+from scantling.planning.generative import CELLS, MODE, pieces_of, tables_for, tables_of
 from scantling.planning.limit import Limit, make_limit, missing_limit
 from scantling.planning.plan import (
+    FLOOR,
     Plan,
     plan_effect,
     plan_noise,
@@ -35,6 +36,8 @@ REFIT_CELLS = 4_000_000
 REFIT_COLUMNS = 5_000
 ASSURED_CELLS = 4_000_000
 """Values of the table on which assured columns are computed."""
+KEPT, KEPT_BELOW = 0.05, 0.18
+"""Share of ratios that is kept above L(1), and above a lower floor; normal errors: 0.03, 0.16."""
 NO_VARIANCE = "the error law has no variance"
 
 
@@ -62,10 +65,15 @@ def refuse_too_large(plan: Plan) -> None:
     InputError
     """
     draws = draws_of(plan)
+    start, stop = tables_of(
+        plan.rows, plan.columns, draws, tables_for(plan.source, plan.columns)
+    )[0]  # fmt: skip
+    width = max(b - a for a, b in pieces_of(plan.source, plan.rows, plan.columns))
     # A block with its products under two laws, the ratios kept of all columns, and the errors.
-    block = 24 * max(BLOCK_CELLS, plan.rows) + 32 * draws * max(1, BLOCK_CELLS // plan.rows)
-    kept = int(0.05 * 2 * 40 * plan.columns * draws)
-    size = block + kept + 48 * plan.rows * draws
+    block = 24 * plan.rows * width + 32 * (stop - start) * width
+    share = KEPT if plan.floor > FLOOR else KEPT_BELOW
+    kept = int(share * 2 * 40 * plan.columns * draws)
+    size = block + kept + 48 * plan.rows * (stop - start)
     if size > MEMORY_BOUND:
         raise InputError(
             f"columns: {plan.columns:,} columns of {plan.rows:,} rows and {draws:,} replicates"
