@@ -18,6 +18,7 @@ from scantling.design.expand import Columns, expanded_count
 from scantling.design.parse import read_design
 from scantling.design.series_file import SeriesFile
 from scantling.design.spec import Design
+from scantling.design.support import named_places
 from scantling.design.table import Table, read_tables
 from scantling.diagnostics.battery import Diagnosis
 from scantling.diagnostics.residuals import Residuals
@@ -274,6 +275,10 @@ def make_case(design: Design, columns: Columns, residuals: Residuals, law: Error
         time_ordered=columns.time_ordered,
         replicates=design.simulation.replicates,
         seed=design.simulation.seed,
+        support=design.target.support if isinstance(design.target.support, str) else "named",
+        relevant_columns=residuals.selected
+        if design.target.support == "pilot"
+        else named_places(design, columns.names),
     )
 
 

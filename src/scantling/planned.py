@@ -11,6 +11,7 @@ from scantling.design.stated import Statement, written_law
 from scantling.errors import InputError
 from scantling.pipeline import Progress, receipt_of
 from scantling.planning.paper import stated_ceiling, stated_plan, target_of
+from scantling.planning.plan import Plan
 from scantling.planning.stated import budget_of
 from scantling.planning.verdict import stated_verdict
 from scantling.report.record import PlanReport
@@ -47,6 +48,29 @@ def plan_design(
     """
     started = time.monotonic()
     tell: Progress = progress or (lambda stage: None)
+    plan, facts = plan_of(statement)
+    tell("limits")
+    with worker_pool(workers) as mapper:
+        done = budget_of(plan, stated_ceiling(plan), mapper)
+    return PlanReport(
+        title=statement.title,
+        plan=plan,
+        facts=facts,
+        budget=done.budget,
+        stress=done.stress,
+        verdict=stated_verdict(plan, done.budget, done.stress),
+        receipt=receipt_of(plan.seed, plan.replicates, statement.inputs, command, started),
+    )
+
+
+def plan_of(statement: Statement) -> tuple[Plan, tuple[str, ...]]:
+    """The plan that a statement makes, and the statement in sentences.
+
+    Raises
+    ------
+    InputError
+        If rows, columns or law are not said, or a value is out of range.
+    """
     for name, flag in NEEDED.items():
         if name not in statement.values:
             raise InputError(f"{name}: not stated; {flag}, a stated design or a report says it")
@@ -62,18 +86,7 @@ def plan_design(
         target=target_of(**{key: values[key] for key in TARGET}),
         **laws,
     )
-    tell("limits")
-    with worker_pool(workers) as mapper:
-        done = budget_of(plan, stated_ceiling(plan), mapper)
-    return PlanReport(
-        title=statement.title,
-        plan=plan,
-        facts=(*_facts(values, laws), *statement.facts),
-        budget=done.budget,
-        stress=done.stress,
-        verdict=stated_verdict(plan, done.budget, done.stress),
-        receipt=receipt_of(plan.seed, plan.replicates, statement.inputs, command, started),
-    )
+    return plan, (*_facts(values, laws), *statement.facts)
 
 
 def _facts(values: Mapping[str, Any], laws: Mapping[str, str]) -> tuple[str, ...]:

@@ -16,7 +16,7 @@ import scantling
 ROOT = Path(scantling.__file__).parent
 ORDER = (
     "errors", "core", "design", "diagnostics", "law", "simulation", "planning", "report",
-    "pipeline", "planned", "cli",
+    "pipeline", "planned", "stressed", "cli",
 )  # fmt: skip
 MODULES = {
     ".".join(("scantling", *path.relative_to(ROOT).with_suffix("").parts)).removesuffix(

@@ -88,7 +88,7 @@ def test_an_interrupt_says_how_to_go_on(
     out = tmp_path / "my out"
     folder = out / "harbour.run"
     begin = [*command, "vet", str(harbour), "--out", str(out), "--workers", "2", "--quiet"]
-    left = stopped_when(begin, folder / "units", 0, signal.SIGINT)
+    left = stopped_when(begin, folder / "units", 600_000, signal.SIGINT)
     assert left.returncode == 130 and left.stdout == ""
     assert left.stderr == (
         f"scantling: interrupted; scantling resume '{folder}' goes on from here\n"
@@ -96,7 +96,7 @@ def test_an_interrupt_says_how_to_go_on(
     # What was asked for is remembered; the same command as before goes on as well.
     assert read_request(folder) == Request(design=harbour, out=out, workers=2, quiet=True)
     size = (folder / "units").stat().st_size
-    left = stopped_when(begin, folder / "units", size, signal.SIGINT)
+    left = stopped_when(begin, folder / "units", size + 300_000, signal.SIGINT)
     assert left.returncode == 130 and (folder / "units").stat().st_size > size
     done = scantling("resume", folder)
     assert (done.stdout, done.stderr) == ("", "")

@@ -113,9 +113,7 @@ def checksum(path: Path) -> str:
 
 def _package_checksum() -> str:
     """sha-256 of this package's modules: results of other code are not mixed in."""
-    import scantling
-
-    root = Path(scantling.__file__).parent
+    root = Path(__file__).parents[1]
     found = hashlib.sha256()
     for path in sorted(root.rglob("*.py")):
         found.update(path.relative_to(root).as_posix().encode() + b"\0" + path.read_bytes())

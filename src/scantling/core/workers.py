@@ -117,7 +117,8 @@ class Processes:
                 return False
             names = [name for name in sys.modules if name.startswith("scantling.")]
             load = Shipped(_load)
-            loading = self._parallel([(load, [(k, names)]) for k in range(self._workers)])
+            with deaf_children():
+                loading = self._parallel([(load, [(k, names)]) for k in range(self._workers)])
             self._starting = threading.Thread(target=self._wait, args=(loading,), daemon=True)
             self._starting.start()
         return not self._starting.is_alive() and self._fault is None
@@ -149,10 +150,7 @@ class Processes:
     def _parallel(self, tasks: list[tuple[Shipped, Numbered]]) -> Iterator[Numbered]:
         from joblib import Parallel, delayed, parallel_config
 
-        with (
-            parallel_config("loky", inner_max_num_threads=1, idle_worker_timeout=IDLE),
-            deaf_children(),
-        ):
+        with parallel_config("loky", inner_max_num_threads=1, idle_worker_timeout=IDLE):
             found = Parallel(
                 n_jobs=self._workers, return_as="generator_unordered", batch_size=1,
                 # No more than the workers take at once: loky faults when stopped with a backlog.
@@ -254,6 +252,8 @@ def compute(shipped: Shipped, units: Numbered) -> Numbered:
     if not _settled:
         _settled.append(threadpool_limits(limits=1))  # for the life of this process
         if os.getppid() == shipped.sender:
+            if threading.current_thread() is threading.main_thread():
+                signal.signal(signal.SIGINT, signal.SIG_IGN)  # of those started later
             threading.Thread(target=_leave_with, args=(shipped.sender,), daemon=True).start()
     return [(number, shipped.function(unit)) for number, unit in units]
 
@@ -280,7 +280,8 @@ def deaf_children() -> Iterator[None]:
     """Have processes started meanwhile never hear an interrupt: it is for this one to act on.
 
     Ignored signals stay ignored in what is started. (A mask would be inherited too, but loky
-    takes it off.) Only the main thread can do this.
+    takes it off.) Only the main thread can do this; an interrupt that falls into these few
+    hundredths of a second has to be repeated.
     """
     before = signal.getsignal(signal.SIGINT)
     if threading.current_thread() is not threading.main_thread() or before is None:

@@ -131,6 +131,15 @@ LANGUAGE: dict[str, dict[str, Key]] = {
         "power": _number("above 0 and below 1", lambda value: 0 < value < 1),
         "stability": _number("above 0 and at most 1", lambda value: 0 < value <= 1),
         "false_share": _number("of at least 0 and below 1", lambda value: 0 <= value < 1),
+        "support": Key(
+            accepted='"random", "pilot" or a list of candidate columns, none of them twice,',
+            fits=lambda value: (
+                value in ("random", "pilot")
+                or (_names_fit(value) and len(set(value)) == len(value) > 0)
+            ),
+            convert=lambda value: tuple(value) if isinstance(value, list) else value,
+            choices=("random", "pilot"),
+        ),
     },
     "penalty": {
         "rule": _choice(
@@ -176,6 +185,8 @@ STATED_LANGUAGE: Language = {
         "column": _LAW,
     },
     **{name: LANGUAGE[name] for name in ("purpose", "target", "penalty", "simulation")},
+    # Columns on paper have neither names nor a pilot.
+    "target": {key: value for key, value in LANGUAGE["target"].items() if key != "support"},
 }
 """Tables of a design without data."""
 

@@ -106,7 +106,7 @@ def read_designs(path: str | Path) -> tuple[Design, ...]:
         data=_data_spec(values["data"], path, label),
         expand=ExpandSpec(**values["expand"]),
         kind=values["purpose"].get("kind", "regression"),
-        target=TargetSpec(**values["target"]),
+        target=_target_spec(values["target"], label),
         penalty=PenaltySpec(**values["penalty"]),
         simulation=SimulationSpec(**values["simulation"]),
     )
@@ -245,6 +245,19 @@ def check_value(value: Any, key: Key, name: str, label: str) -> Any:
             f"{label}: {name} = {shown(value)} {_NOT_AVAILABLE} {', '.join(words)}"
         )
     return key.convert(value)
+
+
+def _target_spec(values: dict[str, Any], label: str) -> TargetSpec:
+    """Return [target]; named columns are as many as are relevant, unless more are said to be."""
+    named = values.get("support")
+    if isinstance(named, tuple):
+        values = {"relevant": len(named), **values}
+        if values["relevant"] < len(named):
+            raise InputError(
+                f"{label}: [target] support names {len(named)} columns; relevant ="
+                f" {values['relevant']} has to be at least that, or be left out"
+            )
+    return TargetSpec(**values)
 
 
 def _data_spec(values: dict[str, Any], path: Path, label: str) -> DataSpec:

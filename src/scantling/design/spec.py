@@ -58,6 +58,8 @@ class TargetSpec:
     """Stability index that selection has to reach under fresh errors."""
     false_share: float = 0.20
     """Largest accepted share of false columns among the selected."""
+    support: str | tuple[str, ...] = "random"
+    """Which columns the refits take as relevant: random | pilot | names of candidates."""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

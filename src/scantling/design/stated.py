@@ -76,6 +76,19 @@ def read_statement(path: str | Path) -> Statement:
     return Statement(title=title, stem=path.stem, inputs=digest, values=values)
 
 
+def states_no_data(path: str | Path) -> bool:
+    """Whether a file is a saved report or a stated design, not a design with data.
+
+    Raises
+    ------
+    InputError
+        If it cannot be read.
+    """
+    path = Path(path)
+    content = read_bytes(path)
+    return path.suffix == ".json" or "stated" in parse_toml(content, file_label(path))
+
+
 def written_law(given: Any) -> str:
     """A law as one line of text, from that or from a table with `family` and parameters."""
     if isinstance(given, str):
@@ -102,11 +115,18 @@ def _from_report(
             "seed": tree["receipt"]["seed"],
         }  # fmt: skip
         facts, values["law"] = _law_of(tree["law"])
+        if "column_law" in design:  # of a budget on paper
+            values["column_law"] = _law_of(design["column_law"])[1]
+            values["correlation"] = design["correlation"]
         if "diagnosis" in tree:
             more, values["column_law"] = _columns_of(tree["diagnosis"]["columns"]["tail"])
             facts += more
-    except (KeyError, TypeError, AttributeError) as fault:
+    except KeyError as fault:
         raise InputError(f"{label}: a whole report is needed; {fault} is missing in it") from fault
+    except (TypeError, AttributeError, ValueError) as fault:
+        raise InputError(
+            f"{label}: a whole report is needed; a part of it is not what a report has there"
+        ) from fault
     title = f"{tree.get('title', path.stem)}, on paper"
     return Statement(
         title=printable(title), stem=path.stem, inputs=digest, values=values, facts=tuple(facts)
@@ -125,9 +145,9 @@ def _law_of(law: Mapping[str, Any]) -> tuple[list[str], str]:
             "The report's spliced law cannot be stated on one line; the law here has its tail"
             " index."
         )
-    path = law.get("volatility")
-    if path:
-        own |= {key: path[key] for key in ("alpha", "beta", "leverage") if path.get(key)}
+    # A budget on paper has its recurrence among the parameters.
+    path = law.get("volatility") or parameters
+    own |= {key: path[key] for key in ("alpha", "beta", "leverage") if path.get(key)}
     rest = ",".join(f"{key}={value}" for key, value in own.items())
     return facts, f"{family}:{rest}" if rest else family
 

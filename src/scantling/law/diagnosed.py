@@ -7,6 +7,7 @@ from dataclasses import dataclass
 
 from scantling.design.expand import Columns, RawExpansion, expand, expand_raw
 from scantling.design.spec import Design
+from scantling.design.support import named_places
 from scantling.design.table import Table
 from scantling.diagnostics.battery import Diagnosis, diagnose
 from scantling.diagnostics.column_findings import ColumnFindings, column_findings
@@ -96,6 +97,7 @@ def pilot(design: Design, table: Table, columns: Columns) -> Residuals:
             f"{design.path.name}: [target] relevant = {relevant}: the design has {asked} candidate"
             f" columns; a number below {max(2, asked)} is needed"
         )
+    named_places(design, columns.names)
     residuals = fit_pilot(
         columns.values,
         columns.response,

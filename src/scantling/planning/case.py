@@ -54,6 +54,10 @@ class Case:
     """Whether a second, reweighted lasso follows in the refits."""
     time_ordered: bool = False
     """Whether rows follow one another in time: folds of cross-validation are then blocks."""
+    support: str = "random"
+    """Which columns the refits take as relevant: random | pilot | named."""
+    relevant_columns: tuple[int, ...] = ()
+    """The pilot's or the named ones; empty under random supports."""
 
     @property
     def loadings(self) -> str:

@@ -6,12 +6,10 @@ import math
 from collections.abc import Callable
 from dataclasses import dataclass, replace
 
-import numpy as np
-
 from scantling.core.streams import Mapper
 from scantling.design.spec import TargetSpec
 from scantling.planning.case import Case
-from scantling.planning.stress import CaseOf, grid_of, limit_on_grid, margins, run_law
+from scantling.planning.stress import CaseOf, grid_of, limit_of
 
 TIMES_EFFECT = (2 / 3, 1.0, 1.5)
 """Effects of the table, times the smallest effect asked for."""
@@ -91,8 +89,7 @@ def _entry(
             base = case if case_of is None else case_of(number)
             return replace(base, target=target, replicates=REFITS)
 
-        runs = run_law(changed, case.law, "search", grid, mapper, own)
-        limits["stability"] = limit_on_grid(grid, np.array([margins(changed, run) for run in runs]))
+        limits["stability"] = limit_of(changed, case.law, grid, mapper, own)
     reached = {name: value for name, value in limits.items() if math.isfinite(value)}
     binding = min(reached, key=lambda name: reached[name]) if reached else None
     return EffectEntry(

@@ -68,4 +68,6 @@ def fitted_plan(case: Case, columns: Columns, residuals: Residuals) -> Plan:
         source=FittedColumns(law=column_law, errors_law=case.law), law=case.law,
         target=case.target, rule=case.rule, loss=case.loss, response_sd=case.response_sd,
         residual_sd=case.residual_sd, replicates=case.replicates, seed=case.seed,
+        adaptive=case.adaptive, time_ordered=case.time_ordered, support=case.support,
+        relevant_columns=case.relevant_columns,
     )  # fmt: skip

@@ -78,6 +78,14 @@ class Plan:
     """Draws of errors in each simulation."""
     seed: int
     """Of every random stream."""
+    adaptive: bool = False
+    """Whether a second, reweighted lasso follows in the refits."""
+    time_ordered: bool = False
+    """Whether rows follow one another in time."""
+    support: str = "random"
+    """Which columns the refits take as relevant, as in a case."""
+    relevant_columns: tuple[int, ...] = ()
+    """The pilot's or the named ones among columns drawn from their fitted law."""
 
     def at(self, rows: int) -> Plan:
         """The same with another number of rows."""
@@ -98,6 +106,8 @@ class Plan:
             law=self.law, law_draws=(self.law,) * LAW_DRAWS, response_sd=self.response_sd,
             residual_sd=self.residual_sd, target=self.target, rule=self.rule, loss=self.loss,
             replicates=self.replicates, seed=self.seed, mode=MODE,
+            adaptive=self.adaptive, time_ordered=self.time_ordered, support=self.support,
+            relevant_columns=tuple(j for j in self.relevant_columns if j < columns),
         )  # fmt: skip
 
 
@@ -108,8 +118,8 @@ def plan_scores(
     laws = (plan.law, twin_of(plan.law)) if twin else (plan.law,)
     return generative_scores(
         plan.source, laws, rows=plan.rows, columns=plan.columns, draws=draws,
-        rule=loadings_of(plan.rule), loss=plan.loss, floor=plan.floor, seed=plan.seed, mapper=mapper,
-        tables=tables_for(plan.source, plan.columns, tables),
+        rule=loadings_of(plan.rule), loss=plan.loss, floor=plan.floor, seed=plan.seed,
+        mapper=mapper, tables=tables_for(plan.source, plan.columns, tables),
     )  # fmt: skip
 
 

@@ -137,14 +137,21 @@ def carry_out(recipe: Recipe, origin: Origin) -> Case | None:
             return None  # nothing is left that could be computed
         if _same(columns.values, case.X):
             return None  # as with powers of dummies
-        case = replace(case, X=columns.values)
+        case = replace(
+            case, X=columns.values, relevant_columns=_found_again(case, columns, origin)
+        )
     if recipe.dropped:
         kept = _kept(recipe.dropped, columns, origin)
         if kept.size in (0, case.columns):
             return None
         # With fresh draws: the old ones picked the columns.
         seed = int(stream(case.seed, "fresh draws").integers(2**62))
-        case = replace(case, X=np.ascontiguousarray(case.X[:, kept]), seed=seed)
+        case = replace(
+            case, X=np.ascontiguousarray(case.X[:, kept]), seed=seed,
+            relevant_columns=tuple(
+                int(j) for j in np.flatnonzero(np.isin(kept, case.relevant_columns))
+            ),
+        )  # fmt: skip
     if case.target.relevant >= max(2, case.columns):
         return None  # no columns are left to tell the relevant ones from
     if recipe.weighted:
@@ -167,6 +174,15 @@ def _made_columns(recipe: Recipe, origin: Origin) -> Columns:
             products=spec.products if recipe.products is None else recipe.products,
         )
     return expand(replace(origin.design, expand=spec), table)
+
+
+def _found_again(case: Case, made: Columns, origin: Origin) -> tuple[int, ...]:
+    """Relevant columns among those made afresh, by their names; what is gone is left out."""
+    if not case.relevant_columns:
+        return ()
+    present = expand(origin.design, origin.table).names
+    wanted = {present[j] for j in case.relevant_columns}
+    return tuple(j for j, name in enumerate(made.names) if name in wanted)
 
 
 def _same(one: FloatArray, two: FloatArray) -> bool:
@@ -194,9 +210,12 @@ def weighted(case: Case, residuals: Residuals) -> Case:
     # About its mean: a constant over sigma_t is not variation to be explained.
     response = (residuals.fitted - residuals.fitted.mean() + residuals.values) / relative
     law = case.law.without_volatility()
+    X = standardise(case.X / relative[:, None])
     return replace(
         case,
-        X=standardise(case.X / relative[:, None]),
+        X=X,
+        # A column that weighting made constant is gone, and the places of the others with it.
+        relevant_columns=case.relevant_columns if X.shape == case.X.shape else (),
         law=law,
         law_draws=draw_laws(law, case.seed),
         response_sd=float(response.std()),

@@ -22,8 +22,8 @@ from scantling.planning.breakthrough import (
     QUANTILE_FLOOR,
     ScoreBlock,
     ScoreSample,
-    drawn_curves,
     pooled_blocks,
+    pooled_curve,
     score_block,
 )
 from scantling.planning.case import Case, column_grid
@@ -154,7 +154,9 @@ def _recomputed(
     many, signals = curve[None], [signal]
     if drawn:
         curves = np.array([each for each, _ in drawn])
-        many = drawn_curves(case, fitted.found, curves, column_grid(case.columns), per_law)
+        curve, many = pooled_curve(
+            case, fitted.found, curves, column_grid(case.columns), per_law
+        )
         signals = [each for _, each in drawn]
     last = float(curve[-1])
     low, high = band(many[:, -1].tolist())

@@ -11,14 +11,12 @@ import math
 from collections.abc import Callable
 from dataclasses import dataclass, replace
 
-import numpy as np
-
 from scantling.core.streams import Mapper
 from scantling.planning.breakthrough import ScoreSample
 from scantling.planning.case import Case
 from scantling.planning.generative import Tables
 from scantling.planning.plan import Plan, plan_effect, plan_scores, plan_signal_limit
-from scantling.planning.stress import CaseOf, grid_of, limit_on_grid, margins, run_law
+from scantling.planning.stress import CaseOf, grid_of, limit_of
 from scantling.simulation.scores import first_above, penalty_level, risk_at, risk_curves
 
 FEWEST_ROWS = 30
@@ -141,10 +139,9 @@ class RowSearch:
             effect = plan_effect(self.plan.at(rows), self.scores(rows), self.plan.columns)
             return effect <= self.plan.target.smallest_effect
         if rows not in self._stable:
-            margin = stress_margins(
-                self.plan.at(rows), self.mapper, [self.plan.columns], self.effort
-            )
-            self._stable[rows] = bool(margin.min() >= 0)
+            plan = self.plan.at(rows)
+            found = stability_limit(plan, self.mapper, [plan.columns], self.effort)
+            self._stable[rows] = math.isinf(found)
         return self._stable[rows]
 
     def entry(self, rows: int) -> RowsEntry:
@@ -157,10 +154,7 @@ class RowSearch:
         if math.isfinite(plan.law.sd):
             found["signal"] = plan_signal_limit(plan, sample)
         if self.refits:
-            grid = table_grid(plan)
-            found["stability"] = limit_on_grid(
-                grid, stress_margins(plan, self.mapper, grid, self.effort)
-            )
+            found["stability"] = stability_limit(plan, self.mapper, table_grid(plan), self.effort)
         whole = {
             name: None if value is None else int(min(value, plan.columns))
             for name, value in found.items()
@@ -183,12 +177,11 @@ def table_grid(plan: Plan) -> list[int]:
     return grid_of(plan.columns, plan.target.relevant, TABLE_POINTS)
 
 
-def stress_margins(plan: Plan, mapper: Mapper, grid: list[int], effort: Effort) -> np.ndarray:
-    """How far each criterion is met at each number of columns, shape (grid, 3)."""
+def stability_limit(plan: Plan, mapper: Mapper, grid: list[int], effort: Effort) -> float:
+    """Stability limit among the numbers of columns of a grid; inf if it is not reached."""
     case_of = plan_cases(plan, grid[-1], effort.refit_tables)
     case = replace(case_of(0), replicates=effort.refits)
-    runs = run_law(case, plan.law, "search", grid, mapper, case_of)
-    return np.array([margins(case, run) for run in runs])
+    return limit_of(case, plan.law, grid, mapper, case_of)
 
 
 def plan_cases(plan: Plan, columns: int, tables: int) -> CaseOf:

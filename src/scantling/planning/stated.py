@@ -5,6 +5,8 @@ from __future__ import annotations
 import math
 from dataclasses import dataclass, replace
 
+from scipy.stats import norm
+
 from scantling.core.streams import MEMORY_BOUND, Mapper
 from scantling.errors import InputError
 from scantling.planning.assured import assured
@@ -16,7 +18,6 @@ from scantling.planning.effects import EffectEntry, effects_table
 from scantling.planning.generative import CELLS, MODE, pieces_of, tables_for, tables_of
 from scantling.planning.limit import Limit, make_limit, missing_limit
 from scantling.planning.plan import (
-    FLOOR,
     Plan,
     plan_effect,
     plan_noise,
@@ -36,8 +37,8 @@ REFIT_CELLS = 4_000_000
 REFIT_COLUMNS = 5_000
 ASSURED_CELLS = 4_000_000
 """Values of the table on which assured columns are computed."""
-KEPT, KEPT_BELOW = 0.05, 0.18
-"""Share of ratios that is kept above L(1), and above a lower floor; normal errors: 0.03, 0.16."""
+KEPT = 1.5
+"""Ratios kept, at most, times those that normal scores would have above the floor."""
 NO_VARIANCE = "the error law has no variance"
 
 
@@ -71,8 +72,7 @@ def refuse_too_large(plan: Plan) -> None:
     width = max(b - a for a, b in pieces_of(plan.source, plan.rows, plan.columns))
     # A block with its products under two laws, the ratios kept of all columns, and the errors.
     block = 24 * plan.rows * width + 32 * (stop - start) * width
-    share = KEPT if plan.floor > FLOOR else KEPT_BELOW
-    kept = int(share * 2 * 40 * plan.columns * draws)
+    kept = int(KEPT * 2 * norm.sf(plan.floor) * 2 * 40 * plan.columns * draws)
     size = block + kept + 48 * plan.rows * (stop - start)
     if size > MEMORY_BOUND:
         raise InputError(

@@ -3,16 +3,19 @@
 from __future__ import annotations
 
 import json
+from collections.abc import Sequence
 from typing import TYPE_CHECKING, Any
 
 from scantling.core.estimate import Estimate
 from scantling.planning.budget import Allowed, Budget
+from scantling.planning.generative import ColumnSource, StatedColumns
 from scantling.planning.limit import Limit
+from scantling.planning.refits import StressRun
 from scantling.planning.rows import RowsEntry
-from scantling.planning.stress import StressRun
 from scantling.report.values import UNBOUNDED, noted, number
 
 if TYPE_CHECKING:
+    from scantling.law.families import ErrorLaw
     from scantling.report.record import PlanReport, Receipt
 
 SCHEMA = "scantling-budget/1"
@@ -123,20 +126,47 @@ def _entry(entry: RowsEntry) -> dict[str, Any]:
     }
 
 
-def run_part(run: StressRun) -> dict[str, Any]:
-    """One set of refits."""
+def run_part(run: StressRun, names: Sequence[str] = ()) -> dict[str, Any]:
+    """One set of refits; `names` are those of the columns."""
     return {
         "rows": run.rows,
         "columns": run.columns,
         "law": run.law,
+        "rule": run.rule,
         "mode": run.mode,
+        "support": run.support,
         "replicates": run.replicates,
+        "replicates_asked": run.replicates_asked,
         "stability": estimate(run.stability),
         "power": estimate(run.power),
         "false_share": estimate(run.false_share),
-        "exact": number(run.exact),
-        "mean_size": number(run.mean_size),
+        "exact": number(run.exact.value),
+        "exact_low": number(run.exact.low),
+        "exact_high": number(run.exact.high),
+        "sign_errors": estimate(run.sign_errors),
+        "mean_size": number(run.size.value),
+        "size": estimate(run.size),
+        **(
+            {"prediction_loss": None, "prediction_loss_note": "least squares has no error here"}
+            if run.prediction_loss is None
+            else {"prediction_loss": estimate(run.prediction_loss)}
+        ),
+        "inclusion": _inclusion(run, names),
     }
+
+
+def _inclusion(run: StressRun, names: Sequence[str]) -> dict[str, Any]:
+    """How often relevant columns are selected; by column where they are not drawn at random."""
+    low, median, high = run.inclusion_range
+    out: dict[str, Any] = {
+        "relevant": len(run.inclusion), "low": number(low), "median": number(median),
+        "high": number(high),
+    }  # fmt: skip
+    if run.support != "random" and names:
+        out["by_column"] = [
+            {"column": names[j % len(names)], "share": number(share)} for j, share in run.inclusion
+        ]
+    return out
 
 
 def receipt_part(receipt: Receipt) -> dict[str, Any]:
@@ -149,6 +179,20 @@ def receipt_part(receipt: Receipt) -> dict[str, Any]:
         "command": receipt.command,
         "wall_clock": {"seconds": receipt.seconds, "finished": receipt.finished},
     }
+
+
+def _law_part(law: ErrorLaw) -> dict[str, Any]:
+    return {
+        "family": law.family,
+        "parameters": {k: number(v) for k, v in law.parameters.items()},
+    }
+
+
+def _columns_part(source: ColumnSource) -> dict[str, Any]:
+    """The law of stated columns, so that the budget can be taken up from its document."""
+    if not isinstance(source, StatedColumns):
+        return {}
+    return {"column_law": _law_part(source.law), "correlation": number(source.correlation)}
 
 
 def plan_json(report: PlanReport) -> str:
@@ -170,10 +214,10 @@ def plan_json(report: PlanReport) -> str:
                 )
             },
             "replicates": plan.replicates,
+            **_columns_part(plan.source),
         },
         "law": {
-            "family": plan.law.family,
-            "parameters": {k: number(v) for k, v in plan.law.parameters.items()},
+            **_law_part(plan.law),
             **noted("tail_index", plan.law.tail_index, "no finite index"),
         },
         "budget": budget_part(report.budget),

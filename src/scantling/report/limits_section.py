@@ -2,6 +2,9 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
+
+from scantling.planning.refits import StressRun
 from scantling.planning.remedies import Remedy
 from scantling.planning.verdict import WITHIN, chance
 from scantling.report.chart import risk_chart
@@ -17,6 +20,7 @@ from scantling.report.wording import (
     many,
     paragraph,
     rate,
+    share,
     table,
     two,
 )
@@ -25,6 +29,15 @@ LAW_WORDS = {
     "fitted": "fitted law",
     "twin": "Gaussian twin",
     "normal-volatility": "normal, fitted path",
+}
+
+
+LISTED_COLUMNS = 12
+
+SUPPORT_WORDS = {
+    "random": "random supports of {} relevant columns",
+    "pilot": "sign patterns of {} relevant columns, the pilot's first",
+    "named": "sign patterns of {} relevant columns, the named ones first",
 }
 
 
@@ -89,8 +102,9 @@ def selection(report: Budgeted, width: int) -> list[str]:
     lines = heading("Selection under fresh errors")
     if report.stress is None:
         return lines + paragraph(f"Not simulated: {report.budget.stability.note}.", width)
-    rows = [["Columns and law", "stability", "90 %", "power", "false share", "picked"]]
-    for run in report.stress.runs:
+    runs = report.stress.runs
+    rows = [["Columns and law", "stability", "90 %", "power", "false share", "refits"]]
+    for run in runs:
         rows.append(
             [
                 f"{run.columns:,} {LAW_WORDS[run.law]}",
@@ -98,10 +112,12 @@ def selection(report: Budgeted, width: int) -> list[str]:
                 f"{two(run.stability.low)} to {two(run.stability.high)}",
                 two(run.power.value),
                 two(run.false_share.value),
-                f"{run.mean_size:.1f}",
+                f"{run.replicates:,}",
             ]
         )
     lines += table(rows)
+    fitted = [run for run in runs if run.law == "fitted"][-1]
+    lines += more_criteria(fitted, report.read.names if isinstance(report, Report) else (), width)
     target = report.target
     relevant = min(target.relevant, report.budget.asked)
     failing = ", ".join(name.replace("_", " ") for name in report.stress.failing)
@@ -109,11 +125,59 @@ def selection(report: Budgeted, width: int) -> list[str]:
     return lines + paragraph(
         f"Asked for: stability {target.stability:g}, power {target.power:g}, false share at most"
         f" {target.false_share:g}. At {many(report.budget.asked, 'column')}"
-        f" {met}; {report.stress.runs[0].replicates}"
-        f" refits a row over 5 supports of {relevant} relevant columns. Refits use the rule's own"
-        " penalty; the signal limit uses the larger one that would hold noise to the risk.",
+        f" {met}. Refits are over 5 {SUPPORT_WORDS[runs[0].support].format(relevant)}, up to"
+        f" {runs[0].replicates_asked:,} a row: {how_decided(report.stress.runs)}. They use the"
+        " rule's own penalty; the signal limit uses the larger one that would hold noise to the"
+        " risk.",
         width,
     )
+
+
+def how_decided(runs: Sequence[StressRun]) -> str:
+    """How many refits it took, of those asked for."""
+    done, asked = (sum(getattr(r, k) for r in runs) for k in ("replicates", "replicates_asked"))
+    if done == asked:
+        return f"all {done:,} were needed"
+    return f"decided after {done:,} of {asked:,}, a row ending once every criterion is clear"
+
+
+def more_criteria(run: StressRun, names: Sequence[str], width: int) -> list[str]:
+    """The criteria that no bar is set for, of one run under the fitted law."""
+    loss = ""
+    if run.prediction_loss is not None:
+        loss = (
+            f"; prediction loss {ratio(run.prediction_loss.value)} times that of least squares on"
+            f" the relevant columns ({ratio(run.prediction_loss.low)} to"
+            f" {ratio(run.prediction_loss.high)})"
+        )
+    return paragraph(
+        f"At {many(run.columns, 'column')}, fitted law: {run.size.value:.1f} columns selected on"
+        f" average, exactly the relevant ones in {share(run.exact.value)} of refits"
+        f" ({share(run.exact.low)} to {share(run.exact.high)}), the wrong sign in"
+        f" {100 * run.sign_errors.value:.1f} % of cases{loss}. {inclusion_words(run, names)}",
+        width,
+    )
+
+
+def inclusion_words(run: StressRun, names: Sequence[str]) -> str:
+    """How often relevant columns are selected; by name where they are not drawn at random."""
+    low, median, high = run.inclusion_range
+    if share(low) == share(high):
+        return f"Every relevant column is selected in {share(low)} of refits."
+    words = (
+        f"A relevant column is selected in {share(low)} to {share(high)} of refits, the median"
+        f" one in {share(median)}"
+    )
+    if run.support == "random" or not names:
+        return words + "."
+    rarest = sorted(run.inclusion, key=lambda each: each[1])
+    each = tuple(f"{names[j % len(names)]} {share(found)}" for j, found in rarest)
+    return f"{words}; least often {listing(each, LISTED_COLUMNS)}."
+
+
+def ratio(value: float) -> str:
+    """A ratio to two digits or to whole numbers."""
+    return f"{value:.2g}" if value < 10 else f"{value:.0f}"
 
 
 def remedies(report: Report, width: int) -> list[str]:

@@ -1,11 +1,7 @@
-"""What a set of simulated refits says about a selection: stability, power, false share.
+"""What a set of simulated refits says about a selection: stability, power, false share, loss.
 
-Z is the (M, d) table of selections, one row for each refit. The stability index is
-Phi = 1 - [(1/d) sum_f (M/(M-1)) p_f (1 - p_f)] / [(kbar/d)(1 - kbar/d)],
-with p_f the share of refits that select column f and kbar the mean number
-selected; 1 if all refits agree, 0 in mean for random selections of the same
-size. Nogueira et al. (2018), On the stability of feature selection algorithms,
-J. Machine Learning Research 18, 1-54.
+Every criterion comes with its Monte Carlo error and an interval; the stability index and its
+interval are those of `simulation.stability`.
 """
 
 from __future__ import annotations
@@ -16,113 +12,70 @@ from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
-from numpy.typing import NDArray
-from scipy.special import ndtri, stdtrit
+from scipy.special import stdtrit
 
 from scantling.core.checks import between
+from scantling.core.estimate import Estimate
 from scantling.core.record import FloatArray
-from scantling.core.streams import blocks
 from scantling.errors import InputError
+from scantling.simulation.stability import (
+    BoolArray,
+    index_and_variance,
+    normal_point,
+    selections,
+    stability_index,
+    stability_interval,
+)
 
-BoolArray = NDArray[np.bool_]
+CRITERIA = ("power", "false_share", "exact", "sign_errors", "size")
+"""Those that every set of refits has; each a mean over refits."""
 
-PIECE_CELLS = 1_000_000
-"""Cells of Z turned into floats at a time (8 MB)."""
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Measured(Estimate):
+    """An estimate from simulation, with its Monte Carlo error."""
+
+    error: float
+    """Standard error, in units of the value."""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class SelectionSummary:
-    """Selection statistics of one set of refits, or averaged over several sets.
-
-    Attributes
-    ----------
-    replicates : int
-        Refits behind the figures.
-    level : float
-        Level of every interval.
-    stability, stability_low, stability_high : float or None
-        Stability index and its interval; None if it is not defined.
-    stability_error : float or None
-        Standard error of the index.
-    stability_note : str
-        Why the index, or part of it, is missing; empty otherwise.
-    power, power_low, power_high : float
-        Mean share of the relevant columns selected, 0 to 1, and its interval.
-    power_error : float
-        Standard error of the power.
-    false_share, false_share_low, false_share_high : float
-        Mean of false / max(1, selected), 0 to 1, and its interval.
-    false_share_error : float
-        Standard error of the false share.
-    exact : float
-        Share of refits that select exactly the relevant columns.
-    mean_size : float
-        Mean number of columns selected.
-    """
+    """Selection statistics of one set of refits, or averaged over several sets."""
 
     replicates: int
-    """Refits summarised."""
+    """Refits behind the figures."""
     level: float
-    """Nominal coverage of the intervals."""
-    stability: float | None
+    """Nominal coverage of every interval."""
+    stability: Measured | None
     """Stability index; None where it is undefined."""
-    stability_low: float | None
-    """Lower end of its interval."""
-    stability_high: float | None
-    """Upper end of its interval."""
-    stability_error: float | None
-    """Its standard error."""
     stability_note: str
-    """Why it is undefined; empty otherwise."""
-    power: float
-    """Mean share of relevant columns selected."""
-    power_low: float
-    """Lower end of its interval."""
-    power_high: float
-    """Upper end of its interval."""
-    power_error: float
-    """Its standard error."""
-    false_share: float
-    """Mean share of false columns among the selected."""
-    false_share_low: float
-    """Lower end of its interval."""
-    false_share_high: float
-    """Upper end of its interval."""
-    false_share_error: float
-    """Its standard error."""
-    exact: float
+    """Why it, or part of it, is undefined; empty otherwise."""
+    power: Measured
+    """Mean share of the relevant columns selected, 0 to 1."""
+    false_share: Measured
+    """Mean of false / max(1, selected), 0 to 1."""
+    exact: Measured
     """Share of refits that select exactly the relevant columns."""
-    mean_size: float
-    """Columns selected on average."""
+    sign_errors: Measured
+    """Mean share of the relevant columns selected with the wrong sign; 0 where signs are not
+    given."""
+    size: Measured
+    """Mean number of columns selected."""
+    prediction_loss: Measured | None
+    """Mean squared error of the fitted values over that of least squares on the relevant columns;
+    None where it is not given."""
 
 
-def stability_index(Z: Any, level: float = 0.90) -> tuple[float, float, float] | None:
-    """Return the stability index of a table of selections, with its interval.
-
-    Parameters
-    ----------
-    Z : array-like of bool, shape (M, d)
-        Row = one refit; rows are independent.
-    level : float
-        Level of the interval Phi -+ z sqrt(v), cut to the range of the index,
-        -1/(M-1) to 1.
-
-    Returns
-    -------
-    (value, low, high), or None where the index is not defined: fewer than two
-    refits, or nothing, or everything, selected in all of them.
-
-    Raises
-    ------
-    InputError
-        If `Z` is not a boolean table or `level` is not between 0 and 1.
-    """
-    found = _stability(_selections(Z, "Z"))
-    level = between(level, "level", 0.0, 1.0)
-    return None if isinstance(found, str) else _stability_interval(*found, level)
-
-
-def summarise_selection(selected: Any, relevant: Any, *, level: float = 0.90) -> SelectionSummary:
+def summarise_selection(
+    selected: Any,
+    relevant: Any,
+    *,
+    level: float = 0.90,
+    wrong_signs: Any = None,
+    loss: Any = None,
+    oracle: Any = None,
+) -> SelectionSummary:
     """Summarise refits that share one set of relevant columns.
 
     Parameters
@@ -134,13 +87,19 @@ def summarise_selection(selected: Any, relevant: Any, *, level: float = 0.90) ->
     level : float
         Level of the intervals: mean -+ z times the Monte Carlo standard error,
         cut to 0 to 1. (Where all refits agree that error is zero.)
+    wrong_signs : array-like, shape (M,), optional
+        Relevant columns that each refit selects with the wrong sign.
+    loss, oracle : array-like, shape (M,), optional
+        Mean squared error of the fitted values about the true mean: of each refit, and of least
+        squares on the relevant columns for the same response. The ratio of their means is
+        reported, its error by the delta method.
 
     Raises
     ------
     InputError
         If the shapes, types or numbers are not as above.
     """
-    table = _selections(selected, "selected")
+    table = selections(selected, "selected")
     level = between(level, "level", 0.0, 1.0)
     truth = np.asarray(relevant)
     if truth.dtype != np.bool_ or truth.shape != (table.shape[1],):
@@ -155,31 +114,24 @@ def summarise_selection(selected: Any, relevant: Any, *, level: float = 0.90) ->
     wanted = int(truth.sum())
     size = np.count_nonzero(table, axis=1)
     hits = np.count_nonzero(table[:, truth], axis=1)
-    power, power_error = _mean_and_error(hits / wanted)
-    false, false_error = _mean_and_error((size - hits) / np.maximum(size, 1))
-    z = _normal_point(level)
-    found = _stability(table)
-    undefined = isinstance(found, str)
-    phi = (None, None, None) if isinstance(found, str) else _stability_interval(*found, level)
+    wrong = np.zeros(len(table))
+    if wrong_signs is not None:
+        wrong = _numbers(wrong_signs, "wrong_signs", table)
+    stability, note = _stability(table, level)
     return SelectionSummary(
         replicates=len(table),
         level=level,
-        stability=phi[0],
-        stability_low=phi[1],
-        stability_high=phi[2],
-        stability_error=None if isinstance(found, str) else math.sqrt(found[1]),
-        stability_note=str(found) if undefined else "",
-        power=power,
-        power_low=max(power - z * power_error, 0.0),
-        power_high=min(power + z * power_error, 1.0),
-        power_error=power_error,
-        false_share=false,
-        false_share_low=max(false - z * false_error, 0.0),
-        false_share_high=min(false + z * false_error, 1.0),
-        false_share_error=false_error,
-        exact=float(np.mean((size == wanted) & (hits == wanted))),
-        mean_size=float(size.mean()),
-    )
+        stability=stability,
+        stability_note=note,
+        power=_mean(hits / wanted, level),
+        false_share=_mean((size - hits) / np.maximum(size, 1), level),
+        exact=_mean(((size == wanted) & (hits == wanted)).astype(np.float64), level),
+        sign_errors=_mean(wrong / wanted, level),
+        size=_mean(size.astype(np.float64), level, table.shape[1]),
+        prediction_loss=None if loss is None or oracle is None else _ratio(
+            _numbers(loss, "loss", table), _numbers(oracle, "oracle", table), level
+        ),
+    )  # fmt: skip
 
 
 def pool_summaries(summaries: Sequence[SelectionSummary]) -> SelectionSummary:
@@ -205,101 +157,80 @@ def pool_summaries(summaries: Sequence[SelectionSummary]) -> SelectionSummary:
     if len(summaries) == 1:
         return summaries[0]
     level = summaries[0].level
-    stable = [s for s in summaries if s.stability is not None]
-    phi: tuple[float | None, ...] = (None, None, None, None)
-    if stable:
-        values = [float(s.stability or 0.0) for s in stable]
-        errors = [float(s.stability_error or 0.0) for s in stable]
-        phi = _pool(values, errors, level, -1.0)
+    stable = [s.stability for s in summaries if s.stability is not None]
+    losses = [s.prediction_loss for s in summaries if s.prediction_loss is not None]
     missing = len(summaries) - len(stable)
-    power = _pool([s.power for s in summaries], [s.power_error for s in summaries], level, 0.0)
-    false = _pool(
-        [s.false_share for s in summaries], [s.false_share_error for s in summaries], level, 0.0
-    )
+    tops = {"size": math.inf}
+    pooled = {
+        name: _pool([getattr(s, name) for s in summaries], level, 0.0, tops.get(name, 1.0))
+        for name in CRITERIA
+    }
     return SelectionSummary(
         replicates=sum(s.replicates for s in summaries),
         level=level,
-        stability=phi[0],
-        stability_low=phi[1],
-        stability_high=phi[2],
-        stability_error=phi[3],
+        stability=_pool(stable, level, -1.0, 1.0) if stable else None,
         stability_note=f"not defined for {missing} of {len(summaries)} supports" if missing else "",
-        power=power[0],
-        power_low=power[1],
-        power_high=power[2],
-        power_error=power[3],
-        false_share=false[0],
-        false_share_low=false[1],
-        false_share_high=false[2],
-        false_share_error=false[3],
-        exact=float(np.mean([s.exact for s in summaries])),
-        mean_size=float(np.mean([s.mean_size for s in summaries])),
+        prediction_loss=_pool(losses, level, 0.0, math.inf) if losses else None,
+        **pooled,
     )
 
 
-def _selections(values: Any, name: str) -> BoolArray:
-    table = np.asarray(values)
-    if table.dtype != np.bool_ or table.ndim != 2 or not table.size:
+def _numbers(values: Any, name: str, table: BoolArray) -> FloatArray:
+    array = np.asarray(values)
+    if array.dtype.kind not in "fiu" or array.shape != (len(table),):
         raise InputError(
-            f"{name}: a table of true and false, refits by columns, is needed;"
-            f" found {table.dtype} of shape {table.shape}"
+            f"{name}: {len(table)} numbers, one for each refit, are needed; found {array.dtype}"
+            f" of shape {array.shape}"
         )
-    return table
+    if not np.isfinite(array).all():
+        raise InputError(f"{name}: finite numbers are needed")
+    return array.astype(np.float64)
 
 
-def _stability(table: BoolArray) -> tuple[float, float, int] | str:
-    """Return the index, its variance and M, or why it is not defined.
-
-    v = (4/M^2) sum_i (Phi_i - mean Phi)^2 with Phi_i = [(1/d) sum_f z_if p_f
-    - k_i kbar/d^2 + (Phi/2)(2 kbar k_i/d^2 - k_i/d - kbar/d + 1)] / [(kbar/d)(1 - kbar/d)].
-    """
-    m, d = table.shape
-    if m < 2:
-        return "fewer than two refits"
-    size = np.count_nonzero(table, axis=1)
-    total = int(size.sum())
-    if total == 0:
-        return "no refit selects any column"
-    if total == m * d:
-        return "every refit selects every column"
-    share: FloatArray = np.count_nonzero(table, axis=0) / m
-    filled = total / (m * d)
-    spread = filled * (1 - filled)
-    phi = 1 - m / (m - 1) * float(share @ (1 - share)) / d / spread
-    agreement = np.empty(m)
-    for first, last in blocks(m, max(PIECE_CELLS // d, 1)):
-        agreement[first:last] = table[first:last].astype(np.float64) @ share
-    own = size / d
-    each = agreement / d - own * filled + phi / 2 * (2 * filled * own - own - filled + 1)
-    each /= spread
-    return phi, 4 / m**2 * float(((each - each.mean()) ** 2).sum()), m
+def _stability(table: BoolArray, level: float) -> tuple[Measured | None, str]:
+    found = index_and_variance(table)
+    if isinstance(found, str):
+        return None, found
+    value, low, high = stability_interval(*found, level)
+    return Measured(value=value, low=low, high=high, error=math.sqrt(found[1])), ""
 
 
-def _stability_interval(
-    phi: float, variance: float, m: int, level: float
-) -> tuple[float, float, float]:
-    half = _normal_point(level) * math.sqrt(variance)
-    return phi, max(phi - half, -1 / (m - 1)), min(phi + half, 1.0)
+def _mean(values: FloatArray, level: float, top: float = 1.0) -> Measured:
+    """The mean of values from 0 to `top`."""
+    error = float(values.std(ddof=1) / math.sqrt(len(values)))
+    return _measured(float(values.mean()), error, normal_point(level) * error, 0.0, top)
 
 
-def _mean_and_error(values: FloatArray) -> tuple[float, float]:
-    return float(values.mean()), float(values.std(ddof=1) / math.sqrt(len(values)))
+def _ratio(loss: FloatArray, oracle: FloatArray, level: float) -> Measured | None:
+    """Ratio of two means over the same refits; None where least squares has no error at all."""
+    base = float(oracle.mean())
+    if base <= 0:
+        return None
+    ratio = float(loss.mean()) / base
+    error = float((loss - ratio * oracle).std(ddof=1) / math.sqrt(len(loss))) / base
+    return _measured(ratio, error, normal_point(level) * error, 0.0, math.inf)
 
 
-def _normal_point(level: float) -> float:
-    return float(ndtri(0.5 + level / 2))
+def _measured(value: float, error: float, half: float, floor: float, top: float) -> Measured:
+    return Measured(
+        value=value, low=max(value - half, floor), high=min(value + half, top), error=error
+    )
 
 
-def _pool(
-    values: Sequence[float], errors: Sequence[float], level: float, floor: float
-) -> tuple[float, float, float, float]:
-    """Return mean, low, high and standard error over supports; see `pool_summaries`."""
-    k = len(values)
-    mean = float(np.mean(values))
-    within = math.sqrt(sum(error**2 for error in errors)) / k
-    half, error = _normal_point(level) * within, within
+def _pool(found: Sequence[Measured], level: float, floor: float, top: float) -> Measured:
+    """Mean over supports with its interval and standard error; see `pool_summaries`."""
+    k = len(found)
+    values = [each.value for each in found]
+    within = math.sqrt(sum(each.error**2 for each in found)) / k
+    half, error = normal_point(level) * within, within
     if k > 1:
         apart = float(np.std(values, ddof=1)) / math.sqrt(k)
         half = max(half, float(stdtrit(k - 1, 0.5 + level / 2)) * apart)
         error = max(within, apart)
-    return mean, max(mean - half, floor), min(mean + half, 1.0), error
+    return _measured(float(np.mean(values)), error, half, floor, top)
+
+
+__all__ = [
+    "CRITERIA", "BoolArray", "Measured", "SelectionSummary", "pool_summaries", "stability_index",
+    "summarise_selection",
+]  # fmt: skip

@@ -94,7 +94,7 @@ class WorkingSets:
         self.parked: list[tuple[IndexArray, FloatArray, FloatArray]] = []
         self.kept: IndexArray = np.zeros(0, dtype=np.int64)
         self.products: FloatArray = np.zeros((problem.p, 0))
-        if problem.gram is not None:
+        if problem.gram is not None:  # All products there will ever be.
             self.kept, self.products = np.arange(problem.p), problem.gram
 
     def check(
@@ -162,7 +162,7 @@ class WorkingSets:
         each = problem.weight_of(column, owner) * np.abs(b)
 
         def total(terms: FloatArray) -> FloatArray:
-            return np.bincount(place, weights=terms, minlength=len(rows))
+            return np.asarray(np.bincount(place, terms, len(rows)), dtype=np.float64)
 
         cost = total(each)
         rest = np.maximum(power - total(b * (problem.scores[column, owner] + slopes)), 0.0) / 2
@@ -185,8 +185,7 @@ class WorkingSets:
             keys = slice(begin[first], begin[last])
             pointer = begin[first : last + 1] - begin[first]
             some = rows[first:last]
-            shape = last - first, problem.p
-            b = csr_array((self.values[keys], column[keys], pointer), shape=shape)
+            b = csr_array((self.values[keys], column[keys], pointer), (len(some), problem.p))
             gradient = b @ problem.gram
             np.subtract(problem.scores_by_row[some], gradient, out=gradient)
             inside[keys] = gradient[place[keys] - first, column[keys]]
@@ -210,6 +209,7 @@ class WorkingSets:
         weights = floor[:, pick]
         residual: FloatArray | None = None
         fitted: FloatArray | None = None
+        inside = np.zeros((0, len(rows)))
         if len(union):
             if not exact and self._keep(union, len(rows)):
                 fitted = self.products[:, np.searchsorted(self.kept, union)] @ b
@@ -217,8 +217,6 @@ class WorkingSets:
             else:
                 residual = problem.Y[:, pick] - problem.X[:, union] @ b
                 inside = problem.X[:, union].T @ residual / problem.n
-        else:
-            inside = np.zeros((0, len(rows)))
         found: list[tuple[IndexArray, IndexArray, FloatArray]] = []
         for first, last in blocks(problem.p, max(PASS_CELLS // len(rows), 1)):
             if residual is not None:

@@ -12,7 +12,7 @@ from scipy.stats import norm
 import scantling
 from scantling.errors import InputError
 from scantling.law.families import student_law
-from scantling.planning import paper, stated
+from scantling.planning import stated
 from scantling.planning.assured import assured
 from scantling.planning.paper import budget as whole_budget
 from scantling.planning.paper import stated_plan, target_of
@@ -41,11 +41,11 @@ def plan_for(rows=40, columns=30, law="student-t:df=3", replicates=100, **given)
 
 def test_heavy_columns_and_not_errors_alone_make_the_risk():
     # METHODS 5.5: heavy errors cost little with light columns.
-    light = budget(rows=50, columns=200, law="student-t:df=3", column_law="normal", replicates=600)
-    heavy = budget(rows=50, columns=200, law="student-t:df=3", replicates=600)
+    light = budget(rows=50, columns=200, law="student-t:df=3", column_law="normal", replicates=100)
+    heavy = budget(rows=50, columns=200, law="student-t:df=3", replicates=100)
     assert light.risk_at_design.value < 0.03 < heavy.risk_at_design.value
     safe = budget(
-        rows=50, columns=200, law="student-t:df=3", rule="self-normalised", replicates=600
+        rows=50, columns=200, law="student-t:df=3", rule="self-normalised", replicates=100
     )
     assert safe.risk_at_design.value < 0.01
 
@@ -87,8 +87,8 @@ def test_assured_columns_are_those_of_a_drawn_table():
         loss="squared", mode="generative",
     )  # fmt: skip
     assert budget(**given).assured == alone
-    many = budget(**given | {"columns": 20_000}, smallest_effect=0.6, replicates=50)
-    assert many.assured.columns == 20_000
+    many = budget(**given | {"rows": 1000, "columns": 5000}, smallest_effect=0.6, replicates=50)
+    assert many.assured.columns == 5000  # though the bound looks at 4000 of them
     assert not many.assured.reached
     for change, words in (
         ({"law": "student-t:df=1.5"}, "variance"),
@@ -140,13 +140,13 @@ def test_relevant_columns_explain_what_so_many_independent_ones_do():
 
 def test_a_large_accepted_risk_is_still_exact():
     # L(1) at risk 0.4 is 0.93, below the usual floor: P(|N| > .9258) = .3546.
-    found = budget(rows=200, columns=3, law="normal", risk=0.4, replicates=4000)
+    found = budget(rows=200, columns=3, law="normal", risk=0.4, replicates=400)
     assert found.curve[0].p == 1
     assert found.curve[0].risk == pytest.approx(0.3546, abs=0.03)
 
 
 def test_penalty_ratio_against_the_normal_twin():
-    heavy = budget(rows=50, columns=200, law="student-t:df=3", replicates=800)
+    heavy = budget(rows=50, columns=200, law="student-t:df=3", replicates=200)
     assert heavy.penalty_ratio > 1.05
     assert heavy.equivalent_rows == int(50 / heavy.penalty_ratio**2)
     # Same columns and same error streams: a normal law is its own twin.
@@ -166,13 +166,14 @@ def test_a_law_without_variance():
 
 
 def test_bands_hold_simulation_error_and_shrink_with_it():
-    few = budget(rows=40, columns=200, law="student-t:df=3", replicates=100).risk_at_design
-    many = budget(rows=40, columns=200, law="student-t:df=3", replicates=2000).risk_at_design
+    heavy = {"rows": 200, "columns": 400, "law": "student-t:df=3"}
+    few = budget(**heavy, replicates=50).risk_at_design
+    many = budget(**heavy, replicates=800).risk_at_design
     assert few.low <= few.value <= few.high
     assert many.low < many.value < many.high
-    assert many.high - many.low < (few.high - few.low) / 2.5
+    assert many.high - many.low < (few.high - few.low) / 1.3
     # Binomial: the 90 % band is 2 * 1.645 standard errors wide.
-    error = math.sqrt(many.value * (1 - many.value) / 2000)
+    error = math.sqrt(many.value * (1 - many.value) / 800)
     assert many.high - many.low == pytest.approx(3.29 * error, rel=0.4)
 
 
@@ -203,9 +204,10 @@ def test_draws_that_share_columns_are_resampled_together():
 def test_workers_do_not_matter_and_the_seed_does():
     one = budget(**SMALL)
     assert one == budget(**SMALL, workers=3)
-    assert one == budget(**SMALL | {"law": student_law(3, sd=1.0)})
+    fitted = budget(**SMALL | {"law": student_law(3, sd=1.0)})
+    assert (fitted.curve, fitted.noise) == (one.curve, one.noise)
     assert one != budget(**SMALL, seed=2)
-    assert scantling.budget(**SMALL) == one
+    assert scantling.budget(**SMALL, refits=False, tables=False) == one
 
 
 @pytest.mark.parametrize(
@@ -243,7 +245,7 @@ def test_numbers_as_numpy_or_text_are_read_as_numbers():
 
 @pytest.mark.parametrize(
     ("rows", "columns", "replicates"),
-    [(1000, 3_000_000, 400), (30, 3_000_000, 400), (30, 200_000, 100_000)],
+    [(1000, 3_000_000, 400), (30, 3_000_000, 400), (30, 200_000, 100_000), (10**8, 10, 50)],
 )
 def test_what_would_exceed_the_memory_bound_is_refused_before_it_is_drawn(
     rows, columns, replicates, monkeypatch

@@ -16,6 +16,7 @@ from scantling.design.spec import TargetSpec
 from scantling.diagnostics.volatility import Volatility
 from scantling.law.families import normal_law, student_law
 from scantling.law.fit import fit_law
+from scantling.planning import refits as refits_module
 from scantling.planning import stress as module
 from scantling.planning.case import Case, draw_laws
 from scantling.planning.recipe import standardise
@@ -58,13 +59,13 @@ def margins_of(*worst):
 def seen(monkeypatch):
     """What the refits hand to the solver: (X, Y, weights)."""
     calls = []
-    solve = module.solve_batch
+    solve = refits_module.solve_batch
 
     def record(X, Y, weights, **options):
         calls.append((X.copy(), Y.copy(), np.array(weights)))
         return solve(X, Y, weights, **options)
 
-    monkeypatch.setattr(module, "solve_batch", record)
+    monkeypatch.setattr(refits_module, "solve_batch", record)
     return calls
 
 
@@ -204,7 +205,7 @@ def test_power_of_one_relevant_column_among_orthogonal_ones():
     assert 0.6 < theory < 0.8
     # Noise columns pass with probability P(|N| > L) each.
     false_columns = 31 * 2 * norm.sf(level)
-    assert run.mean_size - run.power.value == pytest.approx(false_columns, abs=0.01)
+    assert run.size.value - run.power.value == pytest.approx(false_columns, abs=0.01)
 
 
 def test_two_workers_give_the_same_records():
@@ -222,7 +223,8 @@ def test_easy_designs_pass_throughout_and_hopeless_ones_nowhere():
     assert easy.stability.columns == 40
     assert not easy.stability.reached
     assert easy.failing == ()
-    assert [run.law for run in easy.runs] == ["fitted"] * 7 + ["twin"] * 7
+    # Met clearly by all columns: nothing more is to be found.
+    assert [(run.law, run.columns) for run in easy.runs] == [("fitted", 40), ("twin", 40)]
     hopeless = stress(case_of(target=TargetSpec(relevant=2, smallest_effect=0.02)), serial_map)
     assert (hopeless.stability.columns, hopeless.stability.high) == (0, 0)
     assert hopeless.geometry.columns == 0
@@ -331,11 +333,12 @@ def test_undefined_stability_is_one_if_something_is_always_selected_and_else_non
         case = case_of(np.random.default_rng(0).standard_normal((120, 6)), target=target)
         found[effect] = run_law(case, case.law, "fitted", [6], serial_map)[0]
     always, never = found[3.0], found[0.001]
-    assert (always.mean_size, always.exact, always.power.value) == (6.0, 1.0, 1.0)
+    assert (always.size.value, always.exact.value, always.power.value) == (6.0, 1.0, 1.0)
     assert (always.stability.value, always.stability.low, always.stability.high) == (1, 1, 1)
-    assert never.mean_size == 0.0
+    assert never.size.value == 0.0
     assert (never.stability.value, never.stability.low, never.stability.high) == (0, 0, 0)
-    assert always.errors == never.errors == (0.0, 0.0, 0.0)
+    for name in ("stability", "power", "false_share"):
+        assert getattr(always, name).error == getattr(never, name).error == 0.0
 
 
 def test_errors_are_the_standard_errors_of_repeated_runs():
@@ -344,9 +347,9 @@ def test_errors_are_the_standard_errors_of_repeated_runs():
         run_law(replace(case, seed=seed), case.law, "fitted", [20], serial_map)[0]
         for seed in range(60)
     ]
-    for place, name in enumerate(("stability", "power", "false_share")):
+    for name in ("stability", "power", "false_share", "exact", "size"):
         spread = np.std([getattr(run, name).value for run in runs], ddof=1)
-        claimed = math.sqrt(np.mean([run.errors[place] ** 2 for run in runs]))
+        claimed = math.sqrt(np.mean([getattr(run, name).error ** 2 for run in runs]))
         # Supports differ between seeds as they do within a run; 60 runs know the sd to 9 %.
         assert claimed == pytest.approx(spread, rel=0.35), name
         assert claimed > 0

@@ -67,9 +67,10 @@ def estimate(value):
 
 def stress_of(*, failing=("power",), power=0.41, on_path=None):
     run = StressRun(
-        rows=200, columns=100, law="fitted", mode="conditional", replicates=400,
-        stability=estimate(0.62), power=estimate(power), false_share=estimate(0.11), exact=0.0,
-        mean_size=5.0, errors=(0.03, 0.03, 0.03),
+        rows=200, columns=100, law="fitted", rule="plug-in", mode="conditional", support="random",
+        replicates=400, replicates_asked=400, stability=estimate(0.62), power=estimate(power),
+        false_share=estimate(0.11), exact=estimate(0.0), sign_errors=estimate(0.0),
+        size=estimate(5.0), prediction_loss=None, inclusion=((0, 0.4),),
     )  # fmt: skip
     runs = (run, replace(run, law="twin", power=estimate(0.99), stability=estimate(0.92)))
     if on_path is not None:

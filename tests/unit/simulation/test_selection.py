@@ -10,7 +10,7 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from scantling.errors import InputError
-from scantling.simulation import selection
+from scantling.simulation import stability
 from scantling.simulation.selection import pool_summaries, stability_index, summarise_selection
 
 
@@ -83,7 +83,7 @@ def test_stability_agrees_with_the_formula_and_stays_in_its_range(m, d, share, s
 def test_pieces_do_not_change_the_index(monkeypatch):
     Z = np.random.default_rng(3).random((57, 40)) < 0.3
     whole = stability_index(Z)
-    monkeypatch.setattr(selection, "PIECE_CELLS", 100)
+    monkeypatch.setattr(stability, "PIECE_CELLS", 100)
     assert stability_index(Z) == pytest.approx(whole, abs=1e-12)
 
 
@@ -95,7 +95,6 @@ def test_an_undefined_index_is_none_with_the_reason(Z, reason):
     assert stability_index(Z) is None
     summary = summarise_selection(Z, np.array([True, False, False, False]))
     assert summary.stability is None
-    assert summary.stability_error is None
     assert reason in summary.stability_note
 
 
@@ -107,19 +106,48 @@ def test_summary_of_a_small_table_by_hand():
     selected = rows("1100", "1000", "1111", "0000")
     summary = summarise_selection(selected, rows("1100")[0])
     assert summary.replicates == 4
-    assert summary.power == pytest.approx((1 + 0.5 + 1 + 0) / 4)
-    assert summary.false_share == pytest.approx((0 + 0 + 0.5 + 0) / 4)
-    assert summary.exact == 0.25
-    assert summary.mean_size == pytest.approx(7 / 4)
+    assert summary.power.value == pytest.approx((1 + 0.5 + 1 + 0) / 4)
+    assert summary.false_share.value == pytest.approx((0 + 0 + 0.5 + 0) / 4)
+    assert summary.exact.value == 0.25
+    assert summary.size.value == pytest.approx(7 / 4)
     error = np.std([1, 0.5, 1, 0], ddof=1) / 2
-    assert summary.power_error == pytest.approx(error)
-    assert summary.power_low == pytest.approx(summary.power - 1.6448536 * error)
-    assert summary.power_high == 1.0
-    assert summary.false_share_low == 0.0
-    assert summary.false_share_high == pytest.approx(0.125 + 1.6448536 * 0.125)
-    assert summary.stability == pytest.approx(textbook_stability(selected))
+    assert summary.power.error == pytest.approx(error)
+    assert summary.power.low == pytest.approx(summary.power.value - 1.6448536 * error)
+    assert summary.power.high == 1.0
+    assert summary.false_share.low == 0.0
+    assert summary.false_share.high == pytest.approx(0.125 + 1.6448536 * 0.125)
+    assert summary.stability.value == pytest.approx(textbook_stability(selected))
     with pytest.raises(dataclasses.FrozenInstanceError):
         summary.power = 1.0
+
+
+def test_signs_and_prediction_loss_by_hand():
+    selected = rows("1100", "1000", "1111", "0000")
+    summary = summarise_selection(
+        selected, rows("1100")[0], wrong_signs=[1, 0, 2, 0], loss=[2.0, 4.0, 6.0, 8.0],
+        oracle=[1.0, 3.0, 1.0, 3.0],
+    )  # fmt: skip
+    assert summary.sign_errors.value == pytest.approx((0.5 + 0 + 1 + 0) / 4)
+    # A ratio of means, 5 / 2; its error from loss - 2.5 oracle = -.5, -3.5, 3.5, .5.
+    assert summary.prediction_loss.value == pytest.approx(2.5)
+    error = np.std([-0.5, -3.5, 3.5, 0.5], ddof=1) / 2 / 2
+    assert summary.prediction_loss.error == pytest.approx(error)
+    assert summary.prediction_loss.low == pytest.approx(max(2.5 - 1.6448536 * error, 0))
+    assert summary.prediction_loss.high == pytest.approx(2.5 + 1.6448536 * error)
+    # A loss above the oracle's is not cut at 1, nor is a number of columns.
+    assert summary.size.high > 1.75
+    assert summarise_selection(selected, rows("1100")[0]).prediction_loss is None
+
+
+def test_interval_of_the_loss_ratio_covers():
+    rng = np.random.default_rng(8)
+    truth, hits = np.array([True, False]), 0
+    for _ in range(600):
+        oracle = rng.gamma(2.0, size=100)
+        loss = 1.5 * oracle + rng.gamma(2.0, size=100)  # ratio of means 2.5
+        found = summarise_selection(rng.random((100, 2)) < 0.5, truth, loss=loss, oracle=oracle)
+        hits += found.prediction_loss.low <= 2.5 <= found.prediction_loss.high
+    assert hits / 600 == pytest.approx(0.90, abs=4 * np.sqrt(0.09 / 600))
 
 
 def refits(rng, m, shares):
@@ -130,7 +158,7 @@ def test_interval_of_the_power_covers():
     rng = np.random.default_rng(4)
     shares = np.r_[np.full(4, 0.7), np.full(20, 0.05)]
     found = [refits(rng, 100, shares) for _ in range(800)]
-    covered = np.mean([s.power_low <= 0.7 <= s.power_high for s in found])
+    covered = np.mean([s.power.low <= 0.7 <= s.power.high for s in found])
     assert covered == pytest.approx(0.90, abs=4 * np.sqrt(0.09 / 800))
 
 
@@ -143,12 +171,12 @@ def test_pooled_interval_covers_the_mean_over_supports():
 
     for spread in (0.3, 0.0):
         found = [pooled(spread) for _ in range(500)]
-        covered = np.mean([s.power_low <= 0.6 <= s.power_high for s in found])
+        covered = np.mean([s.power.low <= 0.6 <= s.power.high for s in found])
         assert covered > 0.90 - 4 * np.sqrt(0.09 / 500)
     # Negative control: errors within supports alone miss the spread between them.
     found = [pooled(0.3) for _ in range(300)]
     narrow = 1.645 * np.sqrt(0.6 * 0.4 / 4 / 300)
-    assert np.mean([abs(s.power - 0.6) <= narrow for s in found]) < 0.5
+    assert np.mean([abs(s.power.value - 0.6) <= narrow for s in found]) < 0.5
 
 
 def test_pooling_averages_and_never_has_less_than_the_error_within():
@@ -157,14 +185,14 @@ def test_pooling_averages_and_never_has_less_than_the_error_within():
     parts = [refits(rng, m, shares) for m in (50, 80, 50)]
     pooled = pool_summaries(parts)
     assert pooled.replicates == 180
-    for name in ("power", "false_share", "stability", "exact", "mean_size"):
-        assert getattr(pooled, name) == pytest.approx(np.mean([getattr(s, name) for s in parts]))
-    for name in ("power", "false_share", "stability"):
-        within = np.sqrt(sum(getattr(s, f"{name}_error") ** 2 for s in parts)) / 3
-        between = np.std([getattr(s, name) for s in parts], ddof=1) / np.sqrt(3)
-        assert getattr(pooled, f"{name}_error") == pytest.approx(max(within, between))
+    for name in ("power", "false_share", "stability", "exact", "size"):
+        found = [getattr(s, name) for s in parts]
+        assert getattr(pooled, name).value == pytest.approx(np.mean([f.value for f in found]))
+        within = np.sqrt(sum(f.error**2 for f in found)) / 3
+        between = np.std([f.value for f in found], ddof=1) / np.sqrt(3)
+        assert getattr(pooled, name).error == pytest.approx(max(within, between))
     same = pool_summaries([parts[0]] * 3)
-    assert same.power_error == pytest.approx(parts[0].power_error / np.sqrt(3))
+    assert same.power.error == pytest.approx(parts[0].power.error / np.sqrt(3))
     assert pool_summaries(parts[:1]) is parts[0]
 
 
@@ -173,12 +201,11 @@ def test_pooling_says_how_many_supports_have_no_stability():
     fine = summarise_selection(rows("1100", "1010", "1100"), truth)
     none = summarise_selection(np.zeros((3, 4), dtype=bool), truth)
     pooled = pool_summaries([fine, none, fine])
-    assert pooled.stability == pytest.approx(fine.stability)
+    assert pooled.stability.value == pytest.approx(fine.stability.value)
     assert pooled.stability_note == "not defined for 1 of 3 supports"
-    assert pooled.power == pytest.approx(2 / 3 * fine.power)
+    assert pooled.power.value == pytest.approx(2 / 3 * fine.power.value)
     empty = pool_summaries([none, none])
     assert empty.stability is None
-    assert empty.stability_low is None
     assert empty.stability_note == "not defined for 2 of 2 supports"
 
 
@@ -192,6 +219,14 @@ def test_pooling_says_how_many_supports_have_no_stability():
         (lambda: summarise_selection(HAND, np.ones(5)), "^relevant: "),
         (lambda: summarise_selection(HAND, np.zeros(5, dtype=bool)), "^relevant: at least one"),
         (lambda: summarise_selection(HAND[:1], HAND[0]), "^selected: at least 2"),
+        (
+            lambda: summarise_selection(HAND, HAND[0], wrong_signs=np.zeros(3)),
+            "^wrong_signs: 4 numbers, one for each refit",
+        ),
+        (
+            lambda: summarise_selection(HAND, HAND[0], loss=np.full(4, np.nan), oracle=np.ones(4)),
+            "^loss: finite",
+        ),
         (lambda: pool_summaries([]), "^summaries: at least one"),
         (
             lambda: pool_summaries(
