@@ -32,7 +32,7 @@ ROWS = (200, 500, 1000, 2000, 5000)
 """Of the slope."""
 FEW_ROWS = (30, 50, 100)
 """Shown, not part of it."""
-COLUMNS = {3.0: 4_000, 3.5: 12_000, 4.0: 40_000}
+COLUMNS = {3.0: 1_500, 3.5: 5_000, 4.0: 16_000}
 """Columns drawn by degrees of freedom: a multiple of the largest limit."""
 BEYOND = (5.0, 6.0, math.inf)
 """Laws for which none may be found; inf is the normal law."""
@@ -169,7 +169,7 @@ def main() -> None:
     """Simulate, print and, if asked, write the page."""
     parser = argparse.ArgumentParser(description=__doc__.splitlines()[0] if __doc__ else "")
     parser.add_argument("--batches", type=int, default=12)
-    parser.add_argument("--draws", type=int, default=1000)
+    parser.add_argument("--draws", type=int, default=500)
     parser.add_argument("--beyond-columns", type=int, default=1_000_000)
     parser.add_argument("--beyond-draws", type=int, default=200)
     parser.add_argument("--beyond-rows", type=int, nargs="+", default=[200])

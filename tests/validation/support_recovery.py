@@ -68,9 +68,7 @@ def report(replicates: int, seed: int) -> list[str]:
     from write_up import preamble, share_error, table
 
     started = time.monotonic()
-    found = {
-        p: [success_share(p, theta, replicates, seed) for theta in THETAS] for p in REFERENCE
-    }
+    found = {p: [success_share(p, theta, replicates, seed) for theta in THETAS] for p in REFERENCE}
     lines = preamble("Success curves on standard normal designs", time.monotonic() - started)
     lines += [
         f"Share of {replicates} replicates in which the lasso gives every sign right, and in"

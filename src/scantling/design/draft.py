@@ -45,6 +45,7 @@ _MEANING = {
     "power": "share of relevant columns selected",
     "stability": "of selection under fresh errors",
     "false_share": "of false columns among the selected",
+    "support": "which columns matter in refits",
     "rule": "how the penalty is chosen",
     "loss": "of the regression",
     "adaptive": "whether a second, reweighted lasso follows",

@@ -132,7 +132,7 @@ LANGUAGE: dict[str, dict[str, Key]] = {
         "stability": _number("above 0 and at most 1", lambda value: 0 < value <= 1),
         "false_share": _number("of at least 0 and below 1", lambda value: 0 <= value < 1),
         "support": Key(
-            accepted='"random", "pilot" or a list of candidate columns, none of them twice,',
+            accepted='"random", "pilot" or a list of candidate columns that differ',
             fits=lambda value: (
                 value in ("random", "pilot")
                 or (_names_fit(value) and len(set(value)) == len(value) > 0)

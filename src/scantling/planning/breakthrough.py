@@ -240,11 +240,14 @@ def pooled_curve(
 
     The draws of `found` are shared among the laws the sample leaves open, and so are those behind
     `curves` under each drawn law: together they are one sample of the same risk, and a larger one.
+    A law stated exactly leaves none open, and its own draws are the point.
     The curves are steadied, and given the simulation error of the point: it belongs to the band.
     """
     own = risk_curves(found, case.target.risk)[0]
-    total = found.draws + len(curves) * draws_per_law
-    curve = (found.draws * own + draws_per_law * curves.sum(axis=0)) / total
+    curve, total = own, found.draws
+    if case.law.spread is not None:
+        total = found.draws + len(curves) * draws_per_law
+        curve = (found.draws * own + draws_per_law * curves.sum(axis=0)) / total
     spread = simulation_variance(found, case.target.risk, grid)
     many = steadied(curves, spread / draws_per_law)
     chance = stream(case.seed, "risk error").standard_normal((len(curves), 1))

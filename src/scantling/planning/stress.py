@@ -155,9 +155,7 @@ def _criteria(
     out = []
     for start, stop in blocks(len(selected), REFITS_PER_LAW):
         summary = summarise_selection(selected[start:stop], truth)
-        out.append(
-            [stability_of(summary).value, summary.power.value, summary.false_share.value]
-        )
+        out.append([stability_of(summary).value, summary.power.value, summary.false_share.value])
     return out
 
 

@@ -114,7 +114,7 @@ class LimitSearch:
         self.case, self.law, self.name, self.grid = case, law, name, list(grid)
         self.case_of, self.early, self.halving, self.band = case_of, early, halving, band
         self.size = max(2, case.replicates // SUPPORTS)
-        self.ends = _batch_ends(self.size) if early else [self.size]
+        self.ends = batch_ends(self.size) if early else [self.size]
         self.effects = np.zeros((len(case.law_draws), len(CRITERIA)))
         """What the drawn laws change about the margins, shape (laws, 3)."""
         self.noise = stream(case.seed, "criteria error").standard_normal(self.effects.shape)
@@ -122,9 +122,7 @@ class LimitSearch:
         self.supports = [support_set(case, number) for number in range(SUPPORTS)]
         self._parts: dict[int, list[list[Refits]]] = {}
         self._runs: dict[int, StressRun] = {}
-        self._at: int | None = None if halving else 0
-        if halving:
-            self._at = len(self.grid) - 1
+        self._at: int | None = len(self.grid) - 1 if halving else 0
 
     @property
     def runs(self) -> tuple[StressRun, ...]:
@@ -196,12 +194,12 @@ class LimitSearch:
         return None
 
 
-def _batch_ends(size: int) -> list[int]:
-    """Refits of a support set after each batch."""
+def batch_ends(size: int) -> list[int]:
+    """Refits of a support set after each batch; the last is not a small remainder."""
     ends = [max(FIRST_BATCH, round(FIRST_SHARE * size))]
     while ends[-1] < size:
         ends.append(2 * ends[-1])
-    return [*(end for end in ends if end < size), size]
+    return [*(end for end in ends if end <= 0.75 * size), size]
 
 
 def is_clear(case: Case, run: StressRun) -> bool:

@@ -22,6 +22,7 @@ from scantling.report.wording import (
 )
 
 Shown = Callable[[float], str]
+HEAD = "scantling stress: "
 NO_NUMBER = "none"
 SHORT = {"normal-volatility": "normal on path"}
 """Heads that would be too wide beside two others."""
@@ -30,7 +31,7 @@ SHORT = {"normal-volatility": "normal on path"}
 def render_stress(report: StressReport, width: int = 80) -> str:
     """Return the report as plain text, at least 80 columns wide."""
     width = max(width, NARROWEST)
-    lines = [f"scantling: {shortened(report.title, width - len('scantling: '))}"]
+    lines = [HEAD + shortened(report.title, width - len(HEAD))]
     lines += labelled("Verdict", report.judgement.answer.upper(), width)
     for place, reason in enumerate(report.judgement.reasons):
         lines += labelled("" if place else "Because", reason, width)
@@ -69,9 +70,7 @@ def _selection(report: StressReport, width: int) -> list[str]:
     return lines
 
 
-def _criteria(
-    report: StressReport, runs: Sequence[StressRun], heads: Sequence[str]
-) -> list[str]:
+def _criteria(report: StressReport, runs: Sequence[StressRun], heads: Sequence[str]) -> list[str]:
     target = report.target
     asked: list[tuple[str, str, str, Shown]] = [
         ("stability", "stability", f">= {target.stability:g}", two),

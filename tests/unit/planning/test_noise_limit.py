@@ -17,6 +17,7 @@ from scantling.planning import breakthrough as module
 from scantling.planning.breakthrough import (
     BLOCK,
     DRAWS_PER_LAW,
+    WIDENING,
     break_through,
     curve_points,
     needed_penalty,
@@ -128,7 +129,8 @@ def test_the_curve_is_the_risk_on_the_grid_with_its_band_from_the_drawn_laws():
         # Of their spread only what chance does not explain is kept; the point's own is added.
         chance = draws * error**2 / per_law
         kept = max(0.0, 1 - chance / risks.var())
-        many.append(np.clip(risks.mean() + kept * (risks - risks.mean()) + moved * error, 0, 1))
+        steady = risks.mean() + kept * (risks - risks.mean()) + moved * error
+        many.append(np.clip(risk + WIDENING * (steady - risk), 0, 1))
         ordered = np.sort(many[-1])
         expected = (min(ordered[2], risk), max(ordered[47], risk))
         assert (point.low, point.high) == pytest.approx(expected, abs=1e-12)
@@ -138,7 +140,8 @@ def test_the_curve_is_the_risk_on_the_grid_with_its_band_from_the_drawn_laws():
     over = np.array(many) > 0.05
     first = np.array([math.inf if not row.any() else row.argmax() for row in over.T])
     low, high = np.sort(first)[[2, 47]]
-    assert grid[int(low) - 1] <= found.noise.low < grid[int(low)]
+    # A point of the curve between grid points may cross a little earlier.
+    assert grid[int(low) - 2] <= found.noise.low < grid[int(low)]
     if math.isinf(high):
         assert found.noise.high is None
     else:
