@@ -5,12 +5,16 @@ from __future__ import annotations
 import json
 import math
 import shlex
+from functools import partial
 from pathlib import Path
 from typing import Any
 
 import pytest
 
 from scantling.cli.main import run
+from scantling.planning import stated
+from scantling.planning.generative import Tables
+from scantling.planning.rows import Effort, rows_plan
 
 QUICK = ["--rows", "40", "--columns", "12", "--law", "normal", "--relevant", "2",
          "--replicates", "50"]  # fmt: skip
@@ -32,6 +36,17 @@ seed = 4
 MAY_BE_NULL = ("high", "binding", "rows", "columns", "low", "noise", "signal", "stability",
                "allowed_columns", "penalty_ratio", "equivalent_rows", "rows_needed",
                "detectable_effect", "detectable_effect_worst_tenth", "tail_index")  # fmt: skip
+
+
+@pytest.fixture(autouse=True)
+def brief(monkeypatch: pytest.MonkeyPatch, request: pytest.FixtureRequest) -> None:
+    """Rows needed are searched with little effort, but where the whole run is looked at."""
+    if request.node.name == "test_from_flags_alone":
+        return
+    effort = Effort(
+        tables=Tables(100_000, 1, 4), largest=100_000, times=8, refits=10, refit_tables=1
+    )
+    monkeypatch.setattr(stated, "rows_plan", partial(rows_plan, effort=effort))
 
 
 def done(capsys: Any, *arguments: str | Path) -> tuple[int, str, str]:

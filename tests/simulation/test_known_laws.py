@@ -22,6 +22,7 @@ from scantling.planning.breakthrough import BreakThrough, break_through
 from scantling.planning.budget import assemble
 from scantling.planning.case import Case, draw_laws
 from scantling.planning.ceiling import ceiling
+from scantling.planning.limit import missing_limit
 from scantling.planning.signal import signal
 from scantling.planning.stress import stress
 from scantling.planning.verdict import Verdict, verdict
@@ -148,7 +149,8 @@ def judged(X, y, target) -> tuple[Verdict, str | None]:
     budget = assemble(
         rows=case.rows, asked=case.columns, noise=noise,
         signal=signal(case, noise.fitted, noise.drawn), stability=selection.stability,
-        geometry=selection.geometry, ceiling=ceiling(diagnosis, case.rows, case.rule),
+        geometry=selection.geometry, ceiling=ceiling(diagnosis, case.rows, case.loadings),
+        assured=missing_limit("not asked for"),
     )  # fmt: skip
     return verdict(case, diagnosis, budget, selection), budget.binding
 

@@ -22,9 +22,9 @@ from scantling.diagnostics.tail_estimators import (
 )
 from scantling.diagnostics.tail_index import tail_index
 from scantling.diagnostics.tail_interval import folded_quantile
-from scantling.law.fit import student_spread
+from scantling.law.catalogue import CATALOGUE
 from scantling.law.goodness import bootstrap_fit_test
-from scantling.law.student import fit_student, profile
+from scantling.law.student import profile, student_spread
 
 COLUMNS = 300
 
@@ -223,8 +223,8 @@ def test_size_of_the_fit_test(family: str, df: float) -> None:
     for seed in range(200):
         sample = rng.standard_normal(60) if family == "normal" else rng.standard_t(df, 60)
         sample -= sample.mean()
-        gamma = float(fit_student(sample[None])[0][0])
-        p_values.append(bootstrap_fit_test(sample, family, gamma, seed=seed, draws=49)[1])
+        law = CATALOGUE[family].fit(sample)
+        p_values.append(bootstrap_fit_test(sample, law, seed=seed, draws=49)[1])
     assert np.mean(np.array(p_values) <= 0.10) == pytest.approx(0.10, abs=0.07)
     assert np.median(p_values) == pytest.approx(0.5, abs=0.12)
 
@@ -237,8 +237,8 @@ def test_power_of_the_fit_test(family: str) -> None:
     def share(drawn: np.ndarray) -> float:
         found = []
         for seed, sample in enumerate(drawn - drawn.mean(axis=1, keepdims=True)):
-            gamma = float(fit_student(sample[None])[0][0])
-            found.append(bootstrap_fit_test(sample, family, gamma, seed=seed, draws=49)[1] <= 0.05)
+            law = CATALOGUE[family].fit(sample)
+            found.append(bootstrap_fit_test(sample, law, seed=seed, draws=49)[1] <= 0.05)
         return float(np.mean(found))
 
     assert share(rng.exponential(size=(20, 150))) > 0.9

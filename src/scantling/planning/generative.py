@@ -163,12 +163,18 @@ def generative_scores(
     pieces = pieces_of(source, rows, columns)
     units = [(table, *piece) for table in range(len(parts)) for piece in pieces]
 
+    kept: dict[int, list[FloatArray]] = {}  # the last table's errors, for its next block
+
     def one(unit: tuple[int, int, int]) -> tuple[ScorePiece, ...]:
         table, start, stop = unit
         first, last = parts[table]
         X = source.columns(rows, start, stop, seed, table)
-        errors = [centre(source.errors(law, rows, last - first, seed, table)) for law in laws]
-        return _pieces(X, errors, rule, loss, floor)
+        if table not in kept:
+            kept.clear()
+            kept[table] = [
+                centre(source.errors(law, rows, last - first, seed, table)) for law in laws
+            ]
+        return _pieces(X, kept[table], rule, loss, floor)
 
     # Small tables are taken many at a time: one of them is less work than its handling.
     together = max(1, BLOCK_CELLS // (8 * rows * columns)) if len(pieces) == 1 else 1

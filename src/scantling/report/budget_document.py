@@ -18,6 +18,8 @@ if TYPE_CHECKING:
     from scantling.law.families import ErrorLaw
     from scantling.report.record import PlanReport, Receipt
 
+WORST = 50
+"""Columns listed by their share of the break-throughs, at most."""
 SCHEMA = "scantling-budget/1"
 
 
@@ -40,8 +42,8 @@ def _limit(limit: Limit) -> dict[str, Any]:
     return out | {"mode": limit.mode}
 
 
-def budget_part(budget: Budget) -> dict[str, Any]:
-    """All limits and what follows from them."""
+def budget_part(budget: Budget, names: Sequence[str] = ()) -> dict[str, Any]:
+    """All limits and what follows from them; `names` are those of the columns, if they have any."""
     rate = budget.ceiling
     allowed = budget.allowed
     unknown = budget.signal.note or "unknown"
@@ -75,6 +77,10 @@ def budget_part(budget: Budget) -> dict[str, Any]:
             {"p": c.p, "risk": number(c.risk), "low": number(c.low), "high": number(c.high)}
             for c in budget.curve
         ],
+        "worst_columns": [
+            {"column": names[j], "share": number(share)}
+            for j, share in zip(budget.worst_columns, budget.worst_shares, strict=True)
+        ][:WORST],
         **noted("penalty_ratio", budget.penalty_ratio, "no quantile of the largest score found"),
         **noted("equivalent_rows", budget.equivalent_rows, "the penalty ratio is unknown"),
         **noted("rows_needed", budget.rows_needed, budget.rows_note or "unknown"),

@@ -30,7 +30,7 @@ def document(report: Report) -> dict[str, Any]:
         "design": design_part(report),
         "diagnosis": diagnosis_part(report),
         "law": law_part(report),
-        "budget": budget_part(report.budget),
+        "budget": budget_part(report.budget, report.read.names),
         "stress": [] if report.stress is None else [
             run_part(run, report.read.names) for run in report.stress.runs
         ],

@@ -91,7 +91,12 @@ def test_the_limit_on_a_grid_is_the_exact_one(tail, monkeypatch):
 
 
 def test_the_limit_meets_none_some_and_all():
-    limits = [plan_noise(plan_for(columns=400), made_up(tail=tail))[0] for tail in (2, 4, 300)]
+    rng = np.random.default_rng(0)
+    # Of normal ratios, one in some draws is far larger than every level.
+    few = np.abs(rng.standard_normal((400, 120)))
+    few[0, :30] = 9.0
+    samples = [made_up(tail=2), passers(few, 2.0), passers(np.minimum(few, 3.0), 2.0)]
+    limits = [plan_noise(plan_for(columns=400), found)[0] for found in samples]
     assert limits[0].columns == 0
     assert 0 < limits[1].columns < 400
     assert (limits[2].columns, limits[2].high, limits[2].note) == (400, None, "at least")

@@ -102,7 +102,7 @@ def test_cover_is_said_where_there_is_something_to_cover(answer):
 
 
 def test_rows_say_what_tails_cost_and_what_effects_need():
-    words = "1,000 used; tails cost as much as losing 408 of them; effects need 1,900"
+    words = "1,000 used; tails cost as much as losing 408 of them; needed for all 100: 1,900"
     assert line(report(), "Rows") == words
     cheap = budget_of(noise=limit(40.0), equivalent_rows=980)
     assert line(report(budget=cheap), "Rows") == "1,000 used; effects need 1,900"
