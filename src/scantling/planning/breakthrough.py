@@ -37,8 +37,10 @@ CELLS = 60_000_000
 they cost little and the risk is a small probability."""
 MOST_TIMES = 10
 FEWEST_DRAWS = 50
-WIDENING = 1.4
-"""Bands are so many times as wide as the drawn laws make them: those are fitted to residuals, not
+LEAST_RISK = 1e-6
+"""Smaller risks are not told apart."""
+WIDENING = 1.5
+"""Bands are so many times as wide, in logs, as the drawn laws make them: those are fitted to residuals, not
 to errors, and over known designs had to be so wide to cover the true risk as often as they say
 (tests/validation/risk_calibration.py)."""
 PASSING_SHARE = 0.05
@@ -251,8 +253,10 @@ def pooled_curve(
     spread = simulation_variance(found, case.target.risk, grid)
     many = steadied(curves, spread / draws_per_law)
     chance = stream(case.seed, "risk error").standard_normal((len(curves), 1))
-    many = curve + WIDENING * (many + chance * np.sqrt(spread / total) - curve)
-    return curve, np.clip(many, 0, 1)
+    many = np.maximum(many + chance * np.sqrt(spread / total), LEAST_RISK)
+    # In logs, so that a risk far above what is accepted does not seem to reach down to it.
+    middle = np.maximum(curve, LEAST_RISK)
+    return curve, np.minimum(middle * (many / middle) ** WIDENING, 1.0)
 
 
 def break_through(case: Case, mapper: Mapper, *, bands: bool = True) -> BreakThrough:
