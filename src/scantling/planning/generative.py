@@ -291,8 +291,7 @@ def twin_of(law: ErrorLaw) -> ErrorLaw:
 def table_of(source: ColumnSource, *, rows: int, columns: int, seed: int, table: int) -> FloatArray:
     """One whole table, standardised on the sample: shape (rows, columns)."""
     pieces: Iterator[FloatArray] = (
-        source.columns(rows, a, b, seed, table)
-        for a, b in pieces_of(source, rows, columns)
+        source.columns(rows, a, b, seed, table) for a, b in pieces_of(source, rows, columns)
     )
     X = np.concatenate(list(pieces)).T
     X = X - X.mean(axis=0)

@@ -243,7 +243,8 @@ def rows_plan(plan: Plan, mapper: Mapper, *, refits: bool, effort: Effort = THOR
         by_limit[name] = _needed(search, name, steps, by_limit)
     wanted = LIMITS if search.refits else LIMITS[:2]
     missing = [name for name in wanted if by_limit[name].rows is None]
-    joint = Needed(rows=None, note="; ".join(by_limit[name].note for name in missing))
+    notes = dict.fromkeys(by_limit[name].note for name in missing)  # each once
+    joint = Needed(rows=None, note="; ".join(notes))
     if not missing:
         joint = Needed(rows=max(by_limit[name].rows or 0 for name in wanted))
     fewest = max(FEWEST_ROWS, plan.target.relevant + 2)

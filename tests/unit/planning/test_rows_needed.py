@@ -148,6 +148,11 @@ def test_an_effect_beyond_reach_is_null_with_the_range_in_its_note():
     assert found.needed.rows is None
     assert found.needed.note == "more rows do not lift the signal limit (tried up to 64 times)"
     assert found.searched_to == 64 * 60
+    # Stability is not searched where effects are never detectable; the reason is given once.
+    both = rows_plan(plan_for(60, 20, smallest_effect=0.02), serial_map, refits=True,
+                     effort=QUICK)  # fmt: skip
+    assert dict(both.by_limit)["stability"].rows is None
+    assert both.needed.note == found.needed.note
 
 
 def test_without_variance_only_noise_is_searched():
