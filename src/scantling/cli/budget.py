@@ -46,7 +46,8 @@ SAID = (
 )  # fmt: skip
 @click.option("--json", "as_json", is_flag=True, help="Print the JSON twin, not the text.")
 def budget(
-    source: Path | None, pace: str | None, workers: int, out: Path | None, as_json: bool, **said: Any
+    source: Path | None, pace: str | None, workers: int, out: Path | None, as_json: bool,
+    **said: Any,
 ) -> int:  # fmt: skip
     """How many columns so many rows can carry, without data.
 

@@ -40,8 +40,8 @@ FEWEST_DRAWS = 50
 LEAST_RISK = 1e-6
 """Smaller risks are not told apart."""
 WIDENING = 1.5
-"""Bands are so many times as wide, in logs, as the drawn laws make them: those are fitted to residuals, not
-to errors, and over known designs had to be so wide to cover the true risk as often as they say
+"""Bands are so many times as wide, in logs, as the drawn laws make them: those are fitted to
+residuals, not to errors, and over known designs had to be so wide to cover the true risk
 (tests/validation/risk_calibration.py)."""
 PASSING_SHARE = 0.05
 """Share of ratios above L(1), rounded up: 0.03 under normal errors."""

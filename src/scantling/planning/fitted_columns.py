@@ -15,6 +15,7 @@ from scantling.law.column_law import ColumnLaw, fit_column_law
 from scantling.law.column_lineage import origins
 from scantling.law.families import ErrorLaw
 from scantling.planning.case import Case
+from scantling.planning.generative import FEW_TABLES
 from scantling.planning.plan import Plan
 
 
@@ -31,6 +32,11 @@ class FittedColumns:
     def independent(self) -> bool:
         """Never taken for granted."""
         return False
+
+    @property
+    def most_tables(self) -> int:
+        """Few: each has its path, factors and quantiles to set up."""
+        return FEW_TABLES
 
     @property
     def divisible(self) -> bool:

@@ -28,6 +28,10 @@ MANY_COLUMNS = 20_000
 """Independent columns in one table that stand for several tables."""
 
 
+MANY_TABLES = 1_000_000
+FEW_TABLES = 40
+
+
 class Tables(NamedTuple):
     """How freely tables are drawn."""
 
@@ -35,7 +39,7 @@ class Tables(NamedTuple):
     """Most values drawn for columns, unless the fewest tables need more."""
     fewest: int = FEWEST_TABLES
     """Tables that the draws are shared among at least."""
-    most: int = 1_000_000
+    most: int = MANY_TABLES
     """And at most: a table of few columns has its cost too."""
 
 
@@ -54,6 +58,10 @@ class ColumnSource(Protocol):
     def independent(self) -> bool:
         """Whether columns are independent and alike, so that many in one table do the work of
         several tables."""
+
+    @property
+    def most_tables(self) -> int:
+        """Tables drawn at most: each has a cost of its own where rows follow one another."""
 
     @property
     def divisible(self) -> bool:
@@ -79,6 +87,11 @@ class StatedColumns:
     def independent(self) -> bool:
         """Unless they are correlated."""
         return self.correlation == 0
+
+    @property
+    def most_tables(self) -> int:
+        """Few where volatility follows a recursion through the rows."""
+        return MANY_TABLES if self.law.volatility is None else FEW_TABLES
 
     @property
     def divisible(self) -> bool:
@@ -120,7 +133,8 @@ class ScorePiece:
 
 
 def tables_for(source: ColumnSource, columns: int, tables: Tables = TABLES) -> Tables:
-    """Fewer tables where independent columns are so many that one table has them all."""
+    """Fewer where each is costly, or independent columns are so many that one has them all."""
+    tables = tables._replace(most=min(tables.most, source.most_tables))
     if not source.independent:
         return tables
     return tables._replace(fewest=min(tables.fewest, math.ceil(MANY_COLUMNS / columns)))

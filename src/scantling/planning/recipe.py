@@ -137,9 +137,7 @@ def carry_out(recipe: Recipe, origin: Origin) -> Case | None:
             return None  # nothing is left that could be computed
         if _same(columns.values, case.X):
             return None  # as with powers of dummies
-        case = replace(
-            case, X=columns.values, relevant_columns=_found_again(case, columns, origin)
-        )
+        case = replace(case, X=columns.values, relevant_columns=_found_again(case, columns, origin))
     if recipe.dropped:
         kept = _kept(recipe.dropped, columns, origin)
         if kept.size in (0, case.columns):

@@ -154,9 +154,7 @@ def _recomputed(
     many, signals = curve[None], [signal]
     if drawn:
         curves = np.array([each for each, _ in drawn])
-        curve, many = pooled_curve(
-            case, fitted.found, curves, column_grid(case.columns), per_law
-        )
+        curve, many = pooled_curve(case, fitted.found, curves, column_grid(case.columns), per_law)
         signals = [each for _, each in drawn]
     last = float(curve[-1])
     low, high = band(many[:, -1].tolist())

@@ -92,9 +92,7 @@ def signal(case: Case, fitted: ScoreSample, drawn: tuple[ScoreSample, ...]) -> S
     deviation = sample_deviation(case, case.law, fitted)
     if not np.isfinite(deviation).all():
         reason = "the fitted error law has no variance"
-        return Signal(
-            limit=missing_limit(reason), detectable=None, detectable_worst=None
-        )
+        return Signal(limit=missing_limit(reason), detectable=None, detectable_worst=None)
     point = signal_limit_of(case, case.law, fitted)
     draws = [
         signal_limit_of(case, law, sample)

@@ -15,7 +15,7 @@ from scantling.planning.budget import Budget, assemble
 from scantling.planning.case import LAW_DRAWS, loadings_of
 from scantling.planning.ceiling import Ceiling
 from scantling.planning.effects import EffectEntry, effects_table
-from scantling.planning.generative import CELLS, MODE, pieces_of, tables_for, tables_of
+from scantling.planning.generative import MODE, pieces_of, tables_for, tables_of
 from scantling.planning.limit import Limit, make_limit, missing_limit
 from scantling.planning.plan import (
     Plan,
@@ -32,6 +32,11 @@ from scantling.simulation.scores import largest_quantile
 
 MOST_TIMES_DRAWS = 10
 """Draws beyond the replicates, times them, where they cost little."""
+PRODUCTS = 400_000_000
+"""Rows times columns times draws up to which more draws are taken than asked; tables are shared
+among them where fresh ones would cost more."""
+SEARCHED_CELLS = 40_000_000
+"""Rows times columns beyond which rows needed and tables are not computed: minutes, not seconds."""
 REFIT_CELLS = 4_000_000
 """Rows times columns of the largest table that is refitted."""
 REFIT_COLUMNS = 5_000
@@ -54,7 +59,7 @@ class Planned:
 
 def draws_of(plan: Plan) -> int:
     """Draws of errors: more than asked where they cost little, as the risk is a small number."""
-    affordable = CELLS // (plan.rows * plan.columns)
+    affordable = PRODUCTS // (plan.rows * plan.columns)
     return max(plan.replicates, min(affordable, MOST_TIMES_DRAWS * plan.replicates))
 
 
@@ -112,6 +117,7 @@ def budget_of(
         worst_columns=(), worst_shares=(), fitted=fitted, drawn=(),
     )  # fmt: skip
     stability, geometry, done = _refitted(plan, mapper, refits)
+    tables = tables and plan.rows * plan.columns <= SEARCHED_CELLS
     rows = rows_plan(plan, mapper, refits=done is not None) if tables else None
     effects: tuple[EffectEntry, ...] = ()
     if tables and done is not None:

@@ -31,9 +31,9 @@ def document(report: Report) -> dict[str, Any]:
         "diagnosis": diagnosis_part(report),
         "law": law_part(report),
         "budget": budget_part(report.budget, report.read.names),
-        "stress": [] if report.stress is None else [
-            run_part(run, report.read.names) for run in report.stress.runs
-        ],
+        "stress": []
+        if report.stress is None
+        else [run_part(run, report.read.names) for run in report.stress.runs],
         "remedies": [remedy_part(remedy, report.read.names) for remedy in report.remedies],
         "verdict": {
             "answer": report.verdict.answer,
