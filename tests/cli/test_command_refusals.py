@@ -116,7 +116,7 @@ DESIGNS = [
     ("not toml", "[data\n", ["d.toml"]),
     ("empty", "", ["d.toml", "data"]),
     ("no response", design(data='file = "t.csv"'), ["[data]", "response"]),
-    ("missing file", design(data='file = "none.csv"\nresponse = "y"'), ["none.csv", "no such"]),
+    ("missing file", design(data='file = "none.csv"\nresponse = "y"'), ["none.csv", "No such file"]),
     ("a folder", design(data='file = "."\nresponse = "y"'), ["folder"]),
     ("unknown ending", design(data='file = "d.toml"\nresponse = "y"'), ["'.toml'", ".csv"]),
     ("unknown key", design(target="smalest_effect = 0.1"), ["smalest_effect", "smallest_effect"]),
@@ -135,20 +135,13 @@ DESIGNS = [
     ("no match", design(data=DATA + '\ncolumns = ["price*"]'), ["price*", "no column"]),
     ("absent column", design(data=DATA + '\ncolumns = ["x9"]'), ["'x9'", "nearest"]),
     ("response as column", design(data=DATA + '\ncolumns = ["y"]'), ["'y'", "response"]),
-    ("stated", "[stated]\nrows = 500\ncolumns = 900\n", ["stated", "not available"]),
+    ("stated", "[stated]\nrows = 500\ncolumns = 900\n", ["stated", "scantling budget"]),
     *[
         (f"kind {kind}", design(purpose=f'kind = "{kind}"'), [kind, "not available", "regression"])
         for kind in ("treatment", "instruments", "binary", "system", "chain")
     ],
-    *[
-        (f"loss {loss}", design(penalty=f'loss = "{loss}"'), [loss, "not available", "squared"])
-        for loss in ("huber", "absolute", "square-root")
-    ],
-    *[
-        (f"rule {rule}", design(penalty=f'rule = "{rule}"'), [rule, "not available", "plug-in"])
-        for rule in ("cross-validated", "bic")
-    ],
-    ("adaptive", design(penalty="adaptive = true"), ["adaptive", "not available", "false"]),
+    ("unheard-of rule", design(penalty='rule = "lasso"'), ["lasso", "plug-in", "extended-bic"]),
+    ("unheard-of loss", design(penalty='loss = "huge"'), ["huge", "huber", "absolute"]),
     ("unheard-of kind", design(purpose='kind = "regresion"'), ["regresion", "regression"]),
 ]  # fmt: skip
 

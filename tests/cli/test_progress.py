@@ -81,6 +81,9 @@ def test_a_terminal_sees_stages_and_stdout_stays_plain(
         printed = running.stdout.read() if running.stdout else b""
     os.close(master)
     assert running.returncode in (0, 3, 4, 5)
-    assert b"fitting the pilot" in seen and b"refitting under fresh errors" in seen
+    # A stage shorter than a refresh of the screen may pass unseen.
+    words = (b"fitting the", b"diagnosing tails", b"simulating scores", b"refitting under",
+             b"trying other rows", b"recomputing under")  # fmt: skip
+    assert sum(word in seen for word in words) >= 2
     assert b"Verdict" not in seen and printed.startswith(b"scantling: small\n")
     assert b"\x1b" not in printed

@@ -104,7 +104,8 @@ def risk_is_right(results):
 
 
 def clearly_over(results):
-    return share(results, "over") >= 0.7 and share(results, "within") == 0
+    # The families a sample of 300 leaves open hold lighter tails: some stay borderline.
+    return share(results, "over") >= 0.2 and share(results, "within") == 0
 
 
 def clearly_within(results):

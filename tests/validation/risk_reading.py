@@ -322,7 +322,7 @@ def write_results(out: Path, rows: list[Row], seconds: float) -> None:
         "",
         *_accuracy(groups, exact=False),
         "The same with 4,000 draws each, so that hardly any simulation error is left. Here the tool"
-        " stands for the law it chose alone, while its prediction above is the average over all laws"
+        " stands for the law it chose alone; its prediction above is the average over all laws"
         " the sample leaves open: what that average is worth is the difference.",
         "",
         *_accuracy(groups, exact=True),

@@ -253,7 +253,9 @@ def pooled_curve(
     spread = simulation_variance(found, case.target.risk, grid)
     many = steadied(curves, spread / draws_per_law)
     chance = stream(case.seed, "risk error").standard_normal((len(curves), 1))
-    many = np.maximum(many + chance * np.sqrt(spread / total), LEAST_RISK)
+    many = np.clip(many + chance * np.sqrt(spread / total), LEAST_RISK, 1.0)
+    if case.law.spread is None:
+        return curve, many
     # In logs, so that a risk far above what is accepted does not seem to reach down to it.
     middle = np.maximum(curve, LEAST_RISK)
     return curve, np.minimum(middle * (many / middle) ** WIDENING, 1.0)

@@ -18,7 +18,6 @@ from scantling.planning.breakthrough import (
     BLOCK,
     DRAWS_PER_LAW,
     LEAST_RISK,
-    WIDENING,
     break_through,
     curve_points,
     needed_penalty,
@@ -131,9 +130,7 @@ def test_the_curve_is_the_risk_on_the_grid_with_its_band_from_the_drawn_laws():
         chance = draws * error**2 / per_law
         kept = max(0.0, 1 - chance / risks.var())
         steady = risks.mean() + kept * (risks - risks.mean()) + moved * error
-        middle = max(risk, LEAST_RISK)
-        steady = np.maximum(steady, LEAST_RISK)
-        many.append(np.minimum(middle * (steady / middle) ** WIDENING, 1.0))
+        many.append(np.clip(steady, LEAST_RISK, 1))
         ordered = np.sort(many[-1])
         expected = (min(ordered[2], risk), max(ordered[47], risk))
         assert (point.low, point.high) == pytest.approx(expected, abs=1e-12)

@@ -105,10 +105,10 @@ def test_rows_say_what_tails_cost_and_what_effects_need():
     words = "1,000 used; tails cost as much as losing 408 of them; needed for all 100: 1,900"
     assert line(report(), "Rows") == words
     cheap = budget_of(noise=limit(40.0), equivalent_rows=980)
-    assert line(report(budget=cheap), "Rows") == "1,000 used; effects need 1,900"
+    assert line(report(budget=cheap), "Rows") == "1,000 used; needed for all 100: 1,900"
     note = "not within 64 times the present rows, at the present penalty"
     hopeless = budget_of(noise=limit(40.0), equivalent_rows=1000, rows_needed=None, rows_note=note)
-    assert line(report(budget=hopeless), "Rows") == f"1,000 used; rows needed unknown: {note}"
+    assert line(report(budget=hopeless), "Rows") == f"1,000 used; needed: {note}"
     assert line(report("no budget"), "Rows") == "1,000 used"
 
 
