@@ -116,7 +116,7 @@ DESIGNS = [
     ("not toml", "[data\n", ["d.toml"]),
     ("empty", "", ["d.toml", "data"]),
     ("no response", design(data='file = "t.csv"'), ["[data]", "response"]),
-    ("missing file", design(data='file = "none.csv"\nresponse = "y"'), ["none.csv", "No such file"]),
+    ("missing file", design(data='file = "none.csv"\nresponse = "y"'), ["none.csv", "No such"]),
     ("a folder", design(data='file = "."\nresponse = "y"'), ["folder"]),
     ("unknown ending", design(data='file = "d.toml"\nresponse = "y"'), ["'.toml'", ".csv"]),
     ("unknown key", design(target="smalest_effect = 0.1"), ["smalest_effect", "smallest_effect"]),
