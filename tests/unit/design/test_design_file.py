@@ -250,20 +250,6 @@ def test_ranges_hold_at_both_ends(
             (f'{MINIMAL}[purpose]\nkind = "{kind}"', f"[purpose] kind = '{kind}'", "regression")
             for kind in ("treatment", "instruments", "binary", "system", "chain")
         ],
-        *[
-            (f'{MINIMAL}[penalty]\nloss = "{loss}"', f"[penalty] loss = '{loss}'", "squared")
-            for loss in ("huber", "absolute", "square-root")
-        ],
-        *[
-            (
-                f'{MINIMAL}[penalty]\nrule = "{rule}"',
-                f"[penalty] rule = '{rule}'",
-                "plug-in, self-normalised",
-            )
-            for rule in ("cross-validated", "bic")
-        ],
-        (f"{MINIMAL}[penalty]\nadaptive = true", "[penalty] adaptive = true", "false"),
-        ("[stated]\nrows = 500\n", "[stated]", "a [data] table"),
     ],
 )
 def test_parts_of_the_language_not_available(
@@ -390,3 +376,20 @@ def test_mutations_are_read_or_refused(tmp_path: Path, place: int, removed: int,
         assert str(refused).startswith("d.toml: ") and str(refused).isprintable()
     else:
         assert 1 <= design.expand.powers <= 6 and 0 < design.target.risk < 0.5
+
+
+@pytest.mark.parametrize("loss", ["squared", "huber", "absolute", "square-root"])
+@pytest.mark.parametrize(
+    "rule",
+    ["plug-in", "self-normalised", "bic", "extended-bic", "cross-validated",
+     "cross-validated-sparse"],
+)  # fmt: skip
+def test_every_rule_and_loss_is_read(tmp_path: Path, rule: str, loss: str) -> None:
+    text = f'{MINIMAL}[penalty]\nrule = "{rule}"\nloss = "{loss}"\nadaptive = true'
+    penalty = read_design(write(tmp_path, text)).penalty
+    assert (penalty.rule, penalty.loss, penalty.adaptive) == (rule, loss, True)
+
+
+def test_a_stated_design_is_sent_to_the_command_that_takes_it(tmp_path: Path) -> None:
+    message = refusal(write(tmp_path, "[stated]\nrows = 500\n"))
+    assert "[stated]" in message and "scantling budget" in message
