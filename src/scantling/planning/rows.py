@@ -49,7 +49,7 @@ class Effort:
 THOROUGH = Effort(
     tables=Tables(8_000_000, 2), largest=24_000_000, times=64, refits=100, refit_tables=5
 )
-BRIEF = Effort(tables=Tables(500_000, 1, 6), largest=1_500_000, times=16, refits=60, refit_tables=2)
+BRIEF = Effort(tables=Tables(500_000, 1, 6), largest=1_500_000, times=8, refits=60, refit_tables=2)
 """Beside a whole vetting, which has ten seconds."""
 
 

@@ -107,7 +107,7 @@ def test_steps_double_around_the_present_rows_from_the_least_that_theory_takes()
     # Large tables end it sooner, but never before four times the present rows.
     assert row_steps(plan_for(200, 10_000), THOROUGH)[-1] == 1600  # 2400 fit
     assert row_steps(plan_for(200, 10**6), THOROUGH)[-1] == 800
-    assert row_steps(plan, BRIEF)[-1] == 16 * 200
+    assert row_steps(plan, BRIEF)[-1] == 8 * 200
     # Fewer rows than the least: it is still the first step.
     assert row_steps(plan_for(30, 10**6), THOROUGH)[0] == math.ceil(
         4 * float(penalty_level(10**6, 0.05)) ** 2
