@@ -8,6 +8,7 @@ from typing import Any
 import click
 
 from scantling.cli.group import PACE, STATUS, commands
+from scantling.cli.options import simulation_options
 
 SAID = (
     "rows", "columns", "law", "column_law", "correlation", "rule", "loss", "relevant",
@@ -33,18 +34,7 @@ SAID = (
 @click.option("--power", type=float, help="Share of relevant columns to be selected.")
 @click.option("--stability", type=float, help="Stability index to be reached.")
 @click.option("--false-share", type=float, help="Largest share of false columns selected.")
-@click.option("--seed", type=click.IntRange(0, 2**63 - 1), help="Of every random stream.")
-@click.option("--replicates", type=click.IntRange(50, 100_000), help="Draws in each simulation.")
-@click.option(
-    "--pace", type=click.Choice(list(PACE)),
-    help="Replicates 100, 400 or 2000; --replicates wins over it.",
-)  # fmt: skip
-@click.option("--workers", type=click.IntRange(1, 64), default=1, show_default=True)
-@click.option(
-    "--out", type=click.Path(path_type=Path), metavar="DIR",
-    help="Also write the text and its JSON twin there.",
-)  # fmt: skip
-@click.option("--json", "as_json", is_flag=True, help="Print the JSON twin, not the text.")
+@simulation_options
 def budget(
     source: Path | None, pace: str | None, workers: int, out: Path | None, as_json: bool,
     **said: Any,

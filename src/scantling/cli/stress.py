@@ -8,6 +8,7 @@ from typing import Any
 import click
 
 from scantling.cli.group import PACE, commands
+from scantling.cli.options import simulation_options
 
 STATUS = {"met": 0, "undecided": 3, "missed": 4, "no variance": 5}
 REPEATED = ("response", "rows", "columns", "rule", "loss", "compare", "support", "seed",
@@ -26,18 +27,7 @@ REPEATED = ("response", "rows", "columns", "rule", "loss", "compare", "support",
     "--support", type=click.Choice(["random", "pilot"]),
     help="Which columns matter, instead of the design's.",
 )  # fmt: skip
-@click.option("--seed", type=click.IntRange(0, 2**63 - 1), help="Of every random stream.")
-@click.option("--replicates", type=click.IntRange(50, 100_000), help="Refits under each law.")
-@click.option(
-    "--pace", type=click.Choice(list(PACE)),
-    help="Replicates 100, 400 or 2000; --replicates wins over it.",
-)  # fmt: skip
-@click.option("--workers", type=click.IntRange(1, 64), default=1, show_default=True)
-@click.option(
-    "--out", type=click.Path(path_type=Path), metavar="DIR",
-    help="Also write the text and its JSON twin there.",
-)  # fmt: skip
-@click.option("--json", "as_json", is_flag=True, help="Print the JSON twin, not the text.")
+@simulation_options
 def stress(
     source: Path, response: str | None, pace: str | None, workers: int, out: Path | None,
     as_json: bool, **said: Any,

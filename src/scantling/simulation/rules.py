@@ -35,6 +35,7 @@ from scantling.errors import InputError
 from scantling.simulation.arguments import columns_and_responses, per_response
 from scantling.simulation.lasso import BLOCK_CELLS
 from scantling.simulation.loadings import BoolArray, adaptive_loadings, refit_batch
+from scantling.simulation.loss_scores import huber_thresholds
 from scantling.simulation.losses import (
     LOSSES,
     deviance,
@@ -57,10 +58,6 @@ PATIENCE = 20
 """A response is done once it has not improved for so many points (common practice, no source).
 
 Wide enough for the hump of the extended criterion between nothing and the relevant columns."""
-
-HUBER_WIDTH = 1.345 / 0.6745
-"""Default threshold over the median absolute error; Huber (1964), Annals of Mathematical
-Statistics 35, 73-101; 95 % efficient under normal errors."""
 
 TOLERANCE = 1e-5
 """Relative duality gap of the fits; selections no longer change below it."""
@@ -130,8 +127,8 @@ def select_batch(
     risk : float
         g of the level L(p) = 1.1 Phi^-1(1 - g/(2p)).
     tau : float or array-like, shape (R,), optional
-        Threshold of Huber's loss; 1.99 median absolute errors (deviations of the
-        response where no errors are given) by default.
+        Threshold of Huber's loss; 1.345 robust sd of the errors (of the response
+        where no errors are given) by default, as in `loss_scores`.
     adaptive : bool
         Whether a second fit follows, with loadings from least squares on the columns
         the first selects; squared loss.
@@ -161,7 +158,7 @@ def select_batch(
         raise InputError(f"errors: shape {responses.shape} is needed; found {noise.shape}")
     spread = responses - np.median(responses, axis=0) if noise is None else noise
     if tau is None:
-        tau = np.maximum(HUBER_WIDTH * np.median(np.abs(spread), axis=0), 1e-300)
+        tau = np.maximum(huber_thresholds(spread), 1e-300)
     thresholds = per_response(tau, "tau", replicates)
     settings = Settings(
         rule=rule, loss=loss, risk=risk, folds=fold_of_rows(n, folds, time_ordered, seed), tol=tol
