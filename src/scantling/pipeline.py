@@ -246,7 +246,10 @@ def diagnose_column(
     with worker_pool(1):
         found = diagnose_series(values, time_ordered=time_ordered, seed=seed)
         volatility = None if found.clustering is None else found.clustering.volatility
-        law = error_law(values - values.mean(), volatility=volatility, seed=seed, tail=found.tail)
+        law = error_law(
+            values - values.mean(), volatility=volatility, autoregression=found.autoregression,
+            seed=seed, tail=found.tail,
+        )  # fmt: skip
         extremes = extremes_against_law(values, law, seed=seed)
     return SeriesReport(
         source=source,

@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from typing import Any
+import math
+from typing import Any, Literal
 
 import numpy as np
 
@@ -77,8 +78,13 @@ def finite_matrix(values: Any, name: str) -> FloatArray:
     return array
 
 
-def between(value: Any, name: str, low: float, high: float, *, closed: bool = False) -> float:
-    """Return `value` as a float strictly between `low` and `high` (or within, if `closed`).
+def between(
+    value: Any, name: str, low: float, high: float, *,
+    closed: bool | Literal["low", "high"] = False,
+) -> float:  # fmt: skip
+    """Return `value` as a float between `low` and `high`; the ends count where `closed`.
+
+    `closed` is True for both ends, 'low' or 'high' for one of them.
 
     Raises
     ------
@@ -89,9 +95,20 @@ def between(value: Any, name: str, low: float, high: float, *, closed: bool = Fa
         number = float(value)
     except (TypeError, ValueError) as fault:
         raise InputError(f"{name}: a number is needed; found {value!r}") from fault
-    inside = low <= number <= high if closed else low < number < high
-    if not inside:
+    above = low <= number if closed in (True, "low") else low < number
+    below = number <= high if closed in (True, "high") else number < high
+    if not (above and below):
         raise InputError(
-            f"{name}: a number between {low:g} and {high:g} is needed; found {value!r}"
+            f"{name}: a number {_range(low, high, closed)} is needed; found {value!r}"
         )
     return number
+
+
+def _range(low: float, high: float, closed: bool | str) -> str:
+    """The accepted numbers in words, an open end told from a closed one."""
+    if closed is True:
+        return f"from {low:g} to {high:g}"
+    lower = f"of at least {low:g}" if closed == "low" else f"above {low:g}"
+    if math.isinf(high):
+        return lower
+    return f"{lower} and {'at most' if closed == 'high' else 'below'} {high:g}"

@@ -2,7 +2,7 @@
 
 A thread would not do: units are many small numpy calls, and the interpreter lock leaves two
 threads hardly faster than one. Starting processes takes about a second, so they are started
-once units have taken a while, and this process goes on computing until they are up; units too
+where enough is left to do, and this process goes on computing until they are up; units too
 light to be worth sending stay here.
 """
 
@@ -20,8 +20,11 @@ from typing import Any
 
 from scantling.errors import InputError, NotAvailableError, ResourceError
 
-WORTH_STARTING = 0.25
-"""Seconds of units after which processes are started."""
+FIRST_LOOK = 0.25
+"""Seconds of units before which processes are never started."""
+WORTH_STARTING = 4.0
+"""Seconds the units left in a call must be expected to take for processes to be started, or
+seconds that units have taken so far: starting costs each process about a second of work."""
 WORTH_SENDING = 0.05
 """Seconds the units left in a call must be expected to take for them to be sent."""
 TASK = 0.08
@@ -89,7 +92,8 @@ class Processes:
         began = time.perf_counter()
         for done, (number, unit) in enumerate(units):
             spent = time.perf_counter() - began
-            if done and spent / done * (len(units) - done) > WORTH_SENDING and self._ready(spent):
+            left = spent / done * (len(units) - done) if done else 0.0
+            if left > WORTH_SENDING and self._ready(spent, left):
                 self._spent += spent
                 yield from self._send(function, units[done:], spent / done)
                 return
@@ -110,10 +114,11 @@ class Processes:
         else:
             self._starting.join()
 
-    def _ready(self, spent: float) -> bool:
+    def _ready(self, spent: float, left: float) -> bool:
         """Whether the processes are up; starts them once that is worth it."""
         if self._starting is None:
-            if self._spent + spent < WORTH_STARTING:
+            so_far = self._spent + spent
+            if so_far < FIRST_LOOK or max(so_far, left) < WORTH_STARTING:
                 return False
             names = [name for name in sys.modules if name.startswith("scantling.")]
             load = Shipped(_load)

@@ -8,6 +8,7 @@ from typing import Any
 import numpy as np
 
 from scantling.core.record import FloatArray, read_only
+from scantling.diagnostics.autoregression import Autoregression, Levels
 from scantling.diagnostics.clustering import LEVEL, NEAR_INTEGRATION, Clustering
 from scantling.diagnostics.co_movement import CoMovement, column_co_movement
 from scantling.diagnostics.column_sides import ColumnSides, column_sides
@@ -109,8 +110,10 @@ class Diagnosis:
     """Tests of constant variance."""
     dependence: tuple[Finding, ...]
     """Tests of serial dependence; empty where rows have no order."""
+    levels: Levels | None
+    """Whether the errors' level persists from row to row; None where rows have no order."""
     clustering: Clustering | None
-    """None where rows have no order."""
+    """Of the errors' size, of their shocks where the level persists; None without order."""
     co_movement: CoMovement
     """Which columns are large where the errors are."""
     signal: SignalShape
@@ -121,6 +124,11 @@ class Diagnosis:
     """Factors, condition and correlations of the columns."""
     warnings: tuple[str, ...]
     """Sentences: where the sample looks like a law that defeats the estimators."""
+
+    @property
+    def autoregression(self) -> Autoregression | None:
+        """Of the errors' levels, where they persist."""
+        return None if self.levels is None else self.levels.autoregression
 
     @property
     def volatility(self) -> Volatility | None:
@@ -296,6 +304,7 @@ def diagnose(
         weight=column_weights(columns.tails),
         variance=judged(variance, own.granted),
         dependence=own.dependence,
+        levels=own.levels,
         clustering=own.clustering,
         co_movement=together,
         signal=signal_shape(

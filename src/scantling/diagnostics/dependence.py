@@ -210,18 +210,52 @@ def absolute_ljung_box_permutation(
     size = np.abs(series - np.median(series))
     if steady(size):
         return unmoved(name, 2, "permutation")
-    size -= size.mean()
-    size /= np.sqrt(size @ size)
-    observed = float(_box(size[None], lags)[0])
-    generator = stream(seed, "absolute Ljung-Box permutation")
+    return _permutation_box(size, name, 2, "absolute Ljung-Box permutation", seed, lags, draws)
+
+
+def sign_ljung_box_permutation(u: Any, *, seed: int, lags: int = 5, draws: int = 999) -> TestResult:
+    """Test the levels by their signs alone: Ljung-Box of sign(u - med u), by permutation.
+
+    Neither heavy tails nor volatility of any kind disturb it: where the median given the past is
+    constant, signs are exchangeable. Price: less power than `ljung_box` under normal errors.
+
+    Parameters
+    ----------
+    u, seed, lags, draws
+        As `absolute_ljung_box_permutation`.
+
+    Raises
+    ------
+    InputError
+        As `ljung_box`; also if draws is below 1.
+
+    Source: signs against serial dependence after Campbell et al. (1991), Journal of Business &
+    Economic Statistics 9, 269-273 (from memory). Needs no moment.
+    """
+    series = _centred(u, lags)
+    signs = np.sign(series - np.median(series))
+    name = "Ljung-Box of signs"
+    if np.ptp(signs) == 0:
+        return unmoved(name, 0, "permutation")
+    return _permutation_box(signs, name, 0, "sign Ljung-Box permutation", seed, lags, draws)
+
+
+def _permutation_box(
+    values: FloatArray, name: str, needs_moment: int, purpose: str, seed: int, lags: int,
+    draws: int,
+) -> TestResult:  # fmt: skip
+    """Ljung-Box of values that vary, p = (1 + #{Q* >= Q})/(draws + 1) over permutations."""
+    unit = values - values.mean()
+    unit /= np.sqrt(unit @ unit)
+    observed = float(_box(unit[None], lags)[0])
     exceeding = 0
-    for rows in permuted(size, draws, generator):
+    for rows in permuted(unit, draws, stream(seed, purpose)):
         exceeding += int(np.count_nonzero(_box(rows, lags) >= observed * (1 - TIE)))
     return TestResult(
         test=name,
         statistic=observed,
         p_value=(1 + exceeding) / (draws + 1),
-        needs_moment=2,
+        needs_moment=needs_moment,
         method="permutation",
     )
 

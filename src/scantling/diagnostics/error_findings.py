@@ -8,6 +8,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from scantling.core.record import FloatArray
+from scantling.diagnostics.autoregression import Autoregression, Levels, find_autoregression
 from scantling.diagnostics.clustering import LEVEL, Clustering, find_clustering
 from scantling.diagnostics.dependence import (
     TestResult,
@@ -74,10 +75,17 @@ class ErrorFindings:
     """Orders found to exist."""
     dependence: tuple[Finding, ...]
     """Tests of dependence; empty where values have no order."""
+    levels: Levels | None
+    """Whether the level persists from row to row; None where values have no order."""
     clustering: Clustering | None
-    """None where values have no order."""
+    """Of the shocks, where the level persists; None where values have no order."""
     worth: Worth | None
     """None where values have no order or no index."""
+
+    @property
+    def autoregression(self) -> Autoregression | None:
+        """Of the levels, where they persist."""
+        return None if self.levels is None else self.levels.autoregression
 
     @property
     def clustered(self) -> bool:
@@ -98,16 +106,20 @@ def error_findings(values: FloatArray, *, time_ordered: bool, seed: int) -> Erro
     """
     centred = values - values.mean()
     tail, sides, note = error_tails(values, seed)
-    clustering = find_clustering(centred, seed=seed) if time_ordered else None
+    levels = find_autoregression(centred, seed=seed) if time_ordered else None
+    path = None if levels is None else levels.autoregression
+    shocks = centred if path is None else path.shocks(centred)
+    clustering = find_clustering(shocks, seed=seed) if time_ordered else None
     volatility = None if clustering is None else clustering.volatility
     implied = None if volatility is None else volatility.tail_index
     decisive = None if tail is None else heavier_side(tail, sides)
     moments = error_moments(values, decisive, note, implied, seed)
     granted = frozenset(int(m.order) for m in moments if m.answer == "exists")
     dependence: tuple[Finding, ...] = ()
-    if clustering is not None:
+    if clustering is not None and levels is not None:
         steady = clustering.test.p_value > LEVEL
-        dependence = judged(dependence_tests(centred, clustering), granted, steady=steady)
+        results = (*level_tests(centred, levels), *size_tests(shocks, clustering))
+        dependence = judged(results, granted, steady=steady)
     return ErrorFindings(
         tail=tail,
         note=note,
@@ -116,6 +128,7 @@ def error_findings(values: FloatArray, *, time_ordered: bool, seed: int) -> Erro
         moments=moments,
         granted=granted,
         dependence=dependence,
+        levels=levels,
         clustering=clustering,
         worth=worth(values, seed=seed) if time_ordered and tail is not None else None,
     )
@@ -165,10 +178,14 @@ def error_moments(
     )
 
 
-def dependence_tests(e: FloatArray, clustering: Clustering | None) -> tuple[TestResult, ...]:
-    """Every test of serial dependence, that for clustering first if it was run."""
-    first = () if clustering is None else (clustering.test,)
-    return (*first, robust_ljung_box(e), ljung_box(e), arch_lm(e), mcleod_li(e))
+def level_tests(e: FloatArray, levels: Levels) -> tuple[TestResult, ...]:
+    """Every test of dependence of the level, the one that decides first."""
+    return (levels.test, robust_ljung_box(e), ljung_box(e))
+
+
+def size_tests(shocks: FloatArray, clustering: Clustering) -> tuple[TestResult, ...]:
+    """Every test of dependence of the size, the one that decides first."""
+    return (clustering.test, arch_lm(shocks), mcleod_li(shocks))
 
 
 def judged(

@@ -5,6 +5,7 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 from scantling.core.record import FloatArray
+from scantling.diagnostics.autoregression import Autoregression, Levels
 from scantling.diagnostics.battery import sample_warnings
 from scantling.diagnostics.clustering import Clustering
 from scantling.diagnostics.error_findings import Finding, Worth, error_findings, heavier_word
@@ -34,12 +35,19 @@ class SeriesDiagnosis:
     """Orders 1, 2, 3, 4."""
     dependence: tuple[Finding, ...]
     """Tests of dependence; empty where values have no order."""
+    levels: Levels | None
+    """Whether the level persists from value to value; None where values have no order."""
     clustering: Clustering | None
-    """None where values have no order."""
+    """Of the size, of the shocks' where the level persists; None where values have no order."""
     worth: Worth | None
     """Clustering of extremes and effective rows; None where values have no order or no index."""
     warnings: tuple[str, ...]
     """Where the sample looks like a law that defeats the estimators."""
+
+    @property
+    def autoregression(self) -> Autoregression | None:
+        """Of the levels, where they persist."""
+        return None if self.levels is None else self.levels.autoregression
 
     @property
     def heavier(self) -> str:
@@ -71,6 +79,7 @@ def diagnose_series(values: FloatArray, *, time_ordered: bool, seed: int) -> Ser
         path=None if tail is None else threshold_path(values),
         moments=own.moments,
         dependence=own.dependence,
+        levels=own.levels,
         clustering=clustering,
         worth=own.worth,
         warnings=sample_warnings(values, tail, volatility),

@@ -17,7 +17,7 @@ from scantling.law.innovation import ShapeSpread, averaged_spread, single_spread
 NEGLIGIBLE = 1e-3
 """Families of smaller probability are left out."""
 ODDS = {
-    "normal": 3.0, "student-t": 1.0, "skewed-t": 1.0, "laplace": 1.0, "ged": 1.0, "stable": 1.0,
+    "normal": 10.0, "student-t": 1.0, "skewed-t": 1.0, "laplace": 5.0, "ged": 5.0, "stable": 1.0,
 }  # fmt: skip
 """Weights of the families before the sample is seen: even, but for the law without a shape, which
 every other one can imitate; tests/validation/risk_calibration.py measures what comes of it."""

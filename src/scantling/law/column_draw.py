@@ -6,7 +6,6 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.special import ndtr
 
 from scantling.core.record import FloatArray
 from scantling.diagnostics.volatility import Volatility
@@ -15,8 +14,6 @@ from scantling.law.families import ErrorLaw
 from scantling.law.shared_scale import log_mix, squeeze, squeezed
 
 BURN_IN = 500
-FEWEST_POOLED = 100_000
-"""Innovations whose order statistics stand for the quantiles of their law."""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -38,7 +35,7 @@ class Setting:
     error_scores: FloatArray
     """Normal scores of the errors' innovations, shape (T,)."""
     errors: FloatArray
-    """The errors with these innovations, shape (T,)."""
+    """The errors with these innovations, run through the law's autoregression, shape (T,)."""
 
 
 def draw_setting(
@@ -61,7 +58,7 @@ def draw_setting(
     normals, fresh = normals[BURN_IN:], fresh[BURN_IN:]
     if copula.scale.errors:
         normals = _linked(copula, log_scale, normals)
-        fresh = _at_scores(law, normals, rng)
+        fresh = law.innovation.at_scores(normals)
     return Setting(
         rows=rows,
         lags=lags,
@@ -70,7 +67,7 @@ def draw_setting(
         log_path=relative,
         path=path,
         error_scores=normals,
-        errors=path * fresh,
+        errors=law.persisting((path * fresh)[:, None], rng)[:, 0],
     )
 
 
@@ -86,10 +83,11 @@ def draw_errors(
         return np.asarray(law.draw(shape, rng))
     if link:
         log_scale = setting.log_scale[setting.lags :, None]
-        out = _at_scores(law, _linked(copula, log_scale, rng.standard_normal(shape)), rng)
+        out = law.innovation.at_scores(_linked(copula, log_scale, rng.standard_normal(shape)))
     else:
         out = law.innovations(shape, rng)
     out *= setting.path[setting.lags :, None]
+    out = law.persisting(out, rng)
     if copula.error_share.any():
         out[:, 0] = setting.errors[setting.lags :]
     return out
@@ -137,19 +135,6 @@ def _linked(copula: Copula, log_scale: FloatArray, normals: FloatArray) -> Float
     mix = replace(copula.scale, shared=copula.scale.errors, own=0.0)
     sizes = np.exp(log_mix(log_scale, mix.shared, mix.heavy))
     return squeezed(sizes * normals, squeeze(mix))
-
-
-def _at_scores(law: ErrorLaw, scores: FloatArray, rng: np.random.Generator) -> FloatArray:
-    """Innovations at normal scores of any shape.
-
-    The law's quantiles are those of a large sample, so that an innovation of extreme score is
-    extreme in size, which ranks within one draw would lose.
-    """
-    count = max(FEWEST_POOLED, scores.size)
-    pool = np.sort(law.innovations(count, rng))
-    spot = np.clip(ndtr(scores) * count - 0.5, 0.0, count - 1.0)
-    cell = np.minimum(spot.astype(np.intp), count - 2)
-    return np.asarray(pool[cell] + (spot - cell) * (pool[cell + 1] - pool[cell]))
 
 
 def _by_rank(values: FloatArray, scores: FloatArray) -> FloatArray:

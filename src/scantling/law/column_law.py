@@ -151,7 +151,8 @@ def fit_column_law(
     series = base_series(columns, lineage)
     m = len(series)
     path = whole_path[:m]
-    fresh = errors[:m] / path
+    shocks = errors if law.autoregression is None else law.autoregression.shocks(errors)
+    fresh = shocks[:m] / path
     kinds = count_values(series)
     # Deviations from a repeated value scale with the path, so that it stays one value.
     series = series - np.where(kinds.repeats, kinds.mode, 0.0)

@@ -78,7 +78,11 @@ def diagnosed(
     )
     tell("law")
     law = error_law(
-        residuals.values, volatility=diagnosis.volatility, seed=seed, tail=diagnosis.errors
+        residuals.values,
+        volatility=diagnosis.volatility,
+        autoregression=diagnosis.autoregression,
+        seed=seed,
+        tail=diagnosis.errors,
     )
     return Diagnosed(
         columns=columns,

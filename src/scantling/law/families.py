@@ -3,11 +3,13 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Sequence
 from dataclasses import dataclass, field, replace
 
 import numpy as np
 
 from scantling.core.record import FloatArray, read_only
+from scantling.diagnostics.autoregression import Autoregression
 from scantling.diagnostics.volatility import Volatility
 from scantling.law.catalogue import FAMILIES
 from scantling.law.innovation import Innovation, ShapeSpread, Size
@@ -56,7 +58,8 @@ class Fit:
 class ErrorLaw:
     """Law of the errors: e_t = sigma_t z_t, or e_t = z_t where volatility is constant.
 
-    Innovations z are independent, with mean zero where the mean exists.
+    Innovations z are independent, with mean zero where the mean exists. Where the level
+    persists, that is the law of the shocks of an autoregression.
     """
 
     innovation: Innovation
@@ -64,6 +67,8 @@ class ErrorLaw:
     volatility: Volatility | None = field(default=None, repr=False)
     """Fitted or stated volatility; None: constant. The path of a stated one is a single value,
     its mean level."""
+    autoregression: Autoregression | None = field(default=None, repr=False)
+    """How the level persists from row to row; None: it does not."""
     fit: Fit = Fit(distance=None, p_value=None)
     """How well it fits; empty for a stated law."""
     spread: ShapeSpread | None = field(default=None, repr=False)
@@ -98,6 +103,9 @@ class ErrorLaw:
             out = out | {"omega": path.omega, "alpha": path.alpha, "beta": path.beta}
             if path.leverage:
                 out["leverage"] = path.leverage
+        if self.autoregression is not None:
+            for lag, value in enumerate(self.autoregression.coefficients, start=1):
+                out[f"lag{lag}"] = float(value)
         return out
 
     @property
@@ -108,9 +116,9 @@ class ErrorLaw:
     @property
     def sd(self) -> float:
         """Standard deviation of the errors, over the fitted path if there is one."""
-        level = 1.0
+        level = 1.0 if self.autoregression is None else self.autoregression.gain
         if self.volatility is not None:
-            level = float((self.volatility.path**2).mean())
+            level *= float((self.volatility.path**2).mean())
         return math.sqrt(self.innovation_variance * level)
 
     @property
@@ -133,20 +141,11 @@ class ErrorLaw:
 
         Under volatility the recursion starts at its mean level, 500 rows before the first.
         """
-        path = self.volatility
-        if path is None:
-            return self.innovations(size, rng)
         shape = (size,) if isinstance(size, int) else size
-        z = self.innovations((shape[0] + BURN_IN, *shape[1:]), rng)
-        variance = np.full(shape[1:], float((path.path**2).mean()))
-        out = np.empty_like(z)
-        for t in range(z.shape[0]):
-            out[t] = np.sqrt(variance) * z[t]
-            weight = path.alpha
-            if path.leverage:
-                weight = weight + path.leverage * (out[t] < 0)
-            variance = path.omega + weight * out[t] ** 2 + path.beta * variance
-        return out[BURN_IN:]
+        if self.volatility is None and self.autoregression is None:
+            return self.innovations(shape, rng)
+        drawn = draw_together((self,), (math.prod(shape[1:]),), shape[0], rng)
+        return drawn.reshape(shape)
 
     def draw_given_path(self, rows: int, replicates: int, rng: np.random.Generator) -> FloatArray:
         """Errors at the present rows: the fitted path is kept, the innovations are fresh.
@@ -155,11 +154,18 @@ class ErrorLaw:
         there is no path to keep, and each replicate has its own.
         """
         path = self.volatility
-        if path is None:
-            return self.innovations((rows, replicates), rng)
-        if path.path.size == 1:
+        if path is not None and path.path.size == 1:
             return self.draw((rows, replicates), rng)
-        return self.innovations((rows, replicates), rng) * path.path[:, None]
+        shocks = self.innovations((rows, replicates), rng)
+        if path is not None:
+            shocks *= path.path[:, None]
+        return self.persisting(shocks, rng)
+
+    def persisting(self, shocks: FloatArray, rng: np.random.Generator) -> FloatArray:
+        """Errors of the shocks (rows, R): themselves, or the autoregression they drive."""
+        if self.autoregression is None or not shocks.size:
+            return shocks
+        return self.autoregression.errors(shocks, rng)
 
     def relative_variance(self, rows: int) -> FloatArray:
         """sigma_t^2 over its mean, shape (rows,); ones where no path is known."""
@@ -169,19 +175,25 @@ class ErrorLaw:
         return np.asarray(square / square.mean())
 
     def normal_innovations(self) -> ErrorLaw:
-        """The same volatility path under normal innovations of the same variance.
+        """The same volatility path and autoregression under normal innovations of equal variance.
 
         Of variance 1, to which fitted innovations are scaled, where the law's is infinite.
         """
         variance = self.innovation_variance
         sd = math.sqrt(variance) if math.isfinite(variance) else 1.0
-        return replace(normal_law(sd), volatility=self.volatility)
+        return replace(
+            normal_law(sd), volatility=self.volatility, autoregression=self.autoregression
+        )
 
     def without_volatility(self) -> ErrorLaw:
         """The law left after each row is divided by its volatility over the mean level."""
         if self.volatility is None:
             return self
         return replace(self, volatility=None).scaled(float((self.volatility.path**2).mean()) ** 0.5)
+
+    def without_autoregression(self) -> ErrorLaw:
+        """The law of the shocks."""
+        return replace(self, autoregression=None)
 
     def scaled(self, factor: float) -> ErrorLaw:
         """The law of `factor` times the innovations."""
@@ -192,7 +204,7 @@ class ErrorLaw:
         """Draw laws the sample cannot tell from this one.
 
         The shape is drawn from its weights given the sample, the scale about its most likely
-        value there, the volatility path from those its parameters leave open. A law
+        value there, volatility path and autoregression from those the sample leaves open. A law
         stated exactly is returned `count` times.
         """
         if self.spread is None:
@@ -203,13 +215,62 @@ class ErrorLaw:
         path = self.volatility
         paths = np.empty((0, 0)) if path is None else path.path_draws
         moves = rng.integers(max(1, len(paths)), size=count)
-        laws = []
+        laws: list[ErrorLaw] = []
         for pick, shift, move in zip(picks, shifts, moves, strict=True):
             moved = spread.laws[pick].moved(float(shift))
             if path is not None and len(paths):
                 path = replace(path, path=read_only(paths[move]))
-            laws.append(replace(self, innovation=moved, volatility=path))
+            levels = self.autoregression
+            if levels is not None:
+                levels = levels.moved(len(laws))
+            laws.append(replace(self, innovation=moved, volatility=path, autoregression=levels))
         return tuple(laws)
+
+
+def draw_together(
+    laws: Sequence[ErrorLaw], counts: Sequence[int], rows: int, rng: np.random.Generator
+) -> FloatArray:
+    """Draws of several laws side by side, shape (rows, sum of counts), as by `ErrorLaw.draw`.
+
+    All recursions run at once: a step in time costs about the same for one draw and for many.
+    """
+    drawn = [law for law, count in zip(laws, counts, strict=True) if count]
+    sizes = [count for count in counts if count]
+    moving = any(law.volatility is not None for law in drawn)
+    z = np.concatenate(
+        [law.innovations((rows + BURN_IN * moving, count), rng)
+         for law, count in zip(drawn, sizes, strict=True)], axis=1
+    )  # fmt: skip
+    if not moving:
+        return _persisting(drawn, sizes, z, rng)
+    level, omega, alpha, beta, leverage = np.repeat(
+        [_recurrence(law.volatility) for law in drawn], sizes, axis=0
+    ).T
+    variance = level
+    for row in z:
+        row *= np.sqrt(variance)
+        weight = alpha + leverage * (row < 0) if leverage.any() else alpha
+        variance = omega + weight * row**2 + beta * variance
+    return _persisting(drawn, sizes, z[BURN_IN:], rng)
+
+
+def _persisting(
+    laws: Sequence[ErrorLaw], counts: Sequence[int], shocks: FloatArray, rng: np.random.Generator
+) -> FloatArray:
+    """Errors of the shocks of several laws side by side."""
+    if all(law.autoregression is None for law in laws):
+        return shocks
+    parts = np.split(shocks, np.cumsum(counts)[:-1], axis=1)
+    return np.concatenate(
+        [law.persisting(part, rng) for law, part in zip(laws, parts, strict=True)], axis=1
+    )
+
+
+def _recurrence(path: Volatility | None) -> tuple[float, ...]:
+    """Mean level, constant, and the weights of square, variance and negative square."""
+    if path is None:
+        return 1.0, 1.0, 0.0, 0.0, 0.0
+    return float((path.path**2).mean()), path.omega, path.alpha, path.beta, path.leverage
 
 
 def normal_law(sd: float) -> ErrorLaw:

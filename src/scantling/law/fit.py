@@ -9,6 +9,7 @@ import numpy as np
 
 from scantling.core.checks import finite_vector
 from scantling.core.record import FloatArray
+from scantling.diagnostics.autoregression import Autoregression, find_autoregression
 from scantling.diagnostics.clustering import find_clustering
 from scantling.diagnostics.tail_index import (
     LARGEST,
@@ -109,12 +110,20 @@ def _tail_or_reason(
 def error_law(
     values: FloatArray, *, volatility: Volatility | None, seed: int, family: str | None = None,
     tail: TailIndex | None = None, time_ordered: bool = False,
+    autoregression: Autoregression | None = None,
 ) -> ErrorLaw:  # fmt: skip
-    """Law of errors whose volatility, if any, is already fitted.
+    """Law of errors whose volatility and autoregression, if any, are already fitted.
 
     Under volatility the innovations are rescaled to unit variance, so that the fitted path
     keeps its meaning.
     """
+    if autoregression is not None:
+        shocks = autoregression.shocks(values - values.mean())
+        law = error_law(
+            shocks, volatility=volatility, seed=seed, family=family, tail=tail,
+            time_ordered=time_ordered,
+        )  # fmt: skip
+        return replace(law, autoregression=autoregression)
     if volatility is None:
         return fit_innovations(
             values - values.mean(), family=family, seed=seed, tail=tail, time_ordered=time_ordered
@@ -138,8 +147,9 @@ def fit_law(
         One of normal, laplace, ged, student-t, skewed-t, stable, spliced; default: chosen by
         likelihood and tails out of sample (`law.choice.choose`), then by goodness of fit.
     time_ordered : bool
-        Whether volatility clustering is looked for; GARCH(1,1) or GJR(1,1) is fitted where
-        the permutation test on absolute values rejects at 5 %.
+        Whether serial dependence is looked for: an autoregression is fitted where the
+        permutation test on signs rejects at 5 %, GARCH(1,1) or GJR(1,1) where that on absolute
+        values does.
     seed : int
         Of the permutation and bootstrap tests.
 
@@ -162,7 +172,13 @@ def fit_law(
         raise InputError(f"family: one of {', '.join(FAMILIES)} is needed; found {family!r}")
     if family == "spliced" and not enough_for_splice(array.size):
         raise InputError(f"family: spliced tails need 250 values; found {array.size}")
-    volatility = find_clustering(array, seed=seed).volatility if time_ordered else None
+    volatility, levels = None, None
+    if time_ordered:
+        centred = array - array.mean()
+        levels = find_autoregression(centred, seed=seed).autoregression
+        shocks = centred if levels is None else levels.shocks(centred)
+        volatility = find_clustering(shocks, seed=seed).volatility
     return error_law(
-        array, volatility=volatility, seed=seed, family=family, time_ordered=time_ordered
-    )
+        array, volatility=volatility, autoregression=levels, seed=seed, family=family,
+        time_ordered=time_ordered,
+    )  # fmt: skip

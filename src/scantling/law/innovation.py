@@ -12,6 +12,7 @@ import numpy as np
 from scantling.core.record import FloatArray, read_only
 from scantling.diagnostics.kesten import ShockDensity, kesten_index, log_expectation
 from scantling.diagnostics.volatility import Volatility
+from scantling.law.inversion import quantile_table
 
 Size = int | tuple[int, ...]
 
@@ -161,6 +162,10 @@ class Innovation(ABC):
             log_density=lambda z: self.log_density(unit * z) + math.log(unit),
             tail_index=self.tail_index,
         )
+
+    def at_scores(self, scores: FloatArray) -> FloatArray:
+        """Innovations at normal scores of any shape: quantiles at Phi(score)."""
+        return quantile_table(self)(scores)
 
     def quantile(self, probability: float) -> float:
         """The quantile at a probability strictly inside (0, 1), by bisection of the cdf."""

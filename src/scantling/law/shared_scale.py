@@ -8,10 +8,12 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
+from functools import lru_cache
 
 import numpy as np
-from scipy.special import gammaincinv, ndtr, ndtri, polygamma
+from scipy.special import gammainccinv, gammaincinv, ndtr, ndtri, polygamma
 
+from scantling.core.even_table import EvenTable
 from scantling.core.record import FloatArray, read_only
 from scantling.law.column_margins import pooled
 
@@ -25,6 +27,9 @@ CLEAR = 2.5
 LARGEST_SCALE = 1.5
 LAGS = 5
 NODES = 49
+REACH = 9.0
+"""Standard normals at which the log scale is tabulated, to either side."""
+CELLS = 2048
 FEWEST_SERIES = 10
 """Series from which the asymmetry of the log scale is read."""
 HALF_NORMAL = ndtri((np.arange(400) + 0.5) / 800 + 0.5)
@@ -160,6 +165,7 @@ def _asymmetric(level: FloatArray, variance: float) -> bool:
     return third > -float(polygamma(2, half_df)) / 16
 
 
+@lru_cache(maxsize=512)
 def _half_df(scale: float) -> float:
     """Half the degrees of freedom at which (1/2) log(df/chi^2) has sd `scale`."""
     low, high = -3.0, 12.0
@@ -176,8 +182,18 @@ def log_mix(normal: FloatArray, scale: float, heavy: bool) -> FloatArray:
     """Log scale of sd `scale` at standard normals of any shape: normal, or a Student law's."""
     if not heavy or scale < FLAT:
         return np.asarray(scale * normal)
+    return _student_mix(scale)(normal)
+
+
+@lru_cache(maxsize=512)
+def _student_mix(scale: float) -> EvenTable:
     half = _half_df(scale)
-    return np.asarray(0.5 * np.log(half / gammaincinv(half, ndtr(-np.asarray(normal)))))
+
+    def log_scale(z: FloatArray) -> FloatArray:
+        below, above = gammaincinv(half, ndtr(-z)), gammainccinv(half, ndtr(z))
+        return np.asarray(0.5 * np.log(half / np.where(z > 0, below, above)))
+
+    return EvenTable.of(log_scale, REACH, CELLS)
 
 
 def _persistence(sizes: FloatArray, level: FloatArray, shared: float) -> tuple[float, float]:
@@ -205,6 +221,7 @@ def _error_link(level: FloatArray, error_scores: FloatArray, shared: float, heav
     return _scale_of((covariance / shared) ** 2, heavy)
 
 
+@lru_cache(maxsize=128)
 def squeeze(scale: CommonScale) -> tuple[FloatArray, FloatArray]:
     """Points w >= 0 and T(w), which makes exp(log scale) z standard normal for normal z.
 

@@ -15,7 +15,7 @@ from scipy.special import gammaln, stdtr
 from scantling.core.record import FloatArray
 from scantling.law.climb import climb
 from scantling.law.innovation import Innovation, Parameter, ShapeSpread, Size, grid_spread
-from scantling.law.student import MOST_DF, PRIOR, fit_student, log_constant
+from scantling.law.student import MOST_DF, PRIOR, Student, fit_student, log_constant
 
 LOW = np.array([-40.0, math.sqrt(0.002), -0.7])
 HIGH = np.array([40.0, math.sqrt(0.45), 0.7])
@@ -92,7 +92,7 @@ class SkewedStudent(Innovation):
 
     def draw(self, size: Size, rng: np.random.Generator) -> FloatArray:
         """Independent draws: a half is picked by its share, (1 + skew)/2 for the right one."""
-        sizes = np.abs(rng.standard_t(self.df, size))
+        sizes = np.abs(Student(scale=1.0, df=self.df).draw(size, rng))
         left = rng.random(size) < (1 - self.skew) / 2
         y = np.where(left, -(1 - self.skew), 1 + self.skew) * sizes
         return np.asarray(self.scale * y + self.mode)

@@ -7,6 +7,7 @@ from dataclasses import dataclass, replace
 from typing import ClassVar, Self
 
 import numpy as np
+from scipy.special import ndtr
 
 from scantling.core.record import FloatArray, read_only
 from scantling.diagnostics.moments import Z90
@@ -64,6 +65,10 @@ class Spliced(Innovation):
         """Independent draws, centred."""
         drawn = self.splice.quantile(np.asarray(rng.random(size)))
         return np.asarray(drawn - self._mean())
+
+    def at_scores(self, scores: FloatArray) -> FloatArray:
+        """By the quantile function, which has a closed form."""
+        return np.asarray(self.splice.quantile(ndtr(scores)) - self._mean())
 
     def cdf(self, x: FloatArray) -> FloatArray:
         """Distribution function of the centred law."""

@@ -12,7 +12,7 @@ import math
 from dataclasses import dataclass
 
 import numpy as np
-from scipy.stats import norm
+from scipy.special import ndtri
 
 from scantling.core.record import FloatArray
 from scantling.design.spec import TargetSpec
@@ -118,7 +118,7 @@ def assured_point(
     hide the effect. 0 where even that is not positive.
     """
     room = math.sqrt(sizes.rows) * response_sd * target.smallest_effect / law.sd
-    level = room - float(norm.ppf(target.power))
+    level = room - float(ndtri(target.power))
     if level <= 0:
         return 0.0
     by_scores = target.risk / max(first_bound(sizes, law, level), 1e-300)
@@ -155,6 +155,8 @@ def assured(
     reason = ""
     if law.volatility is not None:
         reason = "the proof needs independent errors, and their volatility changes in time"
+    elif law.autoregression is not None:
+        reason = "the proof needs independent errors, and their level persists from row to row"
     elif dependence:
         reason = f"the proof needs errors independent of the columns and each other; {dependence}"
     elif loss in ROBUST:

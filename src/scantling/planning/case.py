@@ -10,7 +10,7 @@ import numpy as np
 from scantling.core.record import FloatArray
 from scantling.core.streams import stream
 from scantling.design.spec import TargetSpec
-from scantling.law.families import ErrorLaw, normal_law
+from scantling.law.families import ErrorLaw, draw_together, normal_law
 
 LAW_DRAWS = 50
 """Draws of the law's parameters behind every band."""
@@ -81,6 +81,8 @@ class Case:
         count = len(self.law_draws)
         # Whichever the size, laws are taken evenly from all of them.
         shares = np.bincount(np.arange(size) * count // size, minlength=count)
+        if self.mode == "generative":
+            return draw_together(self.law_draws, shares.tolist(), self.rows, rng)
         return np.concatenate(
             [self.draw_errors(law, int(m), rng)
              for law, m in zip(self.law_draws, shares, strict=True) if m], axis=1

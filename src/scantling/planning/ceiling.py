@@ -107,9 +107,12 @@ def rate_by_regime(
         )
     if heavy_share > 0:
         if scores is None:
-            return _unknown("heavy columns, whose scores' tail index is unknown")
+            return _unknown("heavy or sparse columns, whose scores' tail index is unknown")
         rates = [heavy_rate(rows, q) for q in scores]
-        regime = f"heavy columns ({heavy_share:.0%}): n^(q/2-1), q of the median heavy score"
+        regime = (
+            f"heavy or sparse columns ({100 * heavy_share:.0f} %): n^(q/2-1), q of the median of"
+            " their scores"
+        )
     else:
         if errors is None:
             return _unknown("light columns; the errors' tail index is unknown")

@@ -156,7 +156,16 @@ def _fewer_columns(origin: Origin) -> Iterator[Recipe]:
 
 
 def _weights(case: Case) -> Iterator[Recipe]:
-    if case.law.volatility is not None:
+    if case.law.autoregression is not None:
+        yield Recipe(
+            names=("filter rows by the errors' autoregression",),
+            prices=(
+                "the autoregression is believed; an effect that comes a row later than its column"
+                " is distorted",
+            ),
+            filtered=True,
+        )
+    elif case.law.volatility is not None:
         yield Recipe(
             names=("weight rows by fitted volatility",),
             prices=("the volatility model is believed; effects are those of weighted rows",),

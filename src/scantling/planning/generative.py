@@ -105,7 +105,8 @@ class StatedColumns:
     def columns(self, rows: int, start: int, stop: int, seed: int, table: int) -> FloatArray:
         """Each block from its own stream, the factor from the table's."""
         rng = stream(seed, "stated columns", table, start)
-        drawn = self.law.draw((rows, stop - start), rng).T if self.law.volatility else (
+        ordered = self.law.volatility is not None or self.law.autoregression is not None
+        drawn = self.law.draw((rows, stop - start), rng).T if ordered else (
             self.law.draw((stop - start, rows), rng)
         )  # fmt: skip
         if self.correlation == 0:

@@ -10,7 +10,7 @@ import math
 from dataclasses import dataclass, replace
 
 import numpy as np
-from scipy.stats import norm
+from scipy.special import ndtri
 
 from scantling.core.record import FloatArray
 from scantling.core.streams import Mapper, stream
@@ -202,7 +202,7 @@ def plan_effect(plan: Plan, sample: ScoreSample, p: int, table: Ranked | None = 
     b(p) = (lambda*(p) v + Phi^-1(power) tau) / (sqrt(n) sd(y) slope).
     """
     needed = needed_penalty(table or sample.found, p, plan.target.risk)
-    added = float(norm.ppf(plan.target.power)) * score_size(plan, sample)
+    added = float(ndtri(plan.target.power)) * score_size(plan, sample)
     size = float(sample.loadings[0]) * needed + added
     return size / (math.sqrt(plan.rows) * plan.response_sd * sample.slope)
 

@@ -21,6 +21,7 @@ from scantling.diagnostics.battery import Diagnosis
 from scantling.diagnostics.residuals import Residuals
 from scantling.diagnostics.structure import principal_components
 from scantling.errors import InputError
+from scantling.law.families import ErrorLaw
 from scantling.planning.breakthrough import BreakThrough
 from scantling.planning.case import Case, draw_laws
 
@@ -48,6 +49,8 @@ class Recipe:
     """Columns of the present design that are left out, worst first."""
     weighted: bool = False
     """Whether rows are divided by the fitted volatility."""
+    filtered: bool = False
+    """Whether rows give way to what the errors' autoregression leaves of them."""
     rule: str | None = None
     """Loadings of the penalty."""
     loss: str | None = None
@@ -71,7 +74,7 @@ class Recipe:
         neither transformed nor raised to powers nor multiplied.
         """
         out = {name for name in FIELDS if getattr(self, name) is not None}
-        out |= {"weights"} if self.weighted else set()
+        out |= {"rows"} if self.weighted or self.filtered else set()
         out |= {"columns kept"} if self.dropped else set()
         if self.transform is not None or self.factors is not None:
             out |= {"columns kept"}
@@ -86,9 +89,9 @@ class Recipe:
         return any(value is not None for value in made)
 
     @property
-    def errors(self) -> tuple[bool, bool]:
+    def errors(self) -> tuple[bool, bool, bool]:
         """Recipes that agree in it are simulated on the same errors."""
-        return self.weighted, bool(self.dropped)
+        return self.weighted, self.filtered, bool(self.dropped)
 
 
 def joined(one: Recipe, two: Recipe) -> Recipe | None:
@@ -104,6 +107,7 @@ def joined(one: Recipe, two: Recipe) -> Recipe | None:
         prices=one.prices + two.prices,
         dropped=one.dropped or two.dropped,
         weighted=one.weighted or two.weighted,
+        filtered=one.filtered or two.filtered,
         **own,
     )
 
@@ -154,6 +158,8 @@ def carry_out(recipe: Recipe, origin: Origin) -> Case | None:
         return None  # no columns are left to tell the relevant ones from
     if recipe.weighted:
         case = weighted(case, origin.residuals)
+    if recipe.filtered:
+        case = filtered(case, origin.residuals)
     return replace(case, rule=recipe.rule or case.rule, loss=recipe.loss or case.loss)
 
 
@@ -200,7 +206,7 @@ def _kept(dropped: tuple[int, ...], made: Columns | None, origin: Origin) -> np.
 def weighted(case: Case, residuals: Residuals) -> Case:
     """The case with every row divided by its fitted volatility over the mean level.
 
-    Its law has a volatility path on the case's rows.
+    Its law has a volatility path on the case's rows, and no autoregression.
     """
     volatility = case.law.volatility
     assert volatility is not None
@@ -208,16 +214,39 @@ def weighted(case: Case, residuals: Residuals) -> Case:
     # About its mean: a constant over sigma_t is not variation to be explained.
     response = (residuals.fitted - residuals.fitted.mean() + residuals.values) / relative
     law = case.law.without_volatility()
-    X = standardise(case.X / relative[:, None])
+    return _on_other_rows(
+        case, case.X / relative[:, None], response, residuals.values / relative, law
+    )
+
+
+def filtered(case: Case, residuals: Residuals) -> Case:
+    """The case with rows x_t - sum_k a_k x_(t-k), a the errors' autoregression, which it has.
+
+    Its errors are the shocks; coefficients are those of the rows as they were. Cochrane et al.
+    (1949), J. American Statistical Association 44, 32-61 (from memory).
+    """
+    path = case.law.autoregression
+    assert path is not None
+    response = path.shocks(residuals.fitted - residuals.fitted.mean() + residuals.values)
+    return _on_other_rows(
+        case, path.shocks(case.X), response, path.shocks(residuals.values),
+        case.law.without_autoregression(),
+    )  # fmt: skip
+
+
+def _on_other_rows(
+    case: Case, X: FloatArray, response: FloatArray, errors: FloatArray, law: ErrorLaw
+) -> Case:
+    X = standardise(X)
     return replace(
         case,
         X=X,
-        # A column that weighting made constant is gone, and the places of the others with it.
+        # A column that became constant is gone, and the places of the others with it.
         relevant_columns=case.relevant_columns if X.shape == case.X.shape else (),
         law=law,
         law_draws=draw_laws(law, case.seed),
         response_sd=float(response.std()),
-        residual_sd=float((residuals.values / relative).std()),
+        residual_sd=float(errors.std()),
     )
 
 

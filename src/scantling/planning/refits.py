@@ -169,12 +169,14 @@ def coefficients(case: Case, X: FloatArray, Y: FloatArray, errors: FloatArray) -
 
 
 def scaled_errors(case: Case, law: ErrorLaw, size: int, rng: np.random.Generator) -> FloatArray:
-    """Centred errors whose typical draw is as loud as the residuals.
+    """Centred errors as loud as the residuals, in a typical draw; of a stated law at its own sd.
 
-    The law's own sd would not do: near two moments it is ruled by errors that hardly any sample
-    has.
+    A fitted law's own sd would not do: near two moments it is ruled by errors that hardly any
+    sample has. A stated one says what its sd is, whatever most samples show of it.
     """
     errors = centre(case.draw_errors(law, size, rng))
+    if case.law.spread is None and math.isfinite(law.sd):
+        return errors * (case.residual_sd / law.sd)
     return np.asarray(errors * (case.residual_sd / np.median(np.sqrt((errors**2).mean(axis=0)))))
 
 

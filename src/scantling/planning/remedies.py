@@ -150,7 +150,7 @@ def computed(
     return out
 
 
-def _errors(recipe: Recipe) -> tuple[bool, bool]:
+def _errors(recipe: Recipe) -> tuple[bool, bool, bool]:
     return recipe.errors
 
 

@@ -243,8 +243,7 @@ def rows_plan(plan: Plan, mapper: Mapper, *, refits: bool, effort: Effort = THOR
         by_limit[name] = _needed(search, name, steps, by_limit)
     wanted = LIMITS if search.refits else LIMITS[:2]
     missing = [name for name in wanted if by_limit[name].rows is None]
-    notes = dict.fromkeys(by_limit[name].note for name in missing)  # each once
-    joint = Needed(rows=None, note="; ".join(notes))
+    joint = Needed(rows=None, note=_joint_note(plan, steps, [by_limit[k].note for k in missing]))
     if not missing:
         joint = Needed(rows=max(by_limit[name].rows or 0 for name in wanted))
     fewest = max(FEWEST_ROWS, plan.target.relevant + 2)
@@ -287,6 +286,15 @@ def _needed(search: RowSearch, name: str, steps: list[int], found: dict[str, Nee
     return Needed(rows=rows, note="" if rows else _none_in_range(search.plan, steps, name))
 
 
-def _none_in_range(plan: Plan, steps: list[int], name: str) -> str:
+def _none_in_range(plan: Plan, steps: list[int], *names: str) -> str:
     times = steps[-1] / plan.rows
-    return f"more rows do not lift the {name} limit (tried up to {times:.3g} times)"
+    limits = f"{' and '.join(names)} limit{'s' if len(names) > 1 else ''}"
+    return f"more rows do not lift the {limits} (tried up to {times:.3g} times)"
+
+
+def _joint_note(plan: Plan, steps: list[int], notes: list[str]) -> str:
+    """Why there are none for all limits: each reason once, limits not lifted in one sentence."""
+    alone = {_none_in_range(plan, steps, name): name for name in LIMITS}
+    fixed = [name for note, name in alone.items() if note in notes]
+    said = [_none_in_range(plan, steps, *fixed)] if fixed else []
+    return "; ".join([*said, *dict.fromkeys(note for note in notes if note not in alone)])

@@ -6,7 +6,7 @@ import math
 from dataclasses import dataclass
 
 import numpy as np
-from scipy.stats import norm
+from scipy.special import ndtri
 
 from scantling.core.record import FloatArray
 from scantling.law.families import ErrorLaw
@@ -31,13 +31,19 @@ class Signal:
 def score_deviation(X: FloatArray, law: ErrorLaw, typical_sd: float | None = None) -> FloatArray:
     """sd of S_j under the law: sd(e) sqrt(mean_i x_ij^2 sigma_i^2 / mean_i sigma_i^2), shape (P,).
 
+    Where the level persists, x_ij gives way to what multiplies the shock of row i in S_j, and
+    sd(e) to the sd of the shocks.
+
     With `typical_sd`, the errors' typical root mean square in samples of this size takes the
     place of sd(e): near two moments the latter is ruled by errors that hardly any sample has.
     """
     sd = law.sd if typical_sd is None or not math.isfinite(law.sd) else typical_sd
-    if law.volatility is None:
+    if law.autoregression is not None:
+        X = law.autoregression.seen_by_shocks(X)
+        sd /= math.sqrt(law.autoregression.gain)
+    elif law.volatility is None:
         return np.full(X.shape[1], sd)
-    square = law.volatility.path**2
+    square = np.ones(len(X)) if law.volatility is None else law.volatility.path**2
     return np.asarray(sd * np.sqrt(np.einsum("ij,ij,i->j", X, X, square / square.mean()) / len(X)))
 
 
@@ -45,9 +51,13 @@ def sample_deviation(case: Case, law: ErrorLaw, sample: ScoreSample) -> FloatArr
     """sd of S_j for the loss's score under the law, shape (P,)."""
     if sample.row_squares is None:
         return score_deviation(case.X, law, sample.typical_sd)
-    return np.asarray(
-        np.sqrt(np.einsum("ij,ij,i->j", case.X, case.X, sample.row_squares) / case.rows)
-    )
+    squares = np.einsum("ij,ij,i->j", case.X, case.X, sample.row_squares) / case.rows
+    if law.autoregression is not None:
+        # A clipped score persists about as its errors do.
+        apart = law.without_autoregression()
+        squares *= (score_deviation(case.X, law) / score_deviation(case.X, apart)) ** 2
+        squares /= law.autoregression.gain
+    return np.asarray(np.sqrt(squares))
 
 
 def detectable_effects(
@@ -58,7 +68,7 @@ def detectable_effects(
     `table` is the sample's passers, ranked once where many p are asked for.
     """
     needed = needed_penalty(table or sample.found, p, case.target.risk)
-    power = float(norm.ppf(case.target.power))
+    power = float(ndtri(case.target.power))
     return np.asarray(
         (needed * sample.loadings + power * deviation)
         / (math.sqrt(case.rows) * case.response_sd * sample.slope)

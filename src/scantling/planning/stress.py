@@ -100,9 +100,9 @@ PATH = "normal-volatility"
 
 
 def laws_of(case: Case) -> list[tuple[str, ErrorLaw]]:
-    """Fitted law, its twin and, under volatility, normal innovations on the fitted path."""
+    """Fitted law, its twin and, under volatility or persistent levels, normal innovations there."""
     laws = [("fitted", case.law), ("twin", case.twin)]
-    if case.law.volatility is not None:
+    if case.law.volatility is not None or case.law.autoregression is not None:
         laws.append((PATH, case.law.normal_innovations()))
     return laws
 

@@ -16,6 +16,7 @@ ANSWERS = (WITHIN, BORDERLINE, OVER, NONE)
 """From mildest to most severe."""
 
 VOLATILITY = "volatility"
+PERSISTENCE = "persistent levels"
 TAIL_COST = 1.05
 """Penalty ratio from which tails are said to cost something."""
 LEAST_SHOWN = 0.0005
@@ -158,7 +159,7 @@ def _noise_reason(case: Case | Plan, budget: Budget) -> str:
     if ratio is not None and ratio > TAIL_COST:
         cause = f"{_sources(case)} ask for {ratio:.2f} times the penalty of normal errors"
         if _sources(case) == VOLATILITY:
-            cause = cause.replace(" ask ", " asks ")
+            cause = cause.replace(" ask ", " asks ", 1)
     else:
         cause = "normal errors would need about the same penalty"
     return (
@@ -191,19 +192,30 @@ def _stability_reason(case: Case | Plan, budget: Budget, stress: Stress | None) 
     missed = ", ".join(words[name] for name in stress.failing) or "a criterion near its bar"
     return (
         f"selection binds: refits at {_columns(budget.asked)} give {missed};"
-        f" {_blame(budget, stress)}"
+        f" {_blame(budget, stress, _paths(case))}"
     )
 
 
 def _sources(case: Case | Plan) -> str:
     """What sets the fitted errors apart from independent normal ones."""
-    if case.law.volatility is None:
-        return "tails"
-    return VOLATILITY if case.law.family == "normal" else "tails and volatility"
+    found = [] if case.law.family == "normal" and _paths(case) else ["tails"]
+    return _listed([*found, *_paths(case)])
 
 
-def _blame(budget: Budget, stress: Stress) -> str:
-    """Whether geometry and effect size, volatility or tails are behind an unstable selection."""
+def _listed(causes: list[str]) -> str:
+    return " and ".join(filter(None, [", ".join(causes[:-1]), causes[-1]]))
+
+
+def _paths(case: Case | Plan) -> list[str]:
+    """What in the fitted errors carries over from one row to the next."""
+    law = case.law
+    return [VOLATILITY] * (law.volatility is not None) + [PERSISTENCE] * (
+        law.autoregression is not None
+    )
+
+
+def _blame(budget: Budget, stress: Stress, paths: list[str]) -> str:
+    """Whether geometry, what carries over, or tails are behind an unstable selection."""
     stability, geometry = budget.stability, budget.geometry
     if stability.columns is None or geometry.columns is None:
         return "the normal twin could not be run"
@@ -213,16 +225,17 @@ def _blame(budget: Budget, stress: Stress) -> str:
     if (geometry.reached and (close or overlap)) or stability.high is None:
         return "normal errors do no better: geometry or effect size binds"
     better = f"{'at least ' if not geometry.reached else ''}{geometry.columns:,}"
-    return f"normal errors would carry {better}: {_part_to_blame(stress)} to blame"
+    return f"normal errors would carry {better}: {_part_to_blame(stress, paths)} to blame"
 
 
-def _part_to_blame(stress: Stress) -> str:
-    """Normal innovations on the fitted path tell volatility from tails, at the columns asked."""
+def _part_to_blame(stress: Stress, paths: list[str]) -> str:
+    """Normal innovations on the fitted path tell what carries over from tails."""
     last = {run.law: run.stability.value for run in stress.runs}
     if "normal-volatility" not in last:
         return "tails are"
     lost = last["twin"] - last["fitted"]
     by_volatility = last["twin"] - last["normal-volatility"]
+    alone = "is" if paths == [VOLATILITY] else "are"
     if lost <= 0 or 0.25 < by_volatility / lost < 0.75:
-        return "tails and volatility are"
-    return "volatility is" if by_volatility >= 0.75 * lost else "tails are"
+        return f"{_listed(['tails', *paths])} are"
+    return f"{_listed(paths)} {alone}" if by_volatility >= 0.75 * lost else "tails are"

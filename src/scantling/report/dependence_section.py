@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from scantling.diagnostics.autoregression import NEAR_UNIT_ROOT, Autoregression, Levels
 from scantling.diagnostics.battery import Diagnosis
 from scantling.diagnostics.clustering import LEVEL
 from scantling.diagnostics.error_findings import Finding, Worth
@@ -45,6 +46,40 @@ def volatility_words(path: Volatility) -> str:
     )
 
 
+def levels_words(path: Autoregression) -> str:
+    """The fitted autoregression, without a full stop."""
+    named = ", ".join(f"{value:.2f}" for value in path.coefficients)
+    many = path.coefficients.size > 1
+    return (
+        f"persist: autoregression of order {path.coefficients.size}, coefficient"
+        f"{'s' if many else ''} {named}"
+    )
+
+
+def level_lines(levels: Levels, rows: int, width: int) -> list[str]:
+    """Whether the level persists from row to row, and what that does."""
+    chance, path = p_value(levels.test.p_value), levels.autoregression
+    if path is None:
+        found = (
+            "the signs depend on those before, but no autoregression pays for its coefficients"
+            if levels.test.p_value <= LEVEL
+            else "nothing shows that they persist from row to row"
+        )
+        return paragraph(f"Levels: {found} ({chance}).", width)
+    lines = paragraph(
+        f"Levels {levels_words(path)} ({chance}). Beside columns that persist as well, noise then"
+        " passes a penalty made for independent errors; every simulation here draws such errors.",
+        width,
+    )
+    if path.root >= NEAR_UNIT_ROOT:
+        lines += paragraph(
+            f"With a root of {path.root:.3f} they are hardly told from a random walk in"
+            f" {rows:,} rows: take differences of the response, or its own lags as columns.",
+            width,
+        )
+    return lines
+
+
 def variance(report: Diagnosed, width: int) -> list[str]:
     """Variance and dependence tests, volatility, co-movement."""
     found = report.diagnosis
@@ -53,6 +88,8 @@ def variance(report: Diagnosed, width: int) -> list[str]:
     lines += findings_table(every)
     lines += lacks_lines(every, width)
     lines += _scale_words(found, width)
+    if found.levels is not None:
+        lines += level_lines(found.levels, report.read.rows, width)
     lines += _order_words(report, width)
     if found.worth is not None:
         lines += worth_lines(found.worth, report.read.rows, "rows", width)

@@ -5,7 +5,7 @@ from __future__ import annotations
 import json
 from typing import TYPE_CHECKING, Any
 
-from scantling.law.families import Fit
+from scantling.law.families import ErrorLaw, Fit
 from scantling.planning.remedies import Remedy
 from scantling.report.budget_document import beyond, budget_part, estimate, receipt_part, run_part
 from scantling.report.diagnosis_document import diagnosis_part
@@ -107,6 +107,7 @@ def law_part(report: HasLaw) -> dict[str, Any]:
         "family": law.family,
         "parameters": {k: number(v) for k, v in law.parameters.items()},
         **volatility,
+        **autoregression_part(law),
         **noted("tail_index", law.tail_index, "no finite index"),
         "fit": {
             **noted("distance", law.fit.distance, note),
@@ -122,6 +123,20 @@ def law_part(report: HasLaw) -> dict[str, Any]:
             "note": law.fit.note,
         },
         **_runner_up(law.fit),
+    }
+
+
+def autoregression_part(law: ErrorLaw) -> dict[str, Any]:
+    """Coefficients of the levels, if they persist."""
+    path = law.autoregression
+    if path is None:
+        return {"autoregression": None, "autoregression_note": "levels are not shown to persist"}
+    return {
+        "autoregression": {
+            "coefficients": [number(float(value)) for value in path.coefficients],
+            "root": number(path.root),
+            "variance_gain": number(path.gain),
+        }
     }
 
 

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import math
-import textwrap
 
 from scantling.planning.remedies import Remedy
 from scantling.planning.verdict import BORDERLINE, NONE, WITHIN
@@ -11,8 +10,10 @@ from scantling.report.record import Budgeted
 from scantling.report.wording import (
     LABEL,
     band,
+    between_words,
     columns,
     count,
+    in_lines,
     labelled,
     rate,
     series,
@@ -28,20 +29,11 @@ def first_screen(report: Budgeted, width: int) -> list[str]:
     title = shortened(report.title, width - len("scantling: "))
     lines = [f"scantling: {title}"]
     lines += labelled("Verdict", _verdict(report), width)
-    lines += _reason(report, width)
+    lines += in_lines("Because", report.verdict.reasons[0], width, REASON_LINES)
     lines += labelled("Columns", _columns(report), width)
-    lines += labelled("Limits", _limits(report), width)[:2]
-    lines += labelled("Rows", _rows(report), width)[:2]
+    lines += in_lines("Limits", _limits(report), width, 2)
+    lines += _rows_lines(report, width)
     return lines + _remedies(report, width, 12 - len(lines))
-
-
-def _reason(report: Budgeted, width: int) -> list[str]:
-    text = report.verdict.reasons[0]
-    lines = labelled("Because", text, width)
-    if len(lines) <= REASON_LINES:
-        return lines
-    body = textwrap.shorten(text, REASON_LINES * (width - LABEL - 4), placeholder=" ...")
-    return labelled("Because", body, width)[:REASON_LINES]
 
 
 def _verdict(report: Budgeted) -> str:
@@ -85,20 +77,24 @@ def _limits(report: Budgeted) -> str:
         if budget.binding in names:
             bind = " binds" if len(names) == 1 else " bind"
         parts.append(f"{series(names)} {value}{bind}")
-    return "; ".join([*parts, f"ceiling {rate(budget.ceiling)}"])
+    kind = "" if budget.ceiling.columns is None else " (a rate)"
+    return "; ".join([*parts, f"ceiling {rate(budget.ceiling)}{kind}"])
 
 
-def _rows(report: Budgeted) -> str:
+def _rows_lines(report: Budgeted, width: int) -> list[str]:
+    """Rows used, what these errors cost, rows needed: two lines; for want of room, no cost."""
     budget = report.budget
-    used = f"{budget.rows:,} used"
+    used, cost = f"{budget.rows:,} used", ""
     if report.verdict.answer == NONE:
-        return used
+        return labelled("Rows", used, width)
     if budget.equivalent_rows is not None and budget.equivalent_rows < 0.97 * budget.rows:
         lost = budget.rows - budget.equivalent_rows
-        used += f"; tails cost as much as losing {lost:,} of them"
+        cost = f"; these errors cost as much as losing {lost:,} of them"
+    needed = f"; needed: {budget.rows_note or 'unknown'}"
     if budget.rows_needed is not None:
-        return f"{used}; needed for all {budget.asked:,}: {count(budget.rows_needed)}"
-    return f"{used}; needed: {budget.rows_note or 'unknown'}"
+        needed = f"; needed for all {budget.asked:,}: {count(budget.rows_needed)}"
+    whole = labelled("Rows", used + cost + needed, width)
+    return whole if len(whole) <= 2 else in_lines("Rows", used + needed, width, 2)
 
 
 def _remedies(report: Budgeted, width: int, room: int) -> list[str]:
@@ -110,12 +106,12 @@ def _remedies(report: Budgeted, width: int, room: int) -> list[str]:
             tried = len(report.remedies)
             text = f"none of the {tried} computed helps" if tried else "none computed applies"
             text = "; ".join(filter(None, [text, instead(report)]))
-        return labelled("Remedies", text, width)[: min(2, max(room, 1))]
+        return in_lines("Remedies", text, width, min(2, max(room, 1)))
     lines = []
     for place, remedy in enumerate(found):
         label = "Remedies" if place == 0 else ""
         end = f": {outcome(remedy)}"
-        name = shortened(f"{place + 1}. {remedy.name}", width - LABEL - len(end))
+        name = between_words(f"{place + 1}. {remedy.name}", width - LABEL - len(end))
         text = name + end
         lines.append(f"{label:<{LABEL}}{text}")
     return lines
@@ -148,7 +144,12 @@ def outcome(remedy: Remedy) -> str:
         return "unknown"
     if remedy.answer == WITHIN:
         return f"within, all {remedy.columns:,}"
-    words = f"{remedy.answer.split()[0]}, {allowed.columns:,} of {remedy.columns:,}"
-    if allowed.low is not None and allowed.low < allowed.columns:
+    words = f"{allowed.columns:,} of {remedy.columns:,}"
+    # Without a band nothing is settled, and 'borderline' would say that a band says so.
+    if allowed.low is not None or remedy.answer != BORDERLINE:
+        words = f"{remedy.answer.split()[0]}, {words}"
+    if allowed.low is None:
+        words += " (no band)"
+    elif allowed.low < allowed.columns:
         words += f" (low end {allowed.low:,})"
     return words

@@ -7,6 +7,7 @@ import math
 from typing import Any
 
 from scantling.law.facts import ORDERS, TAILS, FamilyFacts, LawFacts
+from scantling.report.document import autoregression_part
 from scantling.report.values import noted, number
 from scantling.report.wording import labelled, paragraph, series
 
@@ -15,8 +16,10 @@ ALL_EXIST = "every moment exists"
 RECURRENCE = (
     "To a law with a variance, volatility is added as alpha, beta and leverage:"
     " sigma_t^2 = omega + (alpha + leverage 1(e < 0)) e^2 + beta sigma^2, both of the row"
-    " before, omega such that the mean level is 1. Stated laws have variance 1 where it"
-    " exists, else scale 1, and mean 0."
+    " before, omega such that the mean level is 1. alpha + leverage must not be negative, and"
+    " alpha + beta + leverage times the share of E e^2 below 0 must stay below 1. lag1 to lag10"
+    " make the errors an autoregression of what the rest describes. Stated laws have variance 1"
+    " where it exists, else scale 1, and mean 0."
 )
 
 
@@ -27,7 +30,7 @@ def render_families(found: tuple[FamilyFacts, ...]) -> str:
         lines += [each.written or f"{each.family} (fitted only)"]
         lines += paragraph(each.meaning, 80, "    ")
     lines += ["", *paragraph(RECURRENCE, 80, "")]
-    lines += ["", "For example: student-t:df=5,alpha=0.08,beta=0.85,leverage=0.05"]
+    lines += ["", "For example: student-t:df=5,alpha=0.08,beta=0.85,leverage=0.05,lag1=0.2"]
     lines += ["`scantling laws LAW` says what a stated law implies."]
     return "\n".join(lines) + "\n"
 
@@ -61,6 +64,14 @@ def render_facts(facts: LawFacts) -> str:
     spread = f"{facts.sd:.4g}" if math.isfinite(facts.sd) else "none: the variance is missing"
     lines += labelled("Sd", spread, 80)
     lines += labelled("Tail index", _index(facts), 80)
+    levels = law.autoregression
+    if levels is not None:
+        lines += labelled(
+            "Levels",
+            f"persist: largest root {levels.root:.3g}, variance {levels.gain:.4g} times that of"
+            " the innovations",
+            80,
+        )
     there = [str(order) for order, exists in zip(ORDERS, facts.exists, strict=True) if exists]
     lack = [str(order) for order, exists in zip(ORDERS, facts.exists, strict=True) if not exists]
     words = f"{series(there)} exist" if there else "none of 1 to 4 exists"
@@ -69,7 +80,8 @@ def render_facts(facts: LawFacts) -> str:
     lines += labelled("Moments", words, 80)
     kurtosis = facts.excess_kurtosis
     shown = f"{kurtosis:.4g}" if math.isfinite(kurtosis) else "missing"
-    of = " (of the innovations)" if law.volatility is not None else ""
+    alone = law.volatility is None and levels is None
+    of = "" if alone else " (of the innovations)"
     lines += labelled("Kurtosis", f"excess {shown}{of}", 80)
     unit = "times the scale" if facts.in_scale else "sd"
     ends = ", ".join(
@@ -117,6 +129,7 @@ def facts_json(facts: LawFacts) -> str:
             "family": law.family,
             "parameters": {key: number(value) for key, value in law.parameters.items()},
             **volatility,
+            **autoregression_part(law),
             **noted("sd", facts.sd, "the variance is missing"),
             **noted("tail_index", facts.tail_index, ALL_EXIST),
             **noted("innovation_tail_index", facts.innovation_index, ALL_EXIST),

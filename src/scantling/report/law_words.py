@@ -34,6 +34,12 @@ def law_sentences(law: ErrorLaw) -> list[str]:
             f"It is of the innovations, on the fitted {path.kind.upper()}(1,1) volatility path:"
             f" {recurrence}."
         )
+    if law.autoregression is not None:
+        lags = ", ".join(f"{value:.3f}" for value in law.autoregression.coefficients)
+        said.append(
+            "It is of the shocks: the errors are an autoregression of them, with coefficients"
+            f" {lags}, and vary {law.autoregression.gain:.2f} times as much."
+        )
     if law.fit.note:
         said.append(f"{law.fit.note[0].upper()}{law.fit.note[1:]}.")
     said += [*_next_in_line(law.family, law.fit), *_goodness(law.fit)]

@@ -11,6 +11,8 @@ from scantling.report.chart import extremes_table, path_chart
 from scantling.report.dependence_section import (
     findings_table,
     lacks_lines,
+    level_lines,
+    levels_words,
     volatility_words,
     worth_lines,
 )
@@ -71,8 +73,12 @@ def _summary(found: SeriesDiagnosis, width: int) -> list[str]:
     lines = labelled("Values", f"{found.rows:,}", width)
     lines += labelled("Tail", tail, width)
     lines += labelled("Moments", answers, width)
-    if found.clustering is None:
+    if found.clustering is None or found.levels is None:
         return lines + labelled("Volatility", "not looked at: values have no order", width)
+    chance = p_value(found.levels.test.p_value)
+    path = found.autoregression
+    kept = "nothing shows that they persist" if path is None else levels_words(path)
+    lines += labelled("Levels", f"{kept} ({chance})", width)
     test = found.clustering.test
     words = "clusters" if test.p_value <= 0.05 else "no clustering found"
     return lines + labelled("Volatility", f"{words} ({p_value(test.p_value)})", width)
@@ -118,6 +124,8 @@ def _dependence(report: SeriesReport, width: int) -> list[str]:
         return lines + paragraph("Values have no order, so dependence is not tested.", width)
     lines += findings_table(found.dependence)
     lines += lacks_lines(found.dependence, width)
+    if found.levels is not None:
+        lines += level_lines(found.levels, found.rows, width)
     path = found.clustering.volatility
     chance = p_value(found.clustering.test.p_value)
     if path is None:

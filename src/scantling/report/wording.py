@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+import re
 import textwrap
 from collections.abc import Sequence
 
@@ -19,6 +20,8 @@ PLAN_CAUTIONS = (
     ALWAYS[0],
     "Limits hold for the stated laws of errors and columns; nothing was checked against data.",
 )
+BELOW = "more below"
+"""Ends what the first screen shows in part."""
 LABEL = 12
 """Width of the labels on the first screen."""
 
@@ -130,6 +133,32 @@ def table(rows: Sequence[Sequence[str]], indent: str = "  ") -> list[str]:
         cells += [cell.rjust(width) for cell, width in zip(row[1:], widths[1:], strict=True)]
         lines.append((indent + "  ".join(cells)).rstrip())
     return lines
+
+
+def in_lines(label: str, text: str, width: int, most: int) -> list[str]:
+    """A label and its text on at most so many lines, never ending in mid-sentence.
+
+    What does not fit loses its remarks in brackets, then whole clauses from the end; only a
+    clause too long by itself is cut, between words. What was left out is said to be below.
+    """
+    bare = re.sub(r" \([^()]*\)", "", text)
+    clauses = bare.split("; ")
+    shorter = ["; ".join(clauses[:count]) for count in range(len(clauses) - 1, 0, -1)]
+    words = clauses[0].split()
+    cut = [" ".join(words[:count]) + " ..." for count in range(len(words) - 1, 0, -1)]
+    for tried in (text, bare, *(f"{each.rstrip('.')} ({BELOW})" for each in (*shorter, *cut))):
+        lines = labelled(label, tried, width)
+        if len(lines) <= most:
+            return lines
+    return labelled(label, f"({BELOW})", width)
+
+
+def between_words(name: str, width: int) -> str:
+    """A phrase cut to a width between two words, or within the first if that alone is longer."""
+    if len(name) <= width:
+        return name
+    whole = name[: width - 3].rpartition(" ")[0]
+    return f"{whole} ..." if whole else shortened(name, width)
 
 
 def shortened(name: str, width: int) -> str:

@@ -11,8 +11,7 @@ import math
 from dataclasses import dataclass
 
 import numpy as np
-from scipy.special import gammaln
-from scipy.stats import norm
+from scipy.special import gammaln, ndtri
 
 from scantling.core.record import FloatArray
 from scantling.errors import InputError
@@ -40,7 +39,7 @@ class Passers:
 
 def penalty_level(p: FloatArray | float, risk: float, constant: float = 1.1) -> FloatArray:
     """L(p) = c Phi^-1(1 - risk/(2p)); Belloni et al. (2012), Econometrica 80."""
-    return np.asarray(constant * -norm.ppf(risk / (2 * np.asarray(p, dtype=np.float64))))
+    return np.asarray(constant * -ndtri(risk / (2 * np.asarray(p, dtype=np.float64))))
 
 
 def centre(errors: FloatArray) -> FloatArray:
@@ -168,13 +167,17 @@ def risk_curves(found: Passers, risk: float, weights: FloatArray | None = None) 
     order = np.lexsort((-alive, ranks))
     ends = np.searchsorted(ranks[order], np.arange(ranks.max(initial=-1) + 2))
     curves = np.zeros((len(weight), found.columns))
+    every = np.arange(1.0, found.columns + 1)
+    kept = np.ones(found.columns)  # P(none of k is among p taken of P); k = 0
     for k, (start, stop) in enumerate(itertools.pairwise(ends)):
         mine = order[start:stop]
-        p = np.arange(1, alive[mine[0]] + 1)
+        p = every[: alive[mine[0]]]
         counted = np.searchsorted(-alive[mine], -p, side="right") - 1
         exceeding = np.cumsum(weight[:, draw[mine]], axis=1)[:, counted]
-        added = none_taken(k, found.columns, p) - none_taken(k + 1, found.columns, p)
-        curves[:, : p.size] += exceeding * added
+        kept = kept[: p.size]  # ranks of a draw fall together: later ones reach no further
+        lost = kept * p / (found.columns - k)
+        curves[:, : p.size] += exceeding * lost
+        kept = np.maximum(kept - lost, 0.0)
     return np.asarray(curves / found.draws)
 
 

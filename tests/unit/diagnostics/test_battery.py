@@ -207,7 +207,7 @@ def test_clustering_is_found_in_time_order_and_its_index_vetoes() -> None:
     assert path is not None
     assert path.persistence == pytest.approx(0.95, abs=0.06)
     assert found.dependence[0].result.method == "permutation"
-    assert len(found.dependence) == 5
+    assert len(found.dependence) == 6
     assert found.worth is not None and found.worth.extremes is not None
     assert found.worth.extremes.index < 0.9
     assert 1 <= found.worth.tail_rows <= found.worth.rows <= 1500

@@ -10,10 +10,11 @@ import pytest
 from scipy import stats
 
 from scantling.core.record import read_only
+from scantling.diagnostics.autoregression import Autoregression
 from scantling.diagnostics.tail_estimators import hill
 from scantling.diagnostics.volatility import Volatility
-from scantling.law.families import FAMILIES, ErrorLaw, normal_law, student_law
-from scantling.law.fit import fit_innovations
+from scantling.law.families import FAMILIES, ErrorLaw, draw_together, normal_law, student_law
+from scantling.law.fit import fit_innovations, fit_law
 from scantling.law.notation import WRITTEN, parse_law
 from scantling.law.splice import fit_splice
 from scantling.law.spliced import Spliced, spliced_spread
@@ -321,3 +322,73 @@ def test_parameters_by_name() -> None:
     assert clustered == pytest.approx({"scale": 1.0, "omega": 0.4, "alpha": 0.1, "beta": 0.8})
     leaning = replace(volatility(), leverage=0.05)
     assert replace(normal_law(1.0), volatility=leaning).parameters["leverage"] == 0.05
+
+
+def test_laws_drawn_together_are_drawn_as_alone() -> None:
+    first = replace(law("student-t"), volatility=volatility())
+    second = replace(law("normal"), volatility=replace(volatility(9.0), leverage=0.1))
+    both = draw_together((first, law("laplace"), second), (3, 0, 4), ROWS, np.random.default_rng(5))
+    assert both.shape == (ROWS, 7)
+    alone = first.draw((ROWS, 3), np.random.default_rng(5))
+    assert both[:, :3] == pytest.approx(alone, rel=1e-12)
+    # The recurrence of arch's and every textbook, one step at a time.
+    rng = np.random.default_rng(5)
+    first.innovations((ROWS + 500, 3), rng)
+    z = second.innovations((ROWS + 500, 4), rng)[:, 0]
+    path = second.volatility
+    assert path is not None
+    variance, errors = float((path.path**2).mean()), []
+    for shock in z:
+        errors.append(math.sqrt(variance) * shock)
+        weight = path.alpha + path.leverage * (errors[-1] < 0)
+        variance = path.omega + weight * errors[-1] ** 2 + path.beta * variance
+    assert both[:, 3] == pytest.approx(np.array(errors[500:]), rel=1e-9)
+
+
+def persistent(found: ErrorLaw, *coefficients: float) -> ErrorLaw:
+    values = np.array(coefficients)
+    path = Autoregression(coefficients=read_only(values), draws=read_only(values[None].copy()))
+    return replace(found, autoregression=path)
+
+
+def test_errors_with_persistent_levels_have_their_own_variance_and_the_shocks_index() -> None:
+    shocks = student_law(6, sd=1.5)
+    found = persistent(shocks, 0.6)
+    # Variance of a first-order autoregression: that of the shocks over 1 - a^2.
+    assert found.sd == pytest.approx(1.5 / 0.8, rel=1e-12)
+    assert found.tail_index == 6
+    drawn = found.draw((ROWS, 2000), np.random.default_rng(2))
+    assert drawn.std() == pytest.approx(found.sd, rel=0.01)
+    kept = (drawn[1:] * drawn[:-1]).mean() / drawn.var()
+    assert kept == pytest.approx(0.6, abs=0.01)
+    # The first row has the same law as the last: the series runs in before.
+    assert drawn[0].std() == pytest.approx(drawn[-1].std(), rel=0.08)
+    assert found.parameters["lag1"] == 0.6
+    assert found.without_autoregression().sd == pytest.approx(1.5, rel=1e-12)
+    assert found.normal_innovations().sd == pytest.approx(found.sd, rel=1e-12)
+
+
+def test_persistent_levels_ride_on_the_volatility_path() -> None:
+    path = volatility()
+    found = persistent(replace(law("normal"), volatility=path), 0.5)
+    drawn = found.draw_given_path(ROWS, 4000, np.random.default_rng(3))
+    # var e_t = sum_k a^(2k) sd^2 path_(t-k)^2, far from the first row.
+    weights = 0.25 ** np.arange(30)
+    square = 1.5**2 * np.asarray(path.path) ** 2
+    expected = [float(weights @ square[t - np.arange(30)]) for t in range(100, ROWS)]
+    assert drawn[100:].var(axis=1) == pytest.approx(np.array(expected), rel=0.12)
+    both = draw_together((found, law("normal")), (2, 3), ROWS, np.random.default_rng(1))
+    assert both.shape == (ROWS, 5)
+
+
+def test_drawn_laws_take_the_drawn_autoregressions() -> None:
+    sample = persistent(law("student-t"), 0.7).draw(600, np.random.default_rng(4))
+    found = fit_law(sample, time_ordered=True, seed=1)
+    assert found.autoregression is not None
+    assert found.autoregression.coefficients[0] == pytest.approx(0.7, abs=0.08)
+    assert found.volatility is None
+    drawn = found.parameter_draws(50, np.random.default_rng(1))
+    firsts = [each.autoregression.coefficients[0] for each in drawn if each.autoregression]
+    assert len(firsts) == 50
+    # sd of the coefficient: sqrt((1 - a^2)/n) = .029.
+    assert np.std(firsts) == pytest.approx(0.029, rel=0.35)
