@@ -148,6 +148,7 @@ def _judged(
         refits=selection is not None,
     )  # fmt: skip
     budget = assemble(
+        target=case.target,
         rows=case.rows,
         asked=case.columns,
         noise=noise,

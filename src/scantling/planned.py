@@ -22,6 +22,9 @@ DEFAULTS: Mapping[str, Any] = {
     "false_share": 0.20, "explained": None, "replicates": 400, "seed": 1,
 }  # fmt: skip
 TARGET = ("relevant", "smallest_effect", "risk", "power", "stability", "false_share")
+PLAN = (
+    "rows", "columns", "correlation", "rule", "loss", "explained", "replicates", "seed",
+)  # fmt: skip
 NEEDED = {"rows": "--rows", "columns": "--columns", "law": "--law"}
 
 
@@ -79,26 +82,34 @@ def plan_of(statement: Statement) -> tuple[Plan, tuple[str, ...]]:
     laws["column_law"] = laws["law"] if values["column_law"] is None else written_law(
         values["column_law"]
     )  # fmt: skip
-    plan = stated_plan(
-        **{k: values[k] for k in ("rows", "columns", "correlation", "rule", "loss", "explained")},
-        replicates=values["replicates"],
-        seed=values["seed"],
-        target=target_of(**{key: values[key] for key in TARGET}),
-        **laws,
-    )
+    try:
+        target = target_of(**{key: values[key] for key in TARGET})
+        plan = stated_plan(
+            **{key: values[key] for key in PLAN}, target=target, **laws,
+            named=_target_places(statement),
+        )  # fmt: skip
+    except InputError as fault:
+        raise InputError(statement.placed(str(fault))) from fault
     return plan, (*_facts(values, laws), *statement.facts)
+
+
+def _target_places(statement: Statement) -> tuple[str, str]:
+    """Where relevant columns and effect stand; what they have in common is named once."""
+    relevant, effect = (statement.places.get(key, key) for key in ("relevant", "smallest_effect"))
+    shared, _, last = effect.rpartition(" ")
+    return relevant, last if shared and relevant.startswith(f"{shared} ") else effect
 
 
 def _facts(values: Mapping[str, Any], laws: Mapping[str, str]) -> tuple[str, ...]:
     """The statement in sentences."""
     alike = laws["law"] == laws["column_law"]
-    columns = "of the same law" if alike else f"each {laws['column_law']}"
+    errors, drawn = (laws[key].replace(",", ", ") for key in ("law", "column_law"))  # to be wrapped
+    columns = "of the same law" if alike else f"each {drawn}"
     tie = f", correlation {values['correlation']:g} between all" if values["correlation"] else (
         ", independent"
     )  # fmt: skip
     return (
-        f"{values['rows']:,} rows; errors {laws['law']}; {values['columns']:,} columns {columns}"
-        f"{tie}.",
+        f"{values['rows']:,} rows; errors {errors}; {values['columns']:,} columns {columns}{tie}.",
         f"Asked for: {values['relevant']} relevant columns of effect"
         f" {values['smallest_effect']:g}, risk {values['risk']:g}, power {values['power']:g},"
         f" stability {values['stability']:g}, false share {values['false_share']:g};"

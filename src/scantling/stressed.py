@@ -18,6 +18,7 @@ from scantling.law.families import ErrorLaw
 from scantling.pipeline import Progress, make_case, receipt_of, with_simulation
 from scantling.planned import plan_of
 from scantling.planning.case import Case
+from scantling.planning.effects import impossible, impossible_words
 from scantling.planning.fitted_columns import fitted_plan
 from scantling.planning.plan import Plan
 from scantling.planning.refits import StressRun
@@ -99,14 +100,16 @@ def stress_design(
     tell: Progress = progress or (lambda stage: None)
     tell("read")
     design = _changed(design, asked)
+    _differs(asked, design.penalty.rule)
     table = read_tables((design,))[0]
     with worker_pool(1):  # one thread for linear algebra: sums in the same order everywhere
         found = diagnosed(design, table, tell)
         case = make_case(design, found.columns, found.residuals, found.law)
         setting = _setting(case, found, asked)
     lack = variance_missing(found.diagnosis)
+    path = "" if setting.case.law.volatility is None else " and volatility path"
     where = (
-        "the design's own columns and volatility path"
+        f"the design's own columns{path}"
         if setting.case.mode == "conditional"
         else "columns and errors drawn from the laws fitted to the data"
     )
@@ -117,7 +120,7 @@ def stress_design(
             seed, replicates,
             ((design.path.name, design.sha256), (table.file_name, table.sha256)), command, started,
         ),
-        (),
+        (f"{impossible_words(design.target)}.",) if impossible(design.target) else (),
     )  # fmt: skip
 
 
@@ -142,7 +145,8 @@ def stress_statement(
         for name in ("rows", "columns", "rule", "loss", "seed", "replicates")
         if (value := getattr(asked, name)) is not None
     }
-    plan, facts = plan_of(replace(statement, values={**statement.values, **said}))
+    plan, facts = plan_of(statement.changed(said, {}))
+    _differs(asked, plan.rule)
     _fits(plan.rows, plan.columns, plan.target)
     case_of = plan_cases(plan, plan.columns, SUPPORTS)
     setting = Setting(case=case_of(0), case_of=case_of, columns=plan.columns, names=())
@@ -166,6 +170,14 @@ def _check(asked: Asked) -> None:
         value = getattr(asked, name)
         if value is not None and value < least:
             raise InputError(f"{name}: a whole number of at least {least} is needed; found {value}")
+
+
+def _differs(asked: Asked, rule: str) -> None:
+    """Refuse to compare a rule with itself."""
+    if asked.compare == rule:
+        raise InputError(
+            f"compare: {rule!r}: the rule that is judged is this one already; another one is needed"
+        )
 
 
 def _changed(design: Design, asked: Asked) -> Design:
@@ -222,11 +234,14 @@ def _report(
         lack = "the error law has no variance"
     runs: tuple[StressRun, ...] = ()
     judgement: Judgement = no_variance(lack[:1].upper() + lack[1:])
+    compared: Judgement | None = None
     if not lack:
         tell("stress")
         with worker_pool(workers, case.X.nbytes) as mapper:
             runs = _runs(setting, asked, mapper)
         judgement = judge(runs[0], case.target)
+        if asked.compare is not None:  # under the same law, on the same draws
+            compared = judge(runs[1], case.target)
     return StressReport(
         title=title,
         rows=case.rows,
@@ -240,6 +255,7 @@ def _report(
         names=setting.names,
         runs=runs,
         judgement=judgement,
+        compared=compared,
         receipt=receipt(case.seed, case.replicates),
     )
 

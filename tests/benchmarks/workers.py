@@ -30,17 +30,18 @@ from scantling.design.spec import TargetSpec
 from scantling.law.notation import parse_law
 from scantling.planning.case import Case, draw_laws
 from scantling.planning.stress import Stress, stress
+from scantling.simulation.rules import RULES
 
 
-def make_case(rows: int, columns: int, replicates: int) -> Case:
+def make_case(rows: int, columns: int, replicates: int, rule: str) -> Case:
     """A stated design as the simulations see it."""
     X = stream(1, "benchmark").standard_t(4, (rows, columns))
     X = (X - X.mean(axis=0)) / X.std(axis=0)
     law = parse_law("student-t:df=4")
     return Case(
         X=X, law=law, law_draws=draw_laws(law, 1), response_sd=1.2, residual_sd=1.0,
-        target=TargetSpec(relevant=10, smallest_effect=0.2), rule="plug-in",
-        replicates=replicates, seed=1,
+        target=TargetSpec(relevant=10, smallest_effect=0.2), rule=rule, replicates=replicates,
+        seed=1, time_ordered=True,
     )  # fmt: skip
 
 
@@ -78,8 +79,9 @@ def warm(mapper: Mapper) -> None:
         time.sleep(0.05)
         return number
 
-    for _ in range(5):
-        mapper(unit, range(40))
+    # A call worth starting processes for, and others until they are up.
+    for count in (100, 20, 20):
+        mapper(unit, range(count))
 
 
 def timed(case: Case, pool: AbstractContextManager[Mapper]) -> tuple[float, float, int, Stress]:
@@ -99,11 +101,12 @@ def main() -> None:
     parser.add_argument("--rows", type=int, default=500)
     parser.add_argument("--columns", type=int, default=1000)
     parser.add_argument("--replicates", type=int, default=400)
+    parser.add_argument("--rule", choices=RULES, default="cross-validated")
     parser.add_argument("--workers", type=int, default=2)
     parser.add_argument("--rounds", type=int, default=3)
     parser.add_argument("--out", type=Path, required=True)
     options = parser.parse_args()
-    case = make_case(options.rows, options.columns, options.replicates)
+    case = make_case(options.rows, options.columns, options.replicates, options.rule)
     alone, several, kept = [], [], []
     with TemporaryDirectory() as folder:
         for place in range(options.rounds):
@@ -128,7 +131,8 @@ def main() -> None:
         "",
         f"Command: `python tests/benchmarks/workers.py --rows {options.rows}"
         f" --columns {options.columns} --replicates {options.replicates}"
-        f" --workers {options.workers} --rounds {options.rounds} --out {options.out}`.",
+        f" --rule {options.rule} --workers {options.workers} --rounds {options.rounds}"
+        f" --out {options.out}`.",
         f"{datetime.now(UTC).date()}; scantling {version('scantling')}, Python"
         f" {platform.python_version()}, numpy {np.__version__}, joblib {version('joblib')};"
         f" {os.cpu_count()} cores, load average {load:.1f} at the end (what runs beside it is in"

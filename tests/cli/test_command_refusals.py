@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from pathlib import Path
+from shlex import quote
 
 import numpy as np
 import pytest
@@ -109,6 +110,24 @@ def test_bad_tables(
 ) -> None:
     message = refused(tmp_path, design(), cells, capsys)
     assert all(part in message for part in parts), message
+
+
+@pytest.mark.parametrize("name", ["t.csv", "my t.TSV", "t.csv.gz", "t.parquet"])
+def test_a_table_in_place_of_a_design(
+    tmp_path: Path, capsys: pytest.CaptureFixture[str], name: str
+) -> None:
+    path = tmp_path / name
+    path.write_text("")
+    assert run(["vet", str(path), "--out", str(tmp_path / "out")]) == 2
+    printed, message = capsys.readouterr()
+    assert printed == "" and not (tmp_path / "out").exists()
+    assert message == (
+        f"scantling: {path}: a design (.toml) is needed; `scantling draft {quote(str(path))}`"
+        " writes one\n"
+    )
+    path.unlink()
+    assert run(["vet", str(path)]) == 2
+    assert "no such file" in capsys.readouterr().err
 
 
 DATA = BASE["data"]

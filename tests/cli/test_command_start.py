@@ -93,7 +93,8 @@ def test_draft_can_be_vetted_as_it_is(
     monkeypatch.chdir(tmp_path)
     assert run(["draft", "tables/rents.csv"]) == 0
     said, message = capsys.readouterr()
-    assert said.startswith("wrote rents.toml; ") and message == ""
+    assert said.startswith("wrote rents.toml; ")
+    assert message == "response taken: 'level', a guess\n"
     # The default is 400 replicates; numbers do not matter here.
     status = run(["vet", "rents.toml", "--replicates", "50", "--out", "out", "--json"])
     document = valid_document(capsys.readouterr().out)
@@ -119,7 +120,7 @@ def test_draft_never_overwrites(
     written = (tmp_path / "other.toml").read_text()
     capsys.readouterr()
     assert run(["draft", "rents.csv", "--out", "-"]) == 0
-    assert capsys.readouterr().out == written
+    assert capsys.readouterr() == (written, "response taken: 'level', a guess\n")
     assert sorted(p.name for p in tmp_path.iterdir()) == ["other.toml", "rents.csv", "rents.toml"]
 
 

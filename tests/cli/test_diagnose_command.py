@@ -6,6 +6,7 @@ import gzip
 import io
 import json
 import sys
+from pathlib import Path
 
 import numpy as np
 import pytest
@@ -116,15 +117,48 @@ def test_a_column_of_a_table(heavy, tmp_path, capsys):
         (b"e\n" + b"1\n2\n" * 10, "20 values; at least 30 are needed"),
         (b"e\n" + b"1\n" * 40, "every value is 1"),
         (b"e\n" + b"1\n2\n" * 20 + b"x\n", "row 41 is no number: 'x'"),
-        (b"e\n" + b"1\n2\n" * 20 + b"NA\n", "1 missing or infinite values, first in row 41"),
-        (b"e\n" + b"1\n2\n" * 20 + b"inf\n", "1 missing or infinite values, first in row 41"),
+        (b"e\n" + b"1\n2\n" * 20 + b"NA\n", "1 missing or infinite value, first in row 41"),
+        (b"e\n" + b"1\n2\n" * 20 + b"inf\n", "1 missing or infinite value, first in row 41"),
         (b"\xff\xfe\x00", "not text in UTF-8"),
+        (b"1.5\n", "bad.csv: 1 value; at least 30 are needed"),
+        (b"1\n2\n" * 20 + b"\n" + b"1\n2\n", "line 41 is empty; one number on every line"),
+        (b"e\n" + b"1\n2\n" * 20 + b"  \n\n1\n", "line 42 is empty; one number on every line"),
+        (b"0,5\n1,5\n" * 20, "the first line is 2 numbers separated by commas; a table needs a"),
+        (b"e\n" + b"0,5\n1,5\n" * 20, "row 1 has 2 values separated by commas, and 1 is needed;"),
+        (b"e\n" + b'"0,5"\n"1,5"\n' * 20, "no number: '0,5'; decimals need a point, not a comma"),
+        (b"t;e\n" + b"1;0,5\n2;1,5\n" * 20, "'t;e', looks separated by semicolons; commas are"),
+        (b"1;0,5\n2;1,5\n" * 20, "'1;0,5', looks separated by semicolons; commas are needed, and"),
+        (b"e|f\n" + b"1|2\n" * 40, "'e|f', looks separated by bars; commas are needed"),
+        (b"e\n1\n2,3\n" + b"1\n" * 40, "row 2 has 2 values separated by commas, and 1 is needed"),
     ],
 )
 def test_bad_series_are_refused_in_one_line(tmp_path, capsys, content, words):
     path = tmp_path / "bad.csv"
     path.write_bytes(content)
     assert words in refused(capsys, "diagnose", str(path))
+
+
+def test_empty_lines_at_the_end_and_in_a_table_are_no_rows(heavy, tmp_path):
+    _, values = heavy
+    numbers = list(map(repr, map(float, values)))
+    path = tmp_path / "a.csv"
+    path.write_text("\n\n|e|\n" + "\n".join(numbers) + "\n\n  \n\n", encoding="utf-8")
+    found = read_series(str(path))
+    assert found.values.tolist() == values.tolist() and found.name == "|e|"
+    rows = [f"{place},{each}" for place, each in enumerate(numbers)]
+    path.write_text("t,e\n" + "\n\n".join(rows) + "\n", encoding="utf-8")
+    assert read_series(str(path), column="e").values.tolist() == values.tolist()
+
+
+def test_an_unreadable_file_is_named_without_a_number(tmp_path, capsys, monkeypatch):
+    def denied(path):
+        raise PermissionError(13, "Permission denied", str(path))
+
+    path = tmp_path / "secret.txt"
+    path.write_text("1\n")
+    monkeypatch.setattr(Path, "read_bytes", denied)
+    message = refused(capsys, "diagnose", str(path))
+    assert message == "scantling: secret.txt: cannot be read (Permission denied)\n"
 
 
 def test_what_cannot_be_opened(tmp_path, capsys):

@@ -29,7 +29,13 @@ def test_every_law_is_listed_as_it_is_written(capsys: pytest.CaptureFixture[str]
 
 @pytest.mark.parametrize(
     "law",
-    [*WRITTEN.values(), "student-t:df=5,alpha=0.08,beta=0.85,leverage=0.05", "student-t:df=0.8"],
+    [
+        *WRITTEN.values(),
+        "student-t:df=5,alpha=0.08,beta=0.85,leverage=0.05",
+        "student-t:df=0.8",
+        "student-t:df=5,alpha=0.08,beta=0.85,leverage=-0.05",
+        "normal:alpha=0.1,beta=0.5,lag1=0.4",
+    ],
 )
 def test_facts_fit_the_page_and_agree_with_the_json(
     law: str, capsys: pytest.CaptureFixture[str]
@@ -54,6 +60,17 @@ def test_facts_of_a_student_law(capsys: pytest.CaptureFixture[str]) -> None:
     assert found["quantiles"][0]["value"] == pytest.approx(-7.17318 / 2**0.5, abs=1e-5)
     text = said(["laws", "student-t:df=4"], capsys)[1]
     assert "Moments     1, 2 and 3 exist; 4 missing" in text
+
+
+def test_persistent_levels_are_said(capsys: pytest.CaptureFixture[str]) -> None:
+    """exact: 1/(1 - 0.6^2) = 1.5625."""
+    text = said(["laws", "laplace:lag1=0.6"], capsys)[1]
+    assert "Levels      persist: largest root 0.6, variance 1.562 times that of the" in text
+    found = json.loads(said(["laws", "laplace:lag1=0.6", "--json"], capsys)[1])
+    assert found["autoregression"] == {
+        "coefficients": [0.6], "root": 0.6, "variance_gain": 1.5625,
+    }  # fmt: skip
+    assert found["sd"] == 1
 
 
 @pytest.mark.parametrize("law", ["gauss", "ged", "student-t:df=x", "normal:alpha=0.5,beta=0.5"])

@@ -74,7 +74,7 @@ def test_a_changed_figure_is_named(saved: Path, capsys: pytest.CaptureFixture[st
         ),
         (
             lambda d: d["receipt"].update(inputs={"../../other.toml": "0" * 64}),
-            "is not beside it nor a folder above; --design names it",
+            "its design is not beside it, in a folder above or in one beside its folder; --design",
         ),
     ],
 )
@@ -88,6 +88,37 @@ def test_what_cannot_be_replayed_is_refused(
     assert run(["replay", str(path)]) == 2
     printed, line = capsys.readouterr()
     assert printed == "" and line.count("\n") == 1 and message in line
+
+
+def test_a_design_in_a_folder_beside_the_reports_is_found(
+    saved: Path, tmp_path: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    """Of those of its name, in order of the folders, the one with the receipt's checksum."""
+    report = tmp_path / "reports" / "small.json"
+    designs = [tmp_path / name / "small.toml" for name in ("attempts", "examples", "zones")]
+    for folder in (report.parent, *(path.parent for path in designs)):
+        folder.mkdir()
+    shutil.copy(saved, report)
+    for path in designs:
+        shutil.copy(saved.parents[1] / "small.toml", path)
+        shutil.copy(saved.parents[1] / "small.csv", path.parent)
+    designs[0].write_text(designs[0].read_text() + "# a remark\n")
+    assert run(["replay", str(report)]) == 0
+    printed, message = capsys.readouterr()
+    assert printed == f"{report}: agrees, every key the same\n"
+    assert message == f"design taken: {designs[1]}\n"
+    assert run(["replay", str(report), "--quiet"]) == 0
+    assert capsys.readouterr() == ("", "")
+    # Where none is the one, the first is named, and why not; folders two levels away are not read.
+    for path in designs[1:]:
+        path.unlink()
+    assert run(["replay", str(report), "--quiet"]) == 2
+    assert f"{designs[0]}: changed since small.json was made" in capsys.readouterr().err
+    designs[0].rename(tmp_path / "attempts" / "other.toml")
+    (tmp_path / "zones" / "deep").mkdir()
+    shutil.copy(saved.parents[1] / "small.toml", tmp_path / "zones" / "deep")
+    assert run(["replay", str(report), "--quiet"]) == 2
+    assert "small.toml is not beside it, in a folder above or in" in capsys.readouterr().err
 
 
 def test_no_report_and_no_design(

@@ -15,7 +15,7 @@ from pathlib import Path
 import pytest
 
 from scantling.cli.main import run
-from scantling.cli.run_folder import Request, kept_run, read_request
+from scantling.cli.run_folder import Request, kept_run, read_request, refuse_newer
 from scantling.errors import InputError, ResourceError
 
 Start = Callable[..., subprocess.CompletedProcess[str]]
@@ -210,6 +210,42 @@ def test_other_options_do_not_take_over_the_folder(left: Path, tmp_path: Path) -
     with kept_run(request, (tmp_path / "small.toml", tmp_path / "small.csv")) as journal:
         assert journal.path.parent.name == "small.2.run"
     assert left.exists()
+
+
+def test_a_newer_report_of_other_settings_is_not_overwritten(
+    left: Path, tmp_path: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    """A short vet after a long one was interrupted: the report is kept, and so is the run."""
+    report = tmp_path / "small.json"
+    arguments = ["--seed", "2", "--replicates", "50", "--out", str(tmp_path), "--quiet"]
+    assert run(["vet", str(tmp_path / "small.toml"), *arguments]) in (0, 3, 4, 5)
+    made = report.read_bytes()
+    assert refusal(left, capsys) == (
+        f"{report}: newer than {left}, made by 'scantling vet small.toml --seed 2 --replicates 50';"
+        " resuming would overwrite it: move it away, or delete the run"
+    )
+    assert report.read_bytes() == made and (left / "units").stat().st_size > 0
+    # Older than the run, it was to be overwritten from the start; and moved away, nothing is lost.
+    earlier = (left / "units").stat().st_mtime_ns - 10**9
+    for path in (left / "run.json", report):
+        os.utime(path, ns=(earlier, earlier))
+    assert run(["resume", str(left), "--quiet"]) in (0, 3, 4, 5)
+    assert report.read_bytes() != made and not left.exists()
+
+
+def test_a_report_of_the_same_settings_or_none_to_read_is_no_loss(left: Path) -> None:
+    report = left.with_name("small.json")
+    own = "scantling vet small.toml"
+    refuse_newer(left, [report], [own])
+    report.write_text(json.dumps({"receipt": {"command": own}}))
+    newer = (left / "units").stat().st_mtime_ns + 10**9
+    os.utime(report, ns=(newer, newer))
+    refuse_newer(left, [report], [own])
+    with pytest.raises(InputError, match="newer than"):
+        refuse_newer(left, [report], [own + " --seed 3"])
+    # Of several responses one is enough.
+    with pytest.raises(InputError, match=r"small\.json: newer than"):
+        refuse_newer(left, [left.with_name("none.json"), report], [own, own + " --seed 3"])
 
 
 @pytest.mark.parametrize(

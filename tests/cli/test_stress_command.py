@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import json
 import re
+from pathlib import Path
 
 import pytest
 
@@ -78,12 +79,68 @@ def test_a_design_is_refitted_on_its_own_columns(of_design):
     assert text.rstrip().endswith("scantling stress harbour.toml --compare bic")
 
 
-def test_a_rule_compared_with_itself_is_the_same(stated, capsys):
-    _, found = document(capsys, stated(), "--compare", "plug-in")
-    runs = found["stress"]
-    assert runs[0] == runs[1]
-    assert runs[2] == runs[3]
-    assert runs[0] != runs[2]
+def test_a_rule_is_not_compared_with_itself(stated, harbour, capsys):
+    for source, flags, rule in (
+        (stated(), [], "plug-in"), (stated(), ["--rule", "bic"], "bic"), (harbour, [], "plug-in"),
+    ):  # fmt: skip
+        assert run(["stress", str(source), *flags, "--compare", rule]) == 2
+        seen = capsys.readouterr()
+        assert seen.out == ""
+        assert seen.err == (
+            f"scantling: compare: '{rule}': the rule that is judged is this one already; another"
+            " one is needed\n"
+        )
+
+
+def test_the_second_rule_is_judged_on_the_first_screen(of_design, stated, capsys):
+    _, out, found = of_design
+    compared = found["compared"]
+    assert compared["rule"] == "bic"
+    bic, target = found["stress"][1], found["design"]["target"]
+    missed = bic["power"]["high"] < target["power"]
+    assert (compared["criteria"]["power"] == "missed") == missed
+    assert set(compared["criteria"].values()) <= {"met", "undecided", "missed"}
+    text = (out / "harbour-stress.txt").read_text()
+    screen = " ".join(" ".join(text.splitlines()[:12]).split())
+    assert f"Compared bic: {compared['answer']}." in screen
+    assert compared["reasons"][0] in screen
+    alone = document(capsys, stated())[1]
+    assert (alone["compared"], alone["compared_note"]) == (None, "one rule only")
+
+
+def test_a_design_on_paper_has_a_stated_law(stated, capsys):
+    assert run(["stress", str(stated(law="student-t:df=5,alpha=0.1,beta=0.6"))]) in (0, 3, 4)
+    text = capsys.readouterr().out
+    assert "fitted law" not in text
+    assert "fitted path" not in text
+    assert "stated law" in text
+    assert "on a stated GARCH(1,1) volatility path" in text
+
+
+def test_a_volatility_path_is_named_where_there_is_one(of_design):
+    _, _, found = of_design
+    has_path = found["law"]["volatility"] is not None
+    assert ("volatility path" in found["design"]["facts"][0]) == has_path
+    assert "the design's own columns" in found["design"]["facts"][0]
+
+
+@pytest.mark.parametrize("name", ["strait_wide", "strait_narrow"])
+def test_the_example_reports_are_taken_up(name, capsys):
+    path = Path(__file__).parents[2] / "reports" / "examples" / f"{name}.json"
+    flags = ("--rows", 90, "--columns", 12, "--pace", "quick")
+    status, found = document(capsys, path, *flags)
+    assert status in (0, 3, 4)
+    saved = json.loads(path.read_text())["law"]["parameters"]
+    for key in ("alpha", "beta", "leverage"):
+        assert found["law"]["parameters"].get(key, 0) == pytest.approx(saved.get(key, 0), abs=1e-6)
+
+
+def test_an_impossible_target_is_refused_on_paper(stated, capsys):
+    assert run(["stress", str(stated(effect=0.5))]) == 2
+    assert capsys.readouterr().err == (
+        "scantling: paper.toml: [target] relevant 4 x smallest_effect 0.5: they would explain"
+        " 100 % of the response's variance; under 100 % is needed\n"
+    )
 
 
 def test_other_rows_are_drawn_from_fitted_laws_and_the_pilot_can_be_the_support(harbour, capsys):
@@ -158,7 +215,7 @@ def test_a_saved_report_is_a_source(stated, tmp_path, capsys):
         (["--rule", "lucky"], "rule: one of plug-in, self-normalised, bic"),
         (["--compare", "lucky"], "compare: one of plug-in"),
         (["--loss", "logistic"], "loss: one of squared, square-root, huber, absolute is needed"),
-        (["--columns", "4"], "columns: 4: more than the 4 relevant columns are needed"),
+        (["--columns", "4"], "[target] relevant: 4: there are 4 columns; a number below 4"),
         (["--columns", "9000000"], "GiB; the bound is 2 GiB"),
         (["--support", "pilot"], "columns on paper have no pilot"),
         (["--response", "y"], "--response goes with a design that has data"),
@@ -186,3 +243,22 @@ def test_a_name_that_is_no_column_is_refused_with_the_nearest(harbour, tmp_path,
     assert found["design"]["support"] == ["berth_1", "berth_2.lag1"]
     assert fitted["support"] == "named"
     assert [e["column"] for e in fitted["inclusion"]["by_column"]] == ["berth_1", "berth_2.lag1"]
+
+
+def test_an_impossible_target_of_a_design_is_said(small, tmp_path, valid_document, capsys):
+    """exact: one column of effect 1.1 explains 121 % of the variance."""
+    text = small.read_text().replace("smallest_effect = 0.5", "smallest_effect = 1.1")
+    path = tmp_path / "small.toml"
+    path.write_text(text.replace('"small.csv"', f'"{small.parent / "small.csv"}"'))
+    words = "1 relevant column of effect 1.1 would explain 121 % of the response's variance"
+    assert run(["vet", str(path), "--out", str(tmp_path / "out")]) == 3
+    found = valid_document((tmp_path / "out" / "small.json").read_text())
+    assert found["verdict"]["reasons"][0].startswith(words)
+    none = [e for e in found["budget"]["effects"] if e["allowed_columns"] is None]
+    # 1 and 2 columns of effects .7333, 1.1 and 1.65: only the first of them is possible.
+    assert len(none) == len(found["budget"]["effects"]) - 1
+    printed = capsys.readouterr().out
+    assert "\nVerdict     BORDERLINE" in printed
+    assert "A dash: so many columns of such an effect" in printed
+    _, stressed = document(capsys, path)
+    assert any(fact.startswith(words) for fact in stressed["design"]["facts"])

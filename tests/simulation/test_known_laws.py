@@ -148,6 +148,7 @@ def judged(X, y, target) -> tuple[Verdict, str | None]:
     case = case_of(X, y, target, tail=diagnosis.errors)
     noise, selection = break_through(case, serial_map), stress(case, serial_map)
     budget = assemble(
+        target=case.target,
         rows=case.rows, asked=case.columns, noise=noise,
         signal=signal(case, noise.fitted, noise.drawn), stability=selection.stability,
         geometry=selection.geometry, ceiling=ceiling(diagnosis, case.rows, case.loadings),

@@ -28,6 +28,7 @@ from threadpoolctl import threadpool_limits
 from scantling.core.record import FloatArray
 from scantling.core.streams import blocks, serial_map, stream
 from scantling.design.spec import TargetSpec
+from scantling.diagnostics.autoregression import find_autoregression
 from scantling.diagnostics.clustering import find_clustering
 from scantling.diagnostics.residuals import fit_pilot
 from scantling.diagnostics.tail_index import TailIndex, tail_index
@@ -97,8 +98,14 @@ def chain(design: KnownDesign, sample: Sample, seed: int) -> tuple[Case, FloatAr
     """What the tool makes of columns and response: its case, and the residuals."""
     residuals = fit_pilot(sample.X, sample.y, time_ordered=design.time_ordered, seed=seed)
     values = np.asarray(residuals.values)
-    path = find_clustering(values, seed=seed).volatility if design.time_ordered else None
-    law = error_law(values, volatility=path, seed=seed, tail=error_tail(values, seed))
+    path, levels = None, None
+    if design.time_ordered:
+        levels = find_autoregression(values, seed=seed).autoregression
+        shocks = values if levels is None else levels.shocks(values)
+        path = find_clustering(shocks, seed=seed).volatility
+    law = error_law(
+        values, volatility=path, autoregression=levels, seed=seed, tail=error_tail(values, seed)
+    )
     case = Case(
         X=sample.X,
         law=law,

@@ -23,6 +23,14 @@ class OneLine(click.Group):
             raise click.UsageError(f"no command {args[0]!r}; there are {known}", ctx)
         return super().resolve_command(ctx, args)
 
+    def format_commands(self, ctx: click.Context, formatter: click.HelpFormatter) -> None:
+        """List the commands, each with its whole first sentence."""
+        known = [(name, self.get_command(ctx, name)) for name in self.list_commands(ctx)]
+        with formatter.section("Commands"):
+            formatter.write_dl(
+                [(name, found.get_short_help_str(limit=1000)) for name, found in known if found]
+            )
+
     def invoke(self, ctx: click.Context) -> Any:
         """Run the command; an interrupt is passed on without the empty line click prints."""
         try:

@@ -23,7 +23,8 @@ SHOWN = 8
     "--design",
     type=click.Path(path_type=Path),
     metavar="FILE",
-    help="The design; default: the one the receipt names, beside the report or a folder above.",
+    help="The design; default: the one the receipt names, beside the report, in a folder above or"
+    " in one beside the report's.",
 )
 @click.option("--workers", type=click.IntRange(1, 64), default=1, show_default=True,
               help="Processes; results do not depend on it.")  # fmt: skip
@@ -32,7 +33,7 @@ SHOWN = 8
 def replay(
     report: Path, design: Path | None, workers: int, cluster: str | None, quiet: bool
 ) -> int:
-    """Recompute REPORT.json from its receipt and say whether the two agree.
+    """Recompute REPORT.json, a report of `scantling vet`, and say whether the two agree.
 
     Exit status 0: they agree, to 1e-6; with other library versions, or on the numbers a
     simulation gives an interval, to two Monte Carlo errors. 6: they do not, and where.
@@ -44,7 +45,9 @@ def replay(
 
     saved = read_report(report)
     settings = receipt_settings(report, saved)
-    path = find_design(report, saved, design)
+    path, apart = find_design(report, saved, design)
+    if apart and not quiet:
+        click.echo(f"design taken: {path}", err=True)
     read = read_design(path, response=settings.pop("response"))
     check_inputs(report, saved, (path, read.data.file))
     with stages(quiet) as progress:
@@ -121,27 +124,56 @@ def receipt_settings(path: Path, saved: dict[str, Any]) -> dict[str, Any]:
     return {name: asked[name] for name in ("response", "seed", "replicates")}
 
 
-def find_design(path: Path, saved: dict[str, Any], given: Path | None) -> Path:
-    """The design file a report was made from.
+def find_design(path: Path, saved: dict[str, Any], given: Path | None) -> tuple[Path, bool]:
+    """The design file a report was made from, and whether it was found in a folder beside.
+
+    Looked for beside the report, in the two folders above, and in those beside the report's
+    folder. The first with the receipt's checksum is taken; else the first, to be refused.
 
     Raises
     ------
     InputError
-        If it is not beside the report nor a folder above.
+        If it is in none of them.
     """
     if given is not None:
-        return given
-    names = [name for name in saved["receipt"]["inputs"] if name.endswith(".toml")]
-    beside = path.absolute().parent
-    for folder in (beside, beside.parent, beside.parent.parent):
-        for name in names:
-            # Base names only: a report must not point anywhere else.
-            if name == Path(name).name and (folder / name).is_file():
-                return folder / name
-    raise InputError(
-        f"{path}: {names[0] if names else 'its design'} is not beside it nor a folder above;"
-        " --design names it"
-    )
+        return given, False
+    inputs = saved["receipt"]["inputs"]
+    # Base names only: a report must not point anywhere else.
+    names = [name for name in inputs if name.endswith(".toml") and name == Path(name).name]
+    home = path.absolute().parent
+    near = (home, home.parent, home.parent.parent)
+    folders = [(folder, False) for folder in near]
+    folders += [(folder, True) for folder in _beside(home) if folder not in near]
+    found = [
+        (folder / name, apart)
+        for folder, apart in folders
+        for name in names
+        if (folder / name).is_file()
+    ]
+    if not found:
+        raise InputError(
+            f"{path}: {names[0] if names else 'its design'} is not beside it, in a folder above"
+            " or in one beside its folder; --design names it"
+        )
+    return next((each for each in found if _agrees(each[0], inputs)), found[0])
+
+
+def _beside(home: Path) -> list[Path]:
+    """Folders beside one, in order of their names; none where they cannot be listed."""
+    try:
+        return sorted(folder for folder in home.parent.iterdir() if folder.is_dir())
+    except OSError:
+        return []
+
+
+def _agrees(file: Path, inputs: dict[str, str]) -> bool:
+    """Whether a file has the checksum a receipt gives for its name."""
+    from scantling.cli.run_folder import checksum
+
+    try:
+        return checksum(file) == inputs[file.name]
+    except InputError:
+        return False
 
 
 def check_inputs(path: Path, saved: dict[str, Any], inputs: tuple[Path, ...]) -> None:

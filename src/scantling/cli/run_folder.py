@@ -205,6 +205,49 @@ def _read(folder: Path) -> dict[str, Any]:
     return dict(found)
 
 
+def refuse_newer(folder: Path, reports: list[Path], commands: list[str]) -> None:
+    """Refuse to go on where that would overwrite a newer report of other settings.
+
+    Parameters
+    ----------
+    folder : Path
+        The run's.
+    reports : list of Path
+        JSON reports it would write.
+    commands : list of str
+        The command line each would carry in its receipt.
+
+    Raises
+    ------
+    InputError
+        If one was made by another command after the run had last written.
+    """
+    last = max(_written(folder / name) for name in (MANIFEST, UNITS))
+    for path, command in zip(reports, commands, strict=True):
+        made = _command(path) if _written(path) > last else command
+        if made != command:
+            raise InputError(
+                f"{path}: newer than {folder}, made by '{made}'; resuming would overwrite it: move"
+                " it away, or delete the run"
+            )
+
+
+def _command(report: Path) -> str:
+    """The command in a report's receipt; empty where there is none to read."""
+    try:
+        return str(json.loads(report.read_text(encoding="utf-8"))["receipt"]["command"])
+    except (OSError, ValueError, KeyError, TypeError):
+        return ""
+
+
+def _written(path: Path) -> int:
+    """When a file was last written, ns; 0 where there is none."""
+    try:
+        return path.stat().st_mtime_ns
+    except OSError:
+        return 0
+
+
 def _begin(request: Request, wanted: dict[str, Any]) -> RunFolder:
     """A folder left by the same request, where no one works in it, or a new one."""
     for number in itertools.count(1):

@@ -8,7 +8,7 @@ from typing import Any
 import click
 
 from scantling.cli.group import PACE, commands
-from scantling.cli.options import simulation_options
+from scantling.cli.options import LOSS_WORDS, RULE_WORDS, Whole, simulation_options
 
 STATUS = {"met": 0, "undecided": 3, "missed": 4, "no variance": 5}
 REPEATED = ("response", "rows", "columns", "rule", "loss", "compare", "support", "seed",
@@ -17,15 +17,25 @@ REPEATED = ("response", "rows", "columns", "rule", "loss", "compare", "support",
 
 @commands.command()
 @click.argument("source", type=click.Path(path_type=Path))
-@click.option("--response", metavar="NAME", help="Which of a design's responses.")
-@click.option("--rows", type=click.IntRange(30), metavar="N", help="Instead of the source's.")
-@click.option("--columns", type=click.IntRange(2), metavar="P", help="Instead of the source's.")
-@click.option("--rule", metavar="RULE", help="Penalty rule, instead of the source's.")
-@click.option("--loss", metavar="LOSS", help="squared, huber, absolute or square-root.")
-@click.option("--compare", metavar="RULE", help="A second penalty rule, on the same draws.")
+@click.option(
+    "--response", metavar="NAME", help="Which of a design's responses; needed if it has several."
+)  # fmt: skip
+@click.option(
+    "--rows", type=Whole(30), metavar="N", help="At least 30; default: the source's."
+)  # fmt: skip
+@click.option(
+    "--columns", type=Whole(2), metavar="P",
+    help="More than are relevant; default: the source's.",
+)  # fmt: skip
+@click.option("--rule", metavar="RULE", help=f"{RULE_WORDS}; default: the source's.")
+@click.option("--loss", metavar="LOSS", help=f"{LOSS_WORDS}; default: the source's.")
+@click.option(
+    "--compare", metavar="RULE",
+    help="A second rule, of those above, on the same draws; the first alone sets the status.",
+)  # fmt: skip
 @click.option(
     "--support", type=click.Choice(["random", "pilot"]),
-    help="Which columns matter, instead of the design's.",
+    help="Which columns matter; default: the design's, or random on paper.",
 )  # fmt: skip
 @simulation_options
 def stress(
@@ -34,8 +44,9 @@ def stress(
 ) -> int:  # fmt: skip
     """Refit under fresh errors: is the same selection made again?
 
-    SOURCE is a design, a stated design or a saved report. A design's own columns and volatility
-    path are kept at its rows and up to its columns; elsewhere both are drawn from fitted laws.
+    SOURCE is a design, a stated design or a saved report; what it says comes before defaults. A
+    design's own columns, and its volatility path if it has one, are kept at its rows and up to its
+    columns; elsewhere both are drawn from fitted laws.
 
     The exit status judges stability, power and false share of the rule at these rows and columns:
     0 every 90 % interval is on the right side of its bar, 4 one is wholly on the wrong side,

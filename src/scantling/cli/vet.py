@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from pathlib import Path
+from shlex import quote
 from typing import TYPE_CHECKING
 
 import click
@@ -11,6 +12,10 @@ from scantling.cli.group import PACE, STATUS, commands
 
 if TYPE_CHECKING:
     from scantling.cli.run_folder import Request
+
+
+TABLES = (".csv", ".tsv", ".parquet")
+"""Endings of files that are data, not designs."""
 
 
 @commands.command()
@@ -66,6 +71,7 @@ def vet(
     """
     from scantling.cli.run_folder import Request
 
+    refuse_table(design)
     asked = replicates if replicates is not None else PACE[pace] if pace else None
     return carry_out(
         Request(
@@ -75,6 +81,23 @@ def vet(
     )  # fmt: skip
 
 
+def refuse_table(path: Path) -> None:
+    """Say what to do with a table that is given in place of a design.
+
+    Raises
+    ------
+    InputError
+        If the file is there and its name is that of a table.
+    """
+    from scantling.errors import InputError
+
+    ending = Path(path.name.lower().removesuffix(".gz")).suffix
+    if ending in TABLES and path.exists():
+        raise InputError(
+            f"{path}: a design (.toml) is needed; `scantling draft {quote(str(path))}` writes one"
+        )
+
+
 def carry_out(request: Request, folder: Path | None = None) -> int:
     """Vet a design, print and write the report of each response, and return the status.
 
@@ -82,7 +105,7 @@ def carry_out(request: Request, folder: Path | None = None) -> int:
     """
     from scantling.cli.output import print_report, reserved_folder, write_files
     from scantling.cli.progress import stages
-    from scantling.cli.run_folder import kept_run
+    from scantling.cli.run_folder import kept_run, refuse_newer
     from scantling.core.streams import Work
     from scantling.design.parse import pick_response, read_designs
     from scantling.pipeline import repeating, vet_each, with_simulation
@@ -104,6 +127,9 @@ def carry_out(request: Request, folder: Path | None = None) -> int:
     changed = [with_simulation(one, seed=seed, replicates=replicates) for one in read]
     options = [f"--seed {seed}"] if seed is not None else []
     options += [f"--replicates {replicates}"] if replicates is not None else []
+    commands = [repeating("vet", one, *options) for one in changed]
+    if folder is not None:
+        refuse_newer(folder, [request.out / f"{stem}.json" for stem in stems], commands)
     with (
         reserved_folder(request.out),
         kept_run(request, (request.design, read[0].data.file), folder) as journal,
@@ -113,7 +139,6 @@ def carry_out(request: Request, folder: Path | None = None) -> int:
                 workers=request.workers, cluster=request.cluster, journal=journal,
                 watch=None if progress is None else progress.watch,
             )  # fmt: skip
-            commands = [repeating("vet", one, *options) for one in changed]
             if len(changed) == 1:
                 reports = [run(changed[0], workers=work, progress=progress, command=commands[0])]
             else:

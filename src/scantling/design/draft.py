@@ -15,7 +15,7 @@ from numpy.typing import NDArray
 from scantling.core.record import FloatArray
 from scantling.design.clock import disorder, looks_like_date
 from scantling.design.keys import LANGUAGE, has_control
-from scantling.design.message import file_label, listed, shown
+from scantling.design.message import counted, file_label, listed, shown
 from scantling.design.source import RawColumns, read_columns, read_header
 from scantling.design.spec import ExpandSpec, PenaltySpec, SimulationSpec, TargetSpec
 from scantling.design.table import FEWEST_ROWS, constant_columns, identical_columns
@@ -76,8 +76,25 @@ class _Findings:
     """Comments: columns skipped, what is to be mended."""
 
 
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Draft:
+    """A starter design file, and what was decided for its reader."""
+
+    text: str
+    """Of the file."""
+    response: str
+    """Column taken as the response: a guess, unless it is the only one named so."""
+    to_mend: int
+    """Notes in the text on what has to be mended in the table."""
+
+
 def draft_design(data_path: str | Path, *, folder: str | Path | None = None) -> str:
-    """Return the text of a starter design file for a table.
+    """Return the text of a starter design file for a table: see `drafted`."""
+    return drafted(data_path, folder=folder).text
+
+
+def drafted(data_path: str | Path, *, folder: str | Path | None = None) -> Draft:
+    """Return a starter design file for a table, and which response it takes.
 
     The time is the first column that increases strictly and is named or shaped
     like a date or an index; the response, a guess to be changed, is one named so or the first
@@ -97,7 +114,8 @@ def draft_design(data_path: str | Path, *, folder: str | Path | None = None) -> 
     Raises
     ------
     InputError
-        If the file cannot be read, is not a table, or has no numeric column.
+        If the file cannot be read, is not a table, has no numeric column that varies, or too
+        few rows for any to.
     """
     path = Path(data_path)
     findings = _examine(path)
@@ -113,7 +131,11 @@ def draft_design(data_path: str | Path, *, folder: str | Path | None = None) -> 
     rows += _table_rows("target", {**asdict(target), "relevant": relevant})
     rows += _table_rows("penalty", asdict(PenaltySpec()))
     rows += _table_rows("simulation", asdict(SimulationSpec()))
-    return "\n".join(rows[:-1]) + "\n"
+    return Draft(
+        text="\n".join(rows[:-1]) + "\n",
+        response=findings.response,
+        to_mend=sum(note.startswith("To mend") for note in findings.notes),
+    )
 
 
 def _data_rows(findings: _Findings, file: str) -> list[str]:
@@ -203,10 +225,15 @@ def _examine(path: Path) -> _Findings:
     notes += row_notes
     good, bad_notes = _varying(raw, usable, kept)
     notes += bad_notes
+    if not good and rows < FEWEST_ROWS:
+        raise InputError(
+            f"{label}: {counted(rows, 'row')}, too few; at least {FEWEST_ROWS} rows are needed"
+        )
     if not good:
         raise InputError(f"{label}: no numeric column that varies; a response is needed")
     if len(kept) < FEWEST_ROWS:
-        notes.append(f"To mend: {len(kept)} usable rows; at least {FEWEST_ROWS} are needed.")
+        left = counted(len(kept), "usable row")
+        notes.append(f"To mend: {left}; at least {FEWEST_ROWS} are needed.")
     names = [raw.names[j] for j in good]
     response = next((name for name in names if name.lower() in _RESPONSES), names[0])
     return _Findings(
@@ -286,7 +313,7 @@ def _kept_rows(raw: RawColumns, usable: list[int]) -> tuple[NDArray[np.intp], li
     order = np.argsort(filled, kind="stable")[:3]
     worst = [raw.names[usable[j]] for j in order if filled[j] < len(fine)]
     return kept, [
-        f"{int((~fine).sum())} missing or infinite values, most in {listed(worst)};"
+        f"{counted(int((~fine).sum()), 'missing or infinite value')}, most in {listed(worst)};"
         f" this draft drops their rows: {len(kept)} of {len(fine)} are left."
     ]
 

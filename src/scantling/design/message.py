@@ -55,6 +55,11 @@ def listed(names: Iterable[str], most: int = 5) -> str:
     return text if len(every) <= most else f"{text} and {len(every) - most} more"
 
 
+def counted(number: int, noun: str) -> str:
+    """Return a number with its noun: '1 row', '12 rows'."""
+    return f"{number} {noun}{'' if number == 1 else 's'}"
+
+
 def file_label(path: Path) -> str:
     """Return the base name of `path` as it may stand in a message."""
     return printable(path.name or str(path))

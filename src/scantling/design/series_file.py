@@ -14,7 +14,8 @@ import numpy as np
 
 from scantling.core.record import FloatArray, read_only
 from scantling.design.cells import column_numbers, number
-from scantling.design.message import file_label, nearest, shown
+from scantling.design.message import counted, file_label, nearest, shown
+from scantling.design.source import SEPARATOR_NAMES
 from scantling.design.table import FEWEST_ROWS
 from scantling.errors import InputError
 
@@ -40,7 +41,8 @@ def read_series(source: str, *, column: str | None = None) -> SeriesFile:
     """Read a column of numbers.
 
     One number a line, with or without a heading; or a csv or tsv table with a heading, of which
-    `column` names the column, or which has just one.
+    `column` names the column, or which has just one. An empty line between numbers is refused,
+    since values would move in time; at the end it is fine.
 
     Parameters
     ----------
@@ -60,28 +62,30 @@ def read_series(source: str, *, column: str | None = None) -> SeriesFile:
         raise InputError(f"{label}: not text in UTF-8 (byte {fault.start + 1})") from fault
     first = text.split("\n", 1)[0]
     separator = "\t" if "\t" in first else ","
-    try:
-        reader = csv.reader(text.splitlines(), delimiter=separator, strict=True)
-        rows = [row for row in reader if row]
-    except csv.Error as fault:
-        raise InputError(f"{label}: not a table ({fault})") from fault
-    if not rows:
-        raise InputError(f"{label}: empty; a column of numbers is needed")
+    rows = _rows(text, separator, label)
     heading = None if number(rows[0][0]) is not None and len(rows[0]) == 1 else rows.pop(0)
-    place = _place([name.strip() for name in heading or [""]], column, label)
-    short = next((k for k, row in enumerate(rows) if len(row) <= place), None)
-    if short is not None:
-        raise InputError(f"{label}: row {short + 1} has {len(rows[short])} values; not a table")
+    names = [name.strip() for name in heading or [""]]
+    below = separator.join(rows[0]) if rows else ""
+    _check_separator(names, below, separator, label, named=column is not None)
+    place = _place(names, column, label)
+    ragged = next((k for k, row in enumerate(rows) if len(row) != len(names)), None)
+    if ragged is not None:
+        found = counted(len(rows[ragged]), "value")
+        raise InputError(
+            f"{label}: row {ragged + 1} has {found} separated by {SEPARATOR_NAMES[separator]}, and"
+            f" {len(names)} {'is' if len(names) == 1 else 'are'} needed; decimals need a point"
+        )
     values, wrong = column_numbers([row[place] for row in rows])
     if wrong is not None:
-        raise InputError(f"{label}: row {wrong.row + 1} is no number: {shown(wrong.text)}")
+        point = "; decimals need a point, not a comma" if _numeric(wrong.text) else ""
+        raise InputError(f"{label}: row {wrong.row + 1} is no number: {shown(wrong.text)}{point}")
     bad = np.flatnonzero(~np.isfinite(values))
     if bad.size:
-        raise InputError(
-            f"{label}: {bad.size} missing or infinite values, first in row {int(bad[0]) + 1}"
-        )
+        found = counted(int(bad.size), "missing or infinite value")
+        raise InputError(f"{label}: {found}, first in row {int(bad[0]) + 1}")
     if values.size < FEWEST_ROWS:
-        raise InputError(f"{label}: {values.size} values; at least {FEWEST_ROWS} are needed")
+        found = counted(values.size, "value")
+        raise InputError(f"{label}: {found}; at least {FEWEST_ROWS} are needed")
     if np.ptp(values) == 0:
         raise InputError(f"{label}: every value is {values[0]:g}; a series that varies is needed")
     name = heading[place].strip() if heading else label
@@ -107,8 +111,61 @@ def _content(source: str) -> tuple[str, bytes]:
     except IsADirectoryError as fault:
         raise InputError(f"{label}: a folder; a file is needed") from fault
     except (OSError, EOFError, zlib.error) as fault:
-        raise InputError(f"{label}: cannot be read ({fault})") from fault
+        why = getattr(fault, "strerror", None) or fault
+        raise InputError(f"{label}: cannot be read ({why})") from fault
     return label, content
+
+
+def _rows(text: str, separator: str, label: str) -> list[list[str]]:
+    """Fields of each line that holds any, the first of them perhaps a heading."""
+    reader = csv.reader(text.splitlines(), delimiter=separator, strict=True)
+    rows: list[list[str]] = []
+    empty: int | None = None
+    try:
+        for row in reader:
+            if len(row) <= 1 and not "".join(row).strip():
+                empty = empty or (reader.line_num if rows else None)
+                continue
+            # In a table of several columns an empty line is no row, as in a design's table.
+            if empty is not None and len(row) == 1:
+                raise InputError(
+                    f"{label}: line {empty} is empty; one number on every line is needed"
+                )
+            rows.append(row)
+    except csv.Error as fault:
+        raise InputError(f"{label}: not a table ({fault})") from fault
+    if not rows:
+        raise InputError(f"{label}: empty; a column of numbers is needed")
+    return rows
+
+
+def _check_separator(
+    names: list[str], below: str, separator: str, label: str, *, named: bool
+) -> None:
+    """Refuse a first line that another mark than the expected one seems to separate.
+
+    `below` is the second line: a mark in a lone heading may be part of its name.
+    """
+    expected = SEPARATOR_NAMES[separator]
+    joined = separator.join(names)
+    for mark, word in SEPARATOR_NAMES.items():
+        parts = joined.split(mark)
+        alone = len(names) == 1 and mark in below
+        if mark != separator and len(parts) > 1 and (alone or all(map(_numeric, parts))):
+            raise InputError(
+                f"{label}: the first line, {shown(joined)}, looks separated by {word};"
+                f" {expected} are needed, and decimals need a point"
+            )
+    if len(names) > 1 and not named and all(map(_numeric, names)):
+        raise InputError(
+            f"{label}: the first line is {len(names)} numbers separated by {expected}; a table"
+            " needs a heading, and decimals a point"
+        )
+
+
+def _numeric(text: str) -> bool:
+    """Whether a cell is a number, also one with a decimal comma."""
+    return number(text.replace(",", ".")) is not None
 
 
 def _place(names: list[str], column: str | None, label: str) -> int:

@@ -36,7 +36,8 @@ _CELLS_PER_BLOCK = 1_000_000
 _COPIES = 3
 _SEPARATORS = {".csv": ",", ".tsv": "\t"}
 _ACCEPTED = ".csv, .tsv, .csv.gz, .tsv.gz or .parquet"
-_SEPARATOR_NAMES = {",": "commas", "\t": "tabs", ";": "semicolons", "|": "bars"}
+SEPARATOR_NAMES = {",": "commas", "\t": "tabs", ";": "semicolons", "|": "bars"}
+"""What may separate the values of a line, in words; the first two are taken."""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -223,12 +224,12 @@ def _rows(handle: TextIO, path: Path) -> Iterator[tuple[int, tuple[str, ...]]]:
 
 def _check_separator(header: list[str], separator: str, label: str) -> None:
     """Refuse a header that is one name only because another separator was used."""
-    other = [mark for mark in _SEPARATOR_NAMES if mark != separator and mark in header[0]]
+    other = [mark for mark in SEPARATOR_NAMES if mark != separator and mark in header[0]]
     if len(header) == 1 and other:
         raise InputError(
             f"{label}: the header is one name, {shown(header[0])}; values separated by"
-            f" {_SEPARATOR_NAMES[separator]} are needed, these look separated by"
-            f" {_SEPARATOR_NAMES[other[0]]}"
+            f" {SEPARATOR_NAMES[separator]} are needed, these look separated by"
+            f" {SEPARATOR_NAMES[other[0]]}"
         )
 
 

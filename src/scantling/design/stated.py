@@ -6,7 +6,7 @@ import hashlib
 import json
 import math
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, field, replace
 from pathlib import Path
 from typing import Any
 
@@ -36,6 +36,19 @@ class Statement:
     seed; those said."""
     facts: tuple[str, ...] = ()
     """What the reader has to know about where it comes from."""
+    places: Mapping[str, str] = field(default_factory=dict)
+    """Where a value stands, for refusals: 'quay.toml: [stated] error', '--law'; of the others
+    their keys are named."""
+
+    def changed(self, said: Mapping[str, Any], places: Mapping[str, str]) -> Statement:
+        """The same with values said instead, and where those stand."""
+        kept = {key: place for key, place in self.places.items() if key not in said}
+        return replace(self, values={**self.values, **said}, places={**kept, **places})
+
+    def placed(self, message: str) -> str:
+        """A refusal that begins with a key, with where its value stands instead."""
+        key, colon, rest = message.partition(":")
+        return f"{self.places.get(key, key)}{colon}{rest}"
 
 
 def read_statement(path: str | Path) -> Statement:
@@ -73,7 +86,12 @@ def read_statement(path: str | Path) -> Statement:
     for name in ("target", "simulation"):
         values |= tables[name]
     values |= {k: v for k, v in tables["penalty"].items() if k in ("rule", "loss")}
-    return Statement(title=title, stem=path.stem, inputs=digest, values=values)
+    keys = {key: f"[{table}] {key}" for table, found in tables.items() for key in found}
+    keys |= {"law": "[stated] error", "column_law": "[stated] column"}
+    return Statement(
+        title=title, stem=path.stem, inputs=digest, values=values,
+        places={key: f"{label}: {keys[key]}" for key in values},
+    )  # fmt: skip
 
 
 def states_no_data(path: str | Path) -> bool:
@@ -127,14 +145,24 @@ def _from_report(
         raise InputError(
             f"{label}: a whole report is needed; a part of it is not what a report has there"
         ) from fault
-    title = f"{tree.get('title', path.stem)}, on paper"
+    title = str(tree.get("title", path.stem))
+    if "diagnosis" in tree:  # that of a budget is on paper as it is
+        title += ", on paper"
+    where = {key: f"design.{key}" for key in ("rows", "columns", "rule", "loss", "replicates")}
+    where |= {key: f"design.target.{key}" for key in design["target"]}
+    where |= {"seed": "receipt.seed", "law": "law", "correlation": "design.correlation"}
+    where["column_law"] = "design.column_law" if "column_law" in design else "diagnosis.columns"
     return Statement(
-        title=printable(title), stem=path.stem, inputs=digest, values=values, facts=tuple(facts)
-    )
+        title=printable(title), stem=path.stem, inputs=digest, values=values, facts=tuple(facts),
+        places={key: f"{label}: {where[key]}" for key in values if key in where},
+    )  # fmt: skip
 
 
 def _law_of(law: Mapping[str, Any]) -> tuple[list[str], str]:
-    """The report's error law as it is written; what cannot be is replaced by a Student t."""
+    """The report's error law as it is written; what cannot be is replaced by a Student t.
+
+    Volatility and autoregression are kept with either.
+    """
     family, parameters = law["family"], dict(law["parameters"])
     facts: list[str] = []
     own = {k: v for k, v in parameters.items() if k in ("df", "skew", "shape", "index")}
@@ -145,9 +173,16 @@ def _law_of(law: Mapping[str, Any]) -> tuple[list[str], str]:
             "The report's spliced law cannot be stated on one line; the law here has its tail"
             " index."
         )
-    # A budget on paper has its recurrence among the parameters.
+    # A budget on paper has its recurrence, and the lags, among the parameters.
     path = law.get("volatility") or parameters
-    own |= {key: path[key] for key in ("alpha", "beta", "leverage") if path.get(key)}
+    if "alpha" in path:
+        own["alpha"] = path["alpha"]
+        own |= {key: path[key] for key in ("beta", "leverage") if path.get(key)}
+    lags = [(key, value) for key, value in parameters.items() if key.startswith("lag")]
+    if law.get("autoregression"):
+        coefficients = law["autoregression"]["coefficients"]
+        lags = [(f"lag{lag}", value) for lag, value in enumerate(coefficients, start=1)]
+    own |= dict(lags)
     rest = ",".join(f"{key}={value}" for key, value in own.items())
     return facts, f"{family}:{rest}" if rest else family
 
@@ -159,5 +194,5 @@ def _columns_of(tail: Mapping[str, Any]) -> tuple[list[str], str]:
     law = f"student-t:df={max(float(index), LEAST_INDEX):g}" if heavy and index else "normal"
     return [
         f"Columns are taken as independent, each {law}, after the report's median column; their"
-        " correlation and other differences are left out."
+        " correlation, persistence and other differences are left out."
     ], law

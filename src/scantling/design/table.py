@@ -13,7 +13,7 @@ from scantling.core.record import FloatArray, read_only
 from scantling.design.cells import blank
 from scantling.design.clock import disorder
 from scantling.design.header import check_names, check_roles, choose_columns
-from scantling.design.message import file_label, listed, shown
+from scantling.design.message import counted, file_label, listed, shown
 from scantling.design.source import RawColumns, file_sha256, read_columns, read_header
 from scantling.design.spec import DataSpec, Design
 from scantling.errors import InputError
@@ -220,7 +220,7 @@ def _kept_rows(
         dropped = len(used) - len(kept)
         after = f" after {dropped} with missing or infinite values were dropped" if dropped else ""
         raise InputError(
-            f"{label}: {len(kept)} rows{after}; at least {FEWEST_ROWS} rows are needed"
+            f"{label}: {counted(len(kept), 'row')}{after}; at least {FEWEST_ROWS} rows are needed"
         )
     return kept
 

@@ -11,6 +11,7 @@ from scantling.core.record import FloatArray, read_only
 from scantling.diagnostics.autoregression import Autoregression, Levels
 from scantling.diagnostics.clustering import LEVEL, NEAR_INTEGRATION, Clustering
 from scantling.diagnostics.co_movement import CoMovement, column_co_movement
+from scantling.diagnostics.column_levels import first_autocorrelations
 from scantling.diagnostics.column_sides import ColumnSides, column_sides
 from scantling.diagnostics.column_tails import ColumnTails, column_tails, holm_rejections
 from scantling.diagnostics.dependence import TestResult
@@ -122,6 +123,8 @@ class Diagnosis:
     """Which powers of the columns keep their scores' moments; None if an index is unknown."""
     structure: Structure
     """Factors, condition and correlations of the columns."""
+    column_levels: FloatArray | None
+    """First autocorrelation of each column, shape (P,); None where rows have no order."""
     warnings: tuple[str, ...]
     """Sentences: where the sample looks like a law that defeats the estimators."""
 
@@ -276,7 +279,8 @@ def diagnose(
     own = error_findings(e, time_ordered=time_ordered, seed=seed)
     errors = own.tail
     columns = columns or series_group(X, dependent=time_ordered)
-    block = block_length(e.size) if own.clustered else None
+    persistent = own.autoregression is not None
+    block = block_length(e.size) if own.clustered or persistent else None
     level = levelled_residuals(X, residuals)
     together = column_co_movement(
         X, level, columns.tails.sparse | ~columns.tails.assessed, seed=seed, block=block
@@ -302,7 +306,7 @@ def diagnose(
         columns=columns,
         scores=scores,
         weight=column_weights(columns.tails),
-        variance=judged(variance, own.granted),
+        variance=judged(variance, own.granted, independent=not persistent),
         dependence=own.dependence,
         levels=own.levels,
         clustering=own.clustering,
@@ -316,6 +320,7 @@ def diagnose(
         ),
         powers=_power_rule(columns.tails, errors, variance, first_powers),
         structure=structure or column_structure(X),
+        column_levels=first_autocorrelations(X) if time_ordered else None,
         warnings=sample_warnings(
             e, errors, None if own.clustering is None else own.clustering.volatility
         ),
@@ -328,7 +333,7 @@ def _power_rule(
     variance: tuple[TestResult, ...],
     first_powers: np.ndarray | None,
 ) -> PowerRule | None:
-    """The planning rule for the median raw column; sizes that move together share volatility."""
+    """The rule for the median column before powers; sizes that move together share volatility."""
     raw = columns.assessed if first_powers is None else columns.assessed & first_powers
     if errors is None or not raw.any():
         return None

@@ -58,6 +58,11 @@ class CoMovement:
         return np.argsort(-self.ratio, kind="stable")
 
     @property
+    def clear_first(self) -> np.ndarray:
+        """The same, those that are clear before all others."""
+        return np.lexsort((-self.ratio, ~self.clear))
+
+    @property
     def clear(self) -> np.ndarray:
         """Which columns move with the errors beyond chance, all taken together; (P,), bool."""
         return np.asarray(self.family_p_value <= LEVEL)

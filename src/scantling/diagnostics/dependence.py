@@ -47,6 +47,10 @@ class TestResult:
     """Order of the error's moment that the p-value needs: 4, 2 or 0 (none)."""
     method: Literal["asymptotic", "permutation"]
     """Where the p-value comes from."""
+    lags: int | None = None
+    """Lags taken together, of a test of dependence; None for others."""
+    permutations: int | None = None
+    """Rearrangements behind the p-value, which is at least 1/(1 + their number)."""
 
 
 def ljung_box(u: Any, lags: int = 5) -> TestResult:
@@ -110,9 +114,8 @@ def robust_ljung_box(u: Any, lags: int = 5) -> TestResult:
         test="Ljung-Box, heteroskedasticity-robust",
         statistic=statistic,
         p_value=float(chi2.sf(statistic, lags)),
-        needs_moment=4,
-        method="asymptotic",
-    )
+        needs_moment=4, method="asymptotic", lags=lags,
+    )  # fmt: skip
 
 
 def arch_lm(u: Any, lags: int = 5, *, centre: bool = True) -> TestResult:
@@ -139,18 +142,17 @@ def arch_lm(u: Any, lags: int = 5, *, centre: bool = True) -> TestResult:
     series = _centred(u, lags, centre=centre)
     name = "Engle's ARCH-LM"
     if steady(series**2):
-        return unmoved(name, 4, "asymptotic")
+        return unmoved(name, 4, "asymptotic", lags)
     with warnings.catch_warnings():
-        # Newer versions announce a named tuple; its first two items are the same.
-        warnings.simplefilter("ignore", FutureWarning)
+        # Of the named tuple to come, and of lags of u^2 that hardly vary: the fit is of their span.
+        warnings.simplefilter("ignore")
         statistic, p_value = het_arch(series, nlags=lags)[:2]
     return TestResult(
         test=name,
         statistic=float(statistic),
         p_value=float(p_value),
-        needs_moment=4,
-        method="asymptotic",
-    )
+        needs_moment=4, method="asymptotic", lags=lags,
+    )  # fmt: skip
 
 
 def mcleod_li(u: Any, lags: int = 5, *, centre: bool = True) -> TestResult:
@@ -172,7 +174,7 @@ def mcleod_li(u: Any, lags: int = 5, *, centre: bool = True) -> TestResult:
     """
     squares = _centred(u, lags, centre=centre) ** 2
     if steady(squares):
-        return unmoved("McLeod-Li", 4, "asymptotic")
+        return unmoved("McLeod-Li", 4, "asymptotic", lags)
     return _portmanteau(squares, lags, "McLeod-Li", needs_moment=4)
 
 
@@ -209,7 +211,7 @@ def absolute_ljung_box_permutation(
     name = "Ljung-Box of absolute residuals"
     size = np.abs(series - np.median(series))
     if steady(size):
-        return unmoved(name, 2, "permutation")
+        return unmoved(name, 2, "permutation", lags)
     return _permutation_box(size, name, 2, "absolute Ljung-Box permutation", seed, lags, draws)
 
 
@@ -236,7 +238,7 @@ def sign_ljung_box_permutation(u: Any, *, seed: int, lags: int = 5, draws: int =
     signs = np.sign(series - np.median(series))
     name = "Ljung-Box of signs"
     if np.ptp(signs) == 0:
-        return unmoved(name, 0, "permutation")
+        return unmoved(name, 0, "permutation", lags)
     return _permutation_box(signs, name, 0, "sign Ljung-Box permutation", seed, lags, draws)
 
 
@@ -255,9 +257,8 @@ def _permutation_box(
         test=name,
         statistic=observed,
         p_value=(1 + exceeding) / (draws + 1),
-        needs_moment=needs_moment,
-        method="permutation",
-    )
+        needs_moment=needs_moment, method="permutation", lags=lags, permutations=draws,
+    )  # fmt: skip
 
 
 def permuted(
@@ -348,11 +349,12 @@ def steady(values: FloatArray) -> bool:
 
 
 def unmoved(
-    name: str, needs_moment: int, method: Literal["asymptotic", "permutation"]
-) -> TestResult:
+    name: str, needs_moment: int, method: Literal["asymptotic", "permutation"],
+    lags: int | None = None,
+) -> TestResult:  # fmt: skip
     """Return the result where the error's size is the same in every row."""
     return TestResult(
-        test=name, statistic=0.0, p_value=1.0, needs_moment=needs_moment, method=method
+        test=name, statistic=0.0, p_value=1.0, needs_moment=needs_moment, method=method, lags=lags
     )
 
 
@@ -380,9 +382,8 @@ def _portmanteau(series: FloatArray, lags: int, name: str, *, needs_moment: int)
         test=name,
         statistic=float(table["lb_stat"].iloc[0]),
         p_value=float(table["lb_pvalue"].iloc[0]),
-        needs_moment=needs_moment,
-        method="asymptotic",
-    )
+        needs_moment=needs_moment, method="asymptotic", lags=lags,
+    )  # fmt: skip
 
 
 def _box(rows: FloatArray, lags: int) -> FloatArray:

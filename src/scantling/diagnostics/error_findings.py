@@ -20,8 +20,10 @@ from scantling.diagnostics.dependence import (
 from scantling.diagnostics.extremes import (
     ExtremeClustering,
     effective_rows,
+    effective_rows_reference,
     extreme_clustering,
     tail_effective_rows,
+    tail_effective_rows_reference,
 )
 from scantling.diagnostics.moments import ORDERS, MomentAnswer, moment_answer
 from scantling.diagnostics.second_opinion import Opinion, second_opinions
@@ -55,6 +57,10 @@ class Worth:
     """Independent values whose mean would be as exact."""
     tail_rows: float
     """Independent values whose tail index would be as exact."""
+    rows_reference: float
+    """What 5 % of random orders of the values fall to or below: no loss is shown from there on."""
+    tail_rows_reference: float
+    """The same for the tail index."""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -152,6 +158,8 @@ def worth(values: FloatArray, *, seed: int) -> Worth:
         extremes=extremes,
         rows=effective_rows(values),
         tail_rows=tail_effective_rows(values, seed=seed),
+        rows_reference=effective_rows_reference(values, seed=seed),
+        tail_rows_reference=tail_effective_rows_reference(values, seed=seed),
     )
 
 
@@ -189,13 +197,20 @@ def size_tests(shocks: FloatArray, clustering: Clustering) -> tuple[TestResult, 
 
 
 def judged(
-    results: tuple[TestResult, ...], granted: frozenset[int], *, steady: bool = True
-) -> tuple[Finding, ...]:
-    """Hold each test's conditions against the diagnosis; `steady`: no clustering was found."""
+    results: tuple[TestResult, ...], granted: frozenset[int], *, steady: bool = True,
+    independent: bool = True,
+) -> tuple[Finding, ...]:  # fmt: skip
+    """Hold each test's conditions against the diagnosis.
+
+    `steady`: no clustering was found; `independent`: nor errors whose level persists, which
+    tests of the variance against columns need.
+    """
 
     def lacks(result: TestResult) -> str:
         if result.method == "permutation":
             return ""
+        if not independent:
+            return "independent errors"
         if result.needs_moment not in granted:
             return ORDINALS.get(result.needs_moment, f"moment {result.needs_moment}")
         if result.test == "Ljung-Box" and not steady:

@@ -11,6 +11,8 @@ from scipy.special import stdtrit
 
 from scantling.core.checks import between, finite_vector
 from scantling.core.record import FloatArray
+from scantling.core.streams import stream
+from scantling.diagnostics.dependence import permuted
 from scantling.diagnostics.tail_estimators import (
     block_standard_error,
     influence,
@@ -30,6 +32,10 @@ LEAST_EXCEEDANCES = 10
 """Fewest values the threshold is set to leave above it; the share is raised for that."""
 LEVEL = 0.90
 """Nominal coverage of the extremal index's interval."""
+REORDERINGS = 99
+"""Random orders of a series behind the reference that its effective rows are held against."""
+LOWEST_SHARE = 0.05
+"""Share of those orders that show fewer rows than the reference."""
 LARGEST_ERROR = 0.5
 """Largest standard deviation of a number in [0, 1]."""
 
@@ -150,16 +156,46 @@ def effective_rows(values: Any) -> float:
     InputError
         If `values` are not finite numbers, too few, or constant.
     """
-    centred = _centred(values)
-    n = centred.size
+    return float(_mean_rows(_centred(values)[None])[0])
+
+
+def effective_rows_reference(values: Any, *, seed: int) -> float:
+    """Effective rows that 5 % of 99 random orders of the same values fall to or below.
+
+    What `effective_rows` may show of independent rows by chance: no loss is shown from there on.
+
+    Parameters
+    ----------
+    values : array-like, shape (n,), n >= 30
+    seed : int
+        Of the orders.
+
+    Raises
+    ------
+    InputError
+        As `effective_rows`.
+    """
+    orders = permuted(_centred(values), REORDERINGS, stream(seed, "effective rows, reordered"))
+    return _lowest(np.concatenate([_mean_rows(rows) for rows in orders]))
+
+
+def _lowest(found: FloatArray) -> float:
+    """The value that LOWEST_SHARE of random orders fall to or below."""
+    return float(np.sort(found)[math.floor(LOWEST_SHARE * (found.size + 1)) - 1])
+
+
+def _mean_rows(rows: FloatArray) -> FloatArray:
+    """Effective rows for the mean of each row of (k, n), centred."""
+    n = rows.shape[1]
     bandwidth = math.ceil(round(n ** (1 / 3), 9))
-    variance = float(centred @ centred)
-    long_run = variance
+    variance = np.einsum("ij,ij->i", rows, rows)
+    long_run = variance.copy()
     for lag in range(1, bandwidth + 1):
-        covariance = float(centred[lag:] @ centred[:-lag])
+        covariance = np.einsum("ij,ij->i", rows[:, lag:], rows[:, :-lag])
         long_run += 2 * (1 - lag / (bandwidth + 1)) * covariance
     # The Bartlett sum is not negative, but may vanish, as for alternating values.
-    return float(np.clip(n * variance / long_run, 1, n)) if long_run > 0 else float(n)
+    worth = n * variance / np.where(long_run > 0, long_run, variance)
+    return np.asarray(np.clip(worth, 1, n))
 
 
 def tail_effective_rows(values: Any, *, seed: int = 0) -> float:
@@ -183,6 +219,32 @@ def tail_effective_rows(values: Any, *, seed: int = 0) -> float:
     InputError
         If `values` are not finite numbers, too few, constant or discrete.
     """
+    return float(_tail_rows(_tail_influence(values, seed)[None])[0])
+
+
+def tail_effective_rows_reference(values: Any, *, seed: int) -> float:
+    """Tail-index effective rows that 5 % of 99 random orders of the values fall to or below.
+
+    With few rows it lies far below them: no loss is shown from there on.
+
+    Parameters
+    ----------
+    values : array-like, shape (n,), n >= 30
+    seed : int
+        Of the orders and the tie-breaking noise.
+
+    Raises
+    ------
+    InputError
+        As `tail_effective_rows`.
+    """
+    generator = stream(seed, "tail-index effective rows, reordered")
+    orders = permuted(_tail_influence(values, seed), REORDERINGS, generator)
+    return _lowest(np.concatenate([_tail_rows(rows) for rows in orders]))
+
+
+def _tail_influence(values: Any, seed: int) -> FloatArray:
+    """Influence of each value on the weighted Hill regression, in the order of the series."""
     series = prepare(finite_vector(values, "values", minimum=MINIMUM), seed=seed)
     distance = magnitudes(series.values, "both")
     n = distance.size
@@ -191,14 +253,19 @@ def tail_effective_rows(values: Any, *, seed: int = 0) -> float:
     if distance[order[kappa]] <= 0:
         raise InputError("values: more than half of them are equal, so there is no tail index")
     logs = np.log(np.maximum(distance[order], np.finfo(float).tiny))
-    in_time = np.empty((n, 1))
-    in_time[order] = influence(logs[:, None], weighted_hill_coefficients(kappa))
+    in_time = np.empty(n)
+    in_time[order] = influence(logs[:, None], weighted_hill_coefficients(kappa))[:, 0]
+    return in_time
+
+
+def _tail_rows(rows: FloatArray) -> FloatArray:
+    """Tail-index effective rows of each row of influences (k, n)."""
+    n = rows.shape[1]
     block = block_length(n)
-    independent = float(block_standard_error(in_time, 1)[0])
-    dependent = float(block_standard_error(in_time, block)[0]) / math.sqrt(1 - block / n)
-    if dependent <= independent:
-        return float(n)
-    return max(1.0, n * (independent / dependent) ** 2)
+    independent = block_standard_error(rows.T, 1)
+    dependent = block_standard_error(rows.T, block) / math.sqrt(1 - block / n)
+    ratio = independent / np.maximum(dependent, independent)
+    return np.maximum(1.0, n * ratio**2)
 
 
 def _centred(values: Any) -> FloatArray:

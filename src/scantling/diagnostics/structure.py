@@ -28,6 +28,12 @@ MOST_FACTORS = 8
 CONSTANT = 1e-12
 """Standard deviation over largest absolute value below which a column counts as constant."""
 
+DEPENDENT = "columns are linearly dependent: the correlation matrix is singular"
+"""Why there is no condition number although there are fewer columns than rows."""
+
+ALIKE = 0.99
+"""Correlation from which two columns are called all but the same (common practice, no source)."""
+
 COLLINEAR = 1e-6
 """A column whose part not explained by those before it is shorter than this
 share of its length counts as collinear."""
@@ -339,7 +345,7 @@ def _condition(values: FloatArray, n: int, p: int) -> tuple[float | None, str | 
     if p >= n:
         return None, f"{p} columns on {n} rows: the correlation matrix is singular"
     if values[-1] <= p * np.finfo(float).eps * values[0]:
-        return None, "columns are linearly dependent: the correlation matrix is singular"
+        return None, DEPENDENT
     return float(values[0] / values[-1]), None
 
 

@@ -169,6 +169,7 @@ def glejser_permutation(
         p_value=(1 + exceeding) / (draws + 1),
         needs_moment=2,
         method="permutation",
+        permutations=draws,
     )
 
 
@@ -327,6 +328,7 @@ def co_movement_test(
         p_value=(1 + exceeding) / (draws + 1),
         needs_moment=0,
         method="permutation",
+        permutations=draws,
     )
 
 

@@ -180,8 +180,7 @@ def _volatility(
     persistence = alpha + beta + leverage * share
     if persistence >= 1:
         raise InputError(
-            f"{name}: alpha + beta + {share:.3g} leverage below 1 is needed; found"
-            f" {persistence:g}"
+            f"{name}: alpha + beta + {share:.3g} leverage below 1 is needed; found {persistence:g}"
         )
     path = Volatility(
         omega=level * (1 - persistence),

@@ -3,15 +3,17 @@
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 
 from scantling.core.estimate import Estimate
+from scantling.design.spec import TargetSpec
 from scantling.planning.breakthrough import BreakThrough, CurvePoint
 from scantling.planning.ceiling import Ceiling
 from scantling.planning.effects import EffectEntry
 from scantling.planning.limit import AT_LEAST, Limit, band
-from scantling.planning.rows import RowsPlan
+from scantling.planning.rows import RowsEntry, RowsPlan
 from scantling.planning.signal import Signal
+from scantling.simulation.scores import penalty_level
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -52,6 +54,8 @@ class Budget:
     """The smallest of noise, signal and stability limit."""
     binding: str | None
     """noise | signal | stability; None if no limit is reached or one is missing."""
+    level: float
+    """L(p) at the columns asked for, in root mean squares of the errors over the root of n."""
     risk_at_design: Estimate
     """Break-through risk at the columns asked for."""
     draws: int
@@ -64,6 +68,8 @@ class Budget:
     """n / penalty ratio squared, never above n."""
     rows_needed: int | None
     """Fewest rows from which `asked` columns are allowed by every limit, at all larger tried."""
+    rows_range: tuple[int, int | None] | None = None
+    """Rows needed within and beyond simulation error; an open end is None; None: not known."""
     rows_note: str
     """Why `rows_needed` is None; empty otherwise."""
     rows_plan: RowsPlan | None = None
@@ -120,11 +126,16 @@ def combine(limits: dict[str, Limit], most: int) -> tuple[Allowed, str | None]:
 
 def assemble(
     *, rows: int, asked: int, noise: BreakThrough, signal: Signal, stability: Limit,
-    geometry: Limit, ceiling: Ceiling, assured: Limit, plan: RowsPlan | None = None,
+    geometry: Limit, ceiling: Ceiling, assured: Limit, target: TargetSpec,
+    plan: RowsPlan | None = None,
     effects: tuple[EffectEntry, ...] = (), refits: bool = True,
 ) -> Budget:  # fmt: skip
     """Put the limits together; without refits asked for, noise and signal are all there is."""
     limits = {"noise": noise.noise, "signal": signal.limit}
+    if plan is not None and noise.noise.mode == "generative":
+        own = (noise.noise, signal.limit, stability)
+        table = tuple(_answered(entry, rows, own, noise.curve[-1].risk) for entry in plan.table)
+        plan = replace(plan, table=table)
     allowed, binding = combine(limits | ({"stability": stability} if refits else {}), asked)
     last = noise.curve[-1]
     return Budget(
@@ -138,17 +149,51 @@ def assemble(
         ceiling=ceiling,
         allowed=allowed,
         binding=binding,
+        level=float(penalty_level(asked, target.risk)),
         risk_at_design=Estimate(value=last.risk, low=last.low, high=last.high),
         draws=noise.fitted.found.draws,
         curve=noise.curve,
         penalty_ratio=noise.penalty_ratio,
         equivalent_rows=noise.equivalent_rows,
         rows_needed=None if plan is None else plan.needed.rows,
+        rows_range=None
+        if plan is None or plan.needed.low is None
+        else (plan.needed.low, plan.needed.high),
         rows_note="rows needed were not searched" if plan is None else plan.needed.note,
         rows_plan=plan,
-        effects=effects,
+        effects=tuple(_agreeing(entry, target, allowed, binding) for entry in effects),
         detectable=signal.detectable,
         detectable_worst=signal.detectable_worst,
         worst_columns=noise.worst_columns,
         worst_shares=noise.worst_shares,
+    )
+
+
+def _agreeing(
+    entry: EffectEntry, target: TargetSpec, allowed: Allowed, binding: str | None
+) -> EffectEntry:
+    """The entry; at the target asked for the answer itself, with more refits behind it."""
+    same = entry.relevant == target.relevant and math.isclose(
+        entry.smallest_effect, target.smallest_effect, abs_tol=1e-4
+    )
+    if not same or allowed.columns is None or entry.allowed is None:
+        return entry
+    return replace(entry, allowed=allowed.columns, binding=binding)
+
+
+def _answered(
+    entry: RowsEntry, rows: int, limits: tuple[Limit, Limit, Limit], risk: float
+) -> RowsEntry:
+    """The table's entry; at the present rows the limits themselves, with more draws behind them."""
+    if entry.rows != rows:
+        return entry
+    noise, signal, stability = (limit.columns for limit in limits)
+    known = [value for value in (noise, signal, stability) if value is not None]
+    return replace(
+        entry,
+        noise=noise,
+        signal=signal,
+        stability=stability,
+        allowed=min(known) if len(known) == len(limits) else None,
+        risk=risk,
     )

@@ -1,4 +1,7 @@
-"""Allowed columns by smallest effect and number of relevant columns: the target is a choice."""
+"""Allowed columns by smallest effect and number of relevant columns: the target is a choice.
+
+Some targets are none: the relevant columns alone would vary more than the response does.
+"""
 
 from __future__ import annotations
 
@@ -28,11 +31,31 @@ class EffectEntry:
     """sd of the response per sd of a column."""
     relevant: int
     """Columns expected to matter."""
-    allowed: int
+    allowed: int | None
     """Smallest of the noise, signal and stability limits; the columns asked for if none is
-    reached."""
+    reached; None of a target that no response allows."""
     binding: str | None
-    """noise | signal | stability; None if none is reached."""
+    """noise | signal | stability; None if none is reached, or no response allows the target."""
+
+
+def explained_by(target: TargetSpec) -> float:
+    """Share of the response's variance that the relevant columns explain, taken as independent."""
+    return target.relevant * target.smallest_effect**2
+
+
+def impossible(target: TargetSpec) -> bool:
+    """Whether that is all of it or more: errors have to have a part."""
+    return explained_by(target) >= 1
+
+
+def impossible_words(target: TargetSpec) -> str:
+    """What is wrong with such a target, for a reader of the report."""
+    count = target.relevant
+    return (
+        f"{count:,} relevant column{'s' * (count != 1)} of effect {target.smallest_effect:g} would"
+        f" explain {100 * explained_by(target):,.0f} % of the response's variance, which no"
+        " response allows: lower one of them"
+    )
 
 
 def effects_table(
@@ -70,18 +93,23 @@ def effects_table(
             target = replace(
                 case.target, relevant=relevant, smallest_effect=min(effect, LARGEST_EFFECT)
             )
-            out.append(_entry(case, target, noise, signal_at(target), mapper, columns, case_of))
+            out.append(_entry(case, target, noise, signal_at, mapper, columns, case_of))
     return tuple(out)
 
 
 def _entry(
-    case: Case, target: TargetSpec, noise: float, signal: float, mapper: Mapper, columns: int,
-    case_of: CaseOf | None,
+    case: Case, target: TargetSpec, noise: float, signal: Callable[[TargetSpec], float],
+    mapper: Mapper, columns: int, case_of: CaseOf | None,
 ) -> EffectEntry:  # fmt: skip
-    limits = {"noise": noise, "signal": signal, "stability": math.inf}
+    if impossible(target):
+        return EffectEntry(
+            smallest_effect=target.smallest_effect, relevant=target.relevant, allowed=None,
+            binding=None,
+        )  # fmt: skip
+    limits = {"noise": noise, "signal": signal(target), "stability": math.inf}
     changed = replace(case, target=target, replicates=REFITS)
     # Refits cannot raise what noise and signal allow: they are run up to there.
-    most = int(min(noise, signal, case.columns))
+    most = int(min(noise, limits["signal"], case.columns))
     if most > 0:
         grid = grid_of(max(most, target.relevant + 1), target.relevant, POINTS)
 

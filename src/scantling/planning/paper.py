@@ -16,14 +16,12 @@ from scantling.law.notation import parse_law
 from scantling.planning.budget import Budget
 from scantling.planning.case import loadings_of
 from scantling.planning.ceiling import Ceiling, rate_by_regime
+from scantling.planning.effects import explained_by, impossible
 from scantling.planning.generative import StatedColumns
 from scantling.planning.plan import Plan
 from scantling.planning.stated import budget_of
 from scantling.simulation.loss_scores import LOSSES
 from scantling.simulation.rules import RULES
-
-MOST_EXPLAINED = 0.9
-"""Relevant columns are never taken to explain more of the response by themselves."""
 
 
 def budget(
@@ -73,7 +71,8 @@ def budget(
         Criteria of the selection.
     explained : float, optional
         Share of the response's variance that the relevant columns explain; default: what so many
-        independent columns of the smallest effect do, relevant * smallest_effect^2, at most 0.9.
+        independent columns of the smallest effect do, relevant * smallest_effect^2, which has to
+        be below 1.
     replicates : int
         Draws of errors, each with fresh columns where that is affordable.
     seed, workers : int
@@ -89,7 +88,8 @@ def budget(
     Raises
     ------
     InputError
-        If an argument is out of range, or the run would exceed the memory bound.
+        If an argument is out of range, the target is one that no response allows or no column
+        is left over beside the relevant ones, or the run would exceed the memory bound.
     """
     workers = _whole(workers, "workers", 1)
     plan = stated_plan(
@@ -119,19 +119,31 @@ def target_of(
     """
     return TargetSpec(
         relevant=_whole(relevant, "relevant", 1),
-        smallest_effect=between(smallest_effect, "smallest_effect", 0, 5),
+        smallest_effect=between(smallest_effect, "smallest_effect", 0, 5, closed="high"),
         risk=between(risk, "risk", 0, 0.5),
         power=between(power, "power", 0, 1),
         stability=between(stability, "stability", 0, 1, closed=True),
-        false_share=between(false_share, "false_share", 0, 1 - 1e-9, closed=True),
+        false_share=between(false_share, "false_share", 0, 1, closed="low"),
     )
+
+
+def _refuse_impossible(target: TargetSpec, relevant: str, effect: str) -> None:
+    """Refuse a target of which the relevant columns alone would be the whole response or more."""
+    if impossible(target):
+        raise InputError(
+            f"{relevant} {target.relevant} x {effect} {target.smallest_effect:g}: they would"
+            f" explain {100 * explained_by(target):,.0f} % of the response's variance; under 100 %"
+            " is needed"
+        )
 
 
 def stated_plan(
     *, rows: Any, columns: Any, law: Any, column_law: Any, correlation: Any, rule: Any, loss: Any,
     explained: Any, replicates: Any, seed: Any, target: TargetSpec,
+    named: tuple[str, str] = ("relevant", "smallest_effect"),
 ) -> Plan:  # fmt: skip
-    """A plan from what is stated, each part checked.
+    """A plan from what is stated, each part checked; `named` is what a refusal of the target calls
+    its relevant columns and their effect.
 
     Raises
     ------
@@ -142,17 +154,23 @@ def stated_plan(
     for value, name, known in ((rule, "rule", RULES), (loss, "loss", LOSSES)):
         if value not in known:
             raise InputError(f"{name}: one of {', '.join(known)} is needed; found {value!r}")
+    if target.relevant >= max(2, columns):
+        raise InputError(
+            f"relevant: {target.relevant}: there are {columns} columns; a number below"
+            f" {max(2, columns)} is needed"
+        )
     errors = _law(law, "law")
     drawn = errors if column_law is None else _law(column_law, "column_law")
     if explained is None:
-        explained = min(target.relevant * target.smallest_effect**2, MOST_EXPLAINED)
-    explained = between(explained, "explained", 0, 1 - 1e-9, closed=True)
+        _refuse_impossible(target, *named)
+        explained = explained_by(target)
+    explained = between(explained, "explained", 0, 1, closed="low")
     sd = errors.sd if math.isfinite(errors.sd) else 1.0
     return Plan(
         rows=rows,
         columns=columns,
         source=StatedColumns(
-            law=drawn, correlation=between(correlation, "correlation", 0, 1 - 1e-9, closed=True)
+            law=drawn, correlation=between(correlation, "correlation", 0, 1, closed="low")
         ),
         law=errors,
         target=target,

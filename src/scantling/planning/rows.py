@@ -11,18 +11,28 @@ import math
 from collections.abc import Callable
 from dataclasses import dataclass, replace
 
+import numpy as np
+from scipy.special import stdtrit
+
 from scantling.core.streams import Mapper
+from scantling.diagnostics.moments import Z90
 from scantling.planning.breakthrough import ScoreSample
-from scantling.planning.case import Case
-from scantling.planning.generative import Tables
-from scantling.planning.plan import Plan, plan_effect, plan_scores, plan_signal_limit
+from scantling.planning.case import Case, column_grid
+from scantling.planning.generative import Tables, tables_for, tables_of
+from scantling.planning.plan import EXACT_COLUMNS, Plan, plan_effect, plan_scores, plan_signal_limit
 from scantling.planning.stress import CaseOf, grid_of, limit_of
-from scantling.simulation.scores import first_above, penalty_level, risk_at, risk_curves
+from scantling.simulation.scores import (
+    exceeding_counts,
+    first_above,
+    penalty_level,
+    risk_curves,
+    risks_on_grid,
+)
 
 FEWEST_ROWS = 30
 SEARCH_DRAWS = 200
 PRECISION = 1.05
-"""Rows needed are found to a factor of it; the number given is one that passed."""
+"""Rows needed are narrowed down to a factor of it; simulation error is larger."""
 TIMES_ROWS = (0.5, 1, 2, 4)
 """Rows of the table, times the present ones."""
 TABLE_POINTS = 4
@@ -49,7 +59,9 @@ class Effort:
 THOROUGH = Effort(
     tables=Tables(8_000_000, 2), largest=24_000_000, times=64, refits=100, refit_tables=5
 )
-BRIEF = Effort(tables=Tables(500_000, 1, 6), largest=1_500_000, times=8, refits=60, refit_tables=2)
+BRIEF = Effort(
+    tables=Tables(1_200_000, 4, 8), largest=1_500_000, times=8, refits=60, refit_tables=2
+)
 """Beside a whole vetting, which has ten seconds."""
 
 
@@ -61,6 +73,11 @@ class Needed:
     """None if there are none in the range searched."""
     note: str = ""
     """Why there are none; empty otherwise."""
+    low: int | None = None
+    """Fewest rows tried from which the risk is within simulation error (90 %) of what is accepted;
+    None for limits without such an error, or where there are none."""
+    high: int | None = None
+    """Fewest rows tried from which the risk is accepted beyond simulation error; None: none."""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -79,6 +96,8 @@ class RowsEntry:
     """Smallest of the three."""
     risk: float
     """Break-through risk at the columns asked for."""
+    risk_error: float
+    """Its simulation error, 90 %, between tables of columns included."""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -127,9 +146,44 @@ class RowSearch:
         return self._scores[rows]
 
     def risk(self, rows: int) -> float:
-        """Break-through risk at the columns asked for."""
-        p, risk = self.plan.columns, self.plan.target.risk
-        return risk_at(self.scores(rows).found, p, float(penalty_level(p, risk)))[0]
+        """Largest break-through risk at any number of columns up to those asked for."""
+        found, risk = self.scores(rows).found, self.plan.target.risk
+        if found.columns <= EXACT_COLUMNS:
+            return float(risk_curves(found, risk)[0].max())
+        return float(risks_on_grid(found, risk, column_grid(found.columns))[0].max())
+
+    def risk_error(self, rows: int) -> float:
+        """Simulation error of the risk, 90 %: that of the draws, or, if larger, between tables.
+
+        Draws on the same columns are alike: where a few large values of them decide, as many
+        draws say little more than one.
+        """
+        found = self.scores(rows).found
+        level = float(penalty_level(self.plan.columns, self.plan.target.risk))
+        broken = exceeding_counts(found, level) > 0
+        risk = max(float(broken.mean()), 1 / broken.size)
+        alone = Z90 * math.sqrt(risk * (1 - risk) / broken.size)
+        at = self.plan.at(rows)
+        wanted = tables_for(at.source, at.columns, self.effort.tables)
+        parts = tables_of(rows, at.columns, broken.size, wanted)
+        if len(parts) < 2:
+            return alone
+        means = [float(broken[start:stop].mean()) for start, stop in parts]
+        spread = float(np.std(means, ddof=1)) / math.sqrt(len(means))
+        return max(alone, float(stdtrit(len(means) - 1, 0.95)) * spread)
+
+    def noise_range(self) -> tuple[int | None, int | None]:
+        """Fewest rows tried from which the risk is, within and beyond its error, accepted."""
+        accepted = self.plan.target.risk
+        found: list[int | None] = []
+        for side in (-1, 1):
+            rows: int | None = None
+            for n in sorted(self._scores, reverse=True):
+                if self.risk(n) + side * self.risk_error(n) > accepted:
+                    break
+                rows = n
+            found.append(rows)
+        return found[0], found[1]
 
     def holds(self, limit: str, rows: int) -> bool:
         """Whether the columns asked for are allowed by one limit."""
@@ -169,6 +223,7 @@ class RowSearch:
             stability=whole["stability"],
             allowed=min(known) if len(known) == len(values) else None,
             risk=float(curve[-1]),
+            risk_error=self.risk_error(rows),
         )
 
 
@@ -245,10 +300,17 @@ def rows_plan(plan: Plan, mapper: Mapper, *, refits: bool, effort: Effort = THOR
     missing = [name for name in wanted if by_limit[name].rows is None]
     joint = Needed(rows=None, note=_joint_note(plan, steps, [by_limit[k].note for k in missing]))
     if not missing:
-        joint = Needed(rows=max(by_limit[name].rows or 0 for name in wanted))
+        rows = max(by_limit[name].rows or 0 for name in wanted)
+        others = max(by_limit[name].rows or 0 for name in wanted if name != "noise")
+        low, high = by_limit["noise"].low, by_limit["noise"].high
+        joint = Needed(
+            rows=rows,
+            low=max(others, low or rows),
+            high=None if high is None else max(others, high),
+        )
     fewest = max(FEWEST_ROWS, plan.target.relevant + 2)
-    rows = sorted({max(fewest, round(times * plan.rows)) for times in TIMES_ROWS})
-    table = tuple(search.entry(n) for n in rows)
+    lines = sorted({max(fewest, round(times * plan.rows)) for times in TIMES_ROWS})
+    table = tuple(search.entry(n) for n in lines)
     return RowsPlan(
         needed=joint,
         by_limit=tuple(by_limit.items()),
@@ -283,12 +345,16 @@ def _needed(search: RowSearch, name: str, steps: list[int], found: dict[str, Nee
             lambda rows: search.holds(name, rows), [*before[-1:], first]
         ))  # fmt: skip
     rows = fewest_rows(lambda n: search.holds(name, n), steps)
-    return Needed(rows=rows, note="" if rows else _none_in_range(search.plan, steps, name))
+    low, high = search.noise_range() if name == "noise" and rows else (None, None)
+    return Needed(
+        rows=rows, note="" if rows else _none_in_range(search.plan, steps, name), low=low, high=high
+    )
 
 
 def _none_in_range(plan: Plan, steps: list[int], *names: str) -> str:
     times = steps[-1] / plan.rows
-    limits = f"{' and '.join(names)} limit{'s' if len(names) > 1 else ''}"
+    listed = " and ".join(filter(None, [", ".join(names[:-1]), names[-1]]))
+    limits = f"{listed} limit{'s' if len(names) > 1 else ''}"
     return f"more rows do not lift the {limits} (tried up to {times:.3g} times)"
 
 

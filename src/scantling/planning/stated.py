@@ -123,6 +123,7 @@ def budget_of(
     if tables and done is not None:
         effects = _effects(plan, fitted, noise, mapper)
     budget = assemble(
+        target=plan.target,
         rows=plan.rows, asked=plan.columns, noise=broken, signal=_signal(plan, fitted),
         stability=stability, geometry=geometry, ceiling=ceiling, assured=_assured(plan),
         plan=rows, effects=effects, refits=refits,

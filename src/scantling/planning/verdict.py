@@ -8,6 +8,7 @@ from dataclasses import dataclass
 from scantling.diagnostics.battery import Diagnosis
 from scantling.planning.budget import BORDERLINE, OVER, WITHIN, Budget, standing
 from scantling.planning.case import Case
+from scantling.planning.effects import impossible, impossible_words
 from scantling.planning.plan import Plan
 from scantling.planning.stress import Stress
 
@@ -32,7 +33,7 @@ class Verdict:
     cover: str
     """theory and simulation | simulation only | none."""
     reasons: tuple[str, ...]
-    """One sentence each, the binding limit first."""
+    """One sentence each: a target that no response allows, then the binding limit, come first."""
 
 
 def variance_missing(diagnosis: Diagnosis) -> str:
@@ -50,8 +51,9 @@ def verdict(case: Case, diagnosis: Diagnosis, budget: Budget, stress: Stress | N
     """Judge the columns asked for against the allowed ones.
 
     within: at or below the low end of the band; over: above the high end (of any one limit
-    where another is missing); borderline between; never within if a limit is missing; no budget
-    if order 2 is missing for the errors or for the scores of more than half of the columns.
+    where another is missing); borderline between; never within if a limit is missing or no
+    response allows the target; no budget if order 2 is missing for the errors or for the scores
+    of more than half of the columns.
     """
     return _judged(variance_missing(diagnosis), case, diagnosis, budget, stress)
 
@@ -75,6 +77,8 @@ def _judged(
         tops = [limit.high for limit in (budget.noise, budget.signal, budget.stability)]
         over = any(top is not None and budget.asked > top for top in tops)
         answer = OVER if over else BORDERLINE
+    if answer == WITHIN and impossible(case.target):
+        answer = BORDERLINE
     rate = budget.ceiling.columns
     covered = rate is not None and budget.asked <= rate
     return Verdict(
@@ -97,15 +101,16 @@ def _reasons(
         "stability": (budget.stability, lambda: _stability_reason(case, budget, stress)),
     }
     order = sorted(limits, key=lambda name: name != budget.binding)
-    reasons = []
+    reasons = [impossible_words(case.target)] if impossible(case.target) else []
+    said = len(reasons)
     for name in order:
         limit, words = limits[name]
         if limit.columns is None:
             reasons.append(f"the {name} limit could not be computed: {limit.note}")
         elif name == budget.binding or limit.columns < budget.asked:
             reasons.append(words())
-    if not reasons:
-        reasons.append(_nothing_binds(budget))
+    if len(reasons) == said:
+        reasons.append(_nothing_binds(budget, stated=diagnosis is None))
     if diagnosis is None:
         return reasons
     if diagnosis.signal.answer == "dense":
@@ -118,8 +123,8 @@ def _reasons(
     return reasons
 
 
-def _nothing_binds(budget: Budget) -> str:
-    """No limit is reached under the fitted law; under others it may be."""
+def _nothing_binds(budget: Budget, *, stated: bool) -> str:
+    """No limit is reached under the law; under others, or with other draws, it may be."""
     limits = {"noise": budget.noise, "signal": budget.signal, "stability": budget.stability}
     open_ones = {
         name: limit.low
@@ -129,8 +134,10 @@ def _nothing_binds(budget: Budget) -> str:
     if open_ones:
         name = min(open_ones, key=lambda key: open_ones[key])
         return (
-            f"under the fitted law no limit is reached up to {_columns(budget.asked)}, but the"
-            f" sample does not settle it: the {name} limit may be as low as {open_ones[name]:,}"
+            f"under the {'stated' if stated else 'fitted'} law no limit is reached up to"
+            f" {_columns(budget.asked)}, but"
+            f" {'simulation error leaves it open' if stated else 'the sample does not settle it'}:"
+            f" the {name} limit may be as low as {open_ones[name]:,}"
         )
     return (
         f"no limit is reached up to the {_columns(budget.asked)} at hand; noise passes the"

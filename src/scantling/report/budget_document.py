@@ -21,6 +21,7 @@ if TYPE_CHECKING:
 WORST = 50
 """Columns listed by their share of the break-throughs, at most."""
 SCHEMA = "scantling-budget/1"
+IMPOSSIBLE = "no response allows it: the relevant columns would explain all its variance or more"
 
 
 def estimate(value: Estimate) -> dict[str, Any]:
@@ -81,25 +82,43 @@ def budget_part(budget: Budget, names: Sequence[str] = ()) -> dict[str, Any]:
             {"column": names[j], "share": number(share)}
             for j, share in zip(budget.worst_columns, budget.worst_shares, strict=True)
         ][:WORST],
+        "penalty_level": number(budget.level),
         **noted("penalty_ratio", budget.penalty_ratio, "no quantile of the largest score found"),
         **noted("equivalent_rows", budget.equivalent_rows, "the penalty ratio is unknown"),
         **noted("rows_needed", budget.rows_needed, budget.rows_note or "unknown"),
+        **_range(budget),
         **_rows(budget),
         "effects": [
             {
                 "smallest_effect": number(entry.smallest_effect),
                 "relevant": entry.relevant,
-                "allowed_columns": entry.allowed,
+                **noted("allowed_columns", entry.allowed, IMPOSSIBLE),
                 **(
                     {"binding": entry.binding}
                     if entry.binding
-                    else {"binding": None, "binding_note": "at least"}
+                    else {
+                        "binding": None,
+                        "binding_note": IMPOSSIBLE if entry.allowed is None else "at least",
+                    }
                 ),
             }
             for entry in budget.effects
         ],
         **noted("detectable_effect", budget.detectable, unknown),
         **noted("detectable_effect_worst_tenth", budget.detectable_worst, unknown),
+    }
+
+
+def _range(budget: Budget) -> dict[str, Any]:
+    """Rows needed within and beyond simulation error."""
+    note = budget.rows_note or "not searched"
+    if budget.rows_range is None:
+        return {"rows_needed_low": None, "rows_needed_low_note": note,
+                "rows_needed_high": None, "rows_needed_high_note": note}  # fmt: skip
+    low, high = budget.rows_range
+    return {
+        "rows_needed_low": low,
+        **noted("rows_needed_high", high, "none tried has a risk accepted beyond simulation error"),
     }
 
 
@@ -128,6 +147,7 @@ def _entry(entry: RowsEntry) -> dict[str, Any]:
         **noted("stability", entry.stability, note),
         **noted("allowed_columns", entry.allowed, note),
         "risk": number(entry.risk),
+        "risk_error": number(entry.risk_error),
         "mode": "generative",
     }
 

@@ -5,14 +5,24 @@ from __future__ import annotations
 from scantling.diagnostics.autoregression import NEAR_UNIT_ROOT, Autoregression, Levels
 from scantling.diagnostics.battery import Diagnosis
 from scantling.diagnostics.clustering import LEVEL
+from scantling.diagnostics.column_levels import near_random_walks
 from scantling.diagnostics.error_findings import Finding, Worth
+from scantling.diagnostics.extremes import LOWEST_SHARE
 from scantling.diagnostics.variance import CO_MOVEMENT
 from scantling.diagnostics.volatility import Volatility
 from scantling.report.record import Diagnosed
 from scantling.report.sections import heading, listing
-from scantling.report.wording import p_value, paragraph, shortened, table
+from scantling.report.wording import (
+    many,
+    p_value,
+    paragraph,
+    share,
+    shortened,
+    table,
+)
 
 WORST = 5
+NO_LOSS = "no loss shown"
 SINGLY = 0.95
 """Extremal index above which clusters would be of 1.0 or 1.1."""
 
@@ -35,6 +45,23 @@ def lacks_lines(findings: tuple[Finding, ...], width: int) -> list[str]:
     return paragraph(
         "Lacks: what the p-value needs and was not found; such a test is shown, not used.", width
     )
+
+
+def counts_lines(findings: tuple[Finding, ...], width: int) -> list[str]:
+    """Lags and permutations of the tests, and the least p-value those allow."""
+    results = [finding.result for finding in findings]
+    words = [
+        f"Tests of dependence take {many(lags, 'lag')} together."
+        for lags in sorted({r.lags for r in results if r.lags is not None})
+    ]
+    drawn = {r.permutations: r.test.split(" of ")[0] for r in results if r.permutations}
+    most, *fewer = sorted(drawn, reverse=True) or [0]
+    if most:
+        words.append(f"P-values by permutation come from {most:,} permutations")
+        words += [f"({drawn[count]} from {count:,})" for count in fewer]
+        ends = [f"{1 / (count + 1):.3g}" for count in (most, *fewer)]
+        words.append(f"and are never smaller than {' and '.join(ends)}: read these as at most.")
+    return paragraph(" ".join(words), width) if words else []
 
 
 def volatility_words(path: Volatility) -> str:
@@ -80,6 +107,26 @@ def level_lines(levels: Levels, rows: int, width: int) -> list[str]:
     return lines
 
 
+def column_level_lines(found: Diagnosis, names: tuple[str, ...], width: int) -> list[str]:
+    """Columns that are hardly told from random walks; nothing where there are none."""
+    if found.column_levels is None:
+        return []
+    near = near_random_walks(found.column_levels)
+    if not near:
+        return []
+    one = len(near) == 1
+    named = listing(tuple(shortened(names[j], 30) for j in near), 3)
+    also = ", as these do" if found.autoregression is not None else ""
+    return paragraph(
+        f"{len(near):,} of {many(len(names), 'column')} {'keeps' if one else 'keep'}"
+        f" {share(NEAR_UNIT_ROOT)} or more of {'its' if one else 'their'} level from row to row"
+        f" ({named}): like {'a random walk' if one else 'random walks'},"
+        f" {'its' if one else 'their'} scores vary more than rows suggest wherever errors persist"
+        f" as well{also}.",
+        width,
+    )
+
+
 def variance(report: Diagnosed, width: int) -> list[str]:
     """Variance and dependence tests, volatility, co-movement."""
     found = report.diagnosis
@@ -87,9 +134,11 @@ def variance(report: Diagnosed, width: int) -> list[str]:
     lines = heading("Variance and dependence")
     lines += findings_table(every)
     lines += lacks_lines(every, width)
+    lines += counts_lines(every, width)
     lines += _scale_words(found, width)
     if found.levels is not None:
         lines += level_lines(found.levels, report.read.rows, width)
+    lines += column_level_lines(found, report.read.names, width)
     lines += _order_words(report, width)
     if found.worth is not None:
         lines += worth_lines(found.worth, report.read.rows, "rows", width)
@@ -104,7 +153,7 @@ def _scale_words(found: Diagnosis, width: int) -> list[str]:
         f" ({p_value(first.p_value)}): loadings have to follow it, self-normalised ones do"
         if first.p_value <= LEVEL
         else "nothing shows that the errors' size follows the pilot's fit or its columns"
-        f" ({p_value(first.p_value)}), so equal loadings lose nothing there"
+        f" ({p_value(first.p_value)}), so equal loadings are not shown to lose anything there"
     )
     return paragraph(f"Scale: {means}.", width)
 
@@ -143,11 +192,22 @@ def worth_lines(worth: Worth, rows: int, noun: str, width: int) -> list[str]:
             f" {extremes.low:.2f} to {extremes.high:.2f}).",
             width,
         )
+    means = _worth_words(worth.rows, worth.rows_reference)
+    tail = _worth_words(worth.tail_rows, worth.tail_rows_reference)
+    each = f"for means {means}, for the tail index {tail}"
+    if means == tail == NO_LOSS:
+        each = f"{NO_LOSS}, neither for means nor for the tail index"
     return lines + paragraph(
-        f"For means these {rows:,} {noun} are worth {worth.rows:,.0f} independent ones, for the"
-        f" tail index {worth.tail_rows:,.0f}.",
+        f"Worth of these {rows:,} {noun} in independent ones: {each}. A loss is shown below what"
+        f" all but {share(LOWEST_SHARE)} of random orders of the same {noun} give"
+        f" ({worth.rows_reference:,.0f} and {worth.tail_rows_reference:,.0f}).",
         width,
     )
+
+
+def _worth_words(found: float, reference: float) -> str:
+    """Effective rows, where fewer than random orders give by chance."""
+    return NO_LOSS if found >= reference else f"{found:,.0f}"
 
 
 def co_movement(report: Diagnosed, width: int) -> list[str]:
@@ -172,7 +232,7 @@ def co_movement(report: Diagnosed, width: int) -> list[str]:
         width,
     )
     rows = [["Large where errors are large", "penalty times", "90 %", "p, all columns"]]
-    for j in ranked.ranked[:WORST]:
+    for j in ranked.clear_first[:WORST]:
         chance = ranked.family_p_value[j]
         rows.append(
             [

@@ -6,6 +6,7 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
+from scantling.core.record import FloatArray
 from scantling.diagnostics.battery import SeriesGroup
 from scantling.diagnostics.co_movement import CoMovement
 from scantling.diagnostics.column_tails import ColumnTails
@@ -36,6 +37,7 @@ def diagnosis_part(report: Diagnosed) -> dict[str, Any]:
         },
         "columns": _group(found.columns, names, found.weight),
         "scores": _group(found.scores, names, None),
+        **_column_levels(found.column_levels),
         "variance": [finding_part(f) for f in found.variance],
         "dependence": [finding_part(f) for f in found.dependence],
         "structure": {
@@ -65,6 +67,13 @@ def diagnosis_part(report: Diagnosed) -> dict[str, Any]:
         ),
         "co_movement": _co_movement(found.co_movement, names),
     }
+
+
+def _column_levels(levels: FloatArray | None) -> dict[str, Any]:
+    """First autocorrelation of every column, in their order."""
+    if levels is None:
+        return {"column_autocorrelations": None, "column_autocorrelations_note": "no order"}
+    return {"column_autocorrelations": [number(float(value)) for value in levels]}
 
 
 def tail_part(tail: TailIndex) -> dict[str, Any]:
@@ -113,6 +122,8 @@ def worth_part(worth: Worth | None) -> dict[str, Any]:
         **noted("extremal_index_high", None if seen is None else seen.high, ties),
         "effective_rows": number(worth.rows),
         "tail_effective_rows": number(worth.tail_rows),
+        "effective_rows_reference": number(worth.rows_reference),
+        "tail_effective_rows_reference": number(worth.tail_rows_reference),
     }
 
 
@@ -126,6 +137,8 @@ def finding_part(finding: Finding) -> dict[str, Any]:
         "valid": finding.valid,
         "method": result.method,
         "needs_moment": result.needs_moment,
+        **({} if result.lags is None else {"lags": result.lags}),
+        **({} if result.permutations is None else {"permutations": result.permutations}),
         **({"lacks": finding.lacks} if finding.lacks else {}),
     }
 

@@ -9,6 +9,7 @@ from scantling.planning.verdict import BORDERLINE, NONE, WITHIN
 from scantling.report.record import Budgeted
 from scantling.report.wording import (
     LABEL,
+    about,
     band,
     between_words,
     columns,
@@ -92,7 +93,8 @@ def _rows_lines(report: Budgeted, width: int) -> list[str]:
         cost = f"; these errors cost as much as losing {lost:,} of them"
     needed = f"; needed: {budget.rows_note or 'unknown'}"
     if budget.rows_needed is not None:
-        needed = f"; needed for all {budget.asked:,}: {count(budget.rows_needed)}"
+        found = about(budget.rows_needed, budget.rows_range)
+        needed = f"; needed for all {budget.asked:,}: {found}"
     whole = labelled("Rows", used + cost + needed, width)
     return whole if len(whole) <= 2 else in_lines("Rows", used + needed, width, 2)
 

@@ -7,7 +7,7 @@ import math
 from typing import Any
 
 from scantling.law.facts import ORDERS, TAILS, FamilyFacts, LawFacts
-from scantling.report.document import autoregression_part
+from scantling.law.families import ErrorLaw
 from scantling.report.values import noted, number
 from scantling.report.wording import labelled, paragraph, series
 
@@ -129,7 +129,7 @@ def facts_json(facts: LawFacts) -> str:
             "family": law.family,
             "parameters": {key: number(value) for key, value in law.parameters.items()},
             **volatility,
-            **autoregression_part(law),
+            **_levels(law),
             **noted("sd", facts.sd, "the variance is missing"),
             **noted("tail_index", facts.tail_index, ALL_EXIST),
             **noted("innovation_tail_index", facts.innovation_index, ALL_EXIST),
@@ -145,6 +145,15 @@ def facts_json(facts: LawFacts) -> str:
             "quantile_unit": "scale" if facts.in_scale else "sd",
         }
     )
+
+
+def _levels(law: ErrorLaw) -> dict[str, Any]:
+    """The autoregression that was stated, if one was."""
+    if law.autoregression is None:
+        return {"autoregression": None, "autoregression_note": "levels do not persist"}
+    from scantling.report.document import autoregression_part
+
+    return autoregression_part(law)
 
 
 def _text(document: dict[str, Any]) -> str:

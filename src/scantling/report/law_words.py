@@ -31,8 +31,9 @@ def law_sentences(law: ErrorLaw) -> list[str]:
         if path.leverage:
             recurrence += f", leverage {path.leverage:.3f}"
         said.append(
-            f"It is of the innovations, on the fitted {path.kind.upper()}(1,1) volatility path:"
-            f" {recurrence}."
+            "It is of the innovations, on"
+            f" {'the fitted' if path.path.size > 1 else 'a stated'}"
+            f" {path.kind.upper()}(1,1) volatility path: {recurrence}."
         )
     if law.autoregression is not None:
         lags = ", ".join(f"{value:.3f}" for value in law.autoregression.coefficients)

@@ -32,7 +32,20 @@ LAW_WORDS = {
 }
 
 
+STATED_WORDS = {"fitted": "stated law", "normal-volatility": "normal, stated path"}
+"""Where nothing was fitted."""
+
+
+def law_words(name: str, *, stated: bool) -> str:
+    """What the law of a run is called."""
+    return (STATED_WORDS if stated else {}).get(name, LAW_WORDS[name])
+
+
 LISTED_COLUMNS = 12
+RANKED = (
+    "Ranked: those whose selection was simulated first; then by columns allowed, the low end of"
+    " their band, fewer changes and lower risk."
+)
 
 SUPPORT_WORDS = {
     "random": "random supports of {} relevant columns",
@@ -60,6 +73,8 @@ def limits(report: Budgeted, width: int) -> list[str]:
         ends_of = band(proved, budget.asked)
         rows.append(["assured", columns(proved), ends_of, "proof, given the law"])
     lines += table(rows)
+    if not isinstance(report, Report):
+        lines += paragraph("Bands hold simulation error only, as the laws are stated.", width)
     lines += paragraph(f"Ceiling: {ends.regime}.", width)
     if proved.columns is not None:
         lines += paragraph(
@@ -76,6 +91,13 @@ def limits(report: Budgeted, width: int) -> list[str]:
         f"Break-through risk at {asked}: {chance(risk.value, draws)} (90 % band"
         f" {chance(risk.low, draws)} to {chance(risk.high, draws)}; accepted"
         f" {report.target.risk:g}).",
+        width,
+    )
+    lines += paragraph(
+        "Noise is measured against the plug-in penalty: L(p) times the root mean square of the"
+        " errors (of a robust loss, of its score) over the root of the rows, L(p) = 1.1"
+        f" Phi^-1(1 - {report.target.risk:g}/2p), {budget.level:.2f} at {asked}. It grows with p,"
+        " so under thin tails the risk falls as columns are added.",
         width,
     )
     lines += ["", *risk_chart(budget.curve, report.target.risk, width), ""]
@@ -107,7 +129,7 @@ def selection(report: Budgeted, width: int) -> list[str]:
     for run in runs:
         rows.append(
             [
-                f"{run.columns:,} {LAW_WORDS[run.law]}",
+                f"{run.columns:,} {law_words(run.law, stated=not isinstance(report, Report))}",
                 two(run.stability.value),
                 f"{two(run.stability.low)} to {two(run.stability.high)}",
                 two(run.power.value),
@@ -117,7 +139,9 @@ def selection(report: Budgeted, width: int) -> list[str]:
         )
     lines += table(rows)
     fitted = [run for run in runs if run.law == "fitted"][-1]
-    lines += more_criteria(fitted, report.read.names if isinstance(report, Report) else (), width)
+    names = report.read.names if isinstance(report, Report) else ()
+    called = law_words("fitted", stated=not isinstance(report, Report))
+    lines += more_criteria(fitted, names, called, width)
     target = report.target
     relevant = min(target.relevant, report.budget.asked)
     failing = ", ".join(name.replace("_", " ") for name in report.stress.failing)
@@ -141,8 +165,8 @@ def how_decided(runs: Sequence[StressRun]) -> str:
     return f"decided after {done:,} of {asked:,}, a row ending once every criterion is clear"
 
 
-def more_criteria(run: StressRun, names: Sequence[str], width: int) -> list[str]:
-    """The criteria that no bar is set for, of one run under the fitted law."""
+def more_criteria(run: StressRun, names: Sequence[str], name: str, width: int) -> list[str]:
+    """The criteria that no bar is set for, of one run under the law, not its twin."""
     loss = ""
     if run.prediction_loss is not None:
         loss = (
@@ -151,7 +175,7 @@ def more_criteria(run: StressRun, names: Sequence[str], width: int) -> list[str]
             f" {ratio(run.prediction_loss.high)})"
         )
     return paragraph(
-        f"At {many(run.columns, 'column')}, fitted law: {run.size.value:.1f} columns selected on"
+        f"At {many(run.columns, 'column')}, {name}: {run.size.value:.1f} columns selected on"
         f" average, exactly the relevant ones in {share(run.exact.value)} of refits"
         f" ({share(run.exact.low)} to {share(run.exact.high)}), the wrong sign in"
         f" {100 * run.sign_errors.value:.1f} % of cases{loss}. {inclusion_words(run, names)}",
@@ -185,12 +209,13 @@ def remedies(report: Report, width: int) -> list[str]:
     lines = heading("Remedies, each recomputed")
     if not report.remedies:
         return lines + paragraph("None computed applies.", width)
-    lines += paragraph(_lead(report), width)
+    lines += paragraph(f"{_lead(report)} {RANKED}", width)
     for place, remedy in enumerate(report.remedies):
         risk = chance(remedy.risk_at_design.value, remedy.draws)
         kept = f"{count(remedy.allowed.columns)} of {many(remedy.columns, 'column')}"
+        star = "*" if helps(report, remedy) else ""
         lines += paragraph(
-            f"{place + 1}. {remedy.name}: {kept} ({_band_words(remedy)}), break-through risk"
+            f"{place + 1}.{star} {remedy.name}: {kept} ({_band_words(remedy)}), break-through risk"
             f" {risk}. {'' if remedy.refitted else 'Noise and signal only. '}"
             f"{_dropped(report, remedy)}Price: {remedy.price}.",
             width,
@@ -207,11 +232,12 @@ def remedies(report: Report, width: int) -> list[str]:
 def _lead(report: Report) -> str:
     """What the first screen says of remedies, before they are listed."""
     if report.verdict.answer == WITHIN:
-        return "No change is needed, as the design is within budget; what each would make of it:"
+        return "No change is needed, as the design is within budget; each is computed all the same."
     tried = len(report.remedies)
     helpful = sum(helps(report, remedy) for remedy in report.remedies)
     if helpful:
-        return f"{helpful} of the {tried} computed help{'s' if helpful == 1 else ''}:"
+        each = "helps, marked" if helpful == 1 else "help, each marked"
+        return f"{helpful} of the {tried} computed {each} *."
     words = "The one computed does not help" if tried == 1 else f"Of {tried} computed not one helps"
     return "; ".join(filter(None, [words, instead(report)])) + "."
 

@@ -7,7 +7,7 @@ from scantling.planning.rows import RowsEntry
 from scantling.planning.verdict import chance
 from scantling.report.record import Budgeted
 from scantling.report.sections import heading
-from scantling.report.wording import count, many, paragraph, table
+from scantling.report.wording import about, count, many, paragraph, table
 
 RISK_DRAWS = 200
 """Draws behind a risk in the table; no finer probability is shown."""
@@ -28,7 +28,8 @@ def rows(report: Budgeted, width: int) -> list[str]:
         lines += paragraph(f"By limit: {', '.join(parts)}.", width)
     lines += paragraph(
         f"Searched up to {count(plan.searched_to)} rows, columns and errors drawn afresh"
-        " (generative); point values, to about 5 % in rows.",
+        f" (generative){_beside(budget)}. Limits below are point values; risks are of"
+        f" {RISK_DRAWS} draws, with their 90 % simulation error.",
         width,
     )
     lines += ["", *_by_rows(plan.table, budget)]
@@ -45,15 +46,30 @@ def rows(report: Budgeted, width: int) -> list[str]:
             " of the response per sd of a column) and other numbers of columns that matter.",
             width,
         )
+        if any(entry.allowed is None for entry in budget.effects):
+            lines += paragraph(
+                "A dash: so many columns of such an effect would explain all of the response's"
+                " variance or more, which no response allows.",
+                width,
+            )
     return lines
 
 
 def _needed(budget: Budget) -> str:
-    return count(budget.rows_needed) if budget.rows_needed else budget.rows_note or "unknown"
+    if not budget.rows_needed:
+        return budget.rows_note or "unknown"
+    return about(budget.rows_needed, budget.rows_range)
+
+
+def _beside(budget: Budget) -> str:
+    """Why the present rows need not give the limits above."""
+    if budget.noise.mode == "generative":
+        return ""
+    return ", while the limits above take the columns as they are"
 
 
 def _by_rows(entries: tuple[RowsEntry, ...], budget: Budget) -> list[str]:
-    cells = [["Rows", "noise", "signal", "stability", "allowed", "risk at all"]]
+    cells = [["Rows", "noise", "signal", "stability", "allowed", "risk at all", "+-"]]
     for entry in entries:
         values = (entry.noise, entry.signal, entry.stability, entry.allowed)
         cells.append(
@@ -61,6 +77,7 @@ def _by_rows(entries: tuple[RowsEntry, ...], budget: Budget) -> list[str]:
                 f"{entry.rows:,}",
                 *("-" if value is None else _most(value, budget.asked) for value in values),
                 chance(entry.risk, RISK_DRAWS),
+                f"{entry.risk_error:.3f}",
             ]
         )
     return table(cells)
@@ -73,9 +90,14 @@ def _by_target(report: Budgeted) -> list[str]:
     for relevant in sorted({entry.relevant for entry in entries}):
         found = {e.smallest_effect: e.allowed for e in entries if e.relevant == relevant}
         cells.append(
-            [f"{relevant:,}", *(_most(found[effect], report.budget.asked) for effect in effects)]
+            [f"{relevant:,}", *(_target_cell(found[effect], report.budget) for effect in effects)]
         )
     return table(cells)
+
+
+def _target_cell(allowed: int | None, budget: Budget) -> str:
+    """Allowed columns, or that no response allows the target."""
+    return "-" if allowed is None else _most(allowed, budget.asked)
 
 
 def _most(value: int, asked: int) -> str:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from scantling.diagnostics.structure import ALIKE, DEPENDENT
 from scantling.report.law_words import law_sentences
 from scantling.report.record import Diagnosed, HasLaw, Receipt, Report
 from scantling.report.wording import (
@@ -96,6 +97,25 @@ def structure(report: Diagnosed, width: int) -> list[str]:
         f" {shape.largest_correlation:.2f}{pair}.",
         width,
     )
+    return lines + _dependent(report, width)
+
+
+def _dependent(report: Diagnosed, width: int) -> list[str]:
+    """What columns that are sums of others, or all but copies, mean for a fit."""
+    shape, lines = report.diagnosis.structure, []
+    if shape.condition_note == DEPENDENT:
+        lines += paragraph(
+            "The columns are linearly dependent: some are sums of multiples of others, so a fit"
+            " cannot tell them apart; drop one of each such group.",
+            width,
+        )
+    if shape.largest_pair is not None and shape.largest_correlation >= ALIKE:
+        first, second = (shortened(report.read.names[j], 24) for j in shape.largest_pair)
+        lines += paragraph(
+            f"{first} and {second} are all but the same (correlation"
+            f" {shape.largest_correlation:.3f} in size): a fit cannot tell them apart; drop one.",
+            width,
+        )
     return lines
 
 
@@ -111,8 +131,8 @@ def signal(report: Diagnosed, width: int) -> list[str]:
             else "as unconnected"
         )
         lines += paragraph(
-            f"Powers: a power divides a column's index; the median raw column (index"
-            f" {index(rule.column_index)}) and the errors ({index(rule.error_index)}) taken"
+            f"Powers: a power divides a column's index; the median column before powers"
+            f" (index {index(rule.column_index)}) and the errors ({index(rule.error_index)}) taken"
             f" {together} leave scores a variance {_power(rule.keeping_variance)} and a fourth"
             f" moment {_power(rule.keeping_fourth)}. This is by point estimates: each column's own"
             " answer is above and in the JSON.",

@@ -9,6 +9,7 @@ from scantling.diagnostics.series import SeriesDiagnosis
 from scantling.report import dependence_section, sections, tails_section
 from scantling.report.chart import extremes_table, path_chart
 from scantling.report.dependence_section import (
+    counts_lines,
     findings_table,
     lacks_lines,
     level_lines,
@@ -124,6 +125,7 @@ def _dependence(report: SeriesReport, width: int) -> list[str]:
         return lines + paragraph("Values have no order, so dependence is not tested.", width)
     lines += findings_table(found.dependence)
     lines += lacks_lines(found.dependence, width)
+    lines += counts_lines(found.dependence, width)
     if found.levels is not None:
         lines += level_lines(found.levels, found.rows, width)
     path = found.clustering.volatility

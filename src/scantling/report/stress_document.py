@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import json
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
 from scantling.report.budget_document import receipt_part, run_part
 from scantling.report.document import law_part
@@ -41,6 +41,23 @@ def stress_json(report: StressReport) -> str:
             "criteria": dict(report.judgement.by_criterion),
             "reasons": list(report.judgement.reasons),
         },
+        **_compared(report),
         "receipt": receipt_part(report.receipt),
     }
     return json.dumps(document, indent=2, ensure_ascii=False, allow_nan=False) + "\n"
+
+
+def _compared(report: StressReport) -> dict[str, Any]:
+    """How the rule that is compared fares."""
+    found = report.compared
+    if found is None:
+        note = "one rule only" if report.compare is None else "nothing was refitted"
+        return {"compared": None, "compared_note": note}
+    return {
+        "compared": {
+            "rule": report.compare,
+            "answer": found.answer,
+            "criteria": dict(found.by_criterion),
+            "reasons": list(found.reasons),
+        }
+    }

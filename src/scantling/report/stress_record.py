@@ -39,6 +39,8 @@ class StressReport:
     """By law, the judged rule first; empty where the law has no variance."""
     judgement: Judgement
     """Whether the criteria are met."""
+    compared: Judgement | None
+    """The same of the rule that is compared; None where there is none, or no run."""
     receipt: Receipt
     """What repeats the run."""
 

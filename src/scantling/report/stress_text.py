@@ -6,7 +6,7 @@ from collections.abc import Callable, Sequence
 
 from scantling.core.estimate import Estimate
 from scantling.planning.refits import StressRun
-from scantling.report.limits_section import LAW_WORDS, inclusion_words, ratio
+from scantling.report.limits_section import inclusion_words, law_words, ratio
 from scantling.report.sections import heading, law, receipt_lines
 from scantling.report.stress_record import StressReport
 from scantling.report.text import NARROWEST
@@ -35,6 +35,9 @@ def render_stress(report: StressReport, width: int = 80) -> str:
     lines += labelled("Verdict", report.judgement.answer.upper(), width)
     for place, reason in enumerate(report.judgement.reasons):
         lines += labelled("" if place else "Because", reason, width)
+    if report.compared is not None:
+        fares = " ".join([f"{report.compare}: {report.compared.answer}.", *report.compared.reasons])
+        lines += labelled("Compared", fares, width)
     lines += labelled(
         "Columns", f"{report.columns:,} of {many(report.rows, 'row')}, {report.rule} penalty", width
     )
@@ -54,12 +57,13 @@ def render_stress(report: StressReport, width: int = 80) -> str:
 def _selection(report: StressReport, width: int) -> list[str]:
     """The criteria: laws side by side, or, where two rules are compared, rules under each law."""
     lines = heading("Selection under fresh errors")
+    stated = not report.names
     if report.compare is None:
-        heads = [SHORT.get(run.law, LAW_WORDS[run.law]) for run in report.runs]
+        heads = [SHORT.get(run.law, law_words(run.law, stated=stated)) for run in report.runs]
         lines += _criteria(report, report.runs, heads)
     for name in dict.fromkeys(run.law for run in report.runs) if report.compare else ():
         runs = [run for run in report.runs if run.law == name]
-        lines += [f"  Under the {LAW_WORDS[name]}, on the same draws:"]
+        lines += [f"  Under the {law_words(name, stated=stated)}, on the same draws:"]
         lines += [*_criteria(report, runs, [run.rule for run in runs]), ""]
     lines += paragraph("In brackets 90 % intervals, simulation error included.", width)
     for run in report.runs:

@@ -41,9 +41,9 @@ def opinion_lines(opinions: Sequence[Opinion], width: int) -> list[str]:
     lines = []
     for opinion in opinions:
         says = (
-            "which agrees"
+            "whose interval overlaps"
             if opinion.agrees
-            else "which disagrees: rely on what both intervals exclude, no more"
+            else "whose interval does not overlap: rely on what both exclude, no more"
         )
         lines += paragraph(
             f"Second opinion, {opinion.estimator}: index {index(opinion.index)} (90 %"

@@ -104,6 +104,18 @@ def rate(ceiling: Ceiling) -> str:
     return ("at least " if ceiling.capped else "") + large(ceiling.columns)
 
 
+def about(value: int, span: tuple[int, int | None] | None) -> str:
+    """A number found by simulation, with the range that simulation error leaves: 'about 900
+    (700 to 1,400)'."""
+    if span is None:
+        return f"about {count(value)}"
+    low, high = span
+    if low == value == high:
+        return f"about {count(value)}"
+    end = "upwards" if high is None else f"to {count(high)}"
+    return f"about {count(value)} ({count(low)} {end})"
+
+
 def series(names: Sequence[str]) -> str:
     """Names as a list in words: 'a', 'a and b', 'a, b and c'."""
     return " and ".join(filter(None, [", ".join(names[:-1]), names[-1]]))

@@ -77,11 +77,33 @@ def test_between_open_and_closed() -> None:
     assert between(0, "share", 0, 1, closed=True) == 0.0
     assert between(np.float32(1), "share", 0, 1, closed=True) == 1.0
     for value in (0, 1, -0.1, float("nan"), float("inf")):
-        with pytest.raises(InputError, match="risk: a number between 0 and 1 is needed; found"):
+        with pytest.raises(InputError, match="risk: a number above 0 and below 1 is needed; found"):
             between(value, "risk", 0, 1)
     for value in (None, "much", [0.5, 0.6]):
         with pytest.raises(InputError, match="risk: a number is needed"):
             between(value, "risk", 0, 1)
+
+
+@pytest.mark.parametrize(
+    ("closed", "inside", "outside", "words"),
+    [
+        (False, (0.5,), (0, 2), "above 0 and below 2"),
+        (True, (0, 2), (-0.1, 2.1), "from 0 to 2"),
+        ("low", (0, 1.9), (-0.1, 2), "of at least 0 and below 2"),
+        ("high", (0.1, 2), (0, 2.1), "above 0 and at most 2"),
+    ],
+)
+def test_a_range_is_said_as_it_is_checked(closed, inside, outside, words) -> None:
+    for value in inside:
+        assert between(value, "x", 0, 2, closed=closed) == value
+    for value in (*outside, float("nan")):
+        with pytest.raises(InputError, match=f"^x: a number {words} is needed; found"):
+            between(value, "x", 0, 2, closed=closed)
+
+
+def test_a_range_without_an_upper_end() -> None:
+    with pytest.raises(InputError, match=r"x: a number above 2 is needed; found 2$"):
+        between(2, "x", 2, float("inf"))
 
 
 def test_an_input_error_is_a_value_error_of_the_package() -> None:

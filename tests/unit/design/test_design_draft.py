@@ -11,7 +11,7 @@ import pytest
 from hypothesis import HealthCheck, given, settings
 from hypothesis import strategies as st
 
-from scantling.design.draft import draft_design
+from scantling.design.draft import draft_design, drafted
 from scantling.design.expand import expand
 from scantling.design.keys import LANGUAGE
 from scantling.design.parse import read_design
@@ -87,6 +87,16 @@ def test_a_response_without_numbers_is_not_guessed(tmp_path: Path) -> None:
     columns = {"a": numbers(0), "y": ["u"] * ROWS, "target": ["3"] * ROWS, "b": numbers(1)}
     _, table = read_back(tmp_path, write(tmp_path, columns))
     assert (table.response_name, table.names) == ("a", ("b",))
+
+
+def test_the_draft_tells_its_response_and_how_much_is_to_be_mended(tmp_path: Path) -> None:
+    columns = {"y": [*numbers(0)[:-1], "n/d"], "a": numbers(1), "flat": ["2"] * ROWS}
+    data = write(tmp_path, {**columns, "b": numbers(2)})
+    made = drafted(data)
+    assert (made.response, made.to_mend) == ("a", 2)
+    assert made.text == draft_design(data) and made.text.count("# To mend") == 2
+    clean = drafted(write(tmp_path, {"b": numbers(0), "Y": numbers(1)}))
+    assert (clean.response, clean.to_mend) == ("Y", 0)
 
 
 def test_paths_are_relative_to_where_the_draft_goes(tmp_path: Path) -> None:
@@ -201,6 +211,12 @@ def test_no_draft_of_what_is_no_table(tmp_path: Path) -> None:
         draft_design(tmp_path / "none.csv")
     data.write_text("a,b\n")
     with pytest.raises(InputError, match="a header and no rows"):
+        draft_design(data)
+    data.write_text("a,b\n1,2\n")
+    with pytest.raises(InputError, match=r"csv: 1 row, too few; at least 30 rows are needed$"):
+        draft_design(data)
+    data.write_text("a,b\n" + "1,2\n" * 29)
+    with pytest.raises(InputError, match=r"csv: 29 rows, too few; at least 30"):
         draft_design(data)
 
 

@@ -183,6 +183,25 @@ def test_columns_of_a_report_follow_its_median_column(tmp_path, tail, law):
             {"family": "normal", "parameters": {"omega": 0.1, "alpha": 0.1, "beta": 0.8}},
             "normal:alpha=0.1,beta=0.8",
         ),
+        (
+            {
+                "family": "normal", "parameters": {"scale": 1.0, "lag1": 0.3},
+                "volatility": {"omega": 0.1, "alpha": 0.0, "beta": 0.9, "leverage": 0.1},
+                "autoregression": {"coefficients": [0.3, -0.1], "root": 0.4, "variance_gain": 1.1},
+            },
+            "normal:alpha=0.0,beta=0.9,leverage=0.1,lag1=0.3,lag2=-0.1",
+        ),
+        (
+            {"family": "laplace", "parameters": {"scale": 1.0, "lag1": 0.3},
+             "autoregression": None},
+            "laplace:lag1=0.3",
+        ),
+        (
+            {"family": "spliced", "parameters": {"gamma": 0.25},
+             "volatility": {"alpha": 0.1, "beta": 0.8, "leverage": -0.1},
+             "autoregression": {"coefficients": [0.2]}},
+            "student-t:df=4.0,alpha=0.1,beta=0.8,leverage=-0.1,lag1=0.2",
+        ),
         ({"family": "spliced", "parameters": {"gamma": 0.25}}, "student-t:df=4.0"),
         ({"family": "spliced", "parameters": {"gamma": 0.01}}, "normal"),
         ({"family": "spliced", "parameters": {"gamma": -0.2}}, "normal"),
@@ -207,6 +226,31 @@ def test_a_saved_budget_keeps_its_columns_law_and_correlation(tmp_path):
     assert found.values["column_law"] == "student-t:df=3.0"
     assert found.values["correlation"] == 0.4
     assert found.facts == ()
+
+
+def test_a_saved_budget_is_on_paper_already(tmp_path):
+    tree = changed("schema", to="scantling-budget/1")
+    del tree["diagnosis"]
+    tree["title"] = "a design on paper"
+    assert read_statement(written(tmp_path, tree, "b.json")).title == "a design on paper"
+
+
+def test_every_value_says_where_it_stands(tmp_path):
+    found = read_statement(written(tmp_path, DESIGN))
+    assert found.places.keys() == found.values.keys()
+    assert found.places["law"] == "quay.toml: [stated] error"
+    assert found.places["column_law"] == "quay.toml: [stated] column"
+    assert found.places["relevant"] == "quay.toml: [target] relevant"
+    assert found.placed("law: no such one: x") == "quay.toml: [stated] error: no such one: x"
+    assert found.placed("power: too low") == "power: too low"
+    said = found.changed({"law": "normal", "rows": 50}, {"law": "--law"})
+    assert said.places["law"] == "--law"
+    assert "rows" not in said.places
+    assert said.values["rows"] == 50
+    saved = read_statement(written(tmp_path, REPORT, "h.json"))
+    assert saved.places.keys() == saved.values.keys()
+    assert saved.places["law"] == "h.json: law"
+    assert saved.places["risk"] == "h.json: design.target.risk"
 
 
 @pytest.mark.parametrize(

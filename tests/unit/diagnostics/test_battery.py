@@ -225,6 +225,41 @@ def test_clustering_is_found_in_time_order_and_its_index_vetoes() -> None:
     assert all(finding.valid == (not finding.lacks) for finding in found.dependence)
 
 
+def test_persistent_errors_are_permuted_by_blocks_and_lacked_by_koenker_and_white() -> None:
+    """AR(1) errors at 0.9 beside a column alike, both independent of each other."""
+    from scipy.signal import lfilter
+
+    from scantling.diagnostics.tail_index import block_length
+    from scantling.diagnostics.variance import glejser_permutation, scale_suspects
+
+    rng = np.random.default_rng(31)
+    columns = np.column_stack([rng.standard_normal(500), rng.standard_normal((500, 2))])
+    columns[:, 0] = lfilter([1], [1, -0.98], columns[:, 0])
+    X, e = standard(columns), lfilter([1], [1, -0.9], rng.standard_normal(500))
+    made = residuals(e)
+    found = diagnose(X, made, time_ordered=True, seed=1)
+    assert found.autoregression is not None
+    assert found.clustering is not None and found.clustering.test.p_value > 0.05
+    by_name = {finding.result.test: finding for finding in found.variance}
+    for name in ("White", "Koenker's studentised Breusch-Pagan"):
+        assert not by_name[name].valid and by_name[name].lacks == "independent errors"
+    suspects = scale_suspects(X, made.fitted, made.selected)
+    block = block_length(500)
+    expected = glejser_permutation(made.values, suspects, seed=1, block=block)
+    glejser = by_name[expected.test]
+    assert glejser.valid and glejser.result == expected
+    plain = glejser_permutation(made.values, suspects, seed=1)
+    assert plain.p_value < expected.p_value
+    # Tests of the level and of the shocks' size do not need it.
+    assert all(finding.lacks != "independent errors" for finding in found.dependence)
+    # The column that persists is known by its first autocorrelation.
+    assert found.column_levels is not None
+    x = X[:, 0]
+    assert found.column_levels[0] == pytest.approx(float(x[1:] @ x[:-1] / (x @ x)), rel=1e-12)
+    assert found.column_levels[0] > 0.95 and abs(found.column_levels[1]) < 0.15
+    assert diagnose(X, made, time_ordered=False, seed=1).column_levels is None
+
+
 def test_near_integration_is_warned_of() -> None:
     e = garch(1500, 0.10, 0.895, seed=6)
     X = standard(np.random.default_rng(4).standard_normal((1500, 2)))

@@ -7,11 +7,14 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
+from scantling.core.streams import stream
 from scantling.diagnostics.extremes import (
     effective_rows,
+    effective_rows_reference,
     extreme_clustering,
     intervals_estimator,
     tail_effective_rows,
+    tail_effective_rows_reference,
 )
 from scantling.errors import InputError
 
@@ -153,6 +156,45 @@ def test_tail_effective_rows() -> None:
     assert np.mean(wild) < 0.8
 
 
+def test_independent_rows_show_no_loss_in_nineteen_of_twenty() -> None:
+    """t(3), n = 300: single samples fall to 0.4 n, and below the reference in 5 % of 200.
+
+    0.095 is three binomial errors above 0.05; a reference at n would be passed by most.
+    """
+    rng = np.random.default_rng(21)
+    below = np.zeros((200, 2))
+    share = np.empty(200)
+    for k, x in enumerate(rng.standard_t(3, (200, 300))):
+        share[k] = tail_effective_rows(x) / 300
+        below[k] = (
+            effective_rows(x) < effective_rows_reference(x, seed=k),
+            share[k] * 300 < tail_effective_rows_reference(x, seed=k),
+        )
+    assert share.min() < 0.5
+    assert np.all(below.mean(axis=0) <= 0.095)
+    assert np.mean(share < 1) > 0.25
+
+
+def test_dependent_rows_show_a_loss() -> None:
+    rng = np.random.default_rng(22)
+    grouped = np.repeat(rng.standard_t(3, 200), 4) * rng.uniform(0.999, 1.001, 800)
+    assert tail_effective_rows(grouped) < tail_effective_rows_reference(grouped, seed=1) < 800
+    assert effective_rows(grouped) < effective_rows_reference(grouped, seed=1) < 800
+
+
+def test_the_reference_is_the_fifth_lowest_of_ninety_nine_orders() -> None:
+    """Its orders drawn again: 4 lie below; the order of the series itself does not matter much."""
+    x = np.random.default_rng(23).standard_t(3, 200)
+    c = x - x.mean()
+    orders = stream(5, "effective rows, reordered").permuted(np.tile(c, (99, 1)), axis=1)
+    found = effective_rows_reference(x, seed=5)
+    lowest = sorted(effective_rows(row) for row in orders)
+    assert found == pytest.approx(lowest[4], rel=1e-9)
+    again = tail_effective_rows_reference(x, seed=5)
+    assert again == tail_effective_rows_reference(x, seed=5) < 200
+    assert again == pytest.approx(tail_effective_rows_reference(x[::-1], seed=6), rel=0.25)
+
+
 @pytest.mark.parametrize(
     ("values", "message"),
     [
@@ -167,6 +209,9 @@ def test_bad_values_are_refused(values: np.ndarray, message: str) -> None:
     for function in (extreme_clustering, effective_rows, tail_effective_rows):
         with pytest.raises(InputError, match=message):
             function(values)
+    for reference in (effective_rows_reference, tail_effective_rows_reference):
+        with pytest.raises(InputError, match=message):
+            reference(values, seed=1)
 
 
 def test_bad_share_and_ties_are_refused() -> None:

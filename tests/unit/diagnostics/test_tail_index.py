@@ -278,7 +278,7 @@ def test_what_has_no_index_is_refused_in_words(values: object, words: str) -> No
     ("keywords", "words"),
     [
         ({"side": "up"}, "side: one of both, left, right is needed; found 'up'"),
-        ({"level": 1.0}, "level: a number between 0 and 1 is needed; found 1.0"),
+        ({"level": 1.0}, "level: a number above 0 and below 1 is needed; found 1.0"),
         ({"level": "high"}, "level: a number is needed"),
         ({"seed": -1}, "seed: 0 or more is needed"),
     ],

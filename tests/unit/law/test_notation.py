@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import math
 
+import numpy as np
 import pytest
 
 from scantling.errors import InputError
@@ -47,6 +48,48 @@ def test_stated_volatility_has_mean_level_one() -> None:
     assert (arch.kind, arch.beta) == ("garch", 0.0)
 
 
+def test_leverage_may_be_negative_down_to_minus_alpha() -> None:
+    """exact: persistence alpha + beta + leverage/2 of a symmetric law; below it, an index above
+    that of the same law without leverage."""
+    found = parse_law("student-t:df=5,alpha=0.08,beta=0.85,leverage=-0.05").volatility
+    assert found is not None
+    assert found.persistence == pytest.approx(0.905, abs=1e-9)
+    assert (found.leverage, found.omega) == (-0.05, pytest.approx(0.095, abs=1e-9))
+    plain = parse_law("student-t:df=5,alpha=0.08,beta=0.85").volatility
+    assert plain is not None
+    assert 5 > found.tail_index > plain.tail_index > 4
+    # Ten digits of a report: the sum is below 0 by rounding alone.
+    edge = parse_law("normal:alpha=0.0828244195,beta=0.89,leverage=-0.0828244196").volatility
+    assert edge is not None
+    assert edge.alpha + edge.leverage == 0
+    none = parse_law("normal:alpha=-1e-10,beta=0.5,leverage=0.1").volatility
+    assert none is not None
+    assert (none.alpha, none.leverage) == (0, 0.1)
+
+
+def test_lags_make_an_autoregression_of_variance_one() -> None:
+    """exact: AR(1) of coefficient a varies 1/(1 - a^2) times as much as its shocks; AR(2)
+    (1 - b)/((1 + b)((1 - b)^2 - a^2)) times; autocorrelation a/(1 - b) at lag 1."""
+    found = parse_law("student-t:df=5,lag1=0.6")
+    assert found.autoregression is not None
+    assert found.autoregression.draws.tolist() == [[0.6]]
+    assert found.sd == pytest.approx(1, abs=1e-12)
+    assert found.innovation_variance == pytest.approx(1 - 0.36, abs=1e-12)
+    assert found.parameters["lag1"] == 0.6
+    second = parse_law("normal:lag1=0.5,lag2=0.2,lag3=0").autoregression
+    assert second is not None
+    assert second.coefficients.tolist() == [0.5, 0.2]
+    assert second.gain == pytest.approx(0.8 / (1.2 * (0.64 - 0.25)), abs=1e-12)
+    assert parse_law("normal:lag4=0.3").autoregression.coefficients.tolist() == [0, 0, 0, 0.3]
+    assert parse_law("normal:lag1=0").autoregression is None
+    law = parse_law("normal:alpha=0.1,beta=0.6,lag1=0.5,lag2=0.2")
+    assert law.sd == pytest.approx(1, abs=1e-12)
+    drawn = law.draw((2000, 200), np.random.default_rng(3))
+    assert drawn.var() == pytest.approx(1, abs=0.03)
+    assert (drawn[1:] * drawn[:-1]).mean() / drawn.var() == pytest.approx(0.625, abs=0.01)
+    assert stated_law("normal", {"lag1": 0.5}).parameters == parse_law("normal:lag1=0.5").parameters
+
+
 @pytest.mark.parametrize(
     ("text", "words"),
     [
@@ -60,24 +103,34 @@ def test_stated_volatility_has_mean_level_one() -> None:
         ("student-t:df", "key=value is needed after the family; found 'df'"),
         ("student-t:df=", "df: a number is needed; found ''"),
         ("student-t:df=three", "df: a number is needed; found 'three'"),
-        ("student-t:df=0", "df: a number between 0 and 1e\\+06 is needed; found '0'"),
-        ("student-t:df=-1", "df: a number between"),
-        ("student-t:df=nan", "df: a number between"),
-        ("student-t:df=inf", "df: a number between"),
+        ("student-t:df=0", "df: a number above 0 and below 1e\\+06 is needed; found '0'"),
+        ("student-t:df=-1", "df: a number above 0"),
+        ("student-t:df=nan", "df: a number above 0"),
+        ("student-t:df=inf", "df: a number above 0"),
         ("student-t:df=3,nu=4", "student-t has no parameter 'nu'; accepted: df, alpha"),
         ("student-t:df=3,df=4", "df is given twice"),
         ("ged", "ged needs shape, as in ged:shape=1.5"),
-        ("ged:shape=0.1", "shape: a number between 0.2 and 20"),
+        ("ged:shape=0.1", "shape: a number above 0.2 and below 20"),
         ("skewed-t:df=4", "skewed-t needs skew, as in skewed-t:df=4,skew=-0.3"),
-        ("skewed-t:df=4,skew=1", "skew: a number between -1 and 1"),
-        ("skewed-t:df=2,skew=0", "df: a number between 2 and"),
-        ("stable:index=2", "index: a number between 1.1 and 2"),
-        ("stable:index=0.9", "index: a number between 1.1 and 2"),
+        ("skewed-t:df=4,skew=1", "skew: a number above -1 and below 1"),
+        ("skewed-t:df=2,skew=0", "df: a number above 2 and below"),
+        ("stable:index=2", "index: a number above 1.1 and below 2"),
+        ("stable:index=0.9", "index: a number above 1.1 and below 2"),
         ("stable:index=1.7,alpha=0.1", "volatility needs innovations with a variance; stable"),
         ("student-t:df=2,alpha=0.1", "volatility needs innovations with a variance; student-t"),
+        ("studnt-t:df=3", ".*found 'studnt-t:df=3'; did you mean student-t\\?$"),
+        ("Gaussian", ".*found 'Gaussian'; did you mean normal\\?$"),
+        ("xyzzy", ".*found 'xyzzy'$"),
+        ("normal:alpha=nan", "alpha: a number of at least 0 and below 1 is needed; found 'nan'"),
+        ("normal:alpha=0.05,leverage=-0.06", "alpha \\+ leverage of at least 0 is needed; found"),
+        ("normal:alpha=-1e-8", "alpha: a number of at least 0"),
+        ("normal:lag1=1", "lag1: a stationary autoregression is needed, of largest root at most"),
+        ("normal:lag1=0.6,lag2=0.5", "lag1 to lag2: a stationary .*; found 1.06811$"),
+        ("normal:lag11=0.1", "normal has no parameter 'lag11'; accepted: .*, lag1 to lag10"),
+        ("normal:lag1=x", "lag1: a number is needed; found 'x'"),
         ("normal:beta=0.9", "normal needs alpha, as in normal:alpha=0.08,beta=0.9"),
-        ("normal:alpha=-0.1", "alpha: a number between"),
-        ("normal:alpha=0.1,beta=0.9", "alpha \\+ beta \\+ leverage/2 below 1 is needed; found 1"),
+        ("normal:alpha=-0.1", "alpha: a number of at least 0 and below 1"),
+        ("normal:alpha=0.1,beta=0.9", "alpha \\+ beta \\+ 0.5 leverage below 1 is needed; found 1"),
     ],
 )
 def test_laws_that_cannot_be_read(text: str, words: str) -> None:

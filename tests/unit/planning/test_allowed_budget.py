@@ -7,6 +7,7 @@ import math
 import numpy as np
 import pytest
 
+from scantling.design.spec import TargetSpec
 from scantling.planning.breakthrough import BreakThrough, CurvePoint, ScoreSample
 from scantling.planning.budget import Allowed, assemble, combine, standing
 from scantling.planning.ceiling import rate_by_regime
@@ -114,6 +115,7 @@ def assembled(**given):
     )  # fmt: skip
     given = {"stability": OPEN} | given
     return assemble(
+        target=TargetSpec(),
         rows=200, asked=100, noise=noise,
         signal=Signal(
             limit=limit(60.0, [20.0] * 50), detectable=0.2, detectable_worst=0.3

@@ -75,6 +75,10 @@ def test_a_whole_budget_has_every_limit_and_both_tables():
     assert len({(e.smallest_effect, e.relevant) for e in found.effects}) == len(found.effects) == 9
     assert {e.smallest_effect for e in found.effects} == {0.2667, 0.4, 0.6}
     assert {e.relevant for e in found.effects} == {1, 2, 4}
+    # Only 4 columns of effect .6 would explain more than all: 4 * .36 = 1.44.
+    none = [(e.relevant, e.smallest_effect) for e in found.effects if e.allowed is None]
+    assert none == [(4, 0.6)]
+    assert all(0 <= e.allowed <= 12 for e in found.effects if e.allowed is not None)
     # A normal law is its own twin.
     assert found.geometry.columns == pytest.approx(found.stability.columns, abs=6)
 
@@ -87,7 +91,8 @@ def test_assured_columns_are_those_of_a_drawn_table():
         loss="squared", mode="generative",
     )  # fmt: skip
     assert budget(**given).assured == alone
-    many = budget(**given | {"rows": 1000, "columns": 5000}, smallest_effect=0.6, replicates=50)
+    many = budget(**given | {"rows": 1000, "columns": 5000}, smallest_effect=0.6, relevant=2,
+                  replicates=50)  # fmt: skip
     assert many.assured.columns == 5000  # though the bound looks at 4000 of them
     assert not many.assured.reached
     for change, words in (
@@ -131,16 +136,49 @@ def test_relevant_columns_explain_what_so_many_independent_ones_do():
         **SMALL | {"law": "normal"}, relevant=5, smallest_effect=0.3, explained=0.45
     )
     assert found == stated_share
-    # sd(y) = sd(e) / sqrt(1 - share), share at most .9.
+    # sd(y) = sd(e) / sqrt(1 - share).
     assert plan_for().response_sd == pytest.approx(1 / math.sqrt(1 - 0.225), rel=1e-12)
     none = budget(**SMALL, explained=0.0).detectable
-    huge = budget(**SMALL, relevant=100, smallest_effect=1.0).detectable
-    assert huge / none == pytest.approx(math.sqrt(1 - 0.9), rel=1e-12)
+    # No share is capped: 6 * .4^2 = .96.
+    huge = budget(**SMALL, relevant=6, smallest_effect=0.4).detectable
+    assert huge / none == pytest.approx(math.sqrt(1 - 0.96), rel=1e-12)
+
+
+@pytest.mark.parametrize(
+    ("relevant", "effect", "share"),
+    [(10, 0.4, "160"), (4, 0.5, "100"), (1, 5.0, "2,500"), (25, 0.21, "110")],
+)
+def test_a_target_that_no_response_allows_is_refused(relevant, effect, share):
+    with pytest.raises(InputError) as refusal:
+        budget(**SMALL, relevant=relevant, smallest_effect=effect)
+    assert str(refusal.value) == (
+        f"relevant {relevant} x smallest_effect {effect:g}: they would explain {share} % of the"
+        " response's variance; under 100 % is needed"
+    )
+    # Where the share is said outright, that is what counts: columns may offset one another.
+    said = budget(**SMALL, relevant=relevant, smallest_effect=effect, explained=0.5)
+    assert said.asked == 30
+    just = budget(**SMALL, relevant=10, smallest_effect=0.316)
+    assert just.detectable > 0
+
+
+@pytest.mark.parametrize(("columns", "relevant"), [(100, 150), (100, 100), (8, 10), (1, 2)])
+def test_as_many_relevant_columns_as_there_are_are_refused(columns, relevant):
+    with pytest.raises(InputError) as refusal:
+        budget(rows=200, columns=columns, law="normal", relevant=relevant, smallest_effect=0.01)
+    assert str(refusal.value) == (
+        f"relevant: {relevant}: there are {columns} columns; a number below {max(2, columns)} is"
+        " needed"
+    )
+
+
+def test_one_column_may_be_the_relevant_one():
+    assert budget(rows=40, columns=1, law="normal", relevant=1, replicates=50).asked == 1
 
 
 def test_a_large_accepted_risk_is_still_exact():
     # L(1) at risk 0.4 is 0.93, below the usual floor: P(|N| > .9258) = .3546.
-    found = budget(rows=200, columns=3, law="normal", risk=0.4, replicates=400)
+    found = budget(rows=200, columns=3, law="normal", risk=0.4, relevant=1, replicates=400)
     assert found.curve[0].p == 1
     assert found.curve[0].risk == pytest.approx(0.3546, abs=0.03)
 
@@ -220,7 +258,8 @@ def test_workers_do_not_matter_and_the_seed_does():
         ("risk", 0), ("risk", 0.5), ("risk", math.nan), ("risk", "much"), ("risk", None),
         ("power", 0), ("power", 1), ("power", -0.1),
         ("explained", -0.01), ("explained", 1.0),
-        ("smallest_effect", 0), ("smallest_effect", 6), ("smallest_effect", math.inf),
+        ("smallest_effect", 0), ("smallest_effect", 5.1),
+        ("smallest_effect", 6), ("smallest_effect", math.inf),
         ("rule", "lasso"), ("rule", None), ("loss", "cubic"), ("loss", None),
         ("relevant", 0), ("relevant", 2.0), ("correlation", -0.1), ("correlation", 1.0),
         ("stability", 1.1), ("stability", -0.1), ("false_share", 1.0), ("false_share", -0.1),
@@ -253,7 +292,7 @@ def test_what_would_exceed_the_memory_bound_is_refused_before_it_is_drawn(
 ):
     monkeypatch.setattr(stated, "plan_scores", lambda *args, **more: pytest.fail("drawn"))
     with pytest.raises(InputError, match=r"columns: .* GiB; the bound is 2 GiB"):
-        budget(rows=rows, columns=columns, law="normal", replicates=replicates)
+        budget(rows=rows, columns=columns, law="normal", relevant=1, replicates=replicates)
 
 
 def test_a_million_columns_are_not_refused(monkeypatch):

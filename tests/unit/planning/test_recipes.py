@@ -26,6 +26,7 @@ from scantling.design.spec import (
     TargetSpec,
 )
 from scantling.design.table import Table
+from scantling.diagnostics.autoregression import Autoregression
 from scantling.diagnostics.residuals import Residuals
 from scantling.diagnostics.volatility import Volatility
 from scantling.law.families import normal_law, student_law
@@ -288,6 +289,30 @@ def test_rows_are_weighted_after_columns_are_dropped_and_the_rule_comes_last(raw
     kept = np.delete(origin.case.X, 4, axis=1)
     np.testing.assert_allclose(case.X, standard(kept / relative[:, None]), atol=1e-9)
     assert (case.rule, case.loss, case.law.volatility) == ("self-normalised", "huber", None)
+
+
+def test_rows_are_filtered_by_the_errors_autoregression(raw):
+    values = np.array([0.6, 0.1])
+    levels = Autoregression(coefficients=values, draws=values[None])
+    law = replace(student_law(5, sd=1.0), autoregression=levels)
+    origin = origin_of(raw)
+    origin = replace(origin, case=replace(origin.case, law=law))
+    recipe = named(origin)["filter rows by the errors' autoregression"]
+    assert recipe.sets == {"rows"}
+    assert joined(recipe, Recipe(names=("w",), prices=("",), weighted=True)) is None
+    case = carry_out(recipe, origin)
+    X, e = origin.case.X, origin.residuals.values
+    left = X.copy()
+    left[1:] -= 0.6 * X[:-1]
+    left[2:] -= 0.1 * X[:-2]
+    np.testing.assert_allclose(case.X, standard(left), atol=1e-9)
+    shocks = e.copy()
+    shocks[1:] -= 0.6 * e[:-1]
+    shocks[2:] -= 0.1 * e[:-2]
+    assert case.residual_sd == pytest.approx(shocks.std(), rel=1e-9)
+    assert case.law.autoregression is None
+    assert case.law.sd == pytest.approx(1.0)
+    assert "weight rows by fitted volatility" not in named(origin)
 
 
 def test_a_recipe_that_sets_nothing_leaves_the_case(raw):

@@ -163,7 +163,15 @@ def test_a_pair_stands_where_its_columns_put_it(monkeypatch):
     }  # fmt: skip
     Engine(monkeypatch, table)
     monkeypatch.setattr(module, "recipes", lambda origin: (RULE, LOW))
-    entry = RowsEntry(rows=1000, noise=55, signal=100, stability=90, allowed=55, risk=0.07)
+    entry = RowsEntry(
+        rows=1000,
+        noise=55,
+        signal=100,
+        stability=90,
+        allowed=55,
+        risk=0.07,
+        risk_error=0.03,
+    )
     found = remedies(None, None, None, None, CASE, None, OPEN, serial_map, (entry,))
     assert [(r.name, r.allowed.columns, r.parts) for r in found] == [
         ("rule and low", 70, ("rule", "low")),
@@ -178,7 +186,13 @@ def test_a_pair_stands_where_its_columns_put_it(monkeypatch):
 def entry(rows, noise, *, stability=ASKED, risk=0.1):
     allowed = min(noise, ASKED if stability is None else stability)
     return RowsEntry(
-        rows=rows, noise=noise, signal=ASKED, stability=stability, allowed=allowed, risk=risk
+        rows=rows,
+        noise=noise,
+        signal=ASKED,
+        stability=stability,
+        allowed=allowed,
+        risk=risk,
+        risk_error=0.03,
     )
 
 
@@ -204,7 +218,15 @@ def test_more_rows_that_do_not_allow_all_are_the_best_of_them():
     assert more_rows_remedy([], CASE) is None
     # Where more rows do not help, as with scores of three moments, they are no remedy.
     assert more_rows_remedy([entry(500, 20), entry(1000, 20), entry(2000, 15)], CASE) is None
-    unknown = RowsEntry(rows=1000, noise=9, signal=None, stability=None, allowed=None, risk=0.1)
+    unknown = RowsEntry(
+        rows=1000,
+        noise=9,
+        signal=None,
+        stability=None,
+        allowed=None,
+        risk=0.1,
+        risk_error=0.03,
+    )
     found = more_rows_remedy([unknown], CASE)
     assert (found.allowed.columns, found.answer) == (None, "borderline")
     assert found.allowed.note == "the law has no variance"

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import itertools
 import math
+from dataclasses import replace
 
 import numpy as np
 import pytest
@@ -15,10 +16,13 @@ from scantling.planning.paper import stated_plan, target_of
 from scantling.planning.plan import plan_effect, plan_noise, plan_scores
 from scantling.planning.rows import (
     BRIEF,
+    LIMITS,
     PRECISION,
     THOROUGH,
     Effort,
     RowSearch,
+    _joint_note,
+    _none_in_range,
     fewest_rows,
     plan_cases,
     row_steps,
@@ -155,6 +159,22 @@ def test_an_effect_beyond_reach_is_null_with_the_range_in_its_note():
     assert both.needed.note == found.needed.note
 
 
+def test_limits_not_lifted_are_named_in_one_sentence():
+    plan, steps = plan_for(60, 20), [60, 480]
+    alone = {name: _none_in_range(plan, steps, name) for name in LIMITS}
+    assert alone["noise"] == "more rows do not lift the noise limit (tried up to 8 times)"
+    both = "more rows do not lift the noise and stability limits (tried up to 8 times)"
+    assert _joint_note(plan, steps, [alone["noise"], alone["stability"]]) == both
+    # Stability that was not searched repeats the signal's note; other reasons follow, each once.
+    assert _joint_note(plan, steps, [alone["signal"]] * 2) == alone["signal"]
+    other = "the error law has no variance"
+    assert _joint_note(plan, steps, [alone["noise"], other, other]) == f"{alone['noise']}; {other}"
+    assert _joint_note(plan, steps, [other]) == other
+    assert _joint_note(plan, steps, list(alone.values())).startswith(
+        "more rows do not lift the noise, signal and stability limits ("
+    )
+
+
 def test_without_variance_only_noise_is_searched():
     found = rows_plan(plan_for(60, 20, law="student-t:df=1.5"), serial_map, refits=True,
                       effort=QUICK)  # fmt: skip
@@ -233,3 +253,33 @@ def test_each_number_of_rows_is_simulated_once():
     assert search.scores(60) is search.scores(60)
     one, two = search.risk(60), RowSearch(plan, serial_map, refits=False, effort=QUICK).risk(60)
     assert one == two
+
+
+def test_the_error_of_a_risk_counts_tables_where_they_decide():
+    # Independent normal columns: draws are all there is. Heavy columns: a table decides.
+    light = RowSearch(plan_for(law="normal"), serial_map, refits=False, effort=QUICK)
+    risk = max(light.risk(200), 1 / 200)
+    assert light.risk_error(200) < 3 * 1.645 * math.sqrt(risk * (1 - risk) / 200) + 0.01
+    heavy = plan_for(rows=200, columns=1000, law="student-t:df=2.5")
+    search = RowSearch(heavy, serial_map, refits=False, effort=QUICK)
+    again = [
+        RowSearch(
+            replace(heavy, seed=seed), serial_map, refits=False, effort=QUICK
+        ).risk(200) for seed in range(12)
+    ]  # fmt: skip
+    # 90 % either side: most of twelve other seeds lie within twice of it.
+    error = search.risk_error(200)
+    assert sum(abs(each - np.mean(again)) <= 2 * error for each in again) >= 10
+
+
+def test_rows_needed_come_with_what_simulation_error_leaves():
+    found = rows_plan(plan_for(law="student-t:df=4", columns=60), serial_map, refits=False,
+                      effort=QUICK)  # fmt: skip
+    noise = dict(found.by_limit)["noise"]
+    assert noise.rows is not None and noise.low is not None
+    assert noise.low <= noise.rows
+    assert noise.high is None or noise.rows <= noise.high
+    needed = found.needed
+    assert needed.low is not None and needed.low <= needed.rows
+    assert needed.rows == max(n.rows for name, n in found.by_limit if name != "stability")
+    assert all(entry.risk_error > 0 for entry in found.table)

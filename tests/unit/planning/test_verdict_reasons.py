@@ -20,11 +20,12 @@ from scantling.planning.verdict import (
     NONE,
     OVER,
     WITHIN,
+    stated_verdict,
     variance_missing,
     verdict,
 )
 
-TAILS = SimpleNamespace(volatility=None, family="student-t")
+TAILS = SimpleNamespace(volatility=None, autoregression=None, family="student-t")
 CASE = SimpleNamespace(target=TargetSpec(), replicates=400, rows=200, columns=100, law=TAILS)
 
 
@@ -44,6 +45,7 @@ def budget_of(*, noise=OPEN, signal=OPEN, stability=OPEN, geometry=OPEN, rate=10
         assured=missing_limit("not computed"),
         ceiling=Ceiling(columns=rate, low=rate, high=rate, regime="", capped=False),
         allowed=allowed, binding=binding,
+        level=3.61,
         risk_at_design=Estimate(value=0.21, low=0.1, high=0.3), draws=400, curve=(),
         penalty_ratio=1.3,
         equivalent_rows=118, rows_needed=900, rows_note="", detectable=0.22,
@@ -251,17 +253,29 @@ def test_a_twin_that_was_not_run_blames_nobody():
     ],
 )
 def test_volatility_is_told_from_tails(on_path, culprit):
-    stress = stress_of(on_path=on_path)
-    reason = judge(stress=stress, stability=limit(20.0), geometry=OPEN).reasons[0]
+    law = SimpleNamespace(volatility=1, autoregression=None, family="student-t")
+    case = SimpleNamespace(**vars(CASE) | {"law": law})
+    budget = budget_of(stability=limit(20.0), geometry=OPEN)
+    reason = verdict(case, diagnosis_of(), budget, stress_of(on_path=on_path)).reasons[0]
     assert reason.endswith(f": {culprit}.")
+    law.volatility, law.autoregression = None, 1
+    reason = verdict(case, diagnosis_of(), budget, stress_of(on_path=on_path)).reasons[0]
+    culprit = culprit.replace("volatility is", "persistent levels are")
+    assert reason.endswith(f": {culprit.replace('volatility', 'persistent levels')}.")
 
 
 @pytest.mark.parametrize(
-    ("family", "words"),
-    [("normal", "; volatility asks for 1.30"), ("spliced", "; tails and volatility ask for 1.30")],
+    ("family", "volatility", "levels", "words"),
+    [
+        ("normal", 1, None, "; volatility asks for 1.30"),
+        ("spliced", 1, None, "; tails and volatility ask for 1.30"),
+        ("normal", None, 1, "; persistent levels ask for 1.30"),
+        ("student-t", 1, 1, "; tails, volatility and persistent levels ask for 1.30"),
+    ],
 )
-def test_noise_names_volatility_where_it_is_fitted(family, words):
-    case = SimpleNamespace(**vars(CASE) | {"law": SimpleNamespace(volatility=1, family=family)})
+def test_noise_names_what_carries_over_where_it_is_fitted(family, volatility, levels, words):
+    law = SimpleNamespace(volatility=volatility, autoregression=levels, family=family)
+    case = SimpleNamespace(**vars(CASE) | {"law": law})
     found = verdict(case, diagnosis_of(), budget_of(noise=limit(10.0)), None)
     assert words in found.reasons[0]
 
@@ -304,3 +318,49 @@ def test_a_risk_is_no_finer_than_its_draws(risk, draws, words):
 def test_the_twins_open_limit_is_said_to_be_open():
     reason = judge(stress=stress_of(), stability=limit(20.0), geometry=OPEN).reasons[0]
     assert "normal errors would carry at least 100: tails are to blame" in reason
+
+
+def for_target(**changes):
+    return SimpleNamespace(**vars(CASE) | {"target": TargetSpec(**changes)})
+
+
+@pytest.mark.parametrize(
+    ("relevant", "effect", "words"),
+    [
+        (10, 0.9, "10 relevant columns of effect 0.9 would explain 810 % of the response's"),
+        (4, 0.5, "4 relevant columns of effect 0.5 would explain 100 % of the response's"),
+        (1, 1.2, "1 relevant column of effect 1.2 would explain 144 % of the response's"),
+    ],
+)
+def test_a_target_that_no_response_allows_is_never_within(relevant, effect, words):
+    case = for_target(relevant=relevant, smallest_effect=effect)
+    found = verdict(case, diagnosis_of(), budget_of(), None)
+    assert found.answer == BORDERLINE
+    assert found.reasons[0] == (f"{words} variance, which no response allows: lower one of them.")
+    assert found.reasons[1].startswith("No limit is reached up to the 100 columns")
+    over = verdict(case, diagnosis_of(), budget_of(noise=limit(10.0)), None)
+    assert over.answer == OVER
+    assert [reason.split()[0] for reason in over.reasons] == [str(relevant), "Noise"]
+    lacking = verdict(case, diagnosis_of(variance="missing"), budget_of(), None)
+    assert lacking.answer == NONE
+
+
+def test_a_target_just_possible_is_not_mentioned():
+    found = verdict(
+        for_target(relevant=10, smallest_effect=0.316), diagnosis_of(), budget_of(), None
+    )
+    assert (found.answer, len(found.reasons)) == (WITHIN, 1)
+
+
+def test_an_open_end_is_the_samples_or_the_simulations():
+    budget = budget_of(noise=limit(math.inf, 40, math.inf))
+    fitted = verdict(CASE, diagnosis_of(), budget, None).reasons
+    assert fitted == (
+        "Under the fitted law no limit is reached up to 100 columns, but the sample does not settle"
+        " it: the noise limit may be as low as 40.",
+    )
+    plan = SimpleNamespace(**vars(CASE) | {"law": SimpleNamespace(**vars(TAILS), sd=1.0)})
+    assert stated_verdict(plan, budget, None).reasons == (
+        "Under the stated law no limit is reached up to 100 columns, but simulation error leaves it"
+        " open: the noise limit may be as low as 40.",
+    )

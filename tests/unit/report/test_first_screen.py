@@ -3,11 +3,14 @@
 from __future__ import annotations
 
 import math
+import re
 from dataclasses import dataclass, replace
 from types import SimpleNamespace
 from typing import Any
 
 import pytest
+from hypothesis import given, settings
+from hypothesis import strategies as st
 
 from scantling.core.estimate import Estimate
 from scantling.planning.budget import Allowed, Budget, combine, standing
@@ -18,6 +21,7 @@ from scantling.planning.verdict import ANSWERS, Verdict
 from scantling.report.document import remedy_part
 from scantling.report.first_screen import first_screen, helps, instead, outcome, reason_is_cut
 from scantling.report.limits_section import reasons, remedies
+from scantling.report.wording import between_words, in_lines, labelled
 
 SHORT = "Noise binds: at 100 columns a noise column passes."
 LONG = "Noise binds: " + "a reason that takes more than its three lines of the page " * 6
@@ -38,7 +42,7 @@ def budget_of(*, noise=OPEN, signal=OPEN, stability=OPEN, **changes):
         asked=100, rows=1000, noise=noise, signal=signal, stability=stability, geometry=OPEN,
         assured=missing_limit("not computed"),
         ceiling=Ceiling(columns=31, low=31, high=31, regime="", capped=False),
-        allowed=allowed, binding=binding,
+        allowed=allowed, binding=binding, level=3.3,
         risk_at_design=Estimate(value=0.21, low=0.1, high=0.3), draws=400, curve=(),
         penalty_ratio=1.3, equivalent_rows=592, rows_needed=1900, rows_note="",
         detectable=0.22, detectable_worst=0.3, worst_columns=(), worst_shares=(),
@@ -101,15 +105,72 @@ def test_cover_is_said_where_there_is_something_to_cover(answer):
     assert line(report(answer), "Verdict") == answer.upper() + ending
 
 
-def test_rows_say_what_tails_cost_and_what_effects_need():
-    words = "1,000 used; tails cost as much as losing 408 of them; needed for all 100: 1,900"
-    assert line(report(), "Rows") == words
+def test_rows_say_what_errors_cost_and_what_effects_need():
+    cost = "these errors cost as much as losing 408 of them"
+    needed = "needed for all 100: about 1,900"
+    assert line(report(), "Rows") == f"1,000 used; {cost}; {needed}"
     cheap = budget_of(noise=limit(40.0), equivalent_rows=980)
-    assert line(report(budget=cheap), "Rows") == "1,000 used; needed for all 100: 1,900"
+    assert line(report(budget=cheap), "Rows") == f"1,000 used; {needed}"
     note = "not within 64 times the present rows, at the present penalty"
     hopeless = budget_of(noise=limit(40.0), equivalent_rows=1000, rows_needed=None, rows_note=note)
     assert line(report(budget=hopeless), "Rows") == f"1,000 used; needed: {note}"
     assert line(report("no budget"), "Rows") == "1,000 used"
+
+
+def test_the_ceiling_is_a_rate():
+    words = "noise 40 binds; signal and stability at least 100; ceiling 31 (a rate)"
+    assert line(report(), "Limits") == words
+    none = Ceiling(columns=None, low=None, high=None, regime="", capped=False)
+    unknown = report(budget=budget_of(noise=limit(40.0), ceiling=none))
+    assert line(unknown, "Limits").endswith("; ceiling unknown")
+
+
+NOT_LIFTED = "more rows do not lift the noise and stability limits (tried up to 8 times)"
+
+
+@pytest.mark.parametrize(
+    ("note", "words"),
+    [
+        # Without what the errors cost it fits.
+        (NOT_LIFTED, f"1,000 used; needed: {NOT_LIFTED}"),
+        # Without the remark in brackets.
+        (f"{'a' * 45} {'b' * 45} (tried {'c' * 30})", f"1,000 used; needed: {'a' * 45} {'b' * 45}"),
+        # Without the last clause, and saying so.
+        (f"{NOT_LIFTED}; {'d' * 70}",
+         "1,000 used; needed: more rows do not lift the noise and stability limits (more below)"),
+        # One clause that is too long by itself.
+        (" ".join(["more", *["than"] * 40]), "1,000 used (more below)"),
+    ],
+)  # fmt: skip
+def test_a_long_note_on_rows_never_ends_in_mid_sentence(note, words):
+    budget = budget_of(noise=limit(40.0), rows_needed=None, rows_note=note)
+    assert line(report(budget=budget), "Rows") == words
+
+
+@given(st.lists(st.text("abc;(). ", min_size=1, max_size=40), min_size=1, max_size=12))
+@settings(max_examples=200, deadline=None)
+def test_text_on_few_lines_is_whole_or_says_that_it_is_not(parts):
+    text = " ".join("; ".join(parts).split()) or "a"
+    for most in (1, 2, 3):
+        lines = in_lines("Rows", text, 80, most)
+        assert len(lines) <= most and max(map(len, lines)) <= 80
+        shown = " ".join(each[12:] for each in lines).rstrip()
+        bare = re.sub(r" \([^()]*\)", "", text)
+        whole = [" ".join(labelled("", each, 10**6)).strip() for each in (text, bare)]
+        assert shown in whole or shown.endswith("(more below)")
+
+
+def test_phrases_are_cut_between_words():
+    assert between_words("drop five columns", 17) == "drop five columns"
+    assert between_words("drop five columns", 16) == "drop five ..."
+    assert between_words("d" * 20, 10) == "d" * 7 + "..."
+
+
+def test_a_long_reason_is_cut_at_a_clause():
+    made = report(why=("Noise binds: " + "so much of it " * 8 + "for sure; " + "tails ask " * 20,))
+    assert line(made, "Because") == (
+        "Noise binds: " + "so much of it " * 8 + "for sure (more below)"
+    )
 
 
 def test_columns_allowed():
@@ -181,11 +242,17 @@ def section(made):
 def test_the_section_agrees_with_the_first_screen():
     sure = remedy_of(math.inf, name="a")
     unsure = remedy_of(60.0, name="b", refitted=False, dropped=(3, 5))
-    assert "1 of the 2 computed helps:" in section(report(remedies=(sure, unsure)))
-    within = section(report("within budget", remedies=(sure,)))
-    assert (
-        "No change is needed, as the design is within budget; what each would make of it:" in within
+    both = section(report(remedies=(sure, unsure)))
+    ranked = (
+        "Ranked: those whose selection was simulated first; then by columns allowed, the low end of"
+        " their band, fewer changes and lower risk."
     )
+    assert f"1 of the 2 computed helps, marked *. {ranked} 1.* a: " in both
+    assert " 2. b: 60 of 100 columns" in both
+    assert "2 of the 2 computed help, each marked *." in section(report(remedies=(sure, sure)))
+    within = section(report("within budget", remedies=(sure,)))
+    assert "No change is needed, as the design is within budget; each is computed" in within
+    assert " 1. a: " in within and "*" not in within
     weak = report(budget=budget_of(signal=limit(40.0)), remedies=(unsure,))
     assert f"The one computed does not help; {instead(weak)}." in section(weak)
     text = section(report(remedies=(unsure, unsure)))
@@ -208,7 +275,11 @@ def test_more_rows_have_no_band():
     rows = remedy_of(math.inf, name="2 times the rows (2,000)")
     rows = replace(rows, allowed=allowed, answer="borderline")
     made = report(remedies=(rows,))
-    assert line(made, "Remedies") == "1. 2 times the rows (2,000): borderline, 100 of 100"
+    assert line(made, "Remedies") == "1. 2 times the rows (2,000): 100 of 100 (no band)"
+    fewer = Allowed(columns=60, low=None, high=None, note="")
+    assert outcome(replace(rows, allowed=fewer, answer="over budget")) == (
+        "over, 60 of 100 (no band)"
+    )
     assert "100 of 100 columns (no band)" in section(made)
     (shown,) = [remedy_part(rows, ())]
     assert (shown["low"], shown["low_note"], shown["high_note"]) == (None, *["a point value"] * 2)
@@ -217,10 +288,11 @@ def test_more_rows_have_no_band():
 
 
 def test_a_long_remedys_name_is_cut_and_not_its_outcome():
-    made = report(remedies=(remedy_of(math.inf, 30, name="n" * 90),))
+    """Between two words, if that is possible."""
+    made = report(remedies=(remedy_of(math.inf, 30, name="no " * 30),))
     (text,) = [text for text in first_screen(made, 80) if text.startswith("Remedies")]
-    assert text.endswith("n...: borderline, 100 of 100 (low end 30)")
-    assert len(text) == 80
+    assert text.endswith("no no ...: borderline, 100 of 100 (low end 30)")
+    assert 76 < len(text) <= 80
 
 
 def test_reasons_are_given_below_only_if_the_first_screen_does_not_show_them_all():

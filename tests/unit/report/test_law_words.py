@@ -36,7 +36,7 @@ def test_a_stated_law_claims_no_fit() -> None:
     said = law_sentences(parse_law("normal:alpha=0.1,beta=0.8,leverage=0.05"))
     assert said == [
         "The law is normal with scale 1; every moment exists.",
-        "It is of the innovations, on the fitted GJR(1,1) volatility path: alpha 0.100, beta"
+        "It is of the innovations, on a stated GJR(1,1) volatility path: alpha 0.100, beta"
         " 0.800, leverage 0.050.",
     ]
 

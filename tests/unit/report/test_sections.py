@@ -40,9 +40,9 @@ def finding(name="White", lacks="", statistic=0.5, p_value=0.5):
     return Finding(result=result, valid=not lacks, lacks=lacks)
 
 
-@pytest.mark.parametrize("lacks", ["", "4th moment", "constant variance"])
+@pytest.mark.parametrize("lacks", ["", "4th moment", "constant variance", "independent errors"])
 def test_the_table_of_tests_is_never_wider_than_the_page(names, lacks):
-    assert len(names) == 9
+    assert len(names) == 10
     rows = [finding(name, lacks, -123456.0, 1e-9) for name in names]
     lines = findings_table(tuple(rows))
     assert max(map(len, lines)) <= 80
