@@ -123,7 +123,7 @@ def instead(report: Budgeted) -> str:
     """Which rows, or which effects where effect size binds, would do without a remedy."""
     budget, words = report.budget, []
     if budget.rows_needed is not None and budget.rows_needed > budget.rows:
-        words.append(f"{count(budget.rows_needed)} rows would carry it")
+        words.append(f"about {count(budget.rows_needed)} rows would carry it")
     if budget.signal.reached and budget.detectable is not None:
         words.append(f"effects of {math.ceil(100 * budget.detectable) / 100:.2f} sd show as it is")
     return "; ".join(words)
