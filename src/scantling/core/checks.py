@@ -98,9 +98,7 @@ def between(
     above = low <= number if closed in (True, "low") else low < number
     below = number <= high if closed in (True, "high") else number < high
     if not (above and below):
-        raise InputError(
-            f"{name}: a number {_range(low, high, closed)} is needed; found {value!r}"
-        )
+        raise InputError(f"{name}: a number {_range(low, high, closed)} is needed; found {value!r}")
     return number
 
 

@@ -19,8 +19,10 @@ NEGLIGIBLE = 1e-3
 ODDS = {
     "normal": 10.0, "student-t": 1.0, "skewed-t": 1.0, "laplace": 5.0, "ged": 5.0, "stable": 1.0,
 }  # fmt: skip
-"""Weights of the families before the sample is seen: even, but for the law without a shape, which
-every other one can imitate; tests/validation/risk_calibration.py measures what comes of it."""
+"""Weights of the families before the sample is seen. Families of fewer or lighter shapes get more:
+those of heavier tails can imitate them, and a risk averaged over both errs more where they are
+wrong. Set by the errors of predicted risks over known designs, with a seed of their own;
+tests/validation/risk_calibration.py measures what comes of it."""
 ONE_SHAPE = ("normal", "laplace")
 """Families with no parameter but the scale."""
 

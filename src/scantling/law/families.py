@@ -114,6 +114,11 @@ class ErrorLaw:
         return self.innovation.variance
 
     @property
+    def ordered(self) -> bool:
+        """Whether errors depend on those of rows before, by volatility or by level."""
+        return self.volatility is not None or self.autoregression is not None
+
+    @property
     def sd(self) -> float:
         """Standard deviation of the errors, over the fitted path if there is one."""
         level = 1.0 if self.autoregression is None else self.autoregression.gain
@@ -246,10 +251,10 @@ def draw_together(
     level, omega, alpha, beta, leverage = np.repeat(
         [_recurrence(law.volatility) for law in drawn], sizes, axis=0
     ).T
-    variance = level
+    variance, tilted = level, bool(leverage.any())
     for row in z:
         row *= np.sqrt(variance)
-        weight = alpha + leverage * (row < 0) if leverage.any() else alpha
+        weight = alpha + leverage * (row < 0) if tilted else alpha
         variance = omega + weight * row**2 + beta * variance
     return _persisting(drawn, sizes, z[BURN_IN:], rng)
 

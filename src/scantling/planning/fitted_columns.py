@@ -53,6 +53,10 @@ class FittedColumns:
             return law.draw((rows, draws), rng)
         return self.law.draw_errors(law, self._setting(rows, seed, table), draws, rng)
 
+    def errors_at_once(self, law: ErrorLaw, rows: int, draws: int, seed: int) -> FloatArray | None:
+        """Never: they belong to a table."""
+        return None
+
     def columns(self, rows: int, start: int, stop: int, seed: int, table: int) -> FloatArray:
         """Columns start..stop, beyond those at hand gone through again with fresh draws."""
         pick = np.arange(start, stop) % self.law.columns

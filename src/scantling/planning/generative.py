@@ -47,6 +47,8 @@ TABLES = Tables()
 
 BLOCK_CELLS = 2_000_000
 """Values of a block of columns: 16 MB, so that a block's products stay in the cache's reach."""
+ERROR_CELLS = 4_000_000
+"""Most errors drawn for all tables at once (32 MB)."""
 SMALLEST_SHARE = 1e-12
 """Mean square below which, relative to the largest of its block, a column counts as constant."""
 
@@ -70,6 +72,9 @@ class ColumnSource(Protocol):
     def errors(self, law: ErrorLaw, rows: int, draws: int, seed: int, table: int) -> FloatArray:
         """Draws of errors that share a table of columns, shape (rows, draws)."""
 
+    def errors_at_once(self, law: ErrorLaw, rows: int, draws: int, seed: int) -> FloatArray | None:
+        """Draws of errors for all tables, shape (rows, draws); None: each table has its own."""
+
     def columns(self, rows: int, start: int, stop: int, seed: int, table: int) -> FloatArray:
         """Columns start..stop of a table, one a row, on any scale: shape (stop - start, rows)."""
 
@@ -82,6 +87,8 @@ class StatedColumns:
     """Of every column."""
     correlation: float = 0.0
     """Between every two columns; they share one factor drawn from the same law."""
+    ordered_errors: bool = False
+    """Whether the errors beside them follow one another in time, by volatility or level."""
 
     @property
     def independent(self) -> bool:
@@ -90,8 +97,8 @@ class StatedColumns:
 
     @property
     def most_tables(self) -> int:
-        """Few where volatility follows a recursion through the rows."""
-        return MANY_TABLES if self.law.volatility is None else FEW_TABLES
+        """Few where columns or errors follow a recursion through the rows, one for each table."""
+        return FEW_TABLES if self.ordered_errors or self.law.ordered else MANY_TABLES
 
     @property
     def divisible(self) -> bool:
@@ -102,11 +109,16 @@ class StatedColumns:
         """Independent of the columns."""
         return law.draw((rows, draws), stream(seed, "stated errors", table))
 
+    def errors_at_once(self, law: ErrorLaw, rows: int, draws: int, seed: int) -> FloatArray | None:
+        """Where they follow a recursion: a step in time costs about the same for all of them."""
+        if not law.ordered or rows * draws > ERROR_CELLS:
+            return None
+        return law.draw((rows, draws), stream(seed, "stated errors at once"))
+
     def columns(self, rows: int, start: int, stop: int, seed: int, table: int) -> FloatArray:
         """Each block from its own stream, the factor from the table's."""
         rng = stream(seed, "stated columns", table, start)
-        ordered = self.law.volatility is not None or self.law.autoregression is not None
-        drawn = self.law.draw((rows, stop - start), rng).T if ordered else (
+        drawn = self.law.draw((rows, stop - start), rng).T if self.law.ordered else (
             self.law.draw((stop - start, rows), rng)
         )  # fmt: skip
         if self.correlation == 0:
@@ -178,6 +190,7 @@ def generative_scores(
     pieces = pieces_of(source, rows, columns)
     units = [(table, *piece) for table in range(len(parts)) for piece in pieces]
 
+    whole = [source.errors_at_once(law, rows, draws, seed) for law in laws]
     kept: dict[int, list[FloatArray]] = {}  # the last table's errors, for its next block
 
     def one(unit: tuple[int, int, int]) -> tuple[ScorePiece, ...]:
@@ -187,7 +200,12 @@ def generative_scores(
         if table not in kept:
             kept.clear()
             kept[table] = [
-                centre(source.errors(law, rows, last - first, seed, table)) for law in laws
+                centre(
+                    source.errors(law, rows, last - first, seed, table)
+                    if every is None
+                    else every[:, first:last]
+                )
+                for law, every in zip(laws, whole, strict=True)
             ]
         return _pieces(X, kept[table], rule, loss, floor)
 

@@ -170,7 +170,9 @@ def stated_plan(
         rows=rows,
         columns=columns,
         source=StatedColumns(
-            law=drawn, correlation=between(correlation, "correlation", 0, 1, closed="low")
+            law=drawn,
+            correlation=between(correlation, "correlation", 0, 1, closed="low"),
+            ordered_errors=errors.ordered,
         ),
         law=errors,
         target=target,

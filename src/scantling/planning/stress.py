@@ -102,7 +102,7 @@ PATH = "normal-volatility"
 def laws_of(case: Case) -> list[tuple[str, ErrorLaw]]:
     """Fitted law, its twin and, under volatility or persistent levels, normal innovations there."""
     laws = [("fitted", case.law), ("twin", case.twin)]
-    if case.law.volatility is not None or case.law.autoregression is not None:
+    if case.law.ordered:
         laws.append((PATH, case.law.normal_innovations()))
     return laws
 

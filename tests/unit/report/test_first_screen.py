@@ -209,7 +209,7 @@ def test_only_remedies_whose_selection_was_simulated_are_shown():
     assert helps(made, sure)
     assert not helps(made, unsure)
     assert line(made, "Remedies") == "1. a: within, all 100"
-    rows = "; 1,900 rows would carry it"
+    rows = "; about 1,900 rows would carry it"
     assert line(report(remedies=(unsure,)), "Remedies") == "none of the 1 computed helps" + rows
     assert line(report(), "Remedies") == "none computed applies" + rows
     assert line(report("within budget", remedies=(sure,)), "Remedies") == "none needed"
@@ -221,7 +221,7 @@ def test_only_remedies_whose_selection_was_simulated_are_shown():
 def test_where_none_helps_rows_and_effects_that_would_do_are_said():
     unsure = remedy_of(math.inf, refitted=False)
     weak = budget_of(signal=limit(40.0), detectable=0.2201)
-    words = "none of the 1 computed helps; 1,900 rows would carry it; effects of 0.23 sd"
+    words = "none of the 1 computed helps; about 1,900 rows would carry it; effects of 0.23 sd"
     made = report(budget=weak, remedies=(unsure,))
     assert line(made, "Remedies") == words + " show as it is"
     assert len(first_screen(made, 80)) <= 12
@@ -230,7 +230,7 @@ def test_where_none_helps_rows_and_effects_that_would_do_are_said():
         weak = budget_of(signal=limit(40.0), rows_needed=needed)
         assert instead(report(budget=weak)) == "effects of 0.22 sd show as it is"
     # Nor effects where their size is not what binds.
-    assert instead(report()) == "1,900 rows would carry it"
+    assert instead(report()) == "about 1,900 rows would carry it"
     assert instead(report(budget=budget_of(noise=limit(40.0), rows_needed=None))) == ""
 
 
@@ -256,7 +256,7 @@ def test_the_section_agrees_with_the_first_screen():
     weak = report(budget=budget_of(signal=limit(40.0)), remedies=(unsure,))
     assert f"The one computed does not help; {instead(weak)}." in section(weak)
     text = section(report(remedies=(unsure, unsure)))
-    assert "Of 2 computed not one helps; 1,900 rows would carry it." in text
+    assert "Of 2 computed not one helps; about 1,900 rows would carry it." in text
     assert "None computed applies." in section(report())
 
 
