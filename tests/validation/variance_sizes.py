@@ -30,6 +30,7 @@ from scantling.diagnostics.dependence import (
     ljung_box,
     mcleod_li,
     robust_ljung_box,
+    sign_ljung_box_permutation,
 )
 from scantling.diagnostics.residuals import (
     FOLDS,
@@ -54,6 +55,9 @@ TESTS: dict[str, Test] = {
     "absolute Ljung-Box, permutation": lambda u, Z, seed, block: absolute_ljung_box_permutation(
         u, seed=seed, draws=DRAWS
     ),
+    "signs, permutation": lambda u, Z, seed, block: sign_ljung_box_permutation(
+        u, seed=seed, draws=DRAWS
+    ),
     "Ljung-Box, robust": lambda u, Z, seed, block: robust_ljung_box(u),
     "Ljung-Box": lambda u, Z, seed, block: ljung_box(u),
     "Koenker": lambda u, Z, seed, block: koenker(u, Z),
@@ -69,9 +73,8 @@ NEED_FOURTH = ("Ljung-Box, robust", "Koenker", "White", "ARCH-LM", "McLeod-Li")
 """Never relied on where the diagnosis finds no fourth moment, as under both t laws."""
 ON_SQUARES = {"Koenker", "White"}
 """Given least-squares residuals of all rows."""
-OF_ROWS = {"absolute Ljung-Box, permutation", "Ljung-Box, robust", "Ljung-Box", "ARCH-LM",
-           "McLeod-Li"}  # fmt: skip
-OF_LEVELS = {"Ljung-Box, robust", "Ljung-Box"}
+OF_LEVELS = {"signs, permutation", "Ljung-Box, robust", "Ljung-Box"}
+OF_ROWS = OF_LEVELS | {"absolute Ljung-Box, permutation", "ARCH-LM", "McLeod-Li"}
 LOW, HIGH = 0.035, 0.065
 """Sizes outside are named."""
 
