@@ -8,6 +8,7 @@ import math
 from collections.abc import Mapping
 from dataclasses import dataclass, field, replace
 from pathlib import Path
+from statistics import median
 from typing import Any
 
 from scantling.design.keys import STATED_LANGUAGE, TITLE
@@ -15,6 +16,8 @@ from scantling.design.message import file_label, printable, shown
 from scantling.design.parse import check_keys, check_tables, check_value, parse_toml, read_bytes
 from scantling.errors import InputError
 
+LEAST_KEPT = 0.1
+"""Median first autocorrelation below which columns are taken as independent from row to row."""
 LIGHT_FROM = 50.0
 """Column tail indices above it are read as normal columns."""
 LEAST_INDEX = 2.05
@@ -137,7 +140,7 @@ def _from_report(
             values["column_law"] = _law_of(design["column_law"])[1]
             values["correlation"] = design["correlation"]
         if "diagnosis" in tree:
-            more, values["column_law"] = _columns_of(tree["diagnosis"]["columns"]["tail"])
+            more, values["column_law"] = _columns_of(tree["diagnosis"])
             facts += more
     except KeyError as fault:
         raise InputError(f"{label}: a whole report is needed; {fault} is missing in it") from fault
@@ -187,12 +190,22 @@ def _law_of(law: Mapping[str, Any]) -> tuple[list[str], str]:
     return facts, f"{family}:{rest}" if rest else family
 
 
-def _columns_of(tail: Mapping[str, Any]) -> tuple[list[str], str]:
-    """Independent columns with the median column's tail index."""
+def _columns_of(diagnosis: Mapping[str, Any]) -> tuple[list[str], str]:
+    """Independent columns with the median column's tail index and first autocorrelation.
+
+    Heavy where thin tails are excluded or the interval of the index has an upper end.
+    """
+    tail = diagnosis["columns"]["tail"]
     index = tail.get("index")
-    heavy = index is not None and index < LIGHT_FROM and tail.get("finite", True)
+    bounded = tail.get("finite", True) or tail.get("high") is not None
+    heavy = index is not None and index < LIGHT_FROM and bounded
     law = f"student-t:df={max(float(index), LEAST_INDEX):g}" if heavy and index else "normal"
+    levels = diagnosis.get("column_autocorrelations")
+    kept = float(median(levels)) if levels else 0.0
+    if abs(kept) >= LEAST_KEPT:
+        law += f"{',' if ':' in law else ':'}lag1={kept:.3f}"
     return [
-        f"Columns are taken as independent, each {law}, after the report's median column; their"
-        " correlation, persistence and other differences are left out."
+        f"Columns are taken as independent, each {law}: the median tail index and, with rows in"
+        " order, the median first autocorrelation of the report's columns. Their correlation and"
+        " other differences are left out."
     ], law

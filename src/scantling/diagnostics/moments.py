@@ -20,6 +20,8 @@ from scantling.diagnostics.tail_index import TailIndex, moderate, tail_index
 
 Z90 = 1.6448536269514722
 ORDERS = (1, 2, 3, 4)
+HILL_UP_TO = 2.5
+"""Order up to which Hill's index of the largest 5 % of values decides."""
 MINIMUM_ROWS = 100
 """Below it every answer is 'unclear': no sample that small can tell."""
 VETO_DRAWS = 1000
@@ -52,7 +54,7 @@ def interval_answers(
     order 6 'missing' also needs the thin-tail test to find a finite index.
     """
     bar = 1 / order
-    if order <= 2.5:
+    if order <= HILL_UP_TO:
         exists = hill_gamma + Z90 * hill_error < bar
         missing = hill_gamma - Z90 * hill_error > bar
     else:
@@ -135,12 +137,18 @@ def moment_answer(
         for v in (tail.gamma, tail.gamma_error, tail.hill_gamma, tail.hill_error, tail.p_value)
     ]
     code = int(interval_answers(order, *columns)[0])
-    shown = "largest 5 %" if order <= 2.5 else "upper half"
+    shown = "largest 5 %" if order <= HILL_UP_TO else "upper half"
     if code > 0 and order >= 4 and volatility_index is not None and volatility_index <= order:
         reason = f"the fitted volatility implies tail index {volatility_index:.1f}"
         return MomentAnswer(order=order, answer="unclear", reason=reason)
     if code > 0 and infinite_moment_share(values, order, seed=seed) >= veto_bar():
         reason = "the interval says it exists, the randomised test that it is infinite"
+        return MomentAnswer(order=order, answer="unclear", reason=reason)
+    if code > 0 and order > HILL_UP_TO and tail.low <= order:
+        reason = (
+            f"its interval lies above {order:g} only before bias is allowed for; the tail index may"
+            f" be as low as {tail.low:.1f}"
+        )
         return MomentAnswer(order=order, answer="unclear", reason=reason)
     answer = {1: "exists", -1: "missing", 0: "unclear"}[code]
     word = {1: "above", -1: "below", 0: "on both sides of"}[code]

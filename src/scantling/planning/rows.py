@@ -25,6 +25,7 @@ from scantling.simulation.scores import (
     exceeding_counts,
     first_above,
     penalty_level,
+    risk_at,
     risk_curves,
     risks_on_grid,
 )
@@ -152,6 +153,11 @@ class RowSearch:
             return float(risk_curves(found, risk)[0].max())
         return float(risks_on_grid(found, risk, column_grid(found.columns))[0].max())
 
+    def risk_at_all(self, rows: int) -> float:
+        """Break-through risk at the columns asked for."""
+        p, risk = self.plan.columns, self.plan.target.risk
+        return risk_at(self.scores(rows).found, p, float(penalty_level(p, risk)))[0]
+
     def risk_error(self, rows: int) -> float:
         """Simulation error of the risk, 90 %: that of the draws, or, if larger, between tables.
 
@@ -179,7 +185,7 @@ class RowSearch:
         for side in (-1, 1):
             rows: int | None = None
             for n in sorted(self._scores, reverse=True):
-                if self.risk(n) + side * self.risk_error(n) > accepted:
+                if self.risk_at_all(n) + side * self.risk_error(n) > accepted:
                     break
                 rows = n
             found.append(rows)
@@ -355,7 +361,7 @@ def _none_in_range(plan: Plan, steps: list[int], *names: str) -> str:
     times = steps[-1] / plan.rows
     listed = " and ".join(filter(None, [", ".join(names[:-1]), names[-1]]))
     limits = f"{listed} limit{'s' if len(names) > 1 else ''}"
-    return f"more rows do not lift the {limits} (tried up to {times:.3g} times)"
+    return f"{times:.3g} times as many are not enough for the {limits}"
 
 
 def _joint_note(plan: Plan, steps: list[int], notes: list[str]) -> str:

@@ -124,7 +124,8 @@ def instead(report: Budgeted) -> str:
     budget, words = report.budget, []
     if budget.rows_needed is not None and budget.rows_needed > budget.rows:
         words.append(f"about {count(budget.rows_needed)} rows would carry it")
-    if budget.signal.reached and budget.detectable is not None:
+    shows = budget.detectable is not None and report.target.relevant * budget.detectable**2 < 1
+    if budget.signal.reached and budget.detectable is not None and shows:
         words.append(f"effects of {math.ceil(100 * budget.detectable) / 100:.2f} sd show as it is")
     return "; ".join(words)
 

@@ -62,7 +62,7 @@ def render_plan(report: PlanReport, width: int = 80) -> str:
         rows_section.rows,
     ):
         lines += section(report, width)
-    lines += ["", "Cautions"]
+    lines += sections.heading("Cautions")
     for caution in PLAN_CAUTIONS:
         lines += paragraph(caution, width)
     lines += sections.receipt_lines(report.receipt, width)

@@ -1,10 +1,12 @@
 """The lasso for many responses along a falling grid of penalties.
 
 Each penalty starts where the last one ended. On an unchanged set of columns and
-signs the solution is linear in the penalty, so one solve on the old working
-sets is nearly always close; a pass over all columns then confirms it or lets
-columns in. The products X'X_W of columns that were ever in a set are kept for
-the whole grid, so late penalties need no pass over the rows.
+signs the solution is linear in the penalty: `path_block` keeps, for every
+response, the inverse Gram matrix of its active columns, and changes it as columns
+come and go. Where that does not do (columns that nearly depend on each other, very
+large sets, more columns than a Gram matrix is made for, a very short grid) the
+general method takes over: a solve on the old working sets, which is nearly always
+close, and a pass over all columns that confirms it or lets columns in.
 Friedman et al. (2010), Regularization paths for generalized linear models via
 coordinate descent, J. Statistical Software 33, 1-22 (the grid and the warm
 starts); Efron et al. (2004), Least angle regression, Annals of Statistics 32,
@@ -22,12 +24,29 @@ from scantling.core.checks import between, finite_matrix
 from scantling.core.record import FloatArray
 from scantling.core.streams import MEMORY_BOUND, blocks
 from scantling.errors import InputError
+from scantling.simulation.active_set import BoolArray
 from scantling.simulation.arguments import NotConvergedError, as_table, columns_and_responses
 from scantling.simulation.lasso import BLOCK_CELLS, settle
-from scantling.simulation.working_set import Problem, WorkingSets
+from scantling.simulation.path_block import PathBlock, SharedColumns
+from scantling.simulation.working_set import IndexArray, Problem, WorkingSets
 
 GRAM_COLUMNS = 2500
 """Most columns of which the whole of X'X is made (50 MB)."""
+
+GROUP_CELLS = 200_000
+"""Cells of the gradients of responses that go down their grids in step (to stay in cache)."""
+
+FEWEST_POINTS = 4
+"""Penalties from which kept inverses are worth their start."""
+
+LARGEST_SET = 400
+"""Most columns of one response for which an inverse is kept."""
+
+USUAL_RESPONSES = 400
+"""Responses for which the kept inverses of one block are given room."""
+
+INVERSE_CELLS = 64_000_000
+"""Largest number of cells of all kept inverses of a block (512 MB)."""
 
 
 def lasso_path_batch(X: Any, Y: Any, penalties: Any, *, tol: float = 1e-6) -> FloatArray:
@@ -122,22 +141,135 @@ def walk_path(
     )
     if factor.ndim == 1:
         factor = factor[:, None]
-    even = bool((factor == factor[0, 0]).all())
-    gram = columns.T @ (columns / n) if p <= GRAM_COLUMNS else None
-    for first, last in blocks(Y.shape[1], max(BLOCK_CELLS // p, 16)):
+    # Columns of one length often differ in it by rounding only.
+    even = bool(np.ptp(factor) <= 1e-14 * factor[0, 0])
+    gram: FloatArray | None = None
+    shared: SharedColumns | None = None
+    if p <= GRAM_COLUMNS:
+        gram = columns.T @ columns
+        gram /= n
+        if len(grid) >= FEWEST_POINTS:
+            shared = SharedColumns(columns, gram, tol)
+    most = max(BLOCK_CELLS // p, 16)
+    # The same for all batches of a usual size: what happens to a response is its own affair.
+    together = max(USUAL_RESPONSES, min(most, Y.shape[1]))
+    largest = int(min(LARGEST_SET, (INVERSE_CELLS / together) ** 0.5))
+    if shared is not None and out is not None:
+        most, largest = _group_size(p), LARGEST_SET
+    for first, last in blocks(Y.shape[1], most):
         own = factor[:1, :1] if even else factor[:, first:last] if factor.shape[1] > 1 else factor
         level = grid[:, None, first:last]
-        problem = Problem(columns, Y[:, first:last], level[0] * own, gram, scale)
-        sets = WorkingSets(problem, None)
+        y = Y[:, first:last]
+        slow = SlowRows(columns, y, gram, scale)
+        groups = (
+            [] if shared is None else _groups(shared, y, own, level[0, 0], tol=tol, most=largest)
+        )
         for step in range(len(level)):
             gaps = np.zeros(last - first)
-            coefficients = np.zeros((p, last - first)) if out is None else out[step, :, first:last]
-            sets.resume(level[step] * own)
+            if out is None:
+                coefficients = np.zeros((last - first, p)).T
+            else:
+                coefficients = out[step, :, first:last]
+            stuck = np.full(last - first, shared is None)
+            for rows, group in groups:
+                group.advance(level[step, 0, rows])
+                group.write(coefficients.T, rows, scale)
+                gaps[rows] = group.gaps
+                stuck[rows] = group.failed
             # The gradient moves about as fast as the penalty: the strong rule.
             after = level[min(step + 1, len(level) - 1)]
             ahead = np.maximum(2 * after - level[step], 0.0) * own
-            settle(sets, tol, coefficients, gaps, solve_first=step > 0, ahead=ahead)
+            slow.advance(np.flatnonzero(stuck), level[step] * own, ahead, tol, coefficients, gaps)
             yield step, first, last, coefficients, gaps
+
+
+def _group_size(p: int) -> int:
+    return max(min(GROUP_CELLS // p, 1024), 64)
+
+
+def _groups(
+    shared: SharedColumns,
+    Y: FloatArray,
+    own: FloatArray,
+    first: FloatArray,
+    *,
+    tol: float,
+    most: int,
+) -> list[tuple[IndexArray, PathBlock]]:
+    """Return the responses that are not zero, in groups that go down their grids in step.
+
+    `own` are factors of the penalties, shape (1, 1), (p, 1) or (p, R), `first` the first
+    penalties and `most` the largest set of columns.
+    """
+    rows = np.flatnonzero(Y.any(axis=0))
+    # A column of zeros never enters, whatever its weight.
+    zero = np.logical_not(shared.double.any(axis=0))
+    if own.shape != (1, 1) and zero.any():
+        own = np.where(zero[:, None], 1.0, own)
+    groups = []
+    for begin, end in blocks(len(rows), _group_size(shared.p)):
+        some = rows[begin:end]
+        weights = own.T if own.shape[1] == 1 else np.ascontiguousarray(own[:, some].T)
+        block = PathBlock(shared, Y[:, some], weights, first[some], tol=tol, most=most)
+        groups.append((some, block))
+    return groups
+
+
+class SlowRows:
+    """The responses of one block that need the general method, one penalty at a time.
+
+    Those that come together stay together: what happens to one response never
+    depends on when others come.
+    """
+
+    def __init__(
+        self, X: FloatArray, Y: FloatArray, gram: FloatArray | None, scale: FloatArray
+    ) -> None:
+        self.X, self.Y, self.gram, self.scale = X, Y, gram, scale
+        self.member: BoolArray = np.zeros(Y.shape[1], dtype=np.bool_)
+        self.groups: list[tuple[IndexArray, WorkingSets]] = []
+
+    def advance(
+        self,
+        rows: IndexArray,
+        weights: FloatArray,
+        ahead: FloatArray,
+        tol: float,
+        coefficients: FloatArray,
+        gaps: FloatArray,
+    ) -> None:
+        """Take on what is new of `rows`, solve all and fill in their coefficients and gaps.
+
+        `weights` and `ahead` are as in `settle`, for all responses of the block.
+        """
+        fresh = rows[~self.member[rows]]
+        for members, sets in self.groups:
+            sets.resume(weights[:, members])
+            self._settle(members, sets, ahead, tol, coefficients, gaps, solve_first=True)
+        if fresh.size:
+            self.member[fresh] = True
+            y = self.Y[:, fresh]
+            problem = Problem(self.X, y, weights[:, fresh], self.gram, self.scale)
+            self.groups.append((fresh, WorkingSets(problem, None)))
+            self._settle(*self.groups[-1], ahead, tol, coefficients, gaps, solve_first=False)
+
+    def _settle(
+        self,
+        rows: IndexArray,
+        sets: WorkingSets,
+        ahead: FloatArray,
+        tol: float,
+        coefficients: FloatArray,
+        gaps: FloatArray,
+        *,
+        solve_first: bool,
+    ) -> None:
+        if len(rows) == len(self.member):
+            settle(sets, tol, coefficients, gaps, solve_first=solve_first, ahead=ahead)
+            return
+        own, attained = np.zeros((len(coefficients), len(rows))), np.zeros(len(rows))
+        settle(sets, tol, own, attained, solve_first=solve_first, ahead=ahead[:, rows])
+        coefficients[:, rows], gaps[rows] = own, attained
 
 
 def _grid(penalties: Any, replicates: int) -> FloatArray:

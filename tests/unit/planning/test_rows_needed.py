@@ -150,7 +150,7 @@ def test_an_effect_beyond_reach_is_null_with_the_range_in_its_note():
     found = rows_plan(plan_for(60, 20, smallest_effect=0.02), serial_map, refits=False,
                       effort=QUICK)  # fmt: skip
     assert found.needed.rows is None
-    assert found.needed.note == "more rows do not lift the signal limit (tried up to 64 times)"
+    assert found.needed.note == "64 times as many are not enough for the signal limit"
     assert found.searched_to == 64 * 60
     # Stability is not searched where effects are never detectable; the reason is given once.
     both = rows_plan(plan_for(60, 20, smallest_effect=0.02), serial_map, refits=True,
@@ -162,8 +162,8 @@ def test_an_effect_beyond_reach_is_null_with_the_range_in_its_note():
 def test_limits_not_lifted_are_named_in_one_sentence():
     plan, steps = plan_for(60, 20), [60, 480]
     alone = {name: _none_in_range(plan, steps, name) for name in LIMITS}
-    assert alone["noise"] == "more rows do not lift the noise limit (tried up to 8 times)"
-    both = "more rows do not lift the noise and stability limits (tried up to 8 times)"
+    assert alone["noise"] == "8 times as many are not enough for the noise limit"
+    both = "8 times as many are not enough for the noise and stability limits"
     assert _joint_note(plan, steps, [alone["noise"], alone["stability"]]) == both
     # Stability that was not searched repeats the signal's note; other reasons follow, each once.
     assert _joint_note(plan, steps, [alone["signal"]] * 2) == alone["signal"]
@@ -171,7 +171,7 @@ def test_limits_not_lifted_are_named_in_one_sentence():
     assert _joint_note(plan, steps, [alone["noise"], other, other]) == f"{alone['noise']}; {other}"
     assert _joint_note(plan, steps, [other]) == other
     assert _joint_note(plan, steps, list(alone.values())).startswith(
-        "more rows do not lift the noise, signal and stability limits ("
+        "8 times as many are not enough for the noise, signal and stability limits"
     )
 
 

@@ -13,6 +13,7 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from scantling.core.estimate import Estimate
+from scantling.design.spec import TargetSpec
 from scantling.planning.budget import Allowed, Budget, combine, standing
 from scantling.planning.ceiling import Ceiling
 from scantling.planning.limit import make_limit, missing_limit
@@ -66,6 +67,8 @@ class Made:
 
     design: Any
     """As asked for."""
+    target: TargetSpec
+    """What has to be achieved."""
     title: str = "Cargo"
     """Shown first."""
     verdict: Verdict
@@ -83,7 +86,7 @@ class Made:
 def report(answer="over budget", *, budget=None, why=(SHORT,), **changes):
     verdict = Verdict(answer=answer, cover="simulation only", reasons=why)
     made = Made(
-        design=SimpleNamespace(title="Cargo"), verdict=verdict,
+        design=SimpleNamespace(title="Cargo"), target=TargetSpec(), verdict=verdict,
         budget=budget or budget_of(noise=limit(40.0, 20, 60)),
     )  # fmt: skip
     return replace(made, **changes)

@@ -9,7 +9,7 @@ from hypothesis import strategies as st
 from sklearn.linear_model import Lasso, LassoLars, lars_path
 
 from scantling.errors import InputError
-from scantling.simulation import active_set, path, working_set
+from scantling.simulation import active_set, kept_inverse, path, path_block, working_set
 from scantling.simulation.lasso import NotConvergedError, lasso_batch, solve_batch
 from scantling.simulation.path import lasso_path_batch, walk_path
 
@@ -108,8 +108,21 @@ def test_every_way_through_gives_the_same_path(monkeypatch):
     X, Y, top = design(60, 90, 20, seed=5)
     grid = falling(top, 0.05, 10)
     usual = lasso_path_batch(X, Y, grid, tol=1e-13)
+    assert np.count_nonzero(usual[-1], axis=0).min() > 25
     for module, name, value in [
+        (path, "FEWEST_POINTS", 99),
         (path, "GRAM_COLUMNS", 0),
+        (path, "LARGEST_SET", 5),
+        (kept_inverse, "WORST_PIVOT", 1.0),
+        (path_block, "MOST_CANDIDATES", 1),
+        (path_block, "MARGIN", -1.0),
+        (path_block, "MARGIN", 0.5),
+        (path_block, "STEP", 0.97),
+        (path_block, "EXCHANGES", 1),
+        (path_block, "ONE_BY_ONE", 0),
+        (path_block, "PASSES", 1),
+        (path_block, "SPARSE_BELOW", 0),
+        (path_block, "SINGLE_FROM", 0.0),
         (path, "BLOCK_CELLS", 90 * 3),
         (working_set, "SPARSE_SHARE", 0.0),
         (working_set, "SPARSE_SHARE", 1.0),
@@ -117,9 +130,102 @@ def test_every_way_through_gives_the_same_path(monkeypatch):
         (working_set, "PASS_CELLS", 1),
     ]:
         with monkeypatch.context() as patch:
+            if module in (working_set, active_set):
+                patch.setattr(path, "FEWEST_POINTS", 99)
             patch.setattr(module, name, value)
             again = lasso_path_batch(X, Y, grid, tol=1e-13)
         np.testing.assert_allclose(again, usual, atol=1e-9)
+
+
+@pytest.mark.parametrize("df", [None, 2.2])
+@pytest.mark.parametrize(("n", "p"), [(200, 60), (60, 200), (80, 500)])
+def test_kept_inverses_alone_do_the_common_problem_exactly(n, p, df, monkeypatch):
+    X, Y, top = design(n, p, 30, seed=n, df=df)
+    grid = falling(top, 0.1, 30)
+    with monkeypatch.context() as patch:
+        patch.setattr(path, "FEWEST_POINTS", 99)
+        tight = lasso_path_batch(X, Y, grid, tol=1e-13)
+    monkeypatch.setattr(path, "settle", None)  # The general method must not be needed.
+    loose = lasso_path_batch(X, Y, grid, tol=1e-6)
+    assert np.count_nonzero(loose[-1], axis=0).min() > 5
+    np.testing.assert_allclose(loose, tight, atol=1e-8)
+
+
+def near_copies(X):
+    X[:, 40:] = X[:, :40] + 1e-7 * X[:, 40:]
+    return X
+
+
+HARD = {
+    "copies": lambda X: np.hstack([X[:, :40], -2.0 * X[:, :40]]),
+    "near copies": near_copies,
+    "common factor": lambda X: X + 5.0 * X[:, :1],
+    "three values": lambda X: np.sign(X) * (np.abs(X) > 0.7),
+    "scales": lambda X: X * 10.0 ** np.linspace(-6, 6, 80),
+}
+
+
+@pytest.mark.parametrize("kind", HARD)
+@pytest.mark.parametrize("tol", [1e-6, 1e-10])
+def test_gap_and_fit_hold_on_hard_columns(kind, tol):
+    rng = np.random.default_rng(9)
+    X = HARD[kind](rng.standard_normal((50, 80)))
+    Y = X[:, :3] @ rng.standard_normal((3, 6)) + rng.standard_normal((50, 6))
+    Y *= [1e-5, 1e-2, 1.0, 1.0, 1e2, 1e5]
+    grid = falling(np.abs(X.T @ Y).max(axis=0) / 50, 0.01, 20)
+    power = (Y**2).mean(axis=0)
+    for step, B in enumerate(lasso_path_batch(X, Y, grid, tol=tol)):
+        assert worst_gap(X, Y, grid[step], B) <= 1.01 * tol + 1e-12
+        alone, _ = solve_batch(X, Y, grid[step], tol=1e-12)
+        # Within the gap: mean((Xb - Xb*)^2) / 2 is at most that.
+        error = ((X @ (B - alone)) ** 2).mean(axis=0) / power
+        assert error.max() <= 2.0 * tol
+
+
+@pytest.mark.parametrize("tol", [1e-4, 1e-6, 1e-9])
+@pytest.mark.parametrize("copies", [False, True])
+def test_a_split_of_the_responses_changes_nothing(tol, copies, monkeypatch):
+    X, Y, top = design(60, 90, 70, seed=10)
+    if copies:
+        X[:, 45:60] = X[:, :15]
+    grid = falling(top, 0.05, 12)
+    whole = lasso_path_batch(X, Y, grid, tol=tol)
+    for r in (0, 33, 69):
+        alone = lasso_path_batch(X, Y[:, r], grid[:, r], tol=tol)
+        np.testing.assert_allclose(alone[:, :, 0] @ X.T, whole[:, :, r] @ X.T, atol=1e-9)
+    with monkeypatch.context() as patch:
+        patch.setattr(path, "GROUP_CELLS", 1)
+        parts = lasso_path_batch(X, Y, grid, tol=tol)
+    np.testing.assert_allclose(X @ parts, X @ whole, atol=1e-9)
+    for step, _, _, B, _ in walk_path(X, Y, grid, tol=tol):
+        np.testing.assert_allclose(X @ B, X @ whole[step], atol=1e-9)
+
+
+@settings(max_examples=30, deadline=None, derandomize=True)
+@given(
+    n=st.integers(5, 60),
+    p=st.integers(1, 120),
+    points=st.integers(4, 15),
+    lowest=st.floats(0.02, 1.0),
+    own=st.booleans(),
+    seed=st.integers(0, 2**32 - 1),
+)
+def test_optimality_conditions_at_every_penalty(n, p, points, lowest, own, seed):
+    rng = np.random.default_rng(seed)
+    X, Y = rng.standard_normal((n, p)), rng.standard_normal((n, 3))
+    loadings = rng.uniform(0.3, 3.0, (p, 3) if own else p)
+    table = loadings if own else np.repeat(loadings[:, None], 3, axis=1)
+    top = (np.abs(X.T @ Y) / n / table).max(axis=0)
+    grid = falling(top, lowest, points)
+    for step, _, _, B, gaps in walk_path(X, Y, grid, tol=1e-12, loadings=loadings):
+        assert gaps.max() <= 1e-12
+        bound = grid[step] * table
+        slope = X.T @ (Y - X @ B) / n
+        # A gap g leaves the residual within sqrt(2 g) of the best one.
+        slack = 1e-5 * np.sqrt((X**2).mean(axis=0).max() * (Y**2).mean(axis=0).max())
+        assert (np.abs(slope) <= bound + slack).all()
+        active = np.abs(B) > 1e-3
+        assert np.abs(slope - bound * np.sign(B))[active].max(initial=0.0) <= slack
 
 
 def test_zero_columns_and_zero_responses_stay_zero():
@@ -136,6 +242,7 @@ def test_an_unreached_gap_is_refused(monkeypatch):
         gaps[:] = [0.0, 0.5, 0.1]
 
     monkeypatch.setattr(path, "settle", stuck)
+    monkeypatch.setattr(path, "FEWEST_POINTS", 5)
     with pytest.raises(NotConvergedError, match=r"response 2 at penalty 1 .* 0.5") as caught:
         lasso_path_batch(X, Y, falling(top, 0.1, 4))
     assert (caught.value.gap, caught.value.response) == (0.5, 1)
