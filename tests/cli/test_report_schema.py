@@ -252,4 +252,4 @@ def test_odd_designs_give_valid_reports(kind: str, tmp_path: Path, valid_documen
     if kind == "nothing to find":
         assert document["budget"]["signal"]["columns"] == 0
         assert document["budget"]["rows_needed"] is None
-        assert "tried up to" in document["budget"]["rows_needed_note"]
+        assert "are not enough for" in document["budget"]["rows_needed_note"]

@@ -23,8 +23,10 @@ from scantling.errors import InputError, NotAvailableError, ResourceError
 FIRST_LOOK = 0.25
 """Seconds of units before which processes are never started."""
 WORTH_STARTING = 4.0
-"""Seconds the units left in a call must be expected to take for processes to be started, or
-seconds that units have taken so far: starting costs each process about a second of work."""
+"""Seconds the units left in a call must be expected to take for processes to be started: that
+costs each of them about a second of work."""
+LONG_RUN = 10.0
+"""Seconds of units after which they are started whatever is left in the call: more will come."""
 WORTH_SENDING = 0.05
 """Seconds the units left in a call must be expected to take for them to be sent."""
 TASK = 0.08
@@ -72,12 +74,13 @@ class Here:
 class Processes:
     """Computes in worker processes what is worth sending to them."""
 
-    __slots__ = ("_fault", "_spent", "_starting", "_workers")
+    __slots__ = ("_each", "_fault", "_spent", "_starting", "_workers")
 
     def __init__(self, workers: int) -> None:
         """Nothing is started yet."""
         self._workers = workers
         self._spent = 0.0
+        self._each: dict[str, float] = {}
         self._starting: threading.Thread | None = None
         self._fault: BaseException | None = None
 
@@ -89,9 +92,15 @@ class Processes:
         ResourceError
             If a worker process is killed, as happens where memory runs out.
         """
+        known = self._each.get(function.__qualname__, 0.0)  # seconds a unit took last time
+        if known * len(units) > WORTH_SENDING and self._ready(0.0, known * len(units)):
+            yield from self._send(function, units, known)
+            return
         began = time.perf_counter()
         for done, (number, unit) in enumerate(units):
             spent = time.perf_counter() - began
+            if done:
+                self._each[function.__qualname__] = spent / done
             left = spent / done * (len(units) - done) if done else 0.0
             if left > WORTH_SENDING and self._ready(spent, left):
                 self._spent += spent
@@ -118,7 +127,7 @@ class Processes:
         """Whether the processes are up; starts them once that is worth it."""
         if self._starting is None:
             so_far = self._spent + spent
-            if so_far < FIRST_LOOK or max(so_far, left) < WORTH_STARTING:
+            if so_far < FIRST_LOOK or (left < WORTH_STARTING and so_far < LONG_RUN):
                 return False
             names = [name for name in sys.modules if name.startswith("scantling.")]
             load = Shipped(_load)

@@ -16,7 +16,7 @@ import numpy as np
 from scipy.special import stdtrit
 
 from scantling.core.record import FloatArray
-from scantling.core.streams import Mapper, stream
+from scantling.core.streams import Mapper, blocks, stream
 from scantling.law.families import ErrorLaw
 from scantling.planning.case import Case, column_grid
 from scantling.planning.limit import Limit, make_limit
@@ -32,6 +32,8 @@ FIRST_SHARE = 0.25
 """Share of the refits in the first batch; the next bring it to twice that, and so on."""
 CLEAR = float(stdtrit(SUPPORTS - 1, 0.995))
 """Standard errors off the bar: ends of a 99 % interval, as the question is put more than once."""
+MOST_AT_ONCE = 40
+"""Refits of one unit of work: fine enough to share evenly, coarse enough for the batched kernel."""
 OUTSIDE = 0.05
 """Share of drawn limits that may lie below the fewest columns examined."""
 
@@ -138,13 +140,19 @@ class LimitSearch:
         p = self.grid[self._at]
         return p, len(self._parts.get(p, [[]])[0])
 
-    def batch(self, p: int, number: int, place: int) -> Refits:
-        """Refits of one batch on one support set."""
+    def parts(self, place: int) -> list[int]:
+        """Refits of each unit that a batch is carried out in."""
         size = self.ends[place] - (self.ends[place - 1] if place else 0)
+        return [stop - start for start, stop in blocks(size, MOST_AT_ONCE)]
+
+    def batch(self, p: int, number: int, place: int, part: int) -> Refits:
+        """Refits of one part of a batch on one support set."""
+        sizes = self.parts(place)
         own = self.case if self.case_of is None else self.case_of(number)
         # The same errors at every p: differences along the grid are then the columns' doing.
-        rng = stream(self.case.seed, f"refits, {self.name}", number, place)
-        return refit(own, self.supports[number], p, self.law, size, rng)
+        which = (number, place, part) if len(sizes) > 1 else (number, place)
+        rng = stream(self.case.seed, f"refits, {self.name}", *which)
+        return refit(own, self.supports[number], p, self.law, sizes[part], rng)
 
     def take(self, p: int, found: Sequence[Refits]) -> None:
         """One batch of every support set."""
@@ -210,18 +218,25 @@ def is_clear(case: Case, run: StressRun) -> bool:
 def carry_out(searches: Sequence[LimitSearch], mapper: Mapper) -> None:
     """Run what the searches want until none of them wants any more."""
 
-    def one(unit: tuple[int, int, int, int]) -> Refits:
-        which, p, place, number = unit
-        return searches[which].batch(p, number, place)
+    def one(unit: tuple[int, int, int, int, int]) -> Refits:
+        which, p, place, number, part = unit
+        return searches[which].batch(p, number, place, part)
 
     while True:
         wanted = [(k, *next_one) for k, each in enumerate(searches) if (next_one := each.wanted())]
         if not wanted:
             return
-        units = [(*batch, number) for batch in wanted for number in range(SUPPORTS)]
-        done = mapper(one, units)
-        for place, (which, p, _) in enumerate(wanted):
-            searches[which].take(p, done[place * SUPPORTS : (place + 1) * SUPPORTS])
+        units = [
+            (k, p, place, number, part)
+            for k, p, place in wanted
+            for number in range(SUPPORTS)
+            for part in range(len(searches[k].parts(place)))
+        ]
+        done = iter(mapper(one, units))
+        for k, p, place in wanted:
+            count = len(searches[k].parts(place))
+            several = [[next(done) for _ in range(count)] for _ in range(SUPPORTS)]
+            searches[k].take(p, [joined(parts) for parts in several])
 
 
 def run_law(

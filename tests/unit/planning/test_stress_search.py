@@ -47,10 +47,11 @@ def scripted(monkeypatch):
     calls = []
 
     def script(power_at):
-        def batch(self, p, number, place):
-            calls.append((p, number, place))
-            size = self.ends[place] - (self.ends[place - 1] if place else 0)
-            rng = np.random.default_rng([p, number, place])
+        def batch(self, p, number, place, part):
+            if part == 0:
+                calls.append((p, number, place))
+            size = self.parts(place)[part]
+            rng = np.random.default_rng([p, number, place, part])
             table = np.zeros((size, p), dtype=bool)
             table[:, :4] = rng.random((size, 4)) < power_at(p)
             refit, column = np.nonzero(table)
@@ -156,11 +157,11 @@ def test_a_limit_without_its_band_is_the_same_limit():
 def test_errors_are_the_same_at_every_number_of_columns():
     case = case_of()
     search = LimitSearch(case, case.law, "fitted", GRID)
-    few, many = search.batch(10, 2, 0), search.batch(40, 2, 0)
+    few, many = search.batch(10, 2, 0, 0), search.batch(40, 2, 0, 0)
     # Least squares on the relevant columns sees the errors alone.
     np.testing.assert_allclose(few.oracle, many.oracle, rtol=1e-12)
-    assert not np.allclose(few.oracle, search.batch(10, 2, 1).oracle[:1])
-    assert not np.allclose(few.oracle, search.batch(10, 3, 0).oracle)
+    assert not np.allclose(few.oracle, search.batch(10, 2, 1, 0).oracle[:1])
+    assert not np.allclose(few.oracle, search.batch(10, 3, 0, 0).oracle)
 
 
 def test_workers_change_nothing_and_searches_go_on_together():
@@ -191,3 +192,14 @@ def test_more_replicates_narrow_the_band():
 
 def test_grid_of_numbers_is_as_before():
     assert grid_of(40, 4) == GRID
+
+
+def test_large_batches_are_carried_out_in_parts_with_errors_of_their_own():
+    case = case_of(replicates=1200)
+    search = LimitSearch(case, case.law, "fitted", GRID, early=False)
+    assert search.parts(0) == [40] * 6
+    first, second = search.batch(10, 1, 0, 0), search.batch(10, 1, 0, 1)
+    assert first.replicates == second.replicates == 40
+    assert not np.allclose(first.oracle, second.oracle)
+    whole = run_law(case, case.law, "fitted", [10], serial_map)[0]
+    assert whole.replicates == 1200
