@@ -90,7 +90,7 @@ def _rows_lines(report: Budgeted, width: int) -> list[str]:
         return labelled("Rows", used, width)
     if budget.equivalent_rows is not None and budget.equivalent_rows < 0.97 * budget.rows:
         lost = budget.rows - budget.equivalent_rows
-        cost = f"; these errors cost as much as losing {lost:,} of them"
+        cost = f"; these errors cost {lost:,} of them"
     needed = f"; needed: {budget.rows_note or 'unknown'}"
     if budget.rows_needed is not None:
         found = about(budget.rows_needed, budget.rows_range)

@@ -68,7 +68,8 @@ def render_facts(facts: LawFacts) -> str:
     if levels is not None:
         lines += labelled(
             "Levels",
-            f"persist: largest root {levels.root:.3g}, variance {levels.gain:.4g} times that of"
+            f"{'persist' if levels.long_run >= 1 else 'alternate'}: largest root"
+            f" {levels.root:.3g} in size, variance {levels.gain:.4g} times that of"
             " the innovations",
             80,
         )

@@ -109,7 +109,7 @@ def test_cover_is_said_where_there_is_something_to_cover(answer):
 
 
 def test_rows_say_what_errors_cost_and_what_effects_need():
-    cost = "these errors cost as much as losing 408 of them"
+    cost = "these errors cost 408 of them"
     needed = "needed for all 100: about 1,900"
     assert line(report(), "Rows") == f"1,000 used; {cost}; {needed}"
     cheap = budget_of(noise=limit(40.0), equivalent_rows=980)
