@@ -65,7 +65,9 @@ def test_facts_of_a_student_law(capsys: pytest.CaptureFixture[str]) -> None:
 def test_persistent_levels_are_said(capsys: pytest.CaptureFixture[str]) -> None:
     """exact: 1/(1 - 0.6^2) = 1.5625."""
     text = said(["laws", "laplace:lag1=0.6"], capsys)[1]
-    assert "Levels      persist: largest root 0.6, variance 1.562 times that of the" in text
+    assert "Levels      persist: largest root 0.6 in size, variance 1.562 times that" in text
+    turned = said(["laws", "laplace:lag1=-0.6"], capsys)[1]
+    assert "Levels      alternate: largest root 0.6 in size, variance 1.562 times that" in turned
     found = json.loads(said(["laws", "laplace:lag1=0.6", "--json"], capsys)[1])
     assert found["autoregression"] == {
         "coefficients": [0.6], "root": 0.6, "variance_gain": 1.5625,

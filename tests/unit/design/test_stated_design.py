@@ -152,6 +152,9 @@ def test_a_saved_report_gives_its_law_rows_columns_and_target(tmp_path):
     [
         ({"index": 4.2, "finite": True}, "student-t:df=4.2"),
         ({"index": 4.2, "finite": False}, "normal"),
+        ({"index": 4.2, "finite": False, "high": None}, "normal"),
+        # Thin tails are not excluded, but the interval has an upper end.
+        ({"index": 4.1, "finite": False, "high": 7.4}, "student-t:df=4.1"),
         ({"index": None, "index_note": "above 50"}, "normal"),
         ({"index": 60.0}, "normal"),
         ({"index": 1.4}, "student-t:df=2.05"),
@@ -161,6 +164,22 @@ def test_a_saved_report_gives_its_law_rows_columns_and_target(tmp_path):
 def test_columns_of_a_report_follow_its_median_column(tmp_path, tail, law):
     tree = changed("diagnosis", "columns", "tail", to=tail)
     assert read_statement(written(tmp_path, tree, "h.json")).values["column_law"] == law
+
+
+@pytest.mark.parametrize(
+    ("levels", "law"),
+    [
+        ([0.9, 0.5, 0.7], "student-t:df=4.2,lag1=0.700"),
+        ([0.05, 0.09, 0.02], "student-t:df=4.2"),
+        (None, "student-t:df=4.2"),
+    ],
+)
+def test_columns_of_a_report_keep_their_median_persistence(tmp_path, levels, law):
+    tree = changed("diagnosis", "columns", "tail", to={"index": 4.2, "finite": True})
+    tree["diagnosis"]["column_autocorrelations"] = levels
+    found = read_statement(written(tmp_path, tree, "h.json"))
+    assert found.values["column_law"] == law
+    assert any("median first autocorrelation" in fact for fact in found.facts)
 
 
 @pytest.mark.parametrize(
