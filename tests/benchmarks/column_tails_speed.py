@@ -21,7 +21,7 @@ import numpy as np
 from scipy.stats import pareto
 from threadpoolctl import threadpool_limits
 
-from scantling.diagnostics.column_tails import column_tails
+from scantling.diagnostics.battery import series_group
 
 
 def pareto_loop(columns: np.ndarray, count: int) -> float:
@@ -49,8 +49,8 @@ def main() -> None:
     with threadpool_limits(limits=1):
         for _ in range(options.rounds):
             started = time.perf_counter()
-            column_tails(X, dependent=True)
-            column_tails(X * errors[:, None], dependent=True)
+            series_group(X, dependent=True)
+            series_group(X * errors[:, None], dependent=True)
             ours.append(time.perf_counter() - started)
             once = pareto_loop(some, options.rows // 20)
             loops.append(2 * once * options.columns / some.shape[1])
@@ -68,7 +68,8 @@ def main() -> None:
         "| columns x rows | ours, s (min / median / max) | loop over scipy's Pareto fit, s | loop"
         " over ours | peak memory, GiB |",
         "|---|---|---|---|---|",
-        f"| {options.columns:,} x {options.rows:,}, columns and scores"
+        f"| {options.columns:,} x {options.rows:,}, columns and scores;"
+        " both, left and right tails, moments"
         f" | {min(ours):.1f} / {np.median(ours):.1f} / {max(ours):.1f}"
         f" | {min(loops):.1f} / {np.median(loops):.1f} / {max(loops):.1f}"
         f" | {min(ratios):.2f} / {np.median(ratios):.2f} / {max(ratios):.2f} | {peak:.2f} |",

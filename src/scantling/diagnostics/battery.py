@@ -13,7 +13,12 @@ from scantling.diagnostics.clustering import LEVEL, NEAR_INTEGRATION, Clustering
 from scantling.diagnostics.co_movement import CoMovement, column_co_movement
 from scantling.diagnostics.column_levels import first_autocorrelations
 from scantling.diagnostics.column_sides import ColumnSides, column_sides
-from scantling.diagnostics.column_tails import ColumnTails, column_tails, holm_rejections
+from scantling.diagnostics.column_tails import (
+    ColumnTails,
+    column_tails,
+    find_repeats,
+    holm_rejections,
+)
 from scantling.diagnostics.dependence import TestResult
 from scantling.diagnostics.error_findings import (
     Finding,
@@ -155,7 +160,8 @@ class Diagnosis:
 
 def series_group(series: FloatArray, *, dependent: bool) -> SeriesGroup:
     """Tails and moment answers of every column of `series` (n, P)."""
-    tails = column_tails(series, dependent=dependent)
+    repeats = find_repeats(series)
+    tails = column_tails(series, dependent=dependent, repeats=repeats)
     width = series.shape[1]
     moments = {order: np.zeros(width, dtype=int) for order in ORDERS}
     known = tails.assessed
@@ -177,7 +183,9 @@ def series_group(series: FloatArray, *, dependent: bool) -> SeriesGroup:
             for order in ORDERS:
                 moments[order][j] = 1
     return SeriesGroup(
-        tails=tails, moments=moments, sides=column_sides(series, dependent=dependent)
+        tails=tails,
+        moments=moments,
+        sides=column_sides(series, dependent=dependent, repeats=repeats),
     )
 
 

@@ -8,7 +8,13 @@ import numpy as np
 from scipy.special import stdtr
 
 from scantling.core.record import FloatArray
-from scantling.diagnostics.column_tails import ColumnTails, column_tails, holm_rejections
+from scantling.diagnostics.column_tails import (
+    ColumnTails,
+    Repeats,
+    column_tails,
+    find_repeats,
+    holm_rejections,
+)
 from scantling.diagnostics.tail_index import block_length
 
 SIDED_ROWS = 500
@@ -27,7 +33,9 @@ class ColumnSides:
     """-1 heavier on the left, 1 on the right, 0 not told apart, shape (P,)."""
 
 
-def column_sides(series: FloatArray, *, dependent: bool) -> ColumnSides | None:
+def column_sides(
+    series: FloatArray, *, dependent: bool, repeats: Repeats | None = None
+) -> ColumnSides | None:
     """Estimate both tails of every column of `series`; None below 500 rows.
 
     A series is heavier on one side if the two gammas differ by the t test on their joint block
@@ -40,11 +48,14 @@ def column_sides(series: FloatArray, *, dependent: bool) -> ColumnSides | None:
         Trusted: finite.
     dependent : bool
         Whether rows are in time order.
+    repeats : Repeats, optional
+        Of the same series, where they are known.
     """
     if series.shape[0] < SIDED_ROWS:
         return None
-    left = column_tails(series, dependent=dependent, side="left")
-    right = column_tails(series, dependent=dependent, side="right")
+    repeats = repeats or find_repeats(series)
+    left = column_tails(series, dependent=dependent, side="left", repeats=repeats)
+    right = column_tails(series, dependent=dependent, side="right", repeats=repeats)
     heavier = heavier_sides(left, right, series.shape[0], dependent=dependent)
     return ColumnSides(left=left, right=right, heavier=heavier)
 

@@ -11,6 +11,7 @@ from dataclasses import dataclass, fields
 import numpy as np
 
 from scantling.core.record import FloatArray, read_only
+from scantling.core.streams import blocks
 from scantling.diagnostics.tail_index import (
     TIE_SHARE,
     block_length,
@@ -78,7 +79,30 @@ class ColumnTails:
         return int(order[(order.size - 1) // 2])
 
 
-def column_tails(series: FloatArray, *, dependent: bool, side: str = "both") -> ColumnTails:
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Repeats:
+    """How values repeat in each of P series; the same whichever tail is looked at."""
+
+    active_share: FloatArray
+    """Share of rows that differ from the mode, shape (P,)."""
+    plain: np.ndarray
+    """Whether values repeat too little to matter, shape (P,), bool."""
+
+
+def find_repeats(series: FloatArray) -> Repeats:
+    """Look for modes and ties in every column of `series` (n, P)."""
+    n, width = series.shape
+    active_share, plain = np.empty(width), np.empty(width, dtype=bool)
+    for first, last in blocks(width, COLUMNS_PER_PASS):
+        mode_share, tied = _repeats(moderate(series[:, first:last]))
+        active_share[first:last] = 1 - mode_share
+        plain[first:last] = (mode_share <= repeat_share(n)) & (tied <= TIE_SHARE)
+    return Repeats(active_share=read_only(active_share), plain=plain)
+
+
+def column_tails(
+    series: FloatArray, *, dependent: bool, side: str = "both", repeats: Repeats | None = None
+) -> ColumnTails:
     """Estimate the tails of every column of `series`.
 
     Parameters
@@ -89,6 +113,8 @@ def column_tails(series: FloatArray, *, dependent: bool, side: str = "both") -> 
         Whether rows are in time order; standard errors then use blocks of ceil(n^0.6) rows.
     side : {'both', 'left', 'right'}
         Which tail; 'both' pools magnitudes about the median.
+    repeats : Repeats, optional
+        Of the same series, where they are known.
 
     Returns
     -------
@@ -96,8 +122,8 @@ def column_tails(series: FloatArray, *, dependent: bool, side: str = "both") -> 
     """
     n, width = series.shape
     out = {field.name: np.full(width, np.nan) for field in fields(TailEstimates)}
-    active_share = np.empty(width)
-    odd: list[int] = []
+    repeats = repeats or find_repeats(series)
+    odd = np.flatnonzero(~repeats.plain).tolist()
 
     def keep(columns: list[int], part: FloatArray) -> None:
         block = block_length(len(part)) if dependent else 1
@@ -113,10 +139,7 @@ def column_tails(series: FloatArray, *, dependent: bool, side: str = "both") -> 
     for first in range(0, width, COLUMNS_PER_PASS):
         here = slice(first, min(first + COLUMNS_PER_PASS, width))
         part = moderate(series[:, here])
-        mode_share, tied = _repeats(part)
-        active_share[here] = 1 - mode_share
-        plain = (mode_share <= repeat_share(n)) & (tied <= TIE_SHARE)
-        odd += [first + int(j) for j in np.flatnonzero(~plain)]
+        plain = repeats.plain[here]
         if plain.any():
             keep([first + int(j) for j in np.flatnonzero(plain)], part[:, plain])
     refused = []
@@ -133,7 +156,7 @@ def column_tails(series: FloatArray, *, dependent: bool, side: str = "both") -> 
     out["p_value"][np.isnan(out["p_value"])] = 1.0
     return ColumnTails(
         **{name: read_only(values) for name, values in out.items()},
-        active_share=read_only(active_share),
+        active_share=repeats.active_share,
         threshold_count=tail_counts(n, side)[0],
         refused=tuple(refused),
     )
