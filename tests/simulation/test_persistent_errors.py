@@ -9,8 +9,7 @@ from scipy.stats import norm
 
 from scantling.core.streams import serial_map, worker_pool
 from scantling.design.spec import TargetSpec
-from scantling.diagnostics.autoregression import find_autoregression
-from scantling.diagnostics.clustering import find_clustering
+from scantling.diagnostics.clustering import find_dependence
 from scantling.diagnostics.residuals import fit_pilot
 from scantling.law.fit import error_law
 from scantling.planning.breakthrough import break_through
@@ -35,12 +34,10 @@ def sample(number, keep):
 def case_of(X, y):
     residuals = fit_pilot(X, y, time_ordered=True, seed=SEED)
     e = np.asarray(residuals.values)
-    levels = find_autoregression(e, seed=SEED).autoregression
-    shocks = e if levels is None else levels.shocks(e)
+    levels, clustering = find_dependence(e, seed=SEED)
     law = error_law(
-        e, volatility=find_clustering(shocks, seed=SEED).volatility, autoregression=levels,
-        seed=SEED,
-    )  # fmt: skip
+        e, volatility=clustering.volatility, autoregression=levels.autoregression, seed=SEED
+    )
     return Case(
         X=X, law=law, law_draws=draw_laws(law, SEED), response_sd=residuals.response_sd,
         residual_sd=residuals.sd, target=TargetSpec(relevant=3, smallest_effect=0.3),

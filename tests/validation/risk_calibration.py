@@ -28,8 +28,7 @@ from threadpoolctl import threadpool_limits
 from scantling.core.record import FloatArray
 from scantling.core.streams import blocks, serial_map, stream
 from scantling.design.spec import TargetSpec
-from scantling.diagnostics.autoregression import find_autoregression
-from scantling.diagnostics.clustering import find_clustering
+from scantling.diagnostics.clustering import find_dependence
 from scantling.diagnostics.residuals import fit_pilot
 from scantling.diagnostics.tail_index import TailIndex, tail_index
 from scantling.errors import InputError
@@ -100,9 +99,8 @@ def chain(design: KnownDesign, sample: Sample, seed: int) -> tuple[Case, FloatAr
     values = np.asarray(residuals.values)
     path, levels = None, None
     if design.time_ordered:
-        levels = find_autoregression(values, seed=seed).autoregression
-        shocks = values if levels is None else levels.shocks(values)
-        path = find_clustering(shocks, seed=seed).volatility
+        found, clustering = find_dependence(values, seed=seed)
+        levels, path = found.autoregression, clustering.volatility
     law = error_law(
         values, volatility=path, autoregression=levels, seed=seed, tail=error_tail(values, seed)
     )

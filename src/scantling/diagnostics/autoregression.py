@@ -9,12 +9,12 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
+from numpy.typing import ArrayLike
 
 from scantling.core.record import FloatArray, read_only
 from scantling.core.streams import stream
-from scantling.diagnostics.dependence import TestResult, sign_ljung_box_permutation
+from scantling.diagnostics.dependence import LEVEL, TestResult, sign_ljung_box_permutation
 
-LEVEL = 0.05
 MOST_LAGS = 10
 ROWS_PER_LAG = 20
 """Fewest rows for each lag tried."""
@@ -57,26 +57,18 @@ class Autoregression:
 
     def shocks(self, errors: FloatArray) -> FloatArray:
         """u of errors (n,) or (n, R) about 0; rows before the first count as 0."""
-        from scipy.signal import lfilter
-
-        return np.asarray(lfilter(np.concatenate([[1.0], -self.coefficients]), [1.0], errors, 0))
+        return _run(_polynomial(self.coefficients), [1.0], errors)
 
     def errors(self, shocks: FloatArray, rng: np.random.Generator) -> FloatArray:
         """Errors of shocks (n, R), run in on rows of theirs picked at random."""
-        from scipy.signal import lfilter
-
         before = min(BURN_IN, max(50, int(8 / (1 - self.root))))
         picked = shocks[rng.integers(len(shocks), size=before)]
         whole = np.concatenate([picked, shocks])
-        out = lfilter([1.0], np.concatenate([[1.0], -self.coefficients]), whole, 0)
-        return np.asarray(out[before:])
+        return _run([1.0], _polynomial(self.coefficients), whole)[before:]
 
     def seen_by_shocks(self, X: FloatArray) -> FloatArray:
         """What multiplies u_t in x'e, for columns X (n, P): sum_k psi_k x_(t+k)."""
-        from scipy.signal import lfilter
-
-        turned = lfilter([1.0], np.concatenate([[1.0], -self.coefficients]), X[::-1], 0)
-        return np.asarray(turned[::-1])
+        return _run([1.0], _polynomial(self.coefficients), X[::-1])[::-1]
 
     def moved(self, draw: int) -> Autoregression:
         """The same with one of the drawn sets of coefficients."""
@@ -92,6 +84,10 @@ class Levels:
     """Autocorrelation of signs, by permutation."""
     autoregression: Autoregression | None
     """None: levels are taken as independent from row to row."""
+
+    def shocks(self, errors: FloatArray) -> FloatArray:
+        """What is left of errors (n,) about 0; they themselves where levels do not persist."""
+        return errors if self.autoregression is None else self.autoregression.shocks(errors)
 
 
 def find_autoregression(values: FloatArray, *, seed: int) -> Levels:
@@ -159,7 +155,18 @@ def stationary(coefficients: FloatArray) -> FloatArray:
 
 def largest_root(coefficients: FloatArray) -> float:
     """Largest size of a root of z^L - a_1 z^(L-1) - ... - a_L."""
-    return float(np.abs(np.roots(np.concatenate([[1.0], -coefficients]))).max(initial=0.0))
+    return float(np.abs(np.roots(_polynomial(coefficients))).max(initial=0.0))
+
+
+def _polynomial(coefficients: FloatArray) -> FloatArray:
+    return np.concatenate([[1.0], -coefficients])
+
+
+def _run(above: ArrayLike, below: ArrayLike, x: FloatArray) -> FloatArray:
+    """The rational filter above/below along the first axis, from rest."""
+    from scipy.signal import lfilter
+
+    return np.asarray(lfilter(above, below, x, axis=0))
 
 
 def partial_autocorrelations(coefficients: FloatArray) -> FloatArray:

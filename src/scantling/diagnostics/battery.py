@@ -9,7 +9,7 @@ import numpy as np
 
 from scantling.core.record import FloatArray, read_only
 from scantling.diagnostics.autoregression import Autoregression, Levels
-from scantling.diagnostics.clustering import LEVEL, NEAR_INTEGRATION, Clustering
+from scantling.diagnostics.clustering import NEAR_INTEGRATION, Clustering
 from scantling.diagnostics.co_movement import CoMovement, column_co_movement
 from scantling.diagnostics.column_levels import first_autocorrelations
 from scantling.diagnostics.column_sides import ColumnSides, column_sides
@@ -19,7 +19,7 @@ from scantling.diagnostics.column_tails import (
     find_repeats,
     holm_rejections,
 )
-from scantling.diagnostics.dependence import TestResult
+from scantling.diagnostics.dependence import LEVEL, TestResult
 from scantling.diagnostics.error_findings import (
     Finding,
     Worth,

@@ -5,10 +5,10 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 from scantling.core.record import FloatArray
-from scantling.diagnostics.dependence import TestResult, absolute_ljung_box_permutation
+from scantling.diagnostics.autoregression import Levels, find_autoregression
+from scantling.diagnostics.dependence import LEVEL, TestResult, absolute_ljung_box_permutation
 from scantling.diagnostics.volatility import Volatility, choose_volatility
 
-LEVEL = 0.05
 NEAR_INTEGRATION = 0.97
 """Persistence above which tail intervals from the data are too short (simulated)."""
 
@@ -42,3 +42,17 @@ def find_clustering(values: FloatArray, *, seed: int) -> Clustering:
     if isinstance(fitted, Volatility):
         return Clustering(test=test, volatility=fitted, reason="")
     return Clustering(test=test, volatility=None, reason=fitted)
+
+
+def find_dependence(values: FloatArray, *, seed: int) -> tuple[Levels, Clustering]:
+    """Whether the level persists, and whether the size of its shocks clusters.
+
+    Parameters
+    ----------
+    values : array, shape (n,)
+        Errors in time order, centred.
+    seed : int
+        Of the permutations.
+    """
+    levels = find_autoregression(values, seed=seed)
+    return levels, find_clustering(levels.shocks(values), seed=seed)

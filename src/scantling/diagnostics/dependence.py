@@ -21,6 +21,9 @@ from scantling.core.record import FloatArray
 from scantling.core.streams import blocks, stream
 from scantling.errors import InputError
 
+LEVEL = 0.05
+"""Of the tests that decide what is modelled."""
+
 CHUNK = 2**18
 """Numbers a permutation test holds at once (2 MiB, so that they stay in cache)."""
 

@@ -8,9 +8,10 @@ from dataclasses import dataclass
 import numpy as np
 
 from scantling.core.record import FloatArray
-from scantling.diagnostics.autoregression import Autoregression, Levels, find_autoregression
-from scantling.diagnostics.clustering import LEVEL, Clustering, find_clustering
+from scantling.diagnostics.autoregression import Autoregression, Levels
+from scantling.diagnostics.clustering import Clustering, find_dependence
 from scantling.diagnostics.dependence import (
+    LEVEL,
     TestResult,
     arch_lm,
     ljung_box,
@@ -112,10 +113,7 @@ def error_findings(values: FloatArray, *, time_ordered: bool, seed: int) -> Erro
     """
     centred = values - values.mean()
     tail, sides, note = error_tails(values, seed)
-    levels = find_autoregression(centred, seed=seed) if time_ordered else None
-    path = None if levels is None else levels.autoregression
-    shocks = centred if path is None else path.shocks(centred)
-    clustering = find_clustering(shocks, seed=seed) if time_ordered else None
+    levels, clustering = find_dependence(centred, seed=seed) if time_ordered else (None, None)
     volatility = None if clustering is None else clustering.volatility
     implied = None if volatility is None else volatility.tail_index
     decisive = None if tail is None else heavier_side(tail, sides)
@@ -124,7 +122,7 @@ def error_findings(values: FloatArray, *, time_ordered: bool, seed: int) -> Erro
     dependence: tuple[Finding, ...] = ()
     if clustering is not None and levels is not None:
         steady = clustering.test.p_value > LEVEL
-        results = (*level_tests(centred, levels), *size_tests(shocks, clustering))
+        results = (*level_tests(centred, levels), *size_tests(levels.shocks(centred), clustering))
         dependence = judged(results, granted, steady=steady)
     return ErrorFindings(
         tail=tail,

@@ -9,8 +9,8 @@ import numpy as np
 
 from scantling.core.checks import finite_vector
 from scantling.core.record import FloatArray
-from scantling.diagnostics.autoregression import Autoregression, find_autoregression
-from scantling.diagnostics.clustering import find_clustering
+from scantling.diagnostics.autoregression import Autoregression
+from scantling.diagnostics.clustering import find_dependence
 from scantling.diagnostics.tail_index import (
     LARGEST,
     MINIMUM,
@@ -174,10 +174,8 @@ def fit_law(
         raise InputError(f"family: spliced tails need 250 values; found {array.size}")
     volatility, levels = None, None
     if time_ordered:
-        centred = array - array.mean()
-        levels = find_autoregression(centred, seed=seed).autoregression
-        shocks = centred if levels is None else levels.shocks(centred)
-        volatility = find_clustering(shocks, seed=seed).volatility
+        found, clustering = find_dependence(array - array.mean(), seed=seed)
+        levels, volatility = found.autoregression, clustering.volatility
     return error_law(
         array, volatility=volatility, autoregression=levels, seed=seed, family=family,
         time_ordered=time_ordered,

@@ -14,6 +14,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 from scipy.special import stdtrit
 
+from scantling.core.listing import listed
 from scantling.core.streams import Mapper
 from scantling.diagnostics.moments import Z90
 from scantling.planning.breakthrough import ScoreSample
@@ -359,8 +360,7 @@ def _needed(search: RowSearch, name: str, steps: list[int], found: dict[str, Nee
 
 def _none_in_range(plan: Plan, steps: list[int], *names: str) -> str:
     times = steps[-1] / plan.rows
-    listed = " and ".join(filter(None, [", ".join(names[:-1]), names[-1]]))
-    limits = f"{listed} limit{'s' if len(names) > 1 else ''}"
+    limits = f"{listed(names)} limit{'s' if len(names) > 1 else ''}"
     return f"{times:.3g} times as many are not enough for the {limits}"
 
 

@@ -5,6 +5,7 @@ from __future__ import annotations
 import math
 from dataclasses import dataclass
 
+from scantling.core.listing import listed
 from scantling.diagnostics.battery import Diagnosis
 from scantling.planning.budget import BORDERLINE, OVER, WITHIN, Budget, standing
 from scantling.planning.case import Case
@@ -206,11 +207,7 @@ def _stability_reason(case: Case | Plan, budget: Budget, stress: Stress | None) 
 def _sources(case: Case | Plan) -> str:
     """What sets the fitted errors apart from independent normal ones."""
     found = [] if case.law.family == "normal" and _paths(case) else ["tails"]
-    return _listed([*found, *_paths(case)])
-
-
-def _listed(causes: list[str]) -> str:
-    return " and ".join(filter(None, [", ".join(causes[:-1]), causes[-1]]))
+    return listed([*found, *_paths(case)])
 
 
 def _paths(case: Case | Plan) -> list[str]:
@@ -244,5 +241,5 @@ def _part_to_blame(stress: Stress, paths: list[str]) -> str:
     by_volatility = last["twin"] - last["normal-volatility"]
     alone = "is" if paths == [VOLATILITY] else "are"
     if lost <= 0 or 0.25 < by_volatility / lost < 0.75:
-        return f"{_listed(['tails', *paths])} are"
-    return f"{_listed(paths)} {alone}" if by_volatility >= 0.75 * lost else "tails are"
+        return f"{listed(['tails', *paths])} are"
+    return f"{listed(paths)} {alone}" if by_volatility >= 0.75 * lost else "tails are"

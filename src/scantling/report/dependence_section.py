@@ -4,8 +4,8 @@ from __future__ import annotations
 
 from scantling.diagnostics.autoregression import NEAR_UNIT_ROOT, Autoregression, Levels
 from scantling.diagnostics.battery import Diagnosis
-from scantling.diagnostics.clustering import LEVEL
 from scantling.diagnostics.column_levels import near_random_walks
+from scantling.diagnostics.dependence import LEVEL
 from scantling.diagnostics.error_findings import Finding, Worth
 from scantling.diagnostics.extremes import LOWEST_SHARE
 from scantling.diagnostics.variance import CO_MOVEMENT

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import math
 
+from scantling.core.listing import listed
 from scantling.planning.remedies import Remedy
 from scantling.planning.verdict import BORDERLINE, NONE, WITHIN
 from scantling.report.record import Budgeted
@@ -17,7 +18,6 @@ from scantling.report.wording import (
     in_lines,
     labelled,
     rate,
-    series,
     shortened,
 )
 
@@ -77,7 +77,7 @@ def _limits(report: Budgeted) -> str:
         bind = ""
         if budget.binding in names:
             bind = " binds" if len(names) == 1 else " bind"
-        parts.append(f"{series(names)} {value}{bind}")
+        parts.append(f"{listed(names)} {value}{bind}")
     kind = "" if budget.ceiling.columns is None else " (a rate)"
     return "; ".join([*parts, f"ceiling {rate(budget.ceiling)}{kind}"])
 

@@ -6,10 +6,11 @@ import json
 import math
 from typing import Any
 
+from scantling.core.listing import listed
 from scantling.law.facts import ORDERS, TAILS, FamilyFacts, LawFacts
 from scantling.law.families import ErrorLaw
 from scantling.report.values import noted, number
-from scantling.report.wording import labelled, paragraph, series
+from scantling.report.wording import labelled, paragraph
 
 SCHEMA = "scantling-laws/1"
 ALL_EXIST = "every moment exists"
@@ -75,9 +76,9 @@ def render_facts(facts: LawFacts) -> str:
         )
     there = [str(order) for order, exists in zip(ORDERS, facts.exists, strict=True) if exists]
     lack = [str(order) for order, exists in zip(ORDERS, facts.exists, strict=True) if not exists]
-    words = f"{series(there)} exist" if there else "none of 1 to 4 exists"
+    words = f"{listed(there)} exist" if there else "none of 1 to 4 exists"
     if lack and there:
-        words = f"{series(there)} exist{'s' if len(there) == 1 else ''}; {series(lack)} missing"
+        words = f"{listed(there)} exist{'s' if len(there) == 1 else ''}; {listed(lack)} missing"
     lines += labelled("Moments", words, 80)
     kurtosis = facts.excess_kurtosis
     shown = f"{kurtosis:.4g}" if math.isfinite(kurtosis) else "missing"

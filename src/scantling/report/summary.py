@@ -6,12 +6,13 @@ import textwrap
 import unicodedata
 from collections.abc import Sequence
 
+from scantling.core.listing import listed
 from scantling.errors import InputError
 from scantling.planning.budget import BORDERLINE, OVER, WITHIN, Allowed
 from scantling.planning.verdict import NONE
 from scantling.report.record import Report
 from scantling.report.text import NARROWEST, render
-from scantling.report.wording import count, labelled, probability, series, shortened, table
+from scantling.report.wording import count, labelled, probability, shortened, table
 
 ANSWERS = (WITHIN, BORDERLINE, OVER, NONE)
 """From the mildest to the most severe."""
@@ -113,7 +114,7 @@ def _verdict(reports: Sequence[Report]) -> str:
     if len(set(answers)) == 1:
         return f"{answers[0].upper()}, all of them"
     counted = [f"{answers.count(a)} {a}" for a in reversed(ANSWERS) if a in answers]
-    return f"{most_severe(reports).upper()}, the most severe: {series(counted)}"
+    return f"{most_severe(reports).upper()}, the most severe: {listed(counted)}"
 
 
 def _table(reports: Sequence[Report], width: int) -> list[str]:

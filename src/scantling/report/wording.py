@@ -116,11 +116,6 @@ def about(value: int, span: tuple[int, int | None] | None) -> str:
     return f"about {count(value)} ({count(low)} {end})"
 
 
-def series(names: Sequence[str]) -> str:
-    """Names as a list in words: 'a', 'a and b', 'a, b and c'."""
-    return " and ".join(filter(None, [", ".join(names[:-1]), names[-1]]))
-
-
 def labelled(label: str, text: str, width: int) -> list[str]:
     """A label, and its text wrapped beside it."""
     body = textwrap.wrap(text, width - LABEL, break_on_hyphens=False) or [""]
